@@ -1,0 +1,130 @@
+"""What selfish rules cost: the optimum over all profiles, prices of anarchy and stability, patients a year.
+
+The price of anarchy is best welfare over all profiles / worst over equilibria (for a loss: worst equilibrium
+/ best), so at least 1 (Koutsoupias and Papadimitriou 1999, "Worst-case equilibria"; price of stability:
+Anshelevich et al. 2004; both from memory). Here it is the ratio of this one network, not a supremum over a
+class of networks, and the best is the best static rule.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from analysis.confidence import ONE_REPLICATION, Estimate, critical_value, mean_estimate, standard_error
+from analysis.equilibria import DEFAULT_TOLERANCE, Profile
+from analysis.goals import Sense
+
+DAYS_A_YEAR = 365.0
+NO_EQUILIBRIUM = "no equilibrium is listed"
+NOT_POSITIVE = "a welfare is not above 0, so a ratio says nothing"
+
+
+@dataclass(frozen=True)
+class Cost:
+    """What selfish rules cost.
+
+    optimum: every profile within the tolerance of the best welfare. worst, best: the equilibria with the
+    lowest and the highest welfare (None without one). lost_per_year: welfare forgone at the worst, a year.
+    """
+
+    optimum: tuple[Profile, ...]
+    worst: Profile | None
+    best: Profile | None
+    price_of_anarchy: Estimate
+    price_of_stability: Estimate
+    lost_per_year: Estimate
+
+
+def cost_of_selfishness(
+    welfare: np.ndarray,
+    sense: Sense,
+    equilibria: Sequence[Profile],
+    *,
+    replicates: np.ndarray | None = None,
+    confidence: float = 0.95,
+    tolerance: float = DEFAULT_TOLERANCE,
+) -> Cost:
+    """The cost of the listed equilibria against the optimum.
+
+    welfare: mean a day, (*shape). replicates: the same by replication, (replications, *shape); None where the
+    welfare is exact. The intervals are paired, for the profiles that the point estimate selects; that it may
+    select wrong ones is not in them.
+    """
+    gains = welfare if sense == "gain" else -welfare
+    optimum = tuple(tuple(map(int, p)) for p in np.argwhere(gains >= gains.max() - tolerance))
+    if not equilibria:
+        none = Estimate(None, reason=NO_EQUILIBRIUM)
+        return Cost(optimum, None, None, none, none, none)
+    ranked = sorted(equilibria, key=lambda profile: float(gains[profile]))
+    pair = _Pair(welfare, sense, replicates, confidence, optimum[0])
+    return Cost(
+        optimum, ranked[0], ranked[-1], pair.ratio(ranked[0]), pair.ratio(ranked[-1]), pair.lost_a_year(ranked[0])
+    )
+
+
+@dataclass(frozen=True)
+class _Pair:
+    """Compares an equilibrium with the optimum on common replications."""
+
+    welfare: np.ndarray
+    sense: Sense
+    replicates: np.ndarray | None
+    confidence: float
+    optimum: Profile
+
+    def ratio(self, profile: Profile) -> Estimate:
+        """Better welfare over worse, with an interval on the log ratio by the delta method."""
+        better, worse = (self.optimum, profile) if self.sense == "gain" else (profile, self.optimum)
+        above, below = float(self.welfare[better]), float(self.welfare[worse])
+        if below <= 0 or above <= 0:
+            return Estimate(None, reason=NOT_POSITIVE)
+        point = above / below
+        if self.replicates is None:
+            return Estimate(point)
+        n = len(self.replicates)
+        if n < 2:
+            return Estimate(point, reason=ONE_REPLICATION)
+        log_ratio = self._of(better) / above - self._of(worse) / below
+        half = critical_value(self.confidence, n - 1) * standard_error(log_ratio)
+        return Estimate(point, max(1.0, point * np.exp(-half)), point * np.exp(half))
+
+    def lost_a_year(self, profile: Profile) -> Estimate:
+        """Welfare forgone a year, in the welfare's unit (patients, for throughput)."""
+        sign = DAYS_A_YEAR if self.sense == "gain" else -DAYS_A_YEAR
+        if self.replicates is None:
+            return Estimate(float(sign * (self.welfare[self.optimum] - self.welfare[profile])))
+        return mean_estimate(sign * (self._of(self.optimum) - self._of(profile)), self.confidence)
+
+    def _of(self, profile: Profile) -> np.ndarray:
+        return self.replicates[(slice(None), *profile)]  # type: ignore[index]
+
+
+@dataclass(frozen=True)
+class TurningWeight:
+    """The transfer weight at which coordinating for throughput stops paying; None with a reason where it never does."""
+
+    weight: float | None
+    reason: str | None = None
+
+
+def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profile | None) -> TurningWeight:
+    """The weight of a transfer at which the verdict turns.
+
+    Below it the profile with the fewest patients turned away has a lower loss (turned away + weight x
+    transfers) than the worst equilibrium; above it the equilibrium is no worse. Both arrays: mean a day,
+    (*shape). `worst`: the equilibrium judged.
+    """
+    if worst is None:
+        return TurningWeight(None, NO_EQUILIBRIUM)
+    fewest = np.flatnonzero(turned_away.ravel() <= turned_away.min() + DEFAULT_TOLERANCE)
+    place = fewest[np.argmin(transfers.ravel()[fewest])]  # of those that turn fewest away, the one that moves fewest
+    saved = float(turned_away[worst] - turned_away.ravel()[place])
+    moved = float(transfers.ravel()[place] - transfers[worst])
+    if saved <= DEFAULT_TOLERANCE:
+        return TurningWeight(None, "the worst equilibrium turns no more patients away than the best profile")
+    if moved <= 0:
+        return TurningWeight(None, "the best profile moves no more patients than the worst equilibrium, so it wins at any weight")
+    return TurningWeight(saved / moved)

@@ -1,0 +1,55 @@
+"""An answer is handed on only with a proof: balance in every state, and of every rate in every unit."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from analysis.chain.gth import Transitions
+from analysis.chain.network_states import NetworkChain, UnitView
+from sim.errors import RunError
+
+RELATIVE = 1e-9
+# Below this the range of a float, not the elimination, limits the relative accuracy of a probability.
+NEGLIGIBLE = 1e-280
+
+
+def certify(chain: NetworkChain, probability: NDArray[np.float64]) -> None:
+    """Raises RunError unless `probability`, shape (states,), solves the chain.
+
+    It must be a distribution; the flow into each state must equal that out of it, relative to itself, by the
+    transitions and not by what the elimination made of them; and in each unit the admissions a day of each
+    discharge rate must be the mean number of such patients times the rate (Little's law).
+    """
+    if not (probability >= 0).all():
+        raise RunError("the chain's answer holds a negative or undefined probability; please report this scenario")
+    _equal("the probabilities do not add up to 1", probability.sum(), 1.0)
+    _equal("the flows into and out of a state differ", *_state_flows(chain.moves, probability))
+    for view in chain.units:
+        _equal(f"admissions and discharges of {view.layout.name} differ", *_unit_flows(view, chain, probability))
+
+
+def _state_flows(moves: Transitions, probability: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
+    flow = probability[moves.origin] * moves.rate
+    into, out = (np.bincount(end, weights=flow, minlength=moves.states) for end in (moves.target, moves.origin))
+    return into, out
+
+
+def _unit_flows(view: UnitView, chain: NetworkChain, probability: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
+    """Admissions and discharges a day by discharge rate, (rates,) each."""
+    admitted = np.zeros(len(view.layout.discharge_rates))
+    for home, per_day in view.layout.arrivals.items():
+        share = chain.homes[home].admitted[view.layout.name]
+        admitted += np.array(per_day) * (share @ probability)
+    patients = probability @ view.own.counts[view.place]
+    return admitted, patients * np.array(view.layout.discharge_rates)
+
+
+def _equal(complaint: str, found: NDArray | float, expected: NDArray | float) -> None:
+    scale = np.maximum(np.abs(expected), NEGLIGIBLE)
+    worst = float(np.max(np.abs(found - expected) / scale, initial=0.0))
+    if not worst <= RELATIVE:
+        raise RunError(
+            f"the chain's answer failed its check: {complaint} by {worst:.1e} of their size, "
+            f"the limit is {RELATIVE:.0e}; please report this scenario, and simulate instead"
+        )

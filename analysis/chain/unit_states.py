@@ -1,0 +1,116 @@
+"""Every state that one unit can be in, and what an admission or a discharge makes of it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(frozen=True)
+class Gates:
+    """Whether a unit takes its own patients, and other units'."""
+
+    own_open: bool
+    incoming_open: bool
+
+
+@dataclass(frozen=True)
+class UnitSpace:
+    """What bounds the states of one unit.
+
+    most: patients that it can hold under its rules, at most its beds. rates: number of distinct discharge rates.
+    closure_threshold, incoming_threshold, reopening_gap: as in the policy.
+    """
+
+    most: int
+    rates: int
+    closure_threshold: int
+    incoming_threshold: int
+    reopening_gap: int
+
+    def gates(self, load: int, before: Gates) -> Gates:
+        """The gates once `load` beds are occupied, given those before."""
+        return Gates(
+            self._gate(load, self.closure_threshold, before.own_open),
+            self._gate(load, self.incoming_threshold, before.incoming_open),
+        )
+
+    def _gate(self, load: int, threshold: int, was_open: bool) -> bool:
+        if load >= threshold:
+            return False
+        return load <= max(0, threshold - self.reopening_gap) or was_open
+
+    def levels(self) -> list[tuple[int, Gates]]:
+        """Each load with each position of the gates that it can have, least load first."""
+        ahead, found = [(0, self.gates(0, Gates(True, True)))], set()
+        while ahead:
+            load, gates = level = ahead.pop()
+            if level not in found and 0 <= load <= self.most:
+                found.add(level)
+                ahead += [(other, self.gates(other, gates)) for other in (load - 1, load + 1)]
+        return sorted(found, key=lambda level: (level[0], level[1].own_open, level[1].incoming_open))
+
+    @property
+    def size(self) -> int:
+        """The number of states: a load spreads over the rates in any way."""
+        return sum(_ways(load, self.rates) for load, _ in self.levels())
+
+
+def _ways(patients: int, rates: int) -> int:
+    return math.comb(patients + rates - 1, patients) if rates else int(patients == 0)
+
+
+def _spread(patients: int, rates: int) -> Iterator[tuple[int, ...]]:
+    """Every way to have so many patients among so many rates."""
+    if rates <= 1:
+        yield (patients,) * rates
+        return
+    for first in range(patients + 1):
+        for others in _spread(patients - first, rates - 1):
+            yield (first, *others)
+
+
+@dataclass(frozen=True)
+class UnitStates:
+    """The states of one unit as arrays.
+
+    load: occupied beds, shape (states,). counts: patients by rate, (states, rates).
+    own_open, incoming_open: the gates, (states,).
+    after_admission, after_discharge: the state that a patient of a rate leads to, (states, rates); -1 for none.
+    """
+
+    load: NDArray[np.int64]
+    counts: NDArray[np.int64]
+    own_open: NDArray[np.bool_]
+    incoming_open: NDArray[np.bool_]
+    after_admission: NDArray[np.int64]
+    after_discharge: NDArray[np.int64]
+
+    @property
+    def size(self) -> int:
+        """The number of states."""
+        return len(self.load)
+
+
+@lru_cache(maxsize=1024)
+def unit_states(space: UnitSpace) -> UnitStates:
+    """The states of a unit, state 0 the empty one; the arrays are shared and must not be written to."""
+    states = [(counts, gates) for load, gates in space.levels() for counts in _spread(load, space.rates)]
+    place = {state: index for index, state in enumerate(states)}
+
+    def after(counts: tuple[int, ...], gates: Gates, rate: int, change: int) -> int:
+        changed = (*counts[:rate], counts[rate] + change, *counts[rate + 1 :])
+        return place.get((changed, space.gates(sum(changed), gates)), -1)
+
+    def table(change: int) -> NDArray[np.int64]:
+        rows = [[after(*state, rate, change) for rate in range(space.rates)] for state in states]
+        return np.array(rows, dtype=np.int64).reshape(len(states), space.rates)
+
+    counts = np.array([counts for counts, _ in states], dtype=np.int64).reshape(len(states), space.rates)
+    own, incoming = (np.array([getattr(gates, key) for _, gates in states]) for key in ("own_open", "incoming_open"))
+    return UnitStates(counts.sum(axis=1), counts, own, incoming, table(+1), table(-1))

@@ -1,0 +1,147 @@
+"""The entry point: finds the command, and turns every error into plain words and an exit status.
+
+Status: 0 done; 1 the computation failed, or a check it ran did not hold; 2 command line, scenario or data at
+fault; 130 interrupted.
+"""
+
+from __future__ import annotations
+
+import importlib
+import json
+import os
+import sys
+import traceback
+from collections.abc import Sequence
+
+import click
+
+from sim.errors import BrimlineError, Fault, ScenarioError
+
+DONE, FAILED, AT_FAULT, INTERRUPTED = 0, 1, 2, 130
+COMMANDS = {
+    "check": "Read the scenario back as tables before anything runs.",
+    "simulate": "Simulate one policy: its measures with intervals.",
+    "exact": "The same measures from the exact Markov chain.",
+    "verify": "Hold the simulation against the exact chain, measure by measure.",
+    "game": "Payoff table, equilibria, optimum and price of anarchy.",
+}
+CAUTION = (
+    "For planning only, not for decisions on a patient or a live bed. Results depend on the data and the "
+    "assumptions of the scenario; local protocols and licensed clinicians decide."
+)
+
+
+class Interrupted(Exception):
+    """Ctrl-C, after what was computed has been handed over."""
+
+
+class CheckFailed(Exception):
+    """A check that the command ran did not hold; its result has been handed over."""
+
+
+class LazyCommands(click.Group):
+    """Knows its commands by name and imports one only when it is needed."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, name: str) -> click.Command | None:
+        if name not in COMMANDS:
+            return None
+        return importlib.import_module(f"analysis.command.{name}").command
+
+    def resolve_command(self, ctx: click.Context, args: list[str]):
+        if args and args[0] not in COMMANDS:
+            from sim.scenario.faults import nearest
+
+            raise click.UsageError(f"There is no command `{args[0]}`; {nearest(args[0], COMMANDS)}", ctx)
+        return super().resolve_command(ctx, args)
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+
+@click.command(cls=LazyCommands, epilog=CAUTION, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(package_name="brimline", prog_name="brimline")
+def brimline() -> None:
+    """Closure rules in a network of critical-care units: simulate them, and find what selfish ones cost.
+
+    Every command reads a SCENARIO, a TOML file. Start with `brimline check SCENARIO`.
+    """
+
+
+def main(arguments: Sequence[str] | None = None) -> None:
+    """Runs the command line and exits with its status."""
+    sys.exit(run(list(sys.argv[1:] if arguments is None else arguments)))
+
+
+def run(arguments: list[str]) -> int:
+    """Runs the command line; returns the exit status."""
+    as_json = "--json" in arguments
+    try:
+        status = brimline.main(arguments, prog_name="brimline", standalone_mode=False)
+        return status if isinstance(status, int) else DONE
+    except Interrupted:
+        return INTERRUPTED
+    except CheckFailed:
+        return FAILED
+    except (KeyboardInterrupt, click.Abort):
+        say("interrupted; nothing was left half written")
+        return INTERRUPTED
+    except click.ClickException as error:
+        return _usage_fault(error, as_json)
+    except ScenarioError as error:
+        return _scenario_faults(error, as_json)
+    except BrimlineError as error:
+        return _failure(error, as_json)
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return FAILED
+    except OSError as error:
+        say(f"could not read or write: {error}")
+        return FAILED
+    except Exception as error:
+        say(f"failed unexpectedly: {type(error).__name__}: {error} (BRIMLINE_DEBUG=1 shows where)")
+        if os.environ.get("BRIMLINE_DEBUG"):
+            traceback.print_exc()
+        return FAILED
+
+
+def say(text: str) -> None:
+    """One notice on standard error."""
+    print(f"brimline: {text}", file=sys.stderr)
+
+
+def _usage_fault(error: click.ClickException, as_json: bool) -> int:
+    error.show(sys.stderr)
+    parameter = getattr(error, "param", None)
+    key = getattr(error, "option_name", None) or (parameter.opts[-1] if parameter is not None else "command line")
+    if as_json:
+        _put_faults([Fault(None, key, "is not a valid use", error.format_message(), "see --help")])
+    return AT_FAULT
+
+
+def _scenario_faults(error: ScenarioError, as_json: bool) -> int:
+    for fault in error.faults:
+        print(fault.located(error.file), file=sys.stderr)
+    if as_json:
+        _put_faults(error.faults)
+    return AT_FAULT
+
+
+def _put_faults(faults: Sequence[Fault]) -> None:
+    print(json.dumps({"faults": [vars(fault) for fault in faults]}, ensure_ascii=False))
+
+
+def _failure(error: BrimlineError, as_json: bool) -> int:
+    """An error that names reasons is at the scenario's door; any other is a failed computation."""
+    reasons = getattr(error, "reasons", None)
+    if reasons is None:
+        say(str(error))
+        return FAILED
+    for reason in reasons:
+        say(reason)
+    if as_json:
+        print(json.dumps({"reasons": list(reasons)}, ensure_ascii=False))
+    return AT_FAULT

@@ -1,0 +1,152 @@
+"""The options that every command takes, and the request that they make of a scenario."""
+
+from __future__ import annotations
+
+import functools
+import os
+import unicodedata
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import click
+
+from analysis.command.entry import CAUTION
+from sim.errors import Fault, ScenarioError
+
+ENGINES = ("reference",)
+
+
+@dataclass(frozen=True)
+class Request:
+    """A scenario with every override of the command line applied, and how to run it."""
+
+    scenario: Any
+    policy: Any
+    workers: int | None
+    engine: str
+    out: Path | None
+    as_json: bool
+
+
+def scenario_command(function: Callable[..., Any]) -> click.Command:
+    """A command on one SCENARIO with the common options; the function gets a Request and its own options."""
+
+    @functools.wraps(function)
+    def read_then_run(**values: Any) -> Any:
+        own = {name: value for name, value in values.items() if name not in _COMMON}
+        return function(_request({name: values[name] for name in _COMMON}), **own)
+
+    decorated: Callable[..., Any] = read_then_run
+    for option in reversed(_OPTIONS):
+        decorated = option(decorated)
+    return click.command(epilog=CAUTION)(decorated)
+
+
+_OPTIONS = (
+    click.argument("scenario", type=click.Path(path_type=Path)),
+    click.option("--json", "as_json", is_flag=True, help="One JSON document on standard output, nothing else there."),
+    click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of every draw."),
+    click.option("--replications", type=click.IntRange(1, 1_000_000), help="Number of replications."),
+    click.option("--confidence", type=click.FloatRange(0, 1, min_open=True, max_open=True), help="Of every interval."),
+    click.option("--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."),
+    click.option("--engine", type=click.Choice(ENGINES), default="reference", show_default=True, help="Simulation engine."),
+    click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the results."),
+    click.option("--threshold", multiple=True, metavar="UNIT=K", help="Closure threshold of a unit (repeatable)."),
+    click.option("--incoming", multiple=True, metavar="UNIT=K", help="Incoming threshold of a unit (repeatable)."),
+    click.option("--demand", type=float, metavar="X", help="Multiply every arrival rate."),
+    click.option("--target", type=float, metavar="T", help="Target utilisation of every unit."),
+    click.option("--policy", metavar="NAME", help="One of the scenario's policies."),
+    click.option("--exponential", is_flag=True, help="Exponential stays of the same means, no delay, constant demand."),
+)
+_COMMON = (
+    "scenario", "as_json", "seed", "replications", "confidence", "workers", "engine", "out", "threshold", "incoming",
+    "demand", "target", "policy", "exponential",
+)  # fmt: skip
+
+
+def _request(values: Mapping[str, Any]) -> Request:
+    from sim.scenario import read_scenario
+
+    scenario = read_scenario(values["scenario"])
+    faults: list[Fault] = []
+    changes = {key: values[key] for key in ("seed", "replications", "confidence") if values[key] is not None}
+    scenario = scenario.with_run(**changes)
+    scenario = _with_demand(scenario, values["demand"], faults)
+    scenario = _with_target(scenario, values["target"], faults)
+    if values["exponential"]:
+        scenario = scenario.exponential()
+    policy = _policy(scenario, values["policy"], faults)
+    policy = policy.with_thresholds(_per_unit("--threshold", values["threshold"], scenario, faults))
+    policy = policy.with_rule("incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults))
+    _writable(values["out"], faults)
+    if faults:
+        raise ScenarioError(faults, str(values["scenario"]))
+    return Request(scenario, policy, values["workers"], values["engine"], values["out"], values["as_json"])
+
+
+def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
+    if factor is None:
+        return scenario
+    from sim.scenario.tables import MOST_PATIENTS
+
+    days = scenario.run.warm_up_days + scenario.run.measured_days
+    most = MOST_PATIENTS / (days * sum(group.per_day for group in scenario.patients))
+    if not 0 < factor <= most:
+        faults.append(Fault(None, "--demand", f"must be above 0 and at most {most:.6g}", f"got {factor:g}", "correct it"))
+        return scenario
+    return scenario.with_demand(factor)
+
+
+def _with_target(scenario: Any, target: float | None, faults: list[Fault]) -> Any:
+    if target is None:
+        return scenario
+    if not 0 < target <= 1:
+        faults.append(Fault(None, "--target", "must be above 0 and at most 1", f"got {target:g}", "correct it"))
+        return scenario
+    return scenario.with_target(target)
+
+
+def _policy(scenario: Any, name: str | None, faults: list[Fault]) -> Any:
+    from sim.scenario.faults import nearest
+
+    try:
+        return scenario.policy(None if name is None else unicodedata.normalize("NFC", name))
+    except KeyError:
+        known = [row.name for row in scenario.policies]
+        faults.append(Fault(None, "--policy", "must name a policy of the scenario", f"got {name!r}", nearest(name, known)))
+        return scenario.policy()
+
+
+def _per_unit(option: str, entries: tuple[str, ...], scenario: Any, faults: list[Fault]) -> dict[str, int]:
+    """The thresholds of repeated UNIT=K options; the last one for a unit holds."""
+    from sim.scenario.faults import nearest
+
+    chosen = {}
+    for entry in entries:
+        name, found, number = unicodedata.normalize("NFC", entry).rpartition("=")
+        if not found or not number.strip().isdecimal():
+            faults.append(Fault(None, option, "must be UNIT=K, K a whole number", f"got {entry!r}", 'write "Ashgill=9"'))
+        elif name not in scenario.unit_names:
+            remedy = nearest(name, scenario.unit_names)
+            faults.append(Fault(None, option, "must name a unit of the scenario", f"got {name!r}", remedy))
+        elif int(number) > scenario.unit(name).beds:
+            beds = scenario.unit(name).beds
+            rule = "must not be above the unit's beds"
+            faults.append(Fault(None, option, rule, f"got {entry!r} for {beds} beds", f"choose from 0 to {beds}"))
+        else:
+            chosen[name] = int(number)
+    return chosen
+
+
+def _writable(folder: Path | None, faults: list[Fault]) -> None:
+    """Results must be writable before hours are spent on them."""
+    if folder is None:
+        return
+    above = folder
+    while not above.exists() and above != above.parent:
+        above = above.parent
+    if not above.is_dir() or not os.access(above, os.W_OK):
+        rule, remedy = "must be a folder that can be written", "choose another folder"
+        faults.append(Fault(None, "--out", rule, f"got {str(folder)!r}", remedy))

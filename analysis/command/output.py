@@ -1,0 +1,97 @@
+"""What commands print and write: tables for a person, one JSON document for a program, files in a folder."""
+
+from __future__ import annotations
+
+import json
+import shutil
+import sys
+from collections.abc import Iterable, Sequence
+from pathlib import Path
+from typing import Any
+
+from analysis.command.entry import CAUTION
+
+PLAIN_WIDTH = 132
+
+
+def put_json(document: Any) -> None:
+    """The one document on standard output."""
+    print(to_json(document))
+
+
+def to_json(document: Any) -> str:
+    """JSON with no NaN and no infinity, names as they are written."""
+    return json.dumps(document, ensure_ascii=False, allow_nan=False, indent=1)
+
+
+def console() -> Any:
+    """rich's console on standard output; wide where it is no terminal, so that tables do not wrap."""
+    from rich.console import Console
+
+    return Console(highlight=False, markup=False, width=None if sys.stdout.isatty() else PLAIN_WIDTH)
+
+
+def put_table(title: str, columns: Sequence[str], rows: Iterable[Sequence[Any]]) -> None:
+    """One table; the first column is a name, the others are numbers or short words."""
+    from rich import box
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table(title=Text(title), title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
+    for place, column in enumerate(columns):
+        table.add_column(Text(column), justify="left" if place == 0 else "right", overflow="fold")
+    for row in rows:
+        table.add_row(*(Text(cell if isinstance(cell, str) else number(cell)) for cell in row))
+    console().print(table)
+
+
+def put_text(*lines: str) -> None:
+    """Lines of text, wrapped at the terminal's width."""
+    for line in lines:
+        console().print(line, soft_wrap=not sys.stdout.isatty())
+
+
+def put_caution() -> None:
+    """What the figures are not for."""
+    put_text("", CAUTION)
+
+
+def number(value: Any, digits: int = 3) -> str:
+    """A number as a table shows it; a dash for none."""
+    if value is None:
+        return "-"
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, int):
+        return str(value)
+    return f"{value:.{digits}f}"
+
+
+def interval(estimate: dict[str, Any], digits: int = 3) -> str:
+    """`mean (low to high)`, or the bare number where there is no interval."""
+    if estimate["mean"] is None:
+        return "-"
+    if estimate["low"] is None:
+        return number(estimate["mean"], digits)
+    low, high = number(estimate["low"], digits), number(estimate["high"], digits)
+    return f"{number(estimate['mean'], digits)} ({low} to {high})"
+
+
+def prepare_folder(folder: Path) -> Path:
+    """Makes the folder; what an earlier run left there is kept, moved into `earlier/N`."""
+    folder.mkdir(parents=True, exist_ok=True)
+    left = [path for path in folder.iterdir() if path.name != "earlier"]
+    if left:
+        earlier = folder / "earlier"
+        taken = [int(path.name) for path in earlier.glob("*") if path.name.isdecimal()] if earlier.exists() else []
+        shelf = earlier / str(max(taken, default=0) + 1)
+        shelf.mkdir(parents=True)
+        for path in left:
+            shutil.move(path, shelf / path.name)
+    return folder
+
+
+def write_result(folder: Path, document: Any, provenance: dict[str, Any]) -> None:
+    """Writes `result.json` and `provenance.json`."""
+    for name, content in (("result.json", document), ("provenance.json", provenance)):
+        (folder / name).write_text(to_json(content) + "\n", encoding="utf-8")

@@ -1,0 +1,125 @@
+"""Progress with time left: a bar on a terminal, plain lines otherwise, on standard error."""
+
+from __future__ import annotations
+
+import signal
+import sys
+import time
+from collections.abc import Iterator
+from types import TracebackType
+from typing import Any, Protocol
+
+SECONDS_BETWEEN_LINES = 5.0
+
+
+class Progress(Protocol):
+    """Counts what is done of a known total."""
+
+    def advance(self, count: int = 1) -> None:
+        """`count` more are done."""
+        ...
+
+
+class _Lines:
+    """A plain line every few seconds."""
+
+    def __init__(self, label: str, total: int, unit: str) -> None:
+        self._label, self._total, self._unit = label, total, unit
+        self._done = 0
+        self._started = self._last = time.monotonic()
+
+    def __enter__(self) -> _Lines:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        pass
+
+    def advance(self, count: int = 1) -> None:
+        self._done += count
+        now = time.monotonic()
+        if now - self._last >= SECONDS_BETWEEN_LINES:
+            self._last = now
+            left = (now - self._started) / self._done * (self._total - self._done)
+            done = f"{self._done} of {self._total} {self._unit}, {100 * self._done // self._total} %"
+            print(f"{self._label}: {done}, about {duration(left)} left", file=sys.stderr, flush=True)
+
+
+class _Bar:
+    """rich's bar."""
+
+    def __init__(self, label: str, total: int, unit: str) -> None:
+        from rich.console import Console
+        from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeRemainingColumn
+        from rich.progress import Progress as RichProgress
+
+        columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn(unit))
+        self._bar = RichProgress(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True)
+        self._task = self._bar.add_task(label, total=total)
+
+    def __enter__(self) -> _Bar:
+        self._bar.__enter__()
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+        self._bar.__exit__(kind, error, trace)
+
+    def advance(self, count: int = 1) -> None:
+        self._bar.advance(self._task, count)
+
+
+def progress(label: str, total: int, unit: str) -> Any:
+    """A context manager whose `advance(count)` tells how far the work is."""
+    return (_Bar if sys.stderr.isatty() else _Lines)(label, total, unit)
+
+
+class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `for`
+    """The replies as they come; Ctrl-C ends them quietly, and `interrupted` tells that it did.
+
+    Inside the `with` block Ctrl-C can break only the wait for the next reply, never the handling of one, so
+    nothing that has arrived is lost.
+    """
+
+    def __init__(self, replies: Iterator[Any]) -> None:
+        self._replies = replies
+        self._waiting = False
+        self.interrupted = False
+
+    def __enter__(self) -> until_interrupted:
+        self._before = signal.signal(signal.SIGINT, self._on_interrupt)
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        signal.signal(signal.SIGINT, self._before)
+
+    def __iter__(self) -> Iterator[Any]:
+        return self
+
+    def __next__(self) -> Any:
+        if self.interrupted:
+            self._stop()
+        self._waiting = True
+        try:
+            return next(self._replies)
+        except KeyboardInterrupt:
+            self.interrupted = True
+            self._stop()
+        finally:
+            self._waiting = False
+
+    def _on_interrupt(self, *_: object) -> None:
+        self.interrupted = True
+        if self._waiting:
+            raise KeyboardInterrupt
+
+    def _stop(self) -> None:
+        self._replies.close()  # type: ignore[attr-defined]
+        raise StopIteration
+
+
+def duration(seconds: float) -> str:
+    """A length of time as a person says it."""
+    if seconds < 90:
+        return f"{seconds:.0f} s"
+    if seconds < 5400:
+        return f"{seconds / 60:.0f} min"
+    return f"{seconds / 3600:.1f} h"

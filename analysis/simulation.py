@@ -1,0 +1,76 @@
+"""One policy's measures with intervals, from independent replications."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from analysis.confidence import Estimate, mean_estimate, ratio_estimate
+from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, combine, network_sums, unit_sums
+from sim.record import Record
+from sim.scenario import Scenario
+
+
+@dataclass(frozen=True)
+class Simulation:
+    """Measures of one policy.
+
+    units: unit -> measure -> estimate. occupancy: unit -> an estimate for each number of occupied beds.
+    network: measure -> estimate.
+    """
+
+    units: Mapping[str, Mapping[str, Estimate]]
+    occupancy: Mapping[str, Sequence[Estimate]]
+    network: Mapping[str, Estimate]
+    replications: int
+    confidence: float
+
+    def to_dict(self) -> dict[str, Any]:
+        """The tree of `exact`, each number as `{"mean", "low", "high"}`."""
+        units = {
+            name: {measure: estimate.to_dict() for measure, estimate in measures.items()}
+            | {"occupancy": [estimate.to_dict() for estimate in self.occupancy[name]]}
+            for name, measures in self.units.items()
+        }
+        return {"units": units, "network": {name: estimate.to_dict() for name, estimate in self.network.items()}}
+
+
+def summarise(records: Sequence[Record], scenario: Scenario, *, confidence: float) -> Simulation:
+    """The measures over the records of one policy, one a replication."""
+    beds = np.array([unit.beds for unit in scenario.units], float)
+    sums = unit_sums(records, beds, scenario.run.measured_days)
+    whole = network_sums(sums)
+    return Simulation(
+        units={
+            unit.name: {m.name: estimate_measure(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
+            for place, unit in enumerate(scenario.units)
+        },
+        occupancy={
+            unit.name: _occupancy(sums["occupancy_days"][:, place, : unit.beds + 1], scenario, confidence)
+            for place, unit in enumerate(scenario.units)
+        },
+        network={m.name: estimate_measure(m, whole, confidence) for m in NETWORK_MEASURES},
+        replications=len(records),
+        confidence=confidence,
+    )
+
+
+def of_unit(sums: Sums, place: int) -> Sums:
+    """One unit's sums, (replications,) each."""
+    return {name: values[:, place] for name, values in sums.items() if values.ndim == 2}
+
+
+def estimate_measure(measure: Measure, sums: Sums, confidence: float, *, comparisons: int = 1) -> Estimate:
+    """A measure over replications, with Student's interval."""
+    if measure.is_share_of_patients:
+        return ratio_estimate(sums[measure.total], sums[measure.base], confidence, comparisons=comparisons)
+    return mean_estimate(combine(measure, sums), confidence, comparisons=comparisons)
+
+
+def _occupancy(days: np.ndarray, scenario: Scenario, confidence: float) -> list[Estimate]:
+    return [mean_estimate(level / scenario.run.measured_days, confidence) for level in days.T]
+
+

@@ -1,0 +1,89 @@
+"""Where a result came from: versions, machine, floating-point fingerprint, scenario and data hashes."""
+
+from __future__ import annotations
+
+import datetime
+import hashlib
+import platform
+import subprocess
+from functools import cache
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+from sim import __version__
+from sim.demand import WeeklyPattern
+from sim.intake import draw_intake
+from sim.lowering import GroupDraws, IntakePlan
+from sim.scenario import Scenario
+from sim.stays import Gamma, Lognormal
+
+PACKAGES = ("numpy", "scipy", "simpy", "pandas", "joblib", "pydantic")
+
+
+@cache
+def fingerprint() -> dict[str, str]:
+    """What must agree for two machines to give the same bits: versions, and the hash of a probe intake."""
+    probe = IntakePlan(
+        seed=1,
+        groups=(
+            GroupDraws("probe a", 0, 3.0, WeeklyPattern(tuple(range(1, 25)), None), Lognormal(4.0, 1.4)),
+            GroupDraws("probe b", 0, 2.0, WeeklyPattern(None, None), Gamma(3.0, 0.7)),
+        ),
+        stay_factors=(1.0, 1.1),
+        delay_hours=Lognormal(2.5, 0.5),
+        horizon_days=200.0,
+    )
+    return {"numpy": version("numpy"), "scipy": version("scipy"), "probe_intake": draw_intake(probe, 0).hash}
+
+
+def provenance(
+    scenario: Scenario, *, command: list[str], engine: str, started: datetime.datetime
+) -> dict[str, Any]:
+    """Everything needed to repeat a result, as plain values; times are UTC."""
+    source = scenario.source
+    return {
+        "program": {"name": "brimline", "version": __version__, "commit": _commit()},
+        "command": command,
+        "engine": engine,
+        "seed": scenario.run.seed,
+        "scenario": {
+            "file": source.file,
+            "sha256": hashlib.sha256(source.text.encode()).hexdigest(),
+            "text": source.text,
+            "data_sha256": dict(source.data),
+        },
+        "versions": {"python": platform.python_version()} | {name: _version(name) for name in PACKAGES},
+        "machine": {"system": platform.system(), "processor": platform.machine(), "fingerprint": fingerprint()},
+        "started": started.isoformat(timespec="seconds"),
+        "ended": now().isoformat(timespec="seconds"),
+    }
+
+
+def now() -> datetime.datetime:
+    """This moment, UTC."""
+    return datetime.datetime.now(datetime.UTC)
+
+
+def _version(package: str) -> str | None:
+    try:
+        return version(package)
+    except PackageNotFoundError:
+        return None
+
+
+def _commit() -> str | None:
+    """The commit of the checkout that runs, where it is one and git is there; `+` marks uncommitted changes."""
+    folder = Path(__file__).resolve().parent.parent
+    if not (folder / ".git").exists():
+        return None
+    try:
+        commit = _git(folder, "rev-parse", "HEAD")
+        return commit + ("+" if _git(folder, "status", "--porcelain", "--untracked-files=no") else "")
+    except (OSError, subprocess.SubprocessError):
+        return None
+
+
+def _git(folder: Path, *arguments: str) -> str:
+    done = subprocess.run(["git", "-C", str(folder), *arguments], capture_output=True, text=True, check=True, timeout=10)
+    return done.stdout.strip()

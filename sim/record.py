@@ -1,0 +1,63 @@
+"""What one run measured: time integrals and counts over the measured window, nothing derived."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields
+from functools import cached_property
+
+import numpy as np
+
+from sim.intake import hash_arrays
+
+# The gate state of a unit, as bits: what `gate_days` counts time by.
+OWN_CLOSED, INCOMING_CLOSED, FULL = 1, 2, 4
+GATE_STATES = 8
+
+
+@dataclass(frozen=True)
+class Record:
+    """One replication under one policy, all within the measured window.
+
+    occupancy_days: days with n beds occupied, (periods, units, most beds + 1).
+    gate_days: days in each gate state (bits OWN_CLOSED, INCOMING_CLOSED, FULL), (units, 8).
+    arrived, turned_away: patients by home, (units,).
+    diverted: transfers decided, by home and by unit, (units, units).
+    admitted: beds occupied, by home and by treating unit, (units, units).
+    on_road_at_start, on_road_at_end: beds reserved, by unit, (units,).
+    """
+
+    occupancy_days: np.ndarray
+    gate_days: np.ndarray
+    arrived: np.ndarray
+    turned_away: np.ndarray
+    diverted: np.ndarray
+    admitted: np.ndarray
+    on_road_at_start: np.ndarray
+    on_road_at_end: np.ndarray
+
+    @cached_property
+    def hash(self) -> str:
+        """SHA-256 over every array, names and shapes included."""
+        return hash_arrays({field.name: getattr(self, field.name) for field in fields(self)})
+
+    def faults(self, measured_days: float) -> list[str]:
+        """Broken invariants in words; empty for a sound record."""
+        broken = []
+        admitted = self.admitted.sum()
+        if self.arrived.sum() + self.on_road_at_start.sum() != (
+            admitted + self.turned_away.sum() + self.on_road_at_end.sum()
+        ):
+            broken.append("arrived + on the road at the start differs from admitted + turned away + on the road")
+        for name, days in (("occupancy", self.occupancy_days.sum(axis=(0, 2))), ("gate", self.gate_days.sum(axis=1))):
+            if not np.allclose(days, measured_days, rtol=1e-9, atol=1e-9):
+                broken.append(f"{name} days do not add up to the measured days")
+        if any(np.any(getattr(self, field.name) < 0) for field in fields(self)):
+            broken.append("a count or a time is negative")
+        if np.any(np.diagonal(self.diverted)):
+            broken.append("a patient was diverted to the own home")
+        return broken
+
+
+def hash_records(hashes: list[str]) -> str:
+    """One hash over the hashes of several records, in the order given."""
+    return hash_arrays({"records": np.frombuffer("".join(hashes).encode(), np.uint8)})

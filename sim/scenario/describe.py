@@ -1,0 +1,131 @@
+"""The scenario read back in numbers, before anything runs: offered load, stays, rules, size of the game, advice."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from sim.scenario.policies import Policy
+from sim.scenario.scenario import Scenario
+
+WARM_UP_STAYS = 5
+
+
+def describe(scenario: Scenario, policy: Policy) -> dict[str, Any]:
+    """Plain values, ready for JSON: `run`, `units`, `patients`, `diversion`, `game`, `policies`, `advice`.
+
+    Loads are in beds, stays in days, delays in hours.
+    """
+    return {
+        "title": scenario.title,
+        "run": scenario.run.model_dump(),
+        "units": {unit.name: _unit(scenario, policy, unit.name) for unit in scenario.units},
+        "patients": {group.group: _group(group) for group in scenario.patients},
+        "diversion": _diversion(scenario, policy),
+        "game": _game(scenario),
+        "policies": [row.name for row in scenario.policies],
+        "advice": advice(scenario),
+    }
+
+
+def _unit(scenario: Scenario, policy: Policy, name: str) -> dict[str, Any]:
+    unit, rules = scenario.unit(name), policy.units[name]
+    own = [group for group in scenario.patients if group.home == name]
+    load = sum(group.per_day * group.mean_stay_days * unit.stay_factor for group in own)
+    return {
+        "beds": unit.beds,
+        "arrivals_per_day": sum(group.per_day for group in own),
+        "offered_load_beds": load,
+        "offered_load_per_bed": load / unit.beds,
+        "closure_threshold": rules.closure_threshold,
+        "incoming_threshold": rules.incoming,
+        "reopening_gap": rules.reopening_gap,
+        "admit_while_closed": rules.admit_while_closed,
+        "review_hours": rules.review_hours,
+        "target_utilisation": unit.target_utilisation,
+        "referral_order": list(rules.referral_order),
+        "stay_factor": unit.stay_factor,
+    }
+
+
+def _group(group: Any) -> dict[str, Any]:
+    stay = group.stay.distribution()
+    return {
+        "home": group.home,
+        "kind": group.kind,
+        "per_day": group.per_day,
+        "varies_by_hour": group.hour_of_day is not None,
+        "varies_by_weekday": group.day_of_week is not None,
+        "family": group.stay.family,
+        "mean_days": stay.mean(),
+        "cv": stay.cv(),
+        "median_days": stay.median(),
+    }
+
+
+def _diversion(scenario: Scenario, policy: Policy) -> dict[str, Any]:
+    delay = scenario.diversion.delay
+    known = None if delay is None else delay.distribution()
+    return {
+        "when_all_closed": policy.when_all_closed,
+        "delay": None if known is None else {
+            "family": delay.family, "mean_hours": known.mean(), "cv": known.cv(), "median_hours": known.median()
+        },
+        "extra_days": scenario.diversion.extra_days,
+    }  # fmt: skip
+
+
+def _game(scenario: Scenario) -> dict[str, Any]:
+    strategies = scenario.strategies()
+    cells = math.prod(len(mine) for mine in strategies.values())
+    return {
+        "goal": scenario.game.goal.model_dump(),
+        "welfare": scenario.game.welfare.model_dump(),
+        "strategies": {name: list(mine) for name, mine in strategies.items()},
+        "cells": cells,
+        "runs": cells * scenario.run.replications,
+    }
+
+
+def mean_stay_days(scenario: Scenario) -> float:
+    """The longest mean stay of any group in any unit, in days: what a warm-up is measured by."""
+    factor = max(unit.stay_factor for unit in scenario.units)
+    return max(group.mean_stay_days for group in scenario.patients) * factor
+
+
+def advice(scenario: Scenario) -> list[str]:
+    """What an analyst should know before running this scenario; empty where nothing is amiss."""
+    return [said for rule in (_warm_up, _whole_weeks, _targets, _one_replication) for said in rule(scenario)]
+
+
+def _warm_up(scenario: Scenario) -> list[str]:
+    least = WARM_UP_STAYS * mean_stay_days(scenario)
+    given = scenario.run.warm_up_days
+    if given >= least:
+        return []
+    return [
+        f"run.warm_up_days is {given:g}, less than {WARM_UP_STAYS} mean stays ({least:.1f} days): measures will lean "
+        f"towards the empty network that a run starts from; raise it to at least {7 * math.ceil(least / 7)}"
+    ]
+
+
+def _whole_weeks(scenario: Scenario) -> list[str]:
+    if all(group.day_of_week is None for group in scenario.patients):
+        return []
+    lengths = {key: getattr(scenario.run, key) for key in ("warm_up_days", "measured_days")}
+    return [
+        f"run.{key} is {days:g}, no multiple of 7, and demand varies by weekday: some weekdays weigh more than others"
+        for key, days in lengths.items()
+        if days % 7
+    ]
+
+
+def _targets(scenario: Scenario) -> list[str]:
+    missing = [unit.name for unit in scenario.units if unit.target_utilisation is None]
+    if not missing:
+        return []
+    return [f"no target_utilisation for {', '.join(missing)}: `game` needs one for every unit (or --target)"]
+
+
+def _one_replication(scenario: Scenario) -> list[str]:
+    return ["run.replications is 1: one replication gives no interval"] if scenario.run.replications == 1 else []

@@ -1,0 +1,255 @@
+"""Lengths of stay and transfer delays as the file gives them: `{ family = "...", ... }`.
+
+The same families serve both; a stay names its numbers in days (`mean_days`, `rates_per_day`), a delay in
+hours (`mean_hours`, `rates_per_hour`). A new family is declared here (its keys) and in `sim/stays.py` (its
+quantile function).
+"""
+
+from __future__ import annotations
+
+import csv
+import hashlib
+import math
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import Discriminator, Field, PrivateAttr, Tag, ValidationInfo, create_model, model_validator
+
+from sim import stays
+from sim.scenario.tables import NotNegative, Positive, Row, Share, Table, breach
+
+MOST_STAGES = 200
+LONGEST = 36_500.0  # of days, or of hours
+
+Mean = Annotated[Positive, Field(le=LONGEST)]
+Cv = Annotated[float, Field(ge=0.001, le=20, examples=["cv = 1.4"])]
+
+
+def _key_in(unit: str):
+    """How the file writes a field's name where its numbers are in `unit`."""
+    written = {"mean": f"mean_{unit}", "rates": f"rates_per_{unit.removesuffix('s')}"}
+    return lambda name: written.get(name, name)
+
+
+class Duration(Table):
+    """A distribution of a time, its numbers in days (of hours in the variants for delays)."""
+
+    model_config = {"alias_generator": _key_in("days")}
+
+    def distribution(self) -> stays.Distribution:
+        """The distribution as `sim.stays` computes with it, in the unit that the keys name."""
+        numbers = [value for name, value in self if name not in ("family", "weight")]
+        return getattr(stays, self.family.capitalize())(*numbers)  # type: ignore[attr-defined]
+
+
+class Constant(Duration):
+    """Always the same time; 0 is legal."""
+
+    family: Literal["constant"]
+    mean: Annotated[NotNegative, Field(le=LONGEST)]
+
+
+class Exponential(Duration):
+    """The memoryless family, the exact chain's own."""
+
+    family: Literal["exponential"]
+    mean: Mean
+
+
+class Erlang(Duration):
+    """The sum of equal exponential stages."""
+
+    family: Literal["erlang"]
+    mean: Mean
+    stages: Annotated[int, Field(ge=1, le=MOST_STAGES, examples=["stages = 3"])]
+
+
+class Gamma(Duration):
+    """Gamma by mean and coefficient of variation."""
+
+    family: Literal["gamma"]
+    mean: Mean
+    cv: Cv
+
+
+class Weibull(Duration):
+    """Weibull by mean and coefficient of variation."""
+
+    family: Literal["weibull"]
+    mean: Mean
+    cv: Cv
+
+
+class Lognormal(Duration):
+    """Lognormal by mean and coefficient of variation."""
+
+    family: Literal["lognormal"]
+    mean: Mean
+    cv: Cv
+
+
+class Hyperexponential(Duration):
+    """Two exponential phases with balanced means."""
+
+    family: Literal["hyperexponential"]
+    mean: Mean
+    cv: Annotated[Cv, Field(ge=1)]
+
+
+class Coxian(Duration):
+    """Phases in a row, each left at its rate, with a chance to go on to the next."""
+
+    family: Literal["coxian"]
+    rates: Annotated[tuple[Positive, ...], Row, Field(min_length=1, max_length=MOST_STAGES)]
+    goes_on: Annotated[tuple[Share, ...], Row, Field(max_length=MOST_STAGES, examples=["goes_on = [0.4]"])]
+
+    @model_validator(mode="after")
+    def _lengths_match(self):
+        if len(self.goes_on) != len(self.rates) - 1:
+            raise breach(
+                "needs one entry fewer than the rates (a patient may go on after every phase but the last)",
+                len(self.goes_on),
+                f"give {len(self.rates) - 1} probabilities",
+                key=("goes_on",),
+            )
+        return self
+
+
+class Empirical(Duration):
+    """Observed times in one column of a CSV file; the file is read when the scenario is."""
+
+    family: Literal["empirical"]
+    file: Annotated[str, Field(min_length=1, examples=['file = "stays.csv"'])]
+    column: Annotated[str, Field(min_length=1, examples=['column = "days"'])]
+    _values: tuple[float, ...] = PrivateAttr(())
+    _sha256: str = PrivateAttr("")
+
+    @model_validator(mode="after")
+    def _read(self, info: ValidationInfo):
+        folder = Path((info.context or {}).get("folder", ""))
+        self._values, self._sha256 = read_column(folder / self.file, self.column)
+        return self
+
+    def distribution(self) -> stays.Distribution:
+        """The observed times, each as likely as it is frequent."""
+        return stays.Empirical(values=self._values)
+
+    @property
+    def sha256(self) -> str:
+        """The hash of the data file's bytes."""
+        return self._sha256
+
+
+def read_column(path: Path, column: str) -> tuple[tuple[float, ...], str]:
+    """The numbers of one CSV column in file order, and the file's SHA-256; a breach where one is no duration."""
+    try:
+        content = path.read_bytes()
+    except OSError as error:
+        reason = error.strerror or "unreadable"
+        raise breach(
+            "must name a CSV file that can be read", f"{path} ({reason})", "correct the path (it is relative "
+            "to the scenario file) or put the file there", key=("file",),
+        ) from None
+    try:
+        rows = list(csv.reader(content.decode("utf-8-sig").splitlines(), strict=True))
+    except (UnicodeDecodeError, csv.Error) as error:
+        raise breach(
+            "must be a CSV file in UTF-8", f"{path.name} ({error})", "save it again as CSV in UTF-8", key=("file",)
+        ) from None
+    return _numbers(rows, path.name, column), hashlib.sha256(content).hexdigest()
+
+
+def _numbers(rows: list[list[str]], file: str, column: str) -> tuple[float, ...]:
+    header = [name.strip() for name in rows[0]] if rows else []
+    if header.count(column) != 1:
+        raise breach(
+            f"must name one column of {file}", repr(column), "its columns are " + (", ".join(header) or "none"),
+            key=("column",),
+        )
+    place = header.index(column)
+    numbers, bad = [], []
+    for line, row in enumerate(rows[1:], start=2):
+        if not row:
+            continue
+        text = row[place].strip() if place < len(row) else ""
+        number = _number(text)
+        if number is None or not 0 <= number <= LONGEST:
+            bad.append(f"line {line}: {text!r}")
+        else:
+            numbers.append(number)
+    if bad:
+        shown = "; ".join(bad[:3]) + (f"; and {len(bad) - 3} more" if len(bad) > 3 else "")
+        raise breach(
+            f"every entry of column {column!r} of {file} must be a number from 0 to {LONGEST:g}", shown,
+            "mend or remove those rows", key=("column",),
+        )
+    if not numbers:
+        raise breach(f"column {column!r} of {file} must hold at least one number", "none", "add rows", key=("column",))
+    return tuple(numbers)
+
+
+def _number(text: str) -> float | None:
+    try:
+        number = float(text)
+    except ValueError:
+        return None
+    return number if math.isfinite(number) else None
+
+
+FAMILIES = (Constant, Exponential, Erlang, Gamma, Weibull, Lognormal, Hyperexponential, Coxian, Empirical)
+
+
+class Mixture(Duration):
+    """Several families, each with its weight; the parts' type depends on the unit (see `_duration`)."""
+
+    family: Literal["mixture"]
+
+    def distribution(self) -> stays.Distribution:
+        """The mixture of the parts' distributions."""
+        return stays.Mixture(parts=tuple((part.weight, part.distribution()) for part in self.parts))
+
+    @model_validator(mode="after")
+    def _some_weight(self):
+        if not any(part.weight > 0 for part in self.parts):
+            raise breach("at least one part must have a weight above 0", "all are 0", "raise one", key=("parts",))
+        return self
+
+
+def _variant(family: type[Duration], name: str, unit: str, **keys: Any) -> type[Duration]:
+    """The family with its numbers in `unit`, and perhaps more keys."""
+    in_unit = type(name, (family,), {"model_config": {"alias_generator": _key_in(unit)}, "__module__": __name__})
+    made = create_model(name, __base__=in_unit, __module__=__name__, **keys) if keys else in_unit
+    return globals().setdefault(name, made)  # found again by name when a scenario goes to a worker process
+
+
+def _one_of(models: dict[str, type[Duration]]) -> Any:
+    """One of the models, told apart by its `family`."""
+    union: Any = None
+    for family, model in models.items():
+        tagged = Annotated[model, Tag(family)]
+        union = tagged if union is None else union | tagged
+    return Annotated[union, Discriminator("family")]
+
+
+def _duration(unit: str) -> Any:
+    """The type of a duration whose keys name `unit`."""
+    weight = (Annotated[NotNegative, Field(examples=["weight = 0.3"])], ...)
+    models, parts = {}, {}
+    for family in FAMILIES:
+        word = family.__name__.lower()
+        models[word] = _variant(family, f"{family.__name__}In{unit.capitalize()}", unit)
+        parts[word] = _variant(family, f"{family.__name__}PartIn{unit.capitalize()}", unit, weight=weight)
+    several = (Annotated[tuple[_one_of(parts), ...], Row, Field(min_length=1, max_length=50)], ...)
+    models["mixture"] = _variant(Mixture, f"MixtureIn{unit.capitalize()}", unit, parts=several)
+    return _one_of(models)
+
+
+Stay = _duration("days")
+Delay = _duration("hours")
+
+
+def exponential_stay(mean_days: float) -> Duration:
+    """An exponential stay of that mean; where the mean is 0 a constant one, which is the same thing."""
+    if mean_days > 0:
+        return Exponential(family="exponential", mean_days=mean_days)
+    return Constant(family="constant", mean_days=0.0)

@@ -1,0 +1,50 @@
+"""The `[[patients]]` rows: one group of patients each."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import AfterValidator, Field
+
+from sim.demand import WeeklyPattern
+from sim.scenario.durations import Duration, Stay
+from sim.scenario.tables import NotNegative, Positive, Row, Table, breach
+from sim.scenario.units import Name
+
+
+def _not_all_zero(weights: tuple[float, ...]) -> tuple[float, ...]:
+    if not any(weights):
+        raise breach("at least one weight must be above 0", "all are 0", "raise one, or remove the key")
+    return weights
+
+
+Weights = Annotated[tuple[NotNegative, ...], Row, AfterValidator(_not_all_zero)]
+
+
+class PatientGroup(Table):
+    """Patients of one home unit that arrive by one rhythm and share one length of stay."""
+
+    group: Annotated[Name, Field(examples=['group = "Ashgill emergencies"'])]
+    home: Annotated[str, Field(examples=['home = "Ashgill"'])]
+    kind: Annotated[Literal["emergency"], Field(examples=['kind = "emergency"'])] = "emergency"
+    per_day: Annotated[Positive, Field(le=10_000, examples=["per_day = 2.1"])]
+    hour_of_day: Annotated[Weights, Field(min_length=24, max_length=24)] | None = None  # midnight first
+    day_of_week: Annotated[Weights, Field(min_length=7, max_length=7)] | None = None  # Monday first
+    stay: Annotated[Stay, Field(examples=['stay = { family = "lognormal", mean_days = 3.9, cv = 1.4 }'])]
+
+    @property
+    def pattern(self) -> WeeklyPattern:
+        """The weekly shape of this group's arrivals."""
+        return WeeklyPattern(self.hour_of_day, self.day_of_week)
+
+    @property
+    def mean_stay_days(self) -> float:
+        """The mean stay in days, before any unit's `stay_factor`."""
+        return self.stay.distribution().mean()
+
+    def in_constant_exponential_form(self) -> PatientGroup:
+        """The same group with exponential stays of the same mean and arrivals at its mean rate."""
+        from sim.scenario.durations import exponential_stay
+
+        plain: Duration = exponential_stay(self.mean_stay_days)
+        return self.model_copy(update={"hour_of_day": None, "day_of_week": None, "stay": plain})

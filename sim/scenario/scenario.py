@@ -1,0 +1,114 @@
+"""`Scenario`: the frozen description of a network, and the ways to change it as a whole."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Annotated, Any, Literal
+
+from pydantic import Field, PrivateAttr
+
+from sim.scenario.diversion import Diversion
+from sim.scenario.game import Game
+from sim.scenario.patients import PatientGroup
+from sim.scenario.policies import Policy, PolicyRow, policy_of_file
+from sim.scenario.run import Run
+from sim.scenario.tables import Row, Table
+from sim.scenario.units import Unit
+
+
+@dataclass(frozen=True)
+class Source:
+    """Where a scenario came from. `data`: data file -> SHA-256 of its bytes."""
+
+    file: str = ""
+    text: str = ""
+    data: Mapping[str, str] = field(default_factory=dict)
+
+
+class Scenario(Table):
+    """A network, its patients, its rules and its game, as one scenario file describes them."""
+
+    schema_: Annotated[Literal[1], Field(alias="schema", examples=["schema = 1"])]
+    title: str = ""
+    run: Run = Run()
+    units: Annotated[
+        tuple[Unit, ...], Row, Field(min_length=1, max_length=200, examples=['[[units]]` with `name = "Ashgill"'])
+    ]
+    patients: Annotated[
+        tuple[PatientGroup, ...], Row, Field(min_length=1, max_length=5_000, examples=["[[patients]]` with `group = ..."])
+    ]
+    diversion: Diversion = Diversion()
+    game: Game = Game()
+    policies: Annotated[tuple[PolicyRow, ...], Row] = ()
+    _source: Source = PrivateAttr(Source())
+
+    @property
+    def source(self) -> Source:
+        """The file that this scenario was read from."""
+        return self._source
+
+    @property
+    def unit_names(self) -> tuple[str, ...]:
+        """The units' names in file order."""
+        return tuple(unit.name for unit in self.units)
+
+    def unit(self, name: str) -> Unit:
+        """The unit of that name; KeyError where there is none."""
+        return self.units[self.place_of(name)]
+
+    def place_of(self, name: str) -> int:
+        """A unit's place in file order; KeyError where there is none."""
+        try:
+            return self.unit_names.index(name)
+        except ValueError:
+            raise KeyError(name) from None
+
+    def policy(self, name: str | None = None) -> Policy:
+        """The file's own rules, or a named policy; KeyError where there is none of that name."""
+        own = policy_of_file(self.units, self.diversion.when_all_closed)
+        if name is None:
+            return own
+        rows = {row.name: row for row in self.policies}
+        return own.after(rows[name])
+
+    def strategies(self) -> dict[str, tuple[int, ...]]:
+        """Unit name -> the closure thresholds that it may choose in the game."""
+        chosen = self.game.strategies
+        return {
+            unit.name: chosen[unit.name].listed() if unit.name in chosen else tuple(range(1, unit.beds + 1))
+            for unit in self.units
+        }
+
+    def with_run(self, **changes: Any) -> Scenario:
+        """The same scenario with other values in its run table (already validated)."""
+        return self._changed(run=self.run.model_copy(update=changes))
+
+    def with_demand(self, factor: float) -> Scenario:
+        """Every arrival rate times `factor`; each patient keeps the other draws."""
+        groups = (group.model_copy(update={"per_day": group.per_day * factor}) for group in self.patients)
+        return self._changed(patients=tuple(groups))
+
+    def with_target(self, target: float) -> Scenario:
+        """Every unit's target utilisation set to `target`."""
+        units = (unit.model_copy(update={"target_utilisation": target}) for unit in self.units)
+        return self._changed(units=tuple(units))
+
+    def exponential(self) -> Scenario:
+        """The exponential counterpart: exponential stays of the same means, transfers that take no time and add no
+        days, constant demand. Closure rules stay as they are."""
+        plain = self.diversion.model_copy(update={"delay": None, "extra_days": 0.0})
+        groups = tuple(group.in_constant_exponential_form() for group in self.patients)
+        return self._changed(patients=groups, diversion=plain)
+
+    def _changed(self, **tables: Any) -> Scenario:
+        copy = self.model_copy(update=tables)
+        copy._source = self._source
+        return copy
+
+    def from_source(self, source: Source) -> Scenario:
+        """The same scenario, knowing its file."""
+        copy = self.model_copy()
+        copy._source = dataclasses.replace(source)
+        return copy

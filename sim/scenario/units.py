@@ -1,0 +1,55 @@
+"""The `[[units]]` rows: one critical-care unit each."""
+
+from __future__ import annotations
+
+import unicodedata
+from typing import Annotated
+
+from pydantic import AfterValidator, Field
+
+from sim.scenario.tables import LONGEST_NAME, MOST_BEDS, NotNegative, Positive, Row, Share, Table, Whole, breach
+
+RESERVED_NAME = "network"
+
+
+def _speakable(name: str) -> str:
+    """A name that can stand in a table and on a command line."""
+    if name != name.strip() or not name:
+        raise breach("must not be empty, nor begin or end with a space", repr(name), "remove the spaces")
+    if len(name) > LONGEST_NAME:
+        raise breach(f"must have at most {LONGEST_NAME} characters", len(name), "shorten it")
+    if any(unicodedata.category(character) in ("Cc", "Cs", "Zl", "Zp") for character in name):
+        raise breach("must not hold control characters", repr(name), "remove them")
+    return name
+
+
+def _not_reserved(name: str) -> str:
+    if name == RESERVED_NAME:
+        raise breach("is a reserved word (it stands for all units together)", repr(name), "choose another name")
+    return name
+
+
+Name = Annotated[str, AfterValidator(_speakable)]
+Threshold = Annotated[Whole, Field(le=MOST_BEDS)]
+Gap = Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["reopening_gap = 1"])]
+ReviewHours = Annotated[NotNegative, Field(le=24 * 366, examples=["review_hours = 8"])]
+Target = Annotated[float, Field(gt=0, le=1)]
+Names = Annotated[tuple[str, ...], Row]
+
+
+class Unit(Table):
+    """A unit with its staffed beds, its closure rules and its target.
+
+    Thresholds count load: occupied beds and beds reserved for patients on the road.
+    """
+
+    name: Annotated[Name, AfterValidator(_not_reserved), Field(examples=['name = "Ashgill"'])]
+    beds: Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["beds = 12"])]
+    closure_threshold: Annotated[Threshold | None, Field(examples=["closure_threshold = 11"])] = None
+    incoming_threshold: Annotated[Threshold | None, Field(examples=["incoming_threshold = 9"])] = None
+    reopening_gap: Gap = 1
+    admit_while_closed: Annotated[Share, Field(examples=["admit_while_closed = 0.2"])] = 0.0
+    review_hours: ReviewHours = 0.0
+    target_utilisation: Annotated[Target | None, Field(examples=["target_utilisation = 0.75"])] = None
+    referral_order: Annotated[Names | None, Field(examples=['referral_order = ["Norbeck"]'])] = None
+    stay_factor: Annotated[Positive, Field(ge=0.01, le=100, examples=["stay_factor = 1.0"])] = 1.0

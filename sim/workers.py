@@ -1,0 +1,119 @@
+"""Where tasks run: in this process or in local worker processes, behind one small interface.
+
+A pool takes a function and addressed tasks and yields replies as they finish, in any order. A task that
+raises costs only itself: its reply carries the traceback. Other machines will stand behind the same interface.
+"""
+
+from __future__ import annotations
+
+import os
+import signal
+import traceback
+import warnings
+from collections.abc import Callable, Hashable, Iterable, Iterator
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+
+@dataclass(frozen=True)
+class Reply:
+    """What became of one task. `value` where it succeeded, else `failure`, the traceback as text."""
+
+    key: Hashable
+    value: Any = None
+    failure: str | None = None
+
+
+Task = tuple[Hashable, tuple]
+
+
+class Workers(Protocol):
+    """Runs tasks somewhere."""
+
+    def run(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
+        """Replies to `function(*arguments)` for every (key, arguments), as they finish."""
+        ...
+
+
+class ThisProcess:
+    """One task after the other, here."""
+
+    count = 1
+
+    def run(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
+        """See Workers."""
+        for key, arguments in tasks:
+            yield _guarded(function, key, arguments)
+
+
+class LocalProcesses:
+    """joblib's loky processes on this machine.
+
+    A worker that dies takes down the tasks then under way; they are run again, each once more, and one that
+    is under way a second time when a worker dies is reported as failed.
+    """
+
+    def __init__(self, count: int) -> None:
+        self.count = count
+
+    def run(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
+        """See Workers."""
+        from joblib.externals.loky.process_executor import TerminatedWorkerError
+
+        left = dict(tasks)
+        for attempt in (1, 2):
+            try:
+                for reply in self._replies(function, left):
+                    del left[reply.key]
+                    yield reply
+                return
+            except TerminatedWorkerError as error:
+                stop_processes()
+                if attempt == 2:
+                    for key in left:
+                        yield Reply(key, failure=f"a worker process died twice (out of memory?): {error}")
+
+    def _replies(self, function: Callable[..., Any], tasks: dict[Hashable, tuple]) -> Iterator[Reply]:
+        from joblib import Parallel, delayed
+
+        pool = Parallel(n_jobs=self.count, backend="loky", batch_size=1, return_as="generator_unordered")
+        finished = False
+        try:
+            yield from pool(delayed(_in_worker)(function, key, arguments) for key, arguments in list(tasks.items()))
+            finished = True
+        finally:
+            if not finished:  # interrupted, or nobody wants the rest
+                stop_processes()
+
+
+def stop_processes() -> None:
+    """Stops the local worker processes at once, whatever they are doing."""
+    from joblib.externals.loky import get_reusable_executor
+
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        get_reusable_executor().shutdown(wait=False, kill_workers=True)
+
+
+def _in_worker(function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
+    signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the parent's to handle
+    return _guarded(function, key, arguments)
+
+
+def _guarded(function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
+    try:
+        return Reply(key, function(*arguments))
+    except Exception:
+        return Reply(key, failure=traceback.format_exc())
+
+
+def available_cores() -> int:
+    """The cores that this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+def local_workers(count: int) -> Workers:
+    """This process for one worker, local processes for more."""
+    return ThisProcess() if count == 1 else LocalProcesses(count)
