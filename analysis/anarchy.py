@@ -8,7 +8,7 @@ class of networks, and the best is the best static rule.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -50,19 +50,25 @@ def cost_of_selfishness(
     """The cost of the listed equilibria against the optimum.
 
     welfare: mean a day, (*shape). replicates: the same by replication, (replications, *shape); None where the
-    welfare is exact. The intervals are paired, for the profiles that the point estimate selects; that it may
-    select wrong ones is not in them.
+    welfare is exact. tolerance: within which the optimum is tied, in the welfare's unit, inclusive. The
+    intervals are paired, for the profiles that the point estimate selects; that it may select wrong ones is
+    not in them.
     """
     gains = welfare if sense == "gain" else -welfare
-    optimum = tuple(tuple(map(int, p)) for p in np.argwhere(gains >= gains.max() - tolerance))
+    optimum = tuple(_numbers(profile) for profile in np.argwhere(gains >= gains.max() - tolerance))
     if not equilibria:
         none = Estimate(None, reason=NO_EQUILIBRIUM)
         return Cost(optimum, None, None, none, none, none)
     ranked = sorted(equilibria, key=lambda profile: float(gains[profile]))
-    pair = _Pair(welfare, sense, replicates, confidence, optimum[0])
+    best = _numbers(np.unravel_index(np.argmax(gains), gains.shape))  # no tie: a tie may be worse by a rounding error
+    pair = _Pair(welfare, sense, replicates, confidence, best)
     return Cost(
         optimum, ranked[0], ranked[-1], pair.ratio(ranked[0]), pair.ratio(ranked[-1]), pair.lost_a_year(ranked[0])
     )
+
+
+def _numbers(profile: Iterable[int]) -> Profile:
+    return tuple(map(int, profile))
 
 
 @dataclass(frozen=True)

@@ -87,7 +87,8 @@ def analyse(
 ) -> GameAnalysis:
     """The pure equilibria of the table and what they cost the network.
 
-    tolerance: regret still allowed, in the goal's unit, inclusive. confidence: of the paired intervals, each
+    tolerance: regret still allowed, in the goal's unit, inclusive (the optimum's ties, in the welfare's unit,
+    have a tolerance of their own). confidence: of the paired intervals, each
     regret's Bonferroni over the player's deviations.
     """
     sense = table.goal.sense
@@ -95,9 +96,8 @@ def analyse(
     shape = table.profiles.shape
     network = [values.sum(axis=-1).reshape(shape) for values in (table.outcomes.turned_away, table.outcomes.diverted_out)]
     cost = cost_of_selfishness(
-        table.welfare, table.welfare_goal.sense, found, replicates=table.welfare_replicates, confidence=confidence,
-        tolerance=tolerance,
-    )  # fmt: skip
+        table.welfare, table.welfare_goal.sense, found, replicates=table.welfare_replicates, confidence=confidence
+    )
     return GameAnalysis(
         table,
         tuple(_equilibrium(table, profile, confidence) for profile in found),
@@ -112,12 +112,17 @@ def analyse(
 def _equilibrium(table: PayoffTable, profile: Profile, confidence: float) -> Equilibrium:
     players = table.profiles.players
     regret = {player: regret_estimate(table, profile, place, confidence) for place, player in enumerate(players)}
+    verdict = EXACT if table.replicates is None else ESTIMATED
+    return Equilibrium(
+        profile, table.profiles.thresholds(profile), verdict, regret, welfare_estimate(table, profile, confidence)
+    )
+
+
+def welfare_estimate(table: PayoffTable, profile: Profile, confidence: float) -> Estimate:
+    """The welfare a day at a profile, with its interval where it comes from replications."""
     if table.welfare_replicates is None:
-        welfare, verdict = Estimate(float(table.welfare[profile])), EXACT
-    else:
-        welfare = mean_estimate(table.welfare_replicates[(slice(None), *profile)], confidence)
-        verdict = ESTIMATED
-    return Equilibrium(profile, table.profiles.thresholds(profile), verdict, regret, welfare)
+        return Estimate(float(table.welfare[profile]))
+    return mean_estimate(table.welfare_replicates[(slice(None), *profile)], confidence)
 
 
 def regret_estimate(table: PayoffTable, profile: Profile, player: int, confidence: float) -> Estimate:

@@ -32,7 +32,6 @@ class TargetGoal:
     shape: Literal["absolute", "squared"]
     judged_days: float
     sense: Sense = "cost"
-    unit: str = "utilisation"
 
     @property
     def reads(self) -> str:
@@ -40,6 +39,13 @@ class TargetGoal:
         if self.shape == "absolute":
             return "distance of mean utilisation from the target"
         return f"mean squared distance from the target of the utilisation over {self.judged_days:g} days"
+
+    @property
+    def display_scale(self) -> tuple[float, str]:
+        """The factor by which a dense table multiplies payoffs, and the unit that they then have."""
+        if self.shape == "absolute":
+            return 100.0, "percentage points of utilisation"
+        return 10_000.0, "squared percentage points of utilisation"
 
     def exact(self, utilisation: np.ndarray) -> np.ndarray:
         """Payoffs from exact mean utilisations, both (cells, units)."""

@@ -104,8 +104,8 @@ class WeeklyPattern:
 def _hour_at(time: Array) -> NDArray[np.int64]:
     """Whole hours before `time`, where hour k starts at the double nearest to k / 24 days."""
     hour = np.floor(time * _HOURS_A_DAY).astype(np.int64)
-    hour -= hour / _HOURS_A_DAY > time
-    return hour + ((hour + 1) / _HOURS_A_DAY <= time)
+    # Just before a boundary the product may round up to it; at a boundary it never rounds below.
+    return hour - (hour / _HOURS_A_DAY > time)
 
 
 def arrival_times(

@@ -9,12 +9,14 @@ from analysis.chain.gth import Transitions
 from analysis.chain.network_states import NetworkChain, UnitView
 from sim.errors import RunError
 
+Numbers = NDArray[np.float64]
+
 RELATIVE = 1e-9
 # Below this the range of a float, not the elimination, limits the relative accuracy of a probability.
 NEGLIGIBLE = 1e-280
 
 
-def certify(chain: NetworkChain, probability: NDArray[np.float64]) -> None:
+def certify(chain: NetworkChain, probability: Numbers) -> None:
     """Raises RunError unless `probability`, shape (states,), solves the chain.
 
     It must be a distribution; the flow into each state must equal that out of it, relative to itself, by the
@@ -22,20 +24,22 @@ def certify(chain: NetworkChain, probability: NDArray[np.float64]) -> None:
     discharge rate must be the mean number of such patients times the rate (Little's law).
     """
     if not (probability >= 0).all():
-        raise RunError("the chain's answer holds a negative or undefined probability; please report this scenario")
+        raise RunError("the chain's answer holds an undefined probability; please report this scenario")
     _equal("the probabilities do not add up to 1", probability.sum(), 1.0)
     _equal("the flows into and out of a state differ", *_state_flows(chain.moves, probability))
     for view in chain.units:
-        _equal(f"admissions and discharges of {view.layout.name} differ", *_unit_flows(view, chain, probability))
+        complaint = f"admissions and discharges of {view.layout.name} differ"
+        _equal(complaint, *_unit_flows(view, chain, probability))
 
 
-def _state_flows(moves: Transitions, probability: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
+def _state_flows(moves: Transitions, probability: Numbers) -> tuple[Numbers, Numbers]:
+    """Moves a day into and out of each state, (states,) each."""
     flow = probability[moves.origin] * moves.rate
-    into, out = (np.bincount(end, weights=flow, minlength=moves.states) for end in (moves.target, moves.origin))
-    return into, out
+    into = np.bincount(moves.target, weights=flow, minlength=moves.states)
+    return into, np.bincount(moves.origin, weights=flow, minlength=moves.states)
 
 
-def _unit_flows(view: UnitView, chain: NetworkChain, probability: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
+def _unit_flows(view: UnitView, chain: NetworkChain, probability: Numbers) -> tuple[Numbers, Numbers]:
     """Admissions and discharges a day by discharge rate, (rates,) each."""
     admitted = np.zeros(len(view.layout.discharge_rates))
     for home, per_day in view.layout.arrivals.items():
@@ -45,7 +49,7 @@ def _unit_flows(view: UnitView, chain: NetworkChain, probability: NDArray[np.flo
     return admitted, patients * np.array(view.layout.discharge_rates)
 
 
-def _equal(complaint: str, found: NDArray | float, expected: NDArray | float) -> None:
+def _equal(complaint: str, found: Numbers | float, expected: Numbers | float) -> None:
     scale = np.maximum(np.abs(expected), NEGLIGIBLE)
     worst = float(np.max(np.abs(found - expected) / scale, initial=0.0))
     if not worst <= RELATIVE:

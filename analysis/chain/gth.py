@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-LARGEST_BLOCK = 64
+LARGEST_BLOCK = 32
 
 
 @dataclass(frozen=True)
@@ -66,7 +66,7 @@ def band_of(moves: Transitions) -> Band:
     """The band of a chain in the order of its states."""
     reach = _lowest_reach(moves)
     width = int((np.arange(moves.states) - reach).max())
-    starts = np.arange(0, moves.states, min(max(width // 8, 1), LARGEST_BLOCK))
+    starts = np.arange(0, moves.states, min(max(width // 24, 1), LARGEST_BLOCK))
     return Band(starts, reach[starts], moves.states)
 
 
@@ -91,9 +91,9 @@ def stationary(moves: Transitions, band: Band) -> NDArray[np.float64]:
 
 
 def _skewed(moves: Transitions, width: int) -> NDArray[np.float64]:
-    """The rates as a (states, states) view of a band: entries further than `width` off the diagonal alias others.
+    """The rates as a (states, states) view of a band; entries beyond `width` off the diagonal alias others.
 
-    Row i of the band holds columns i - width to i + width; a row stride of twice the width, one less than the
+    Row i of the band holds columns i - width to i + width. A row stride of twice the width, one less than the
     band's, puts each column under itself, so that any window near the diagonal is an ordinary matrix.
     """
     place = moves.origin * (2 * width) + moves.target + width
@@ -103,14 +103,17 @@ def _skewed(moves: Transitions, width: int) -> NDArray[np.float64]:
 
 
 def _eliminate(matrix: NDArray[np.float64], start: int, end: int, lowest: int) -> None:
-    """Eliminates states end-1 down to start (state 0 remains), leaving in each column the rate into it per exit."""
+    """Eliminates states end - 1 down to start (state 0 remains).
+
+    A column then holds the days spent in its state, per day in a lower one, on excursions upwards from there.
+    """
     for state in range(end - 1, max(start, 1) - 1, -1):
         onward, into = matrix[state, lowest:state], matrix[lowest:state, state]
         into /= onward.sum()
         if state > start:
-            inside = slice(start, state)
-            matrix[inside, lowest:state] += np.multiply.outer(into[start - lowest :], onward)
-            matrix[lowest:start, inside] += np.multiply.outer(into[: start - lowest], onward[start - lowest :])
+            inside, below = slice(start, state), start - lowest
+            matrix[inside, lowest:state] += np.multiply.outer(into[below:], onward)
+            matrix[lowest:start, inside] += np.multiply.outer(into[:below], onward[below:])
     if start > lowest:
         rest, block = slice(lowest, start), slice(start, end)
         matrix[rest, rest] += matrix[rest, block] @ matrix[block, rest]
@@ -131,7 +134,7 @@ def _substitute(matrix: NDArray[np.float64], band: Band) -> NDArray[np.float64]:
 
 
 def _rescale(weight: NDArray[np.float64], power: NDArray[np.int64]) -> None:
-    """Brings the largest weight of a window near 1; later states see no other, so the window shares one scale."""
+    """Brings the largest weight of a window near 1; later states see this window only, in one scale."""
     shift = int(np.frexp(weight.max())[1])
     weight[:] = np.ldexp(weight, -shift)
     power += shift

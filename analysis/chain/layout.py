@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
-import math
+from collections import defaultdict
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from analysis.chain.unit_states import UnitSpace
+from analysis.chain.unit_states import COUNTED, UnitSpace
 from sim.scenario import Policy, Scenario, UnitRules
+from sim.scenario.units import Unit
+
+Demand = Mapping[tuple[str, float], float]  # home, mean stay in days -> arrivals a day
 
 
 @dataclass(frozen=True)
 class UnitLayout:
     """One unit as the chain sees it.
 
-    beds: staffed beds. rules: its part of the policy.
+    name, beds: the unit and its staffed beds.
     discharge_rates: the distinct rates at which its patients leave, per day, shape (rates,).
     arrivals: home unit -> arrivals a day by discharge rate, (rates,), of patients who can be treated here.
     space: what bounds its states.
@@ -22,7 +25,6 @@ class UnitLayout:
 
     name: str
     beds: int
-    rules: UnitRules
     discharge_rates: tuple[float, ...]
     arrivals: Mapping[str, tuple[float, ...]]
     space: UnitSpace
@@ -30,38 +32,44 @@ class UnitLayout:
 
 def layout(scenario: Scenario, policy: Policy) -> tuple[UnitLayout, ...]:
     """Every unit of the scenario in file order, under the policy's rules."""
-    return tuple(_unit_layout(scenario, policy, unit.name) for unit in scenario.units)
+    demand: dict[tuple[str, float], float] = defaultdict(float)
+    for group in scenario.patients:
+        demand[group.home, group.mean_stay_days] += group.per_day
+    return tuple(_unit_layout(policy, demand, unit) for unit in scenario.units)
 
 
 def state_bound(units: tuple[UnitLayout, ...]) -> int:
-    """An upper bound of the number of states: the units' own numbers multiplied."""
-    return math.prod(unit.space.size for unit in units)
+    """An upper bound of the number of states: the units' own multiplied; COUNTED where that is more."""
+    bound = 1
+    for unit in units:
+        bound *= unit.space.size
+        if bound >= COUNTED:
+            return COUNTED
+    return bound
 
 
-def _unit_layout(scenario: Scenario, policy: Policy, name: str) -> UnitLayout:
-    unit, rules = scenario.unit(name), policy.units[name]
-    most = _most_by_home(scenario, policy, name)
-    per_day: dict[tuple[str, float], float] = {}
-    for group in scenario.patients:
-        if most.get(group.home, 0) > 0:
-            key = group.home, 1 / (group.mean_stay_days * unit.stay_factor)
-            per_day[key] = per_day.get(key, 0.0) + group.per_day
+def _unit_layout(policy: Policy, demand: Demand, unit: Unit) -> UnitLayout:
+    most = _most_by_home(policy, unit.name, unit.beds)
+    per_day: dict[tuple[str, float], float] = defaultdict(float)
+    for (home, mean_stay_days), arrivals in demand.items():
+        if most.get(home, 0) > 0:
+            per_day[home, 1 / (mean_stay_days * unit.stay_factor)] += arrivals
     rates = tuple(sorted({rate for _, rate in per_day}))
     arrivals = {home: tuple(per_day.get((home, rate), 0.0) for rate in rates) for home, _ in per_day}
-    space = UnitSpace(
-        most=max((most[home] for home in arrivals), default=0),
-        rates=len(rates),
-        closure_threshold=rules.closure_threshold,
-        incoming_threshold=rules.incoming,
-        reopening_gap=rules.reopening_gap,
-    )
-    return UnitLayout(name, unit.beds, rules, rates, arrivals, space)
+    held = max((most[home] for home in arrivals), default=0)
+    space = _space(policy.units[unit.name], held, len(rates))
+    return UnitLayout(unit.name, unit.beds, rates, arrivals, space)
 
 
-def _most_by_home(scenario: Scenario, policy: Policy, name: str) -> dict[str, int]:
+def _space(rules: UnitRules, most: int, rates: int) -> UnitSpace:
+    return UnitSpace(most, rates, rules.closure_threshold, rules.incoming, rules.reopening_gap)
+
+
+def _most_by_home(policy: Policy, name: str, beds: int) -> dict[str, int]:
     """Home -> the most patients that this unit can hold after it took one from there."""
-    beds, rules, resort = scenario.unit(name).beds, policy.units[name], policy.when_all_closed
+    rules, resort = policy.units[name], policy.when_all_closed
     takes_when_closed = rules.admit_while_closed > 0 or resort != "turned_away"
-    most = {name: beds if takes_when_closed else rules.closure_threshold}
+    own = beds if takes_when_closed else rules.closure_threshold
     incoming = beds if resort == "any_bed" else rules.incoming
-    return most | {home: incoming for home, others in policy.units.items() if name in others.referral_order}
+    referring = {home for home, others in policy.units.items() if name in others.referral_order}
+    return dict.fromkeys(referring, incoming) | {name: own}

@@ -7,12 +7,12 @@ from dataclasses import dataclass
 from sim.errors import BrimlineError
 
 REMEDY = (
-    "take fewer units or beds, lower thresholds, or groups that share one mean stay (each further mean in a unit "
-    "multiplies its states), or simulate"
+    "take fewer units or beds, lower thresholds, or groups that share one mean stay (each further mean in a "
+    "unit multiplies its states), or simulate"
 )
 
 
-class ChainTooLarge(BrimlineError):
+class ChainTooLarge(BrimlineError):  # noqa: N818 - the name says it all
     """The chain would take too many states, too much work or too much memory.
 
     states: the number of states, or an upper bound of it. excess: what is too large, in words.
@@ -40,10 +40,10 @@ class Limits:
     def check_bound(self, bound: int) -> None:
         """Refuses a hopeless chain by an upper bound of its states, before anything is built.
 
-        A bound may exceed the states that can be reached, hence the tenfold allowance.
+        A bound may exceed the states that can be reached, hence the fivefold allowance.
         """
-        if bound > 10 * self.states:
-            raise ChainTooLarge(bound, f"up to {_grouped(bound)} states, the limit is {self.states:,}")
+        if bound > 5 * self.states:
+            raise ChainTooLarge(bound, f"as many as {bound:,} states, the limit is {self.states:,}")
 
     def check_states(self, states: int) -> None:
         """Refuses too many states."""
@@ -56,9 +56,8 @@ class Limits:
         if work > self.work:
             raise ChainTooLarge(states, f"{band} take {work:.1e} multiply-adds, the limit is {self.work:.1e}")
         if size > self.bytes:
-            raise ChainTooLarge(states, f"{band} take {size / 2**30:.1f} GiB, the limit is {self.bytes / 2**30:.1f}")
+            limit = f"the limit is {self.bytes / 2**30:.1f} GiB"
+            raise ChainTooLarge(states, f"{band} take {size / 2**30:.1f} GiB, {limit}")
 
 
-def _grouped(number: int) -> str:
-    """A count for reading; a power of ten where nobody would count the digits."""
-    return f"{number:,}" if number < 10**15 else f"10^{len(str(number)) - 1}"
+DEFAULT = Limits()

@@ -13,12 +13,14 @@ from numpy.typing import NDArray
 from analysis.chain.network_states import NetworkChain, UnitView
 from sim.scenario import Policy, Scenario
 
+Numbers = NDArray[np.float64]
+
 
 @dataclass(frozen=True, eq=False)
 class UnitMeasures:
     """Exact long-run measures of one unit; rates a day, shares 0 to 1.
 
-    utilisation: occupied over staffed beds. mean_occupied: beds. full_fraction: share of time with no free bed.
+    utilisation: occupied over staffed beds. mean_occupied: beds. full_fraction: time without a free bed.
     closed_fraction, incoming_closed_fraction: with the own gate, or the incoming gate, closed.
     closed_with_free_bed_fraction: with the own gate closed although a bed is free.
     occupancy: probability of 0 to `beds` occupied beds, shape (beds + 1,).
@@ -33,7 +35,7 @@ class UnitMeasures:
     closed_fraction: float
     incoming_closed_fraction: float
     closed_with_free_bed_fraction: float
-    occupancy: NDArray[np.float64]
+    occupancy: Numbers
     admissions_per_day: float
     diverted_out_per_day: float
     diverted_in_per_day: float
@@ -103,7 +105,7 @@ class Flows:
         return sum(number for (home, place), number in self.admitted.items() if place == unit != home)
 
 
-def measured(scenario: Scenario, policy: Policy, chain: NetworkChain, probability: NDArray[np.float64]) -> ExactResult:
+def measured(scenario: Scenario, policy: Policy, chain: NetworkChain, probability: Numbers) -> ExactResult:
     """The measures of a chain. probability: its stationary distribution, shape (states,)."""
     flows = _flows(scenario, chain, probability)
     units = {view.layout.name: _unit_measures(view, flows, probability) for view in chain.units}
@@ -116,7 +118,7 @@ def measured(scenario: Scenario, policy: Policy, chain: NetworkChain, probabilit
     return ExactResult(scenario.title, policy.thresholds, units, network, len(probability))
 
 
-def _flows(scenario: Scenario, chain: NetworkChain, probability: NDArray[np.float64]) -> Flows:
+def _flows(scenario: Scenario, chain: NetworkChain, probability: Numbers) -> Flows:
     arrived = dict.fromkeys(chain.homes, 0.0)
     for group in scenario.patients:
         arrived[group.home] += group.per_day
@@ -129,12 +131,13 @@ def _flows(scenario: Scenario, chain: NetworkChain, probability: NDArray[np.floa
     return Flows(arrived, lost, admitted)
 
 
-def _unit_measures(view: UnitView, flows: Flows, probability: NDArray[np.float64]) -> UnitMeasures:
+def _unit_measures(view: UnitView, flows: Flows, probability: Numbers) -> UnitMeasures:
     name, beds, doors = view.layout.name, view.layout.beds, view.doors
     occupancy = np.bincount(view.load, weights=probability, minlength=beds + 1)
     occupancy.setflags(write=False)
     mean = float(np.arange(beds + 1) @ occupancy)
-    arrived, moved, lost = flows.arrived.get(name, 0.0), flows.moved_from(name), flows.turned_away.get(name, 0.0)
+    arrived, lost = flows.arrived.get(name, 0.0), flows.turned_away.get(name, 0.0)
+    moved = flows.moved_from(name)
     return UnitMeasures(
         utilisation=mean / beds,
         mean_occupied=mean,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +17,7 @@ from sim.errors import RunError
 from sim.scenario import Policy, Scenario
 
 Places = NDArray[np.int64]
+Homes = Mapping[str, Split]
 Moves = tuple[Places, Places, NDArray[np.float64]]
 
 
@@ -51,7 +52,7 @@ class NetworkChain:
     """
 
     units: tuple[UnitView, ...]
-    homes: Mapping[str, Split]
+    homes: Homes
     moves: Transitions
 
 
@@ -65,39 +66,38 @@ def network_chain(scenario: Scenario, policy: Policy, limits: Limits) -> Network
     spaces = [unit_states(unit.space) for unit in units]
     strides = _strides(spaces)
     every = np.arange(strides[0] * spaces[0].size)
-    views = _views(units, spaces, [every // stride % own.size for stride, own in zip(strides, spaces, strict=True)])
+    places = [every // stride % own.size for stride, own in zip(strides, spaces, strict=True)]
+    views = tuple(map(UnitView, units, spaces, places))
     moves = _moves(views, strides, _homes(scenario, policy, views))
     chosen = _ordered_states(moves, len(every), limits)
-    kept = _views(units, spaces, [view.place[chosen] for view in views])
+    kept = tuple(replace(view, place=view.place[chosen]) for view in views)
     return NetworkChain(kept, _homes(scenario, policy, kept), _renumbered(moves, chosen, len(every)))
 
 
 def _strides(spaces: Sequence[UnitStates]) -> list[int]:
-    """How far apart two states of the network are that differ by one in a unit's place; the last unit's is 1."""
+    """How far apart two states of the network are that differ by one in a unit's place."""
     strides = [1]
     for own in reversed(spaces[1:]):
         strides.insert(0, strides[0] * own.size)
     return strides
 
 
-def _views(units: Sequence[UnitLayout], spaces: Sequence[UnitStates], places: Sequence[Places]) -> tuple[UnitView, ...]:
-    return tuple(UnitView(*parts) for parts in zip(units, spaces, places, strict=True))
-
-
-def _homes(scenario: Scenario, policy: Policy, views: Sequence[UnitView]) -> dict[str, Split]:
+def _homes(scenario: Scenario, policy: Policy, views: Sequence[UnitView]) -> Homes:
     doors = {view.layout.name: view.doors for view in views}
     homes = {group.home for group in scenario.patients}
     names = [name for name in scenario.unit_names if name in homes]
     return {name: split_arrivals(name, policy.units[name], policy.when_all_closed, doors) for name in names}
 
 
-def _moves(views: Sequence[UnitView], strides: Sequence[int], homes: Mapping[str, Split]) -> Moves:
+def _moves(views: Sequence[UnitView], strides: Sequence[int], homes: Homes) -> Moves:
     """Every admission and discharge, from any state whether reached or not."""
-    parts = list(_admissions(views, strides, homes)) + list(_discharges(views, strides))
-    return tuple(map(np.concatenate, zip(*parts, strict=True)))
+    none = np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64), np.empty(0)
+    parts = (none, *_admissions(views, strides, homes), *_discharges(views, strides))
+    origin, target, rate = map(np.concatenate, zip(*parts, strict=True))
+    return origin, target, rate
 
 
-def _admissions(views: Sequence[UnitView], strides: Sequence[int], homes: Mapping[str, Split]) -> Iterator[Moves]:
+def _admissions(views: Sequence[UnitView], strides: Sequence[int], homes: Homes) -> Iterator[Moves]:
     for view, stride in zip(views, strides, strict=True):
         for home, per_day in view.layout.arrivals.items():
             share = homes[home].admitted[view.layout.name]
@@ -128,8 +128,8 @@ def _target(view: UnitView, stride: int, origin: Places, after: Places) -> Place
 def _ordered_states(moves: Moves, states: int, limits: Limits) -> Places:
     """The states that can be reached from the empty network, neighbours close to each other in the order.
 
-    Ordered as in Cuthill & McKee, "Reducing the bandwidth of sparse symmetric matrices", ACM 1969; the elimination
-    starts from the last state, which makes it the reverse order of George (1971).
+    The order of Cuthill & McKee, "Reducing the bandwidth of sparse symmetric matrices", ACM (1969), and not
+    its usual reverse, because the elimination starts from the last state.
     """
     from scipy.sparse import csgraph, csr_array
 

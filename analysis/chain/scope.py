@@ -8,7 +8,7 @@ from sim.errors import BrimlineError
 from sim.scenario import Policy, Scenario
 
 
-class OutOfScope(BrimlineError):
+class OutOfScope(BrimlineError):  # noqa: N818 - the name says it all
     """The scenario has rules or distributions that the chain does not model; holds every reason."""
 
     def __init__(self, reasons: Iterable[str]) -> None:
@@ -86,4 +86,5 @@ def _transfers(scenario: Scenario) -> Iterator[str]:
 def _reviews(policy: Policy) -> Iterator[str]:
     for name, rules in policy.units.items():
         if rules.review_hours > 0:
-            yield f"units.{name}.review_hours: gates must act at once, got reviews every {rules.review_hours:g} hours"
+            got = f"got a review every {rules.review_hours:g} hours"
+            yield f"units.{name}.review_hours: gates must act at once, {got}"

@@ -10,6 +10,8 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
+COUNTED = 10**15  # no chain of so many states is ever built, so nobody counts further
+
 
 @dataclass(frozen=True)
 class Gates:
@@ -23,7 +25,7 @@ class Gates:
 class UnitSpace:
     """What bounds the states of one unit.
 
-    most: patients that it can hold under its rules, at most its beds. rates: number of distinct discharge rates.
+    most: patients that it can hold under its rules. rates: number of distinct discharge rates.
     closure_threshold, incoming_threshold, reopening_gap: as in the policy.
     """
 
@@ -57,8 +59,10 @@ class UnitSpace:
 
     @property
     def size(self) -> int:
-        """The number of states: a load spreads over the rates in any way."""
-        return sum(_ways(load, self.rates) for load, _ in self.levels())
+        """The number of states, a load spread over the rates in any way; COUNTED where that is more."""
+        if math.comb(self.most + self.rates, self.rates) >= COUNTED:
+            return COUNTED
+        return min(sum(_ways(load, self.rates) for load, _ in self.levels()), COUNTED)
 
 
 def _ways(patients: int, rates: int) -> int:
@@ -81,7 +85,7 @@ class UnitStates:
 
     load: occupied beds, shape (states,). counts: patients by rate, (states, rates).
     own_open, incoming_open: the gates, (states,).
-    after_admission, after_discharge: the state that a patient of a rate leads to, (states, rates); -1 for none.
+    after_admission, after_discharge: the state that a patient of a rate leads to, (states, rates); -1: none.
     """
 
     load: NDArray[np.int64]
@@ -112,5 +116,6 @@ def unit_states(space: UnitSpace) -> UnitStates:
         return np.array(rows, dtype=np.int64).reshape(len(states), space.rates)
 
     counts = np.array([counts for counts, _ in states], dtype=np.int64).reshape(len(states), space.rates)
-    own, incoming = (np.array([getattr(gates, key) for _, gates in states]) for key in ("own_open", "incoming_open"))
-    return UnitStates(counts.sum(axis=1), counts, own, incoming, table(+1), table(-1))
+    own_open = np.array([gates.own_open for _, gates in states])
+    incoming_open = np.array([gates.incoming_open for _, gates in states])
+    return UnitStates(counts.sum(axis=1), counts, own_open, incoming_open, table(+1), table(-1))

@@ -20,10 +20,14 @@ ENGINES = ("reference",)
 
 @dataclass(frozen=True)
 class Request:
-    """A scenario with every override of the command line applied, and how to run it."""
+    """A scenario with every override of the command line applied, and how to run it.
+
+    confidence: as the command line gave it; the scenario's run table has the one in force.
+    """
 
     scenario: Any
     policy: Any
+    confidence: float | None
     workers: int | None
     engine: str
     out: Path | None
@@ -83,7 +87,7 @@ def _request(values: Mapping[str, Any]) -> Request:
     _writable(values["out"], faults)
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
-    return Request(scenario, policy, values["workers"], values["engine"], values["out"], values["as_json"])
+    return Request(scenario, policy, values["confidence"], values["workers"], values["engine"], values["out"], values["as_json"])
 
 
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:

@@ -45,6 +45,16 @@ def put_table(title: str, columns: Sequence[str], rows: Iterable[Sequence[Any]])
     console().print(table)
 
 
+def put_grid(title: str, header: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
+    """A dense grid of short numbers: every column as narrow as its widest entry, never wrapped."""
+    lines = [list(header), *map(list, rows)]
+    widths = [max(len(line[place]) for line in lines) for place in range(len(header))]
+    put_text(title)
+    for line in lines:
+        print(" ".join(cell.rjust(width) for cell, width in zip(line, widths, strict=True)))
+    print()
+
+
 def put_text(*lines: str) -> None:
     """Lines of text, wrapped at the terminal's width."""
     for line in lines:

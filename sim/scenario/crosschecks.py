@@ -7,16 +7,15 @@ every fault of a file and none is a mere consequence of another.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
+from functools import cached_property
 from typing import Any
 
 from sim.scenario.faults import Collector, nearest, shown
 from sim.scenario.game import TargetUtilisation
 from sim.scenario.positions import Path
 from sim.scenario.run import Run
-from sim.scenario.tables import MOST_PATIENTS
-
-_MISSING: Any = object()
+from sim.scenario.tables import MOST_PATIENTS, MOST_REVIEWS
 
 
 class Draft:
@@ -30,34 +29,36 @@ class Draft:
         """The value at `path`; `default` where it is absent; None where it is at fault."""
         if not self._collector.readable(path):
             return None
-        level: Any = self._collector.data
-        for part in path:
-            level = level.get(part, _MISSING) if isinstance(level, Mapping) else level[part]
-            if level is _MISSING:
-                return default
-        return level
+        value = self._collector.value(path)
+        return default if value is None else value
 
-    def rows(self, table: str) -> range:
+    def below(self, *path: str | int) -> list[Path]:
+        """The paths of a table's or an array's entries, at fault or not; none where it is neither."""
+        held = self._collector.value(path)
+        keys = held if isinstance(held, Mapping) else range(len(held)) if isinstance(held, list) else ()
+        return [(*path, key) for key in keys]
+
+    def rows(self, table: str) -> list[int]:
         """The row numbers of an array of tables."""
-        rows = self._collector.data.get(table)
-        return range(len(rows)) if isinstance(rows, list) and all(isinstance(row, dict) for row in rows) else range(0)
+        return [path[-1] for path in self.below(table) if isinstance(self._collector.value(path), Mapping)]
 
-    def items(self, *path: str | int) -> Iterator[tuple[Path, Any]]:
-        """The readable entries of a table."""
-        table: Any = self._collector.data
-        for part in path:
-            table = table.get(part) if isinstance(table, Mapping) else table[part]
-        if not isinstance(table, Mapping):
-            return
-        for key in table:
-            value = self.read(*path, key)
-            if value is not None:
-                yield (*path, key), value
+    def name(self, row: int) -> Any:
+        """A unit's name as the file has it, at fault or not: who refers to it means this unit."""
+        return self._collector.value(("units", row, "name"))
 
+    @cached_property
+    def every_unit_named(self) -> bool:
+        """Whether every unit bears a name, so that a name which none of them bears can only be wrong."""
+        return bool(self.rows("units")) and all(isinstance(self.name(row), str) for row in self.rows("units"))
+
+    @cached_property
     def beds(self) -> dict[str, int | None]:
-        """Unit name -> beds, None where the number is at fault."""
-        names = {row: self.read("units", row, "name") for row in self.rows("units")}
-        return {name: self.read("units", row, "beds") for row, name in names.items() if name is not None}
+        """Unit name -> beds; None where the number is at fault, or where several units bear the name."""
+        named = [row for row in self.rows("units") if isinstance(self.name(row), str)]
+        counts = Counter(self.name(row) for row in named)
+        return {
+            self.name(row): self.read("units", row, "beds") if counts[self.name(row)] == 1 else None for row in named
+        }
 
 
 def cross_check(collector: Collector) -> None:
@@ -68,59 +69,70 @@ def cross_check(collector: Collector) -> None:
 
 
 def _names(draft: Draft) -> None:
-    for table, key in (("units", "name"), ("patients", "group"), ("policies", "name")):
-        names = [(row, draft.read(table, row, key)) for row in draft.rows(table)]
-        counts = Counter(name for _, name in names)
+    for table, key, noun in (("units", "name", "unit"), ("patients", "group", "group"), ("policies", "name", "policy")):
         seen: set[str] = set()
-        for row, name in names:
-            if name is not None and counts[name] > 1 and name in seen:
-                draft.fault((table, row, key), "must differ from every other one", f"got {shown(name)} again", "rename one")
-            seen.add(name)
+        for row in draft.rows(table):
+            name = draft.read(table, row, key)
+            if name in seen:
+                rule = f"must not be the name of an earlier {noun} too"
+                draft.fault((table, row, key), rule, f"got {shown(name)} again", "rename one of them")
+            elif name is not None:
+                seen.add(name)
 
 
 def _thresholds(draft: Draft) -> None:
     for row in draft.rows("units"):
         beds = draft.read("units", row, "beds")
-        own = draft.read("units", row, "closure_threshold", default=beds)
-        incoming = draft.read("units", row, "incoming_threshold", default=own)
-        if None in (beds, own):
-            continue
-        if own > beds:
-            _above_beds(draft, ("units", row, "closure_threshold"), own, beds)
-        if incoming is not None and incoming > own:
+        own = draft.read("units", row, "closure_threshold")
+        incoming = draft.read("units", row, "incoming_threshold")
+        own_holds = _within_beds(draft, ("units", row, "closure_threshold"), beds)
+        path = ("units", row, "incoming_threshold")
+        if not own_holds or None in (own, incoming) or incoming <= own:
+            _within_beds(draft, path, beds)
+        else:
             rule = "must not be above the closure threshold (units close to others first)"
             remedy = f"lower it to {own} or less, or raise the closure threshold"
-            draft.fault(("units", row, "incoming_threshold"), rule, f"got {incoming} above {own}", remedy)
+            draft.fault(path, rule, f"got {incoming} above {own}", remedy)
 
 
-def _above_beds(draft: Draft, path: Path, threshold: int, beds: int) -> None:
+def _within_beds(draft: Draft, path: Path, beds: int | None) -> bool:
+    """Whether the threshold at `path` is no larger than the unit's beds, as far as both are known."""
+    threshold = draft.read(*path)
+    if None in (threshold, beds) or threshold <= beds:
+        return True
     remedy = f"choose a threshold from 0 to {beds}"
     draft.fault(path, "must not be above the unit's beds", f"got {threshold} for {beds} beds", remedy)
+    return False
 
 
 def _referrals(draft: Draft) -> None:
     for row in draft.rows("units"):
-        order = draft.read("units", row, "referral_order")
-        if order is not None:
-            _order(draft, ("units", row, "referral_order"), order, draft.read("units", row, "name"))
+        _order(draft, ("units", row, "referral_order"), draft.name(row))
 
 
-def _order(draft: Draft, path: Path, order: Iterable[str], home: str | None) -> None:
+def _order(draft: Draft, path: Path, home: Any) -> None:
     """A referral order names other units, each once."""
-    for place, name in enumerate(order):
+    seen = set()
+    for entry in draft.below(*path):
+        name = draft.read(*entry)
+        if name is None:
+            continue
         if name == home:
-            draft.fault((*path, place), "must not name the unit itself", f"got {shown(name)}", "remove it")
-        elif name in order[:place]:
-            draft.fault((*path, place), "must not name a unit twice", f"got {shown(name)} again", "remove it")
+            draft.fault(entry, "must not name the unit itself", f"got {shown(name)}", "remove it")
+        elif name in seen:
+            draft.fault(entry, "must not name a unit twice", f"got {shown(name)} again", "remove it")
         else:
-            _known_unit(draft, (*path, place), name)
+            _known_unit(draft, entry, name)
+        seen.add(name)
 
 
-def _known_unit(draft: Draft, path: Path, name: str) -> bool:
-    units = draft.beds()
-    if name not in units:
-        draft.fault(path, "must be the name of a unit", f"got {shown(name)}", nearest(name, units))
-    return name in units
+def _known_unit(draft: Draft, path: Path, name: str) -> None:
+    """Where a unit has lost its name, only what is plainly a slip for a known name is held against the file."""
+    if name in draft.beds:
+        return
+    remedy = nearest(name, draft.beds)
+    if draft.every_unit_named or remedy.startswith("did you mean"):
+        draft.fault(path, "must be the name of a unit", f"got {shown(name)}", remedy)
 
 
 def _homes(draft: Draft) -> None:
@@ -132,48 +144,43 @@ def _homes(draft: Draft) -> None:
 
 def _isolated_units(draft: Draft) -> None:
     """A unit that no patient can reach is a slip; one whose thresholds admit nobody is a choice."""
-    units, homes = draft.rows("units"), [draft.read("patients", row, "home") for row in draft.rows("patients")]
-    orders = {row: draft.read("units", row, "referral_order", default="everyone") for row in units}
-    for row in units:
+    homes = [draft.read("patients", row, "home") for row in draft.rows("patients")]
+    orders = [
+        draft.read("units", row, "referral_order", default=draft.beds.keys() - {draft.name(row)})
+        for row in draft.rows("units")
+    ]
+    if not homes or None in homes or None in orders:
+        return  # whom the faulted ones would have named is not known
+    of_policies = [path for row in draft.rows("policies") for path in draft.below("policies", row, "referral_order")]
+    reached = {*homes}.union(*orders, *(draft.read(*path) or () for path in of_policies))
+    for row in draft.rows("units"):
         name = draft.read("units", row, "name")
-        asked = any(order in (None, "everyone") or name in order for other, order in orders.items() if other != row)
-        if name is not None and not asked and name not in homes and None not in homes:
+        if name is not None and name not in reached:
             rule = "must be some group's home or stand in some referral order"
             draft.fault(("units", row), rule, "got neither", "add a group with this home, or refer patients to it")
 
 
 def _strategies(draft: Draft) -> None:
-    beds = draft.beds()
-    for path, _ in draft.items("game", "strategies"):
-        name = path[-1]
-        if not _known_unit(draft, path, name) or beds[name] is None:
-            continue
-        for key in ("from", "to"):
-            value = draft.read(*path, key)
-            if value is not None and value > beds[name]:
-                _above_beds(draft, (*path, key), value, beds[name])
-        for place, value in enumerate(draft.read(*path, "values") or ()):
-            if value > beds[name]:
-                _above_beds(draft, (*path, "values", place), value, beds[name])
+    for path in draft.below("game", "strategies"):
+        _known_unit(draft, path, path[-1])
+        for threshold in ((*path, "from"), (*path, "to"), *draft.below(*path, "values")):
+            _within_beds(draft, threshold, draft.beds.get(path[-1]))
 
 
 def _policies(draft: Draft) -> None:
-    beds = draft.beds()
     per_unit = ("closure_threshold", "incoming_threshold", "reopening_gap", "admit_while_closed", "review_hours")
     for row in draft.rows("policies"):
-        for key in (*per_unit, "referral_order"):
-            for path, value in draft.items("policies", row, key):
-                if not _known_unit(draft, path, path[-1]):
-                    continue
-                if key.endswith("threshold") and beds[path[-1]] is not None and value > beds[path[-1]]:
-                    _above_beds(draft, path, value, beds[path[-1]])
-                if key == "referral_order":
-                    _order(draft, path, value, path[-1])
+        for path in (path for key in (*per_unit, "referral_order") for path in draft.below("policies", row, key)):
+            _known_unit(draft, path, path[-1])
+            if path[-2].endswith("threshold"):
+                _within_beds(draft, path, draft.beds.get(path[-1]))
+            elif path[-2] == "referral_order":
+                _order(draft, path, path[-1])
 
 
 def _periods(draft: Draft) -> None:
-    goal = TargetUtilisation.model_fields["judged_over_days"].default
-    judged = draft.read("game", "goal", "judged_over_days", default=goal)
+    default = TargetUtilisation.model_fields["judged_over_days"].default
+    judged = draft.read("game", "goal", "judged_over_days", default=default)
     measured = draft.read("run", "measured_days", default=Run.model_fields["measured_days"].default)
     squared = draft.read("game", "goal", "shape") == "squared"
     if squared and None not in (judged, measured) and judged > measured:
@@ -184,10 +191,18 @@ def _periods(draft: Draft) -> None:
 
 def _sizes(draft: Draft) -> None:
     days = [draft.read("run", key, default=Run.model_fields[key].default) for key in ("warm_up_days", "measured_days")]
-    rates = [draft.read("patients", row, "per_day") for row in draft.rows("patients")]
-    if None in days or None in rates:
+    if None in days:
         return
-    patients = sum(rates) * sum(days)
+    rates = [draft.read("patients", row, "per_day") for row in draft.rows("patients")]
+    patients = sum(rate for rate in rates if rate is not None) * sum(days)
     if patients > MOST_PATIENTS:
         rule = f"a replication may hold at most {MOST_PATIENTS:,} patients"
         draft.fault(("run", "measured_days"), rule, f"got about {patients:,.0f}", "shorten the run or lower the rates")
+    reviewed = [("units", row, "review_hours") for row in draft.rows("units")]
+    reviewed += [path for row in draft.rows("policies") for path in draft.below("policies", row, "review_hours")]
+    for path in reviewed:
+        hours = draft.read(*path)
+        if hours and sum(days) * 24 / hours > MOST_REVIEWS:
+            rule = f"a replication may hold at most {MOST_REVIEWS:,} reviews of a unit"
+            remedy = "review less often, or give 0: gates act at once"
+            draft.fault(path, rule, f"got about {sum(days) * 24 / hours:,.6g}", remedy)

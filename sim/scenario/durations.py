@@ -9,19 +9,23 @@ from __future__ import annotations
 
 import csv
 import hashlib
-import math
+import io
+import unicodedata
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
 from pydantic import Discriminator, Field, PrivateAttr, Tag, ValidationInfo, create_model, model_validator
 
 from sim import stays
+from sim.scenario.faults import nearest
 from sim.scenario.tables import NotNegative, Positive, Row, Share, Table, breach
 
 MOST_STAGES = 200
+MOST_BYTES = 200_000_000
 LONGEST = 36_500.0  # of days, or of hours
 
 Mean = Annotated[Positive, Field(le=LONGEST)]
+Rate = Annotated[Positive, Field(ge=1e-4, le=1e6)]
 Cv = Annotated[float, Field(ge=0.001, le=20, examples=["cv = 1.4"])]
 
 
@@ -100,7 +104,7 @@ class Coxian(Duration):
     """Phases in a row, each left at its rate, with a chance to go on to the next."""
 
     family: Literal["coxian"]
-    rates: Annotated[tuple[Positive, ...], Row, Field(min_length=1, max_length=MOST_STAGES)]
+    rates: Annotated[tuple[Rate, ...], Row, Field(min_length=1, max_length=MOST_STAGES)]
     goes_on: Annotated[tuple[Share, ...], Row, Field(max_length=MOST_STAGES, examples=["goes_on = [0.4]"])]
 
     @model_validator(mode="after")
@@ -109,7 +113,7 @@ class Coxian(Duration):
             raise breach(
                 "needs one entry fewer than the rates (a patient may go on after every phase but the last)",
                 len(self.goes_on),
-                f"give {len(self.rates) - 1} probabilities",
+                f"give {len(self.rates) - 1}",
                 key=("goes_on",),
             )
         return self
@@ -142,58 +146,68 @@ class Empirical(Duration):
 
 def read_column(path: Path, column: str) -> tuple[tuple[float, ...], str]:
     """The numbers of one CSV column in file order, and the file's SHA-256; a breach where one is no duration."""
+    content = _content(path)
     try:
-        content = path.read_bytes()
-    except OSError as error:
-        reason = error.strerror or "unreadable"
-        raise breach(
-            "must name a CSV file that can be read", f"{path} ({reason})", "correct the path (it is relative "
-            "to the scenario file) or put the file there", key=("file",),
-        ) from None
-    try:
-        rows = list(csv.reader(content.decode("utf-8-sig").splitlines(), strict=True))
+        text = unicodedata.normalize("NFC", content.decode("utf-8-sig"))
+        reader = csv.reader(io.StringIO(text, newline=""), strict=True)
+        rows = [(reader.line_num, row) for row in reader]
     except (UnicodeDecodeError, csv.Error) as error:
         raise breach(
-            "must be a CSV file in UTF-8", f"{path.name} ({error})", "save it again as CSV in UTF-8", key=("file",)
+            "must be a CSV file in UTF-8", f"{path.name!r} ({error})", "save it again as CSV in UTF-8", key=("file",)
         ) from None
     return _numbers(rows, path.name, column), hashlib.sha256(content).hexdigest()
 
 
-def _numbers(rows: list[list[str]], file: str, column: str) -> tuple[float, ...]:
-    header = [name.strip() for name in rows[0]] if rows else []
-    if header.count(column) != 1:
-        raise breach(
-            f"must name one column of {file}", repr(column), "its columns are " + (", ".join(header) or "none"),
-            key=("column",),
-        )
-    place = header.index(column)
-    numbers, bad = [], []
-    for line, row in enumerate(rows[1:], start=2):
-        if not row:
-            continue
-        text = row[place].strip() if place < len(row) else ""
-        number = _number(text)
-        if number is None or not 0 <= number <= LONGEST:
-            bad.append(f"line {line}: {text!r}")
+def _content(path: Path) -> bytes:
+    """The bytes of a regular file; a pipe or a device might never end."""
+    try:
+        if not path.exists() or path.is_file():
+            with path.open("rb") as opened:
+                content = opened.read(MOST_BYTES + 1)
+            reason = f"larger than {MOST_BYTES:,} bytes"
+            if len(content) <= MOST_BYTES:
+                return content
         else:
-            numbers.append(number)
+            reason = "not a file"
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+    remedy = "correct the path (it is relative to the scenario file) or put the file there"
+    raise breach(
+        "must name a CSV file that can be read", f"{str(path)!r} ({reason.lower()})", remedy, key=("file",)
+    ) from None
+
+
+def _numbers(rows: list[tuple[int, list[str]]], file: str, column: str) -> tuple[float, ...]:
+    """The column below a header of the first line. Blank lines may end the file; elsewhere they are no stay."""
+    header = [name.strip() for name in rows[0][1]] if rows else []
+    if header.count(column) != 1:
+        held = "twice" if column in header else nearest(column, filter(None, header))
+        raise breach(f"must name one column of {file}", repr(column), held, key=("column",))
+    place = header.index(column)
+    while not rows[-1][1]:
+        rows.pop()
+    texts = [(line, row[place].strip() if place < len(row) else "") for line, row in rows[1:]]
+    bad = [f"line {line}: {text!r}" for line, text in texts if _number(text) is None]
     if bad:
-        shown = "; ".join(bad[:3]) + (f"; and {len(bad) - 3} more" if len(bad) > 3 else "")
+        said = "; ".join(bad[:3]) + (f"; and {len(bad) - 3:,} more" if len(bad) > 3 else "")
         raise breach(
-            f"every entry of column {column!r} of {file} must be a number from 0 to {LONGEST:g}", shown,
+            f"every entry of column {column!r} of {file} must be a number from 0 to {LONGEST:,.0f}", said,
             "mend or remove those rows", key=("column",),
+        )  # fmt: skip
+    if not texts:
+        raise breach(
+            f"column {column!r} of {file} must hold at least one number", "none", "add rows", key=("column",)
         )
-    if not numbers:
-        raise breach(f"column {column!r} of {file} must hold at least one number", "none", "add rows", key=("column",))
-    return tuple(numbers)
+    return tuple(_number(text) for _, text in texts)
 
 
 def _number(text: str) -> float | None:
+    """The duration that a CSV entry stands for; None where it is none."""
     try:
         number = float(text)
     except ValueError:
         return None
-    return number if math.isfinite(number) else None
+    return number if 0 <= number <= LONGEST and "_" not in text else None
 
 
 FAMILIES = (Constant, Exponential, Erlang, Gamma, Weibull, Lognormal, Hyperexponential, Coxian, Empirical)
@@ -211,7 +225,7 @@ class Mixture(Duration):
     @model_validator(mode="after")
     def _some_weight(self):
         if not any(part.weight > 0 for part in self.parts):
-            raise breach("at least one part must have a weight above 0", "all are 0", "raise one", key=("parts",))
+            raise breach("must give at least one part a weight above 0", "only 0", "raise one", key=("parts",))
         return self
 
 
@@ -239,7 +253,11 @@ def _duration(unit: str) -> Any:
         word = family.__name__.lower()
         models[word] = _variant(family, f"{family.__name__}In{unit.capitalize()}", unit)
         parts[word] = _variant(family, f"{family.__name__}PartIn{unit.capitalize()}", unit, weight=weight)
-    several = (Annotated[tuple[_one_of(parts), ...], Row, Field(min_length=1, max_length=50)], ...)
+    example = f'parts = [{{ family = "exponential", mean_{unit} = 3.9, weight = 1 }}]'
+    several = (
+        Annotated[tuple[_one_of(parts), ...], Row, Field(min_length=1, max_length=50, examples=[example])],
+        ...,
+    )
     models["mixture"] = _variant(Mixture, f"MixtureIn{unit.capitalize()}", unit, parts=several)
     return _one_of(models)
 

@@ -6,7 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
-from sim.scenario.tables import NotNegative, Positive, Row, Table, breach
+from sim.scenario.tables import NotNegative, Row, Table, breach
 from sim.scenario.units import Threshold
 
 
@@ -19,7 +19,7 @@ class TargetUtilisation(Table):
 
     kind: Literal["target_utilisation"] = "target_utilisation"
     shape: Annotated[Literal["absolute", "squared"], Field(examples=['shape = "absolute"'])] = "absolute"
-    judged_over_days: Annotated[Positive, Field(examples=["judged_over_days = 365"])] = 365.0
+    judged_over_days: Annotated[float, Field(ge=1, examples=["judged_over_days = 365"])] = 365.0
 
 
 class Throughput(Table):
@@ -54,13 +54,15 @@ class Thresholds(Table):
         if (self.values is not None) == any(ends) or any(ends) != all(ends):
             raise breach("needs either both `from` and `to`, or `values`", self._said(), "give one of the two")
         if all(ends) and self.from_ > self.to:
-            raise breach("must not be above `to`", self.from_, f"`to` is {self.to}", key=("from",))
-        if self.values is not None and len(set(self.values)) < len(self.values):
-            raise breach("must not repeat a threshold", list(self.values), "remove the repeats", key=("values",))
+            raise breach("must not be above `to`", f"{self.from_} above {self.to}", "swap or correct them", key=("from",))
+        for place, value in enumerate(self.values or ()):
+            if value in self.values[:place]:
+                raise breach("must not repeat a threshold", f"{value} again", "remove it", key=("values", place))
         return self
 
     def _said(self) -> str:
-        return ", ".join(key.rstrip("_") for key, value in self if value is not None) or "neither"
+        given = ((name, value) for name, value in (("from", self.from_), ("to", self.to), ("values", self.values)))
+        return " and ".join(f"`{name}`" for name, value in given if value is not None) or "neither"
 
     def listed(self) -> tuple[int, ...]:
         """The thresholds in the order of the file."""
@@ -72,4 +74,6 @@ class Game(Table):
 
     goal: Annotated[TargetUtilisation, Field(examples=['goal = { kind = "target_utilisation" }'])] = TargetUtilisation()
     welfare: Annotated[Welfare, Field(examples=['welfare = { kind = "throughput" }'])] = Throughput(kind="throughput")
-    strategies: dict[str, Thresholds] = {}
+    strategies: Annotated[
+        dict[str, Thresholds], Field(examples=["strategies = { Ashgill = { from = 1, to = 12 } }"])
+    ] = {}

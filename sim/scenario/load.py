@@ -47,15 +47,18 @@ def parse_scenario(text: str, *, folder: str | Path = ".", file: str = "scenario
 
 def _text_of(path: Path) -> str:
     try:
-        if path.is_file() and path.stat().st_size > MOST_BYTES:
-            raise _unreadable(path, f"must be at most {MOST_BYTES:,} bytes", "larger", "put data into CSV files")
-        return path.read_bytes().decode("utf-8-sig")
-    except OSError as error:
-        reason = error.strerror or "unreadable"
-        raise _unreadable(path, "must be a file that can be read", reason.lower(), "correct the path") from None
+        with path.open("rb") as opened:
+            content = opened.read(MOST_BYTES + 1)
+        text = content[:MOST_BYTES].decode("utf-8-sig")
     except UnicodeDecodeError as error:
-        at = f"byte {error.start} is not UTF-8"
+        at = f"byte {error.start + 1} is not UTF-8"
         raise _unreadable(path, "must be text in UTF-8", at, "save it again in UTF-8") from None
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise _unreadable(path, "must be a file that can be read", reason.lower(), "correct the path") from None
+    if len(content) > MOST_BYTES:
+        raise _unreadable(path, f"must be at most {MOST_BYTES:,} bytes", "it is larger", "put data into CSV files")
+    return text
 
 
 def _unreadable(path: Path, rule: str, value: str, remedy: str) -> ScenarioError:
@@ -63,17 +66,47 @@ def _unreadable(path: Path, rule: str, value: str, remedy: str) -> ScenarioError
 
 
 def _toml(text: str, file: str) -> dict[str, Any]:
+    """The file's tables, with names and keys in NFC however they are escaped."""
     try:
-        return tomllib.loads(text)
+        return _composed(tomllib.loads(text))
     except tomllib.TOMLDecodeError as error:
-        found = re.search(r"\(at line (\d+), column (\d+)\)", str(error))
-        line = int(found[1]) if found else text.count("\n") + 1
-        said = str(error).split(" (at ")[0]
-        fault = Fault(line, "file", "must be valid TOML", said[0].lower() + said[1:], "correct this line")
-        raise ScenarioError([fault], file) from None
+        line, value, remedy = _syntax(str(error), text)
     except RecursionError:
-        fault = Fault(None, "file", "must be valid TOML", "nested too deeply", "flatten it")
-        raise ScenarioError([fault], file) from None
+        brackets = [line.count("[") + line.count("{") for line in text.split("\n")]
+        line, value, remedy = brackets.index(max(brackets)) + 1, "nested too deeply", "flatten it"
+    except ValueError:  # tomllib lets Python's own limit on long integers through
+        longest = max(re.finditer(r"[0-9_]+", text), key=lambda found: len(found[0]))
+        line = text.count("\n", 0, longest.start()) + 1
+        value, remedy = "a number of thousands of digits", "shorten it"
+    raise ScenarioError([Fault(line, "file", "must be valid TOML", value, remedy)], file) from None
+
+
+def _composed(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {unicodedata.normalize("NFC", key): _composed(inner) for key, inner in value.items()}
+    if isinstance(value, list):
+        return [_composed(inner) for inner in value]
+    return unicodedata.normalize("NFC", value) if isinstance(value, str) else value
+
+
+_SYNTAX = {
+    r"Cannot overwrite a value": ("a key is given twice", "remove one of the two"),
+    r"Cannot (?:declare|mutate immutable namespace) \('(units|patients|policies)',\).*": (
+        "a second table `[{0}]`", "write `[[{0}]]` in double brackets above each row"),
+    r"Cannot declare \((.*?),?\) twice": ("a second table {0}", "join the two"),
+    r"Invalid value": ("no value that TOML knows", "correct this line (text needs quotes)"),
+}  # fmt: skip
+
+
+def _syntax(said: str, text: str) -> tuple[int, str, str]:
+    """Line, value and remedy of a TOML syntax error."""
+    found = re.search(r" \(at line (\d+), column \d+\)$", said)
+    line = int(found[1]) if found else text.rstrip().count("\n") + 1
+    said = said.rpartition(" (at ")[0] or said
+    for pattern, (value, remedy) in _SYNTAX.items():
+        if match := re.fullmatch(pattern, said):
+            return line, value.format(*match.groups()), remedy.format(*match.groups())
+    return line, said[:1].lower() + said[1:], "correct this line"
 
 
 def _data_hashes(scenario: Scenario) -> dict[str, str]:

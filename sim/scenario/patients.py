@@ -14,7 +14,7 @@ from sim.scenario.units import Name
 
 def _not_all_zero(weights: tuple[float, ...]) -> tuple[float, ...]:
     if not any(weights):
-        raise breach("at least one weight must be above 0", "all are 0", "raise one, or remove the key")
+        raise breach("must hold at least one weight above 0", "only 0", "raise one, or remove the key")
     return weights
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tomllib
+import unicodedata
 from collections.abc import Mapping
 
 import tree_sitter
@@ -50,9 +51,10 @@ class _Finder:
     def pair(self, node: tree_sitter.Node, base: Path) -> None:
         key, value = [child for child in node.named_children if child.type != "comment"][:2]
         *parents, last = _keys(key)
-        for depth in range(1, len(parents) + 1):
-            self.lines.setdefault(self.resolved(base, parents[:depth]), _line(key))
-        path = (*self.resolved(base, parents), last)
+        for parent in parents:
+            base = self.resolved(base, [parent])
+            self.lines.setdefault(base, _line(key))
+        path = (*base, last)
         self.lines[path] = _line(key)
         self.value(value, path)
 
@@ -72,11 +74,11 @@ def _line(node: tree_sitter.Node) -> int:
 
 
 def _keys(node: tree_sitter.Node) -> list[str]:
-    """The parts of a bare, quoted or dotted key, read as TOML reads them."""
+    """The parts of a bare, quoted or dotted key, read as TOML reads them, in NFC."""
     keys, level = [], tomllib.loads(f"{node.text.decode()} = 0")
     while isinstance(level, dict):
         key, level = next(iter(level.items()))
-        keys.append(key)
+        keys.append(unicodedata.normalize("NFC", key))
     return keys
 
 

@@ -5,16 +5,16 @@ from __future__ import annotations
 import dataclasses
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any
 
-from pydantic import Field, PrivateAttr
+from pydantic import AfterValidator, Field, PrivateAttr
 
 from sim.scenario.diversion import Diversion
 from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
 from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
-from sim.scenario.tables import Row, Table
+from sim.scenario.tables import Row, Table, breach
 from sim.scenario.units import Unit
 
 
@@ -27,21 +27,31 @@ class Source:
     data: Mapping[str, str] = field(default_factory=dict)
 
 
+def _known_schema(number: int) -> int:
+    if number != 1:
+        raise breach("must be 1, the only form of scenario files so far", number, "write `schema = 1`")
+    return number
+
+
 class Scenario(Table):
     """A network, its patients, its rules and its game, as one scenario file describes them."""
 
-    schema_: Annotated[Literal[1], Field(alias="schema", examples=["schema = 1"])]
-    title: str = ""
-    run: Run = Run()
+    schema_: Annotated[int, Field(alias="schema", examples=["schema = 1"]), AfterValidator(_known_schema)]
+    title: Annotated[str, Field(examples=['title = "Two invented units"'])] = ""
+    run: Annotated[Run, Field(examples=["[run]"])] = Run()
     units: Annotated[
         tuple[Unit, ...], Row, Field(min_length=1, max_length=200, examples=['[[units]]` with `name = "Ashgill"'])
     ]
     patients: Annotated[
-        tuple[PatientGroup, ...], Row, Field(min_length=1, max_length=5_000, examples=["[[patients]]` with `group = ..."])
+        tuple[PatientGroup, ...],
+        Row,
+        Field(min_length=1, max_length=5_000, examples=['[[patients]]` with `group = "Ashgill emergencies"']),
     ]
-    diversion: Diversion = Diversion()
-    game: Game = Game()
-    policies: Annotated[tuple[PolicyRow, ...], Row] = ()
+    diversion: Annotated[Diversion, Field(examples=["[diversion]"])] = Diversion()
+    game: Annotated[Game, Field(examples=["[game]"])] = Game()
+    policies: Annotated[
+        tuple[PolicyRow, ...], Row, Field(examples=['[[policies]]` with `name = "close only when full"'])
+    ] = ()
     _source: Source = PrivateAttr(Source())
 
     @property

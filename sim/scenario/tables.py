@@ -10,6 +10,7 @@ from pydantic_core import PydanticCustomError
 MOST_BEDS = 5_000
 MOST_DAYS = 1_000_000.0
 MOST_PATIENTS = 50_000_000
+MOST_REVIEWS = 1_000_000
 LONGEST_NAME = 200
 
 

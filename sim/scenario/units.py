@@ -7,6 +7,7 @@ from typing import Annotated
 
 from pydantic import AfterValidator, Field
 
+from sim.scenario.faults import shown
 from sim.scenario.tables import LONGEST_NAME, MOST_BEDS, NotNegative, Positive, Row, Share, Table, Whole, breach
 
 RESERVED_NAME = "network"
@@ -15,17 +16,17 @@ RESERVED_NAME = "network"
 def _speakable(name: str) -> str:
     """A name that can stand in a table and on a command line."""
     if name != name.strip() or not name:
-        raise breach("must not be empty, nor begin or end with a space", repr(name), "remove the spaces")
+        raise breach("must not be empty, nor begin or end with a space", shown(name), "remove the spaces")
     if len(name) > LONGEST_NAME:
-        raise breach(f"must have at most {LONGEST_NAME} characters", len(name), "shorten it")
+        raise breach(f"must have at most {LONGEST_NAME} characters", f"{len(name):,}", "shorten it")
     if any(unicodedata.category(character) in ("Cc", "Cs", "Zl", "Zp") for character in name):
-        raise breach("must not hold control characters", repr(name), "remove them")
+        raise breach("must not hold control characters", shown(name), "remove them")
     return name
 
 
 def _not_reserved(name: str) -> str:
     if name == RESERVED_NAME:
-        raise breach("is a reserved word (it stands for all units together)", repr(name), "choose another name")
+        raise breach("is a reserved word (it stands for all units together)", shown(name), "choose another name")
     return name
 
 

@@ -116,13 +116,24 @@ def test_inverse_rises_and_keeps_out_of_hours_of_weight_zero(pattern, operationa
     assert pattern.cumulative(times) == pytest.approx(operational, rel=1e-12, abs=1e-12)
 
 
-def test_inverse_never_rounds_past_the_end_of_its_hour():
-    # The last operational moments of every hour of 150 weeks, one unit in the last place before its end.
-    ends = (UNEVEN.cumulative(WEEK[1:]) + 7.0 * np.arange(150)[:, None]).ravel()
-    last = UNEVEN.inverse(np.nextafter(ends, 0.0))
-    hour = np.tile(np.arange(167), 150) + 168 * np.repeat(np.arange(150), 167)
-    assert np.all(last < (hour + 1) / 24)
-    assert np.all(UNEVEN.inverse(ends) >= last)
+@each_pattern
+def test_inverse_never_rounds_past_the_end_of_its_hour(pattern):
+    # The last operational moment, one unit in the last place, before the end of every hour of 150 weeks.
+    within = pattern.cumulative(np.arange(1, 169) / 24)
+    ends = (within + 7.0 * np.arange(150)[:, None]).ravel()
+    last, used = pattern.inverse(np.nextafter(ends, 0.0)), np.tile(pattern.rate(WEEK) > 0.0, 150)
+    hour = np.arange(168 * 150)
+    assert np.all(last[used] < (hour[used] + 1) / 24)
+    assert np.all(last[used] >= hour[used] / 24)
+    assert np.all(pattern.inverse(ends) >= last)
+
+
+def test_an_hour_starts_at_the_double_nearest_to_its_boundary():
+    hour = np.arange(1, 168 * 150)
+    assert np.array_equal(UNEVEN.rate(hour / 24), UNEVEN.rate((hour % 168 + 0.5) / 24))
+    assert np.array_equal(
+        UNEVEN.rate(np.nextafter(hour / 24, 0.0)), UNEVEN.rate(((hour - 1) % 168 + 0.5) / 24)
+    )
 
 
 @each_pattern

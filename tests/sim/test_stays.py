@@ -218,13 +218,24 @@ def test_mixture_of_steps_alone_by_hand():
     assert family.quantile(u).tolist() == [1.0, 1.0, 2.0, 2.0, 3.0, 3.0, 9.0, 9.0]
 
 
+def test_step_far_in_the_tail_by_hand():
+    family = Mixture(((1.0, Constant(1.0)), (1e-15, Constant(2.0))))
+    # 9 and 10 times 2^-53 are 0.999e-15 and 1.11e-15, either side of the share that stays longer than 1.
+    assert family.quantile([1 - 9 * 2.0**-53, 1 - 10 * 2.0**-53]).tolist() == [2.0, 1.0]
+
+
 @settings(max_examples=50, deadline=None)
 @given(uniform, st.sampled_from([name for name in FAMILIES if "mixture" in name]))
 def test_mixture_quantile_is_the_smallest_time_that_reaches_u(u, name):
     family = FAMILIES[name]
     x = float(family.quantile(u))
-    assert family.survival(x * (1 + 1e-12)) <= 1 - u
-    assert x == 0.0 or family.cdf(x * (1 - 1e-12)) <= u
+    sooner, later = x * (1 - 1e-12), x * (1 + 1e-12)
+    if u < 0.5:
+        assert family.cdf(later) >= u * (1 - 1e-15)
+        assert x == 0.0 or family.cdf(sooner) <= u * (1 + 1e-15)
+    else:
+        assert family.survival(later) <= (1 - u) * (1 + 1e-15)
+        assert x == 0.0 or family.survival(sooner) >= (1 - u) * (1 - 1e-15)
 
 
 def test_mixture_keeps_normalised_weights_and_ignores_parts_of_none():

@@ -5,14 +5,14 @@ from __future__ import annotations
 from analysis.chain.certificate import certify
 from analysis.chain.gth import band_of, stationary
 from analysis.chain.layout import layout, state_bound
-from analysis.chain.limits import Limits
+from analysis.chain.limits import DEFAULT, Limits
 from analysis.chain.measures import ExactResult, measured
 from analysis.chain.network_states import network_chain
 from analysis.chain.scope import OutOfScope, refusals
 from sim.scenario import Policy, Scenario
 
 
-def solve(scenario: Scenario, policy: Policy, *, limits: Limits = Limits()) -> ExactResult:  # noqa: B008
+def solve(scenario: Scenario, policy: Policy, *, limits: Limits = DEFAULT) -> ExactResult:
     """The exact long-run measures of a network whose stays are all exponential.
 
     scenario: the network. policy: the rules that it is run by. limits: the largest chain to attempt.
@@ -30,5 +30,8 @@ def solve(scenario: Scenario, policy: Policy, *, limits: Limits = Limits()) -> E
 
 
 def chain_size(scenario: Scenario, policy: Policy) -> int | None:
-    """An upper bound of the states that `solve` would count, at no cost; None where the scenario is out of scope."""
+    """An upper bound of the states that `solve` would count, without building any; None if out of scope.
+
+    Most often it is the number itself. 10**15 stands for itself and all above.
+    """
     return None if refusals(scenario, policy) else state_bound(layout(scenario, policy))

@@ -1,0 +1,227 @@
+"""`brimline game`: the payoff table, its equilibria, the optimum and what selfish rules cost."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import Any
+
+import click
+
+from analysis.command.entry import say
+from analysis.command.options import Request, scenario_command
+from analysis.command.output import (
+    interval,
+    number,
+    prepare_folder,
+    put_caution,
+    put_grid,
+    put_json,
+    put_table,
+    put_text,
+    write_result,
+)
+
+COLUMNS_AT_ONCE = 20
+MOST_LISTED = 25
+
+
+@click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
+@click.option("--tolerance", type=click.FloatRange(0), default=1e-9, show_default=True,
+              help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
+def game(request: Request, exact: bool, tolerance: float) -> None:
+    """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
+
+    Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
+    """
+    from analysis.command.provenance import provenance, started
+    from analysis.command.running import finish
+    from analysis.game_document import game_document
+    from analysis.games import analyse
+
+    begun = started()
+    table, ran, failures, interrupted = _exact_table(request) if exact else _simulated_table(request)
+    analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
+    document = {"scenario": request.scenario.title, "method": "exact" if exact else "simulated"} | game_document(analysis)
+    document |= ran | {"interrupted": interrupted}
+    if request.out is not None:
+        _write(request, analysis, document, provenance(request, "game", begun))
+    if request.as_json:
+        put_json(document)
+    else:
+        _show(analysis, document)
+    finish(failures, interrupted)
+
+
+command = scenario_command(game)
+
+
+def _axes(request: Request) -> tuple[Any, Any, Any]:
+    """Profiles, goal and welfare; ScenarioError where the game is too large or a target is missing."""
+    from analysis.goals import goal_of, welfare_of
+    from analysis.payoffs import MOST_CELLS, profiles_of
+    from sim.errors import Fault, ScenarioError
+
+    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario)
+    if profiles.cells > MOST_CELLS:
+        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {profiles.cells:,}"
+        remedy = "list fewer thresholds for some units"
+        raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
+    return profiles, goal, welfare_of(request.scenario)
+
+
+def _simulated_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
+    from analysis.command.running import require_some, run_replications
+    from analysis.payoffs import TableSums, simulated_table
+    from sim.record import hash_records
+    from sim.scenario.describe import advice
+
+    profiles, goal, welfare = _axes(request)
+    for said in advice(request.scenario):
+        say(f"advice: {said}")
+    run = request.scenario.run
+    sums = TableSums(request.scenario, profiles.cells, run.replications)
+    policies = list(profiles.policies(request.policy))
+    failures, interrupted = run_replications(request, policies, label="game", take=sums.add)
+    require_some(len(sums.complete))
+    table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
+    hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
+    ran = {
+        "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed, "engine": request.engine,
+        "record_hash": hash_records(hashes),
+        "failed": [{"seed": f.seed, "replication": f.replication, "cells": list(f.cells), "traceback": f.traceback}
+                   for f in failures],
+    }  # fmt: skip
+    return table, ran, failures, interrupted
+
+
+def _exact_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
+    from analysis.command.progress import progress
+    from analysis.exact_tables import solve_cells
+    from analysis.payoffs import exact_table
+    from sim.errors import Fault, ScenarioError
+
+    profiles, goal, welfare = _axes(request)
+    if goal.shape == "squared":
+        rule, remedy = "must be `absolute` with --exact", "drop --exact, or use the absolute goal"
+        fault = Fault(None, "game.goal.shape", rule, "got 'squared': the chain has no finite-period variance here", remedy)
+        raise ScenarioError([fault], request.scenario.source.file)
+    cells = [None] * profiles.cells
+    with progress("game --exact", profiles.cells, "cells") as bar:
+        for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
+            cells[cell] = units
+            bar.advance()
+    return exact_table(profiles, goal, welfare, cells), {}, [], False
+
+
+def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:
+    from analysis.figures import save_payoffs
+    from analysis.game_document import game_frame
+
+    folder = prepare_folder(request.out)
+    write_result(folder, document, origin)
+    game_frame(analysis).to_csv(folder / "table.csv", index=False)
+    if len(analysis.table.profiles.players) == 2:
+        save_payoffs(analysis, folder)
+    else:
+        say("payoff pictures are drawn for two players only; the table is in table.csv")
+
+
+def _show(analysis: Any, document: dict[str, Any]) -> None:
+    from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING
+
+    put_text(document["scenario"] or "(no title)", f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
+    if not analysis.is_exact:
+        put_text(f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals.")
+    put_text("")
+    if len(document["players"]) == 2:
+        for player in (0, 1):
+            _show_payoffs(analysis, player)
+    _show_equilibria(document)
+    _show_outcomes(document)
+    for finding in document["findings"]:
+        put_text(finding["statement"] + ".")
+    put_text("", ONE_NETWORK)
+    if not analysis.is_exact:
+        put_text("", POINT_ESTIMATE_WARNING)
+    put_caution()
+
+
+def _show_payoffs(analysis: Any, player: int) -> None:
+    """One player's payoffs; `*` marks the player's best responses, `[ ]` an equilibrium."""
+    from analysis.equilibria import regrets
+
+    table = analysis.table
+    names, strategies = table.profiles.players, table.profiles.strategies
+    best = regrets(table.payoffs, table.goal.sense)[player] <= analysis.tolerance
+    equilibria = {one.profile for one in analysis.equilibria}
+    scale, scale_reads = table.goal.display_scale
+
+    def cell(row: int, column: int) -> str:
+        text = number(float(table.payoffs[player][row, column]) * scale, 1) + ("*" if best[row, column] else "")
+        return f"[{text}]" if (row, column) in equilibria else text
+
+    aim = "smaller is better" if table.goal.sense == "cost" else "larger is better"
+    for first in range(0, len(strategies[1]), COLUMNS_AT_ONCE):
+        columns = range(first, min(first + COLUMNS_AT_ONCE, len(strategies[1])))
+        put_grid(
+            f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] equilibrium)\n"
+            f"down: closure threshold of {names[0]}; across: of {names[1]}",
+            ["", *(str(strategies[1][column]) for column in columns)],
+            [[str(k), *(cell(row, column) for column in columns)] for row, k in enumerate(strategies[0])],
+        )
+
+
+def _show_equilibria(document: dict[str, Any]) -> None:
+    players, listed = document["players"], document["equilibria"][:MOST_LISTED]
+    put_table(
+        "Equilibria (closure thresholds; regret: the most a unit gains by deviating alone)",
+        ("verdict", *players, *(f"regret {player}" for player in players), "welfare"),
+        [
+            (one["verdict"], *(one["thresholds"][p] for p in players), *(_regret(one["regret"][p]) for p in players),
+             _value(one["welfare"]))
+            for one in listed
+        ],
+    )  # fmt: skip
+    if len(document["equilibria"]) > MOST_LISTED:
+        put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+
+
+def _regret(value: Any) -> str:
+    if not isinstance(value, dict):
+        return f"{value:.2g}"
+    return f"{value['mean']:.2g}" + ("" if value["high"] is None else f" (at most {value['high']:.2g})")
+
+
+def _value(value: Any) -> str:
+    return interval(value) if isinstance(value, dict) else number(value)
+
+
+def _show_outcomes(document: dict[str, Any]) -> None:
+    """Refusals, transfers and closed-with-a-free-bed time at the optimum and at the extreme equilibria, by home."""
+    put_table(
+        "What comes with it (a day; by home population for turned away and moved, by unit for closed time)",
+        ("profile", "home or unit", "threshold", "turned away", "moved", "closed with a free bed", "utilisation", "treated"),
+        [row for name, outcome in _named_outcomes(document) for row in _outcome_rows(name, outcome)],
+    )
+
+
+def _named_outcomes(document: dict[str, Any]) -> Iterator[tuple[str, dict[str, Any]]]:
+    ties = len(document["optimum"]["thresholds"])
+    yield "optimum" + (f" (1 of {ties} ties)" if ties > 1 else ""), document["optimum"]["outcome"]
+    by_thresholds = {tuple(one["thresholds"].items()): one["outcome"] for one in document["equilibria"]}
+    extremes = {name: document[f"{name}_equilibrium"] for name in ("worst", "best")}
+    if extremes["worst"] is None:
+        return
+    if extremes["worst"] == extremes["best"]:
+        yield "equilibrium", by_thresholds[tuple(extremes["worst"].items())]
+        return
+    for name, thresholds in extremes.items():
+        yield f"{name} equilibrium", by_thresholds[tuple(thresholds.items())]
+
+
+def _outcome_rows(name: str, outcome: dict[str, Any]) -> Iterator[tuple[Any, ...]]:
+    parts = ("turned_away_per_day", "diverted_out_per_day", "closed_with_free_bed_fraction", "utilisation")
+    for unit, threshold in outcome["thresholds"].items():
+        yield (name, unit, threshold, *(outcome[part][unit] for part in parts), None)
+    away, moved = (sum(outcome[part].values()) for part in parts[:2])
+    yield (name, "network", None, away, moved, None, None, outcome["throughput_per_day"])

@@ -1,0 +1,88 @@
+"""`brimline verify`: the simulation against the exact chain."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from analysis.command.entry import CheckFailed
+from analysis.command.options import Request, scenario_command
+from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+
+LEAST_REPLICATIONS = 5
+
+
+@click.option(
+    "--false-alarm-rate", type=click.FloatRange(0, 0.5, min_open=True), default=None,
+    help="Chance that a correct simulator is refused [default: 0.01, or 1 - --confidence where that is given].",
+)  # fmt: skip
+def verify(request: Request, false_alarm_rate: float | None) -> None:
+    """Hold the simulation against the exact chain, measure by measure; status 1 if they disagree."""
+    from analysis.chain import solve
+    from analysis.command.provenance import provenance, started
+    from analysis.command.running import finish, run_replications
+    from analysis.verification import FALSE_ALARM_RATE
+    from analysis.verification import verify as compare
+    from sim.errors import Fault, RunError, ScenarioError
+
+    begun = started()
+    if request.scenario.run.replications < LEAST_REPLICATIONS:
+        rule, got = f"must be at least {LEAST_REPLICATIONS} to verify", f"got {request.scenario.run.replications}"
+        raise ScenarioError([Fault(None, "replications", rule, got, "raise it, for example --replications 30")])
+    exact = solve(request.scenario, request.policy)
+    runs: list[Any] = []
+    failures, interrupted = run_replications(
+        request, [request.policy], label="verify", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
+    )
+    if len(runs) < LEAST_REPLICATIONS:
+        raise RunError(f"only {len(runs)} replications were finished, too few to verify anything")
+    runs.sort(key=lambda run: run.replication)
+    rate = false_alarm_rate or (1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE)
+    result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)
+    document = {"scenario": request.scenario.title, "thresholds": request.policy.thresholds} | result.to_dict() | {
+        "states": exact.states, "seed": request.scenario.run.seed, "engine": request.engine, "interrupted": interrupted,
+    }  # fmt: skip
+    if request.out is not None:
+        from analysis.figures import save_verification
+
+        folder = prepare_folder(request.out)
+        write_result(folder, document, provenance(request, "verify", begun))
+        save_verification(document, folder)
+    if request.as_json:
+        put_json(document)
+    else:
+        _show(document)
+    finish(failures, interrupted)
+    if not result.agrees:
+        raise CheckFailed
+
+
+command = scenario_command(verify)
+
+
+def _show(document: dict[str, Any]) -> None:
+    put_text(document["scenario"] or "(no title)", "")
+    put_table(
+        f"Simulation ({document['replications']} replications) against the exact chain ({document['states']} states)",
+        ("where", "measure", "exact", "simulated", "low", "high", "z", "verdict"),
+        [
+            (one["where"], one["measure"], one["exact"], one["mean"], one["low"], one["high"], one["z"], _verdict(one))
+            for one in document["measures"]
+        ],
+    )
+    off = [one for one in document["measures"] if not one["agrees"]]
+    rate, critical = document["false_alarm_rate"], document["critical_z"]
+    said = "The simulation agrees with the exact chain" if document["agrees"] else f"{len(off)} measures DISAGREE"
+    put_text(
+        f"{said}: every |z| is compared with {critical:.2f} (Student, Bonferroni over all measures tested); a correct "
+        f"simulator would be refused with a chance of at most {rate:g}.",
+        "This verifies the program against the model; it says nothing of how well the model fits a real network.",
+    )
+    put_caution()
+
+
+def _verdict(one: dict[str, Any]) -> str:
+    if not one["agrees"]:
+        return "DISAGREES"
+    return "agrees" if one["z"] is not None else "not tested"

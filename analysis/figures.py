@@ -1,0 +1,122 @@
+"""Figures: `(data, ax) -> ax`, no computing, readable in grey; the only room that imports seaborn."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import matplotlib
+
+matplotlib.use("Agg")
+
+import numpy as np  # noqa: E402
+import seaborn as sns  # noqa: E402
+from matplotlib import pyplot as plt  # noqa: E402
+from matplotlib.axes import Axes  # noqa: E402
+
+from analysis.equilibria import regrets  # noqa: E402
+from analysis.games import GameAnalysis  # noqa: E402
+
+matplotlib.rcParams["svg.hashsalt"] = "brimline"  # the same bytes every time
+FORMATS = ("png", "svg")
+
+
+def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
+    """One player's payoffs over both players' closure thresholds (two players).
+
+    Open circles mark the player's best responses, filled diamonds the equilibria.
+    """
+    table = game.table
+    names, strategies = table.profiles.players, table.profiles.strategies
+    sns.heatmap(
+        table.payoffs[player], ax=ax, cmap="cividis_r" if table.goal.sense == "cost" else "cividis",
+        xticklabels=strategies[1], yticklabels=strategies[0], cbar_kws={"label": _scale(game)},
+    )  # fmt: skip
+    ax.invert_yaxis()
+    best = np.argwhere(regrets(table.payoffs, table.goal.sense)[player] <= game.tolerance)
+    _mark(ax, best, "o", "none", "black", f"best response of {names[player]}", 46)
+    _mark(ax, np.array([one.profile for one in game.equilibria]).reshape(-1, 2), "D", "white", "black",
+          f"equilibrium ({'exact' if game.is_exact else 'estimated'})", 64)  # fmt: skip
+    ax.set(
+        title=f"What {names[player]} pays: {'darker is worse' if table.goal.sense == 'cost' else 'lighter is better'}",
+        xlabel=f"closure threshold of {names[1]} (beds)", ylabel=f"closure threshold of {names[0]} (beds)",
+    )  # fmt: skip
+    ax.tick_params(axis="y", rotation=0)
+    ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
+    return ax
+
+
+def _scale(game: GameAnalysis) -> str:
+    return f"{game.table.goal.reads} ({'cost' if game.table.goal.sense == 'cost' else 'gain'})"
+
+
+def _mark(ax: Axes, cells: np.ndarray, marker: str, face: str, edge: str, label: str, size: float) -> None:
+    ax.scatter(
+        cells[:, 1] + 0.5, cells[:, 0] + 0.5, marker=marker, s=size, facecolors=face, edgecolors=edge, linewidths=1.3,
+        label=label, zorder=3,
+    )  # fmt: skip
+
+
+def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
+    """Every tested measure's z against the limits within which a correct simulator stays."""
+    tested = [one for one in document["measures"] if one["z"] is not None]
+    wheres = list(dict.fromkeys(one["where"] for one in tested))
+    limit = document["critical_z"]
+    ax.axvspan(-limit, limit, color="0.9", zorder=0, label=f"limits ±{limit:.2f}")
+    ax.axvline(0, color="0.5", linewidth=0.8, zorder=1)
+    for place, one in enumerate(tested):
+        marker = "osD^vP*X"[wheres.index(one["where"]) % 8]
+        face = "black" if one["agrees"] else "white"
+        ax.scatter(one["z"], place, marker=marker, s=22, facecolors=face, edgecolors="black", zorder=3)
+    ax.set_yticks(range(len(tested)), [f"{one['where']}: {one['measure'].replace('_', ' ')}" for one in tested], fontsize=7)
+    ax.set_ylim(len(tested) - 0.3, -0.7)
+    ax.set(xlabel="z = (simulated - exact) / standard error", title="Simulation against the exact chain")
+    ax.legend(loc="lower right", fontsize=8)
+    return ax
+
+
+def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str) -> Axes:
+    """One unit's occupancy: exact shares as a line, simulated ones as points with simultaneous limits."""
+    levels = [one for one in document["measures"] if one["where"] == where and one["measure"].startswith("occupancy ")]
+    names = [one["measure"].removeprefix("occupancy ").replace(" to ", "–") for one in levels]
+    at = np.arange(len(levels))
+    mean, low, high = (np.array([one[key] for one in levels], float) for key in ("mean", "low", "high"))
+    ax.step(at, [one["exact"] for one in levels], where="mid", color="0.4", label="exact")
+    ax.errorbar(at, mean, yerr=[mean - low, high - mean], fmt="o", color="black", markersize=4, capsize=2, label="simulated")
+    ax.set_xticks(at, names, fontsize=8)
+    ax.set(title=where, xlabel="occupied beds (rare levels pooled)", ylabel="share of time", ylim=(0, None))
+    ax.legend(fontsize=8)
+    return ax
+
+
+def save_payoffs(game: GameAnalysis, folder: Path) -> list[Path]:
+    """Draws each player's heat map into `payoffs-PLACE.png` and `.svg`, numbered in scenario order."""
+    written = []
+    rows, columns = game.table.profiles.shape
+    for player in range(2):
+        figure, ax = plt.subplots(figsize=(2.6 + 0.36 * min(columns, 40), 2.4 + 0.32 * min(rows, 40)))
+        payoff_heat_map(game, ax, player=player)
+        written += _save(figure, folder, f"payoffs-{player + 1}")
+    return written
+
+
+def save_verification(document: Mapping[str, Any], folder: Path) -> list[Path]:
+    """Draws `verification.png` and `.svg`: every z, and each unit's occupancy."""
+    units = list(dict.fromkeys(one["where"] for one in document["measures"] if one["where"] != "network"))
+    tested = sum(one["z"] is not None for one in document["measures"])
+    figure = plt.figure(figsize=(12, max(4.5, 0.17 * tested + 1, 2.6 * len(units))))
+    grid = figure.add_gridspec(len(units), 2, width_ratios=(1.1, 1))
+    verification_z(document, figure.add_subplot(grid[:, 0]))
+    for place, unit in enumerate(units):
+        verification_occupancy(document, figure.add_subplot(grid[place, 1]), where=unit)
+    return _save(figure, folder, "verification")
+
+
+def _save(figure: Any, folder: Path, name: str) -> list[Path]:
+    figure.tight_layout()
+    paths = [folder / f"{name}.{extension}" for extension in FORMATS]
+    for path in paths:
+        figure.savefig(path, dpi=150, metadata={"Date": None} if path.suffix == ".svg" else None)
+    plt.close(figure)
+    return paths

@@ -1,0 +1,93 @@
+"""Statements with their numbers: what a result says, in words that claim no more than it can."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+from analysis.anarchy import NO_EQUILIBRIUM
+from analysis.confidence import Estimate
+from analysis.games import ESTIMATED, GameAnalysis
+
+POINT_ESTIMATE_WARNING = (
+    "These are the equilibria of an ESTIMATED table. The point estimate of a game is often wrong: sampling error "
+    "hides true equilibria and shows false ones, above all where payoffs nearly tie. Read them as candidates, "
+    "look at the upper end of each regret, and repeat with more replications before relying on any of them."
+)
+ONE_NETWORK = (
+    "The price of anarchy is the ratio of this one network under the stated goals, not a bound over a class of networks; "
+    "'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do better still."
+)
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One statement. value: the number it rests on, with its interval. unit: of that number. basis: where from."""
+
+    statement: str
+    value: Estimate | None
+    unit: str
+    basis: str
+
+    def to_dict(self) -> dict[str, Any]:
+        """Plain values."""
+        value = None if self.value is None else self.value.to_dict()
+        return {"statement": self.statement, "value": value, "unit": self.unit, "basis": self.basis}
+
+
+def findings_of(game: GameAnalysis) -> list[Finding]:
+    """What the analysis of a game says, most important first."""
+    return list(_findings(game))
+
+
+def _findings(game: GameAnalysis) -> Iterator[Finding]:
+    basis = _basis(game)
+    count = len(game.equilibria)
+    verdict = "in the estimated table " if not game.is_exact else ""
+    said = f"{count} pure {'equilibrium' if count == 1 else 'equilibria'} {verdict}within a regret of {game.tolerance:g}"
+    yield Finding(said, None, "profiles", basis)
+    yield from _prices(game, basis)
+    yield _turning(game, basis)
+
+
+def _basis(game: GameAnalysis) -> str:
+    if game.is_exact:
+        return "exact Markov chain"
+    return f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals, {ESTIMATED}"
+
+
+def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
+    cost, welfare = game.cost, game.table.welfare_goal
+    if cost.worst is None:
+        yield Finding(f"No price of anarchy: {NO_EQUILIBRIUM}", None, "ratio", basis)
+        return
+    ratio = cost.price_of_anarchy
+    lost = cost.lost_per_year
+    what = "patients" if welfare.kind == "throughput" else "units of loss"
+    if ratio.mean is None:
+        yield Finding(f"No price of anarchy: {ratio.reason}", None, "ratio", basis)
+    else:
+        yield Finding(f"Price of anarchy {_words(ratio, 4)}", ratio, "ratio", basis)
+        yield Finding(f"Price of stability {_words(cost.price_of_stability, 4)}", cost.price_of_stability, "ratio", basis)
+    yield Finding(f"The worst listed equilibrium forgoes {_words(lost, 1)} {what} a year", lost, f"{what} a year", basis)
+
+
+def _turning(game: GameAnalysis, basis: str) -> Finding:
+    turning = game.turning
+    if turning.weight is None:
+        return Finding(f"No transfer weight turns the verdict: {turning.reason}", None, "weight", basis)
+    return Finding(
+        f"The verdict turns at a transfer weight of {turning.weight:.3f}: where one transfer counts for more than that "
+        "many patients turned away, the profile that turns fewest away is no better than the worst listed equilibrium",
+        Estimate(turning.weight),
+        "patients turned away per transfer",
+        basis,
+    )  # fmt: skip
+
+
+def _words(estimate: Estimate, digits: int) -> str:
+    point = f"{estimate.mean:.{digits}f}"
+    if estimate.low is None or estimate.high is None:
+        return point
+    return f"{point} ({estimate.low:.{digits}f} to {estimate.high:.{digits}f})"

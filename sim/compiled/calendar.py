@@ -1,0 +1,90 @@
+"""Pending events of one run, earliest first: a sorted array for small networks, a binary heap for large ones.
+
+An event is a time and a key; the key packs kind, sequence and unit so that its order is the model's order of
+events at one time. Both forms live in the same two arrays.
+"""
+
+from __future__ import annotations
+
+from numba import njit
+
+SEQUENCE_SHIFT, KIND_SHIFT = 8, 48
+MOST_UNITS = 1 << SEQUENCE_SHIFT
+MOST_SEQUENCE = 1 << (KIND_SHIFT - SEQUENCE_SHIFT)
+
+
+@njit(inline="always")
+def pack(kind, sequence, unit):
+    """The key of an event."""
+    return (kind << KIND_SHIFT) | (sequence << SEQUENCE_SHIFT) | unit
+
+
+@njit(inline="always")
+def kind_of(key):
+    """The kind of event that a key names."""
+    return key >> KIND_SHIFT
+
+
+@njit(inline="always")
+def sequence_of(key):
+    """The sequence (the patient) that a key names."""
+    return (key >> SEQUENCE_SHIFT) & (MOST_SEQUENCE - 1)
+
+
+@njit(inline="always")
+def unit_of(key):
+    """The unit that a key names."""
+    return key & (MOST_UNITS - 1)
+
+
+@njit(inline="always")
+def _before(time, key, other_time, other_key):
+    return time < other_time or (time == other_time and key < other_key)
+
+
+@njit(inline="always")
+def push_sorted(times, keys, count, time, key):
+    """Adds an event to `count` events held latest first, so that the next one stands at the end."""
+    place = count
+    while place > 0 and _before(times[place - 1], keys[place - 1], time, key):
+        times[place] = times[place - 1]
+        keys[place] = keys[place - 1]
+        place -= 1
+    times[place] = time
+    keys[place] = key
+
+
+@njit
+def push_heap(times, keys, count, time, key):
+    """Adds an event to a binary heap of `count` events whose next one stands first."""
+    place = count
+    while place > 0:
+        parent = (place - 1) >> 1
+        if not _before(time, key, times[parent], keys[parent]):
+            break
+        times[place] = times[parent]
+        keys[place] = keys[parent]
+        place = parent
+    times[place] = time
+    keys[place] = key
+
+
+@njit
+def pop_heap(times, keys, count):
+    """Removes the first of `count` events of a heap."""
+    last = count - 1
+    time, key = times[last], keys[last]
+    place = 0
+    while True:
+        child = 2 * place + 1
+        if child >= last:
+            break
+        if child + 1 < last and _before(times[child + 1], keys[child + 1], times[child], keys[child]):
+            child += 1
+        if not _before(times[child], keys[child], time, key):
+            break
+        times[place] = times[child]
+        keys[place] = keys[child]
+        place = child
+    times[place] = time
+    keys[place] = key

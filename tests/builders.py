@@ -1,0 +1,121 @@
+"""Tiny networks, rules and intakes made by hand, in the form that an engine reads."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from sim.intake import Intake
+from sim.lowering import HOME_BED, NOBODY, Network, Rules
+
+Each = float | Sequence[float] | None  # one value for every unit, or one a unit
+
+
+@dataclass(frozen=True)
+class Patient:
+    """One patient of a hand-made intake: times in days, `home` a unit's place, `gate` in (0, 1)."""
+
+    arrival: float
+    home: int = 0
+    stay: float = 1.0
+    delay: float = 0.0
+    gate: float = 0.5
+
+
+@dataclass(frozen=True)
+class Case:
+    """Everything that one run depends on."""
+
+    network: Network
+    rules: Rules
+    intake: Intake
+
+
+def network(
+    beds: Sequence[int],
+    *,
+    edges: Sequence[float] = (0.0, 10.0),
+    extra_days: float = 0.0,
+    stay_class: Sequence[int] | None = None,
+) -> Network:
+    """Units named A, B, C, ... with so many staffed beds, measured between the first and the last edge (days)."""
+    return Network(
+        unit_names=tuple("ABCDEFGHIJ"[: len(beds)]),
+        beds=np.array(beds, np.int64),
+        stay_class=np.array(stay_class or [0] * len(beds), np.int64),
+        extra_days=float(extra_days),
+        edges=np.array(edges, float),
+    )
+
+
+def rules(
+    of: Network,
+    *,
+    own: Each = None,
+    incoming: Each = None,
+    gap: Each = 1,
+    admit_while_closed: Each = 0.0,
+    review_hours: Each = 0.0,
+    asks: Sequence[Sequence[int]] | None = None,
+    last_resort: int = HOME_BED,
+) -> Rules:
+    """Rules in words made numbers, with the model's defaults.
+
+    own, incoming: thresholds (default: the beds; the own one). asks: each home's referral order, as places
+    (default: the other units, cyclic from the next).
+    """
+    n = len(of.beds)
+    own_closes = _whole(of.beds if own is None else own, n)
+    incoming_closes = np.minimum(_whole(own_closes if incoming is None else incoming, n), own_closes)
+    gaps = _whole(gap, n)
+    hours = np.broadcast_to(np.asarray(review_hours, float), n)
+    reviews = sorted(review for unit in range(n) for review in _reviews(unit, float(hours[unit]), float(of.edges[-1])))
+    return Rules(
+        own_closes=own_closes,
+        own_reopens=np.maximum(own_closes - gaps, 0),
+        incoming_closes=incoming_closes,
+        incoming_reopens=np.maximum(incoming_closes - gaps, 0),
+        admit_while_closed=np.array(np.broadcast_to(np.asarray(admit_while_closed, float), n)),
+        reviewed=hours > 0,
+        review_times=np.array([time for time, _ in reviews], float),
+        review_units=np.array([unit for _, unit in reviews], np.int64),
+        referral_order=_places([[(u + i) % n for i in range(1, n)] for u in range(n)] if asks is None else asks),
+        last_resort=last_resort,
+    )
+
+
+def intake(*patients: Patient, stay_factors: Sequence[float] = (1.0,)) -> Intake:
+    """The patients in order of arrival, those of one instant in the order given; one stay class a factor."""
+    ordered = sorted(patients, key=lambda patient: patient.arrival)
+    stay = np.array([patient.stay for patient in ordered], float)
+    return Intake(
+        arrival=np.array([patient.arrival for patient in ordered], float),
+        group=np.array([patient.home for patient in ordered], np.int64),
+        home=np.array([patient.home for patient in ordered], np.int64),
+        drawn_stay=stay,
+        stay=np.stack([stay * factor for factor in stay_factors]),
+        delay=np.array([patient.delay for patient in ordered], float),
+        gate=np.array([patient.gate for patient in ordered], float),
+    )
+
+
+def _whole(values: Each, n: int) -> np.ndarray:
+    return np.array(np.broadcast_to(np.asarray(values, np.int64), n))
+
+
+def _reviews(unit: int, hours: float, end: float) -> list[tuple[float, int]]:
+    """Review k at (k * hours) / 24, before the end."""
+    found, k = [], 1
+    while hours > 0 and (k * hours) / 24 < end:
+        found.append(((k * hours) / 24, unit))
+        k += 1
+    return found
+
+
+def _places(orders: Sequence[Sequence[int]]) -> np.ndarray:
+    places = np.full((len(orders), max(len(orders) - 1, 1)), NOBODY, np.int64)
+    for unit, order in enumerate(orders):
+        places[unit, : len(order)] = order
+    return places
