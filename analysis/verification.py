@@ -30,7 +30,7 @@ LEAST_VISITS = 20
 class Comparison:
     """One measure: its exact value, its simulated mean with simultaneous limits, and z = (mean - exact) / se.
 
-    z is None, with a reason, where the measure was not tested or has no spread.
+    z is None, with a reason, where the measure was not tested, has no spread, or cannot be other than 0.
     """
 
     where: str
@@ -188,6 +188,8 @@ def _judge(pair: _Pair, confidence: float, comparisons: int, critical: float) ->
         return Comparison(*facts, z=None, agrees=True, reason=estimate.reason)
     off, half = estimate.mean - pair.exact, (estimate.high - estimate.low) / 2
     slack = 1e-9 * max(1.0, abs(pair.exact))  # rounding of time integrals
+    if pair.exact == 0 and off > slack:  # however rare: chance does not explain the impossible
+        return Comparison(*facts, z=None, agrees=False, reason="seen, although the chain says never")
     if half <= slack:
         return Comparison(*facts, z=0.0 if abs(off) <= slack else None, agrees=abs(off) <= slack,
                           reason=None if abs(off) <= slack else "no spread, and not the exact value")  # fmt: skip

@@ -357,12 +357,10 @@ class Mixture(_Mixed):
     def _smooth(self) -> tuple[float, _SmoothMixture] | None:
         """Total weight of the smooth parts, and their own mixture."""
         parts = self._leaves(Smooth)
+        if not parts:
+            return None
         share = math.fsum(weight for weight, _ in parts)
-        return (
-            (share, _SmoothMixture(tuple((weight / share, part) for weight, part in parts)))
-            if parts
-            else None
-        )
+        return share, _SmoothMixture(tuple((weight / share, part) for weight, part in parts))
 
     @cached_property
     def _steps(self) -> tuple[Array, Array, Array, Array, Array]:

@@ -8,6 +8,11 @@ from pathlib import Path
 
 from sim.lowering import NOBODY
 
+KINDS = (
+    "arrival", "admission", "transfer", "turned away", "discharge", "review", "own gate opens", "own gate closes",
+    "incoming gate opens", "incoming gate closes",
+)  # fmt: skip
+
 
 @dataclass
 class Trace:

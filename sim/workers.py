@@ -49,40 +49,54 @@ class ThisProcess:
 class LocalProcesses:
     """joblib's loky processes on this machine.
 
-    A worker that dies takes down the tasks then under way; they are run again, each once more, and one that
-    is under way a second time when a worker dies is reported as failed.
+    A worker that dies takes down the tasks then under way. Each of those is run again alone, and reported as
+    failed if its worker dies once more; all other tasks go on.
     """
 
     def __init__(self, count: int) -> None:
-        self.count = count
+        self.count = max(2, count)  # with one, joblib would run the tasks in this process
 
     def run(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
         """See Workers."""
         from joblib.externals.loky.process_executor import TerminatedWorkerError
 
         left = dict(tasks)
-        for attempt in (1, 2):
+        while left:
             try:
                 for reply in self._replies(function, left):
                     del left[reply.key]
                     yield reply
-                return
-            except TerminatedWorkerError as error:
+            except TerminatedWorkerError:
                 stop_processes()
-                if attempt == 2:
-                    for key in left:
-                        yield Reply(key, failure=f"a worker process died twice (out of memory?): {error}")
+                # joblib hands tasks out in order, two a worker: whatever was under way is among these.
+                for key in list(left)[: 2 * self.count]:
+                    yield self._alone(function, key, left.pop(key))
+
+    def _alone(self, function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
+        from joblib.externals.loky.process_executor import TerminatedWorkerError
+
+        try:
+            [reply] = self._replies(function, {key: arguments})
+            return reply
+        except TerminatedWorkerError as error:
+            stop_processes()
+            return Reply(key, failure=f"{error}\nthe worker process died, with no other task beside this one (out of memory?)")
 
     def _replies(self, function: Callable[..., Any], tasks: dict[Hashable, tuple]) -> Iterator[Reply]:
         from joblib import Parallel, delayed
 
         pool = Parallel(n_jobs=self.count, backend="loky", batch_size=1, return_as="generator_unordered")
+        replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in list(tasks.items()))
         finished = False
         try:
-            yield from pool(delayed(_in_worker)(function, key, arguments) for key, arguments in list(tasks.items()))
+            for reply in replies:
+                yield reply
             finished = True
         finally:
             if not finished:  # interrupted, or nobody wants the rest
+                with warnings.catch_warnings():
+                    warnings.simplefilter("ignore")  # joblib's, that tasks were cancelled
+                    replies.close()
                 stop_processes()
 
 

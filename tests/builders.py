@@ -1,4 +1,4 @@
-"""Tiny networks, rules and intakes made by hand, in the form that an engine reads."""
+"""Tiny networks, rules and intakes made by hand, in the form that an engine reads, and how to play them."""
 
 from __future__ import annotations
 
@@ -7,9 +7,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from sim import reference
 from sim.intake import Intake
 from sim.lowering import HOME_BED, NOBODY, Network, Rules
+from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
+from sim.trace import Trace
 
+A, B, C = range(3)  # units
+FOREVER = 1000.0  # a stay that outlasts every run
+Event = tuple[float, str, int, int]  # time in days, what happened, patient or NOBODY, unit's place
 Each = float | Sequence[float] | None  # one value for every unit, or one a unit
 
 
@@ -40,7 +46,7 @@ def network(
     extra_days: float = 0.0,
     stay_class: Sequence[int] | None = None,
 ) -> Network:
-    """Units named A, B, C, ... with so many staffed beds, measured between the first and the last edge (days)."""
+    """Units A, B, C, ... with so many staffed beds, measured from the first edge to the last (days)."""
     return Network(
         unit_names=tuple("ABCDEFGHIJ"[: len(beds)]),
         beds=np.array(beds, np.int64),
@@ -71,7 +77,9 @@ def rules(
     incoming_closes = np.minimum(_whole(own_closes if incoming is None else incoming, n), own_closes)
     gaps = _whole(gap, n)
     hours = np.broadcast_to(np.asarray(review_hours, float), n)
-    reviews = sorted(review for unit in range(n) for review in _reviews(unit, float(hours[unit]), float(of.edges[-1])))
+    reviews = sorted(
+        review for unit in range(n) for review in _reviews(unit, float(hours[unit]), float(of.edges[-1]))
+    )
     return Rules(
         own_closes=own_closes,
         own_reopens=np.maximum(own_closes - gaps, 0),
@@ -81,7 +89,9 @@ def rules(
         reviewed=hours > 0,
         review_times=np.array([time for time, _ in reviews], float),
         review_units=np.array([unit for _, unit in reviews], np.int64),
-        referral_order=_places([[(u + i) % n for i in range(1, n)] for u in range(n)] if asks is None else asks),
+        referral_order=_places(
+            [[(u + i) % n for i in range(1, n)] for u in range(n)] if asks is None else asks
+        ),
         last_resort=last_resort,
     )
 
@@ -99,6 +109,36 @@ def intake(*patients: Patient, stay_factors: Sequence[float] = (1.0,)) -> Intake
         delay=np.array([patient.delay for patient in ordered], float),
         gate=np.array([patient.gate for patient in ordered], float),
     )
+
+
+def play(
+    of: Network, by: Rules, *patients: Patient, stay_factors: Sequence[float] = (1.0,)
+) -> tuple[list[Event], Record]:
+    """The reference engine's event log and its record, which must be sound."""
+    log, record = traced(Case(of, by, intake(*patients, stay_factors=stay_factors)))
+    assert record.faults(of.measured_days) == []
+    return log, record
+
+
+def traced(case: Case) -> tuple[list[Event], Record]:
+    """The reference engine's event log and its record."""
+    trace = Trace()
+    record = reference.run(case.network, case.rules, case.intake, trace=trace)
+    return trace.events, record
+
+
+def gate_days(**of_state: float) -> list[float]:
+    """A record's `gate_days` of one unit; letters spell a state: o own closed, i incoming closed, f full."""
+    bits = {"o": OWN_CLOSED, "i": INCOMING_CLOSED, "f": FULL}
+    row = [0.0] * GATE_STATES
+    for letters, days in of_state.items():
+        row[0 if letters == "open" else sum(bits[letter] for letter in letters)] = days
+    return row
+
+
+def both_gates(time: float, move: str, unit: int) -> list[Event]:
+    """The two lines of a unit whose gates move together, own gate first."""
+    return [(time, f"own gate {move}", NOBODY, unit), (time, f"incoming gate {move}", NOBODY, unit)]
 
 
 def _whole(values: Each, n: int) -> np.ndarray:

@@ -6,20 +6,20 @@ Both are slow and plain on purpose, and share no code with an engine.
 from __future__ import annotations
 
 from collections import deque
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from itertools import pairwise
 
 import numpy as np
 
 from sim.lowering import ANY_BED, NOBODY, TURNED_AWAY
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
-from tests.builders import Case
+from tests.builders import Case, Event
 
-Event = tuple[float, str, int, int]  # time, kind, patient or -1, unit's place
 DISCHARGE, TRANSFER_ARRIVAL, REVIEW, NEW_ARRIVAL = 10, 20, 40, 50
+IN_THE_LOG = {DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", REVIEW: "review", NEW_ARRIVAL: "arrival"}
 
 
-class Wrong(AssertionError):
+class RuleBroken(AssertionError):  # noqa: N818 - what it says is the finding, not a mishap
     """The log breaks the model; the message begins with the name of the broken rule."""
 
 
@@ -55,35 +55,32 @@ class Judge:
             )
         ]
         # Whatever is still to come, as (time, kind, sequence, unit): the next event is the least of it.
-        self.due = [
-            (time, NEW_ARRIVAL, patient, home)
-            for patient, (time, home) in enumerate(zip(case.intake.arrival.tolist(), case.intake.home, strict=True))
-        ] + [
-            (time, REVIEW, unit, unit)
-            for time, unit in zip(case.rules.review_times.tolist(), case.rules.review_units, strict=True)
-        ]
+        arrivals = zip(case.intake.arrival.tolist(), case.intake.home.tolist(), strict=True)
+        reviews = zip(case.rules.review_times.tolist(), case.rules.review_units.tolist(), strict=True)
+        self.due = [(time, NEW_ARRIVAL, patient, home) for patient, (time, home) in enumerate(arrivals)]
+        self.due += [(time, REVIEW, unit, unit) for time, unit in reviews]
         self.implied: deque[tuple[str, Event]] = deque()  # what must follow at once, and by which rule
 
     def follow(self, log: list[Event]) -> None:
-        """Raises Wrong at the first line that breaks a rule, or where the log ends too early."""
+        """Raises RuleBroken at the first line that breaks a rule, or where the log ends too early."""
         for line in log:
             if self.implied:
                 rule, expected = self.implied.popleft()
                 if line != expected:
-                    raise Wrong(f"{rule}: {expected} must come next, the log has {line}")
+                    raise RuleBroken(f"{rule}: {expected} must come next, the log has {line}")
                 if line[1] == "admission":
                     self.occupy(*line)
             else:
                 self.happens(line)
         left = [event for event in self.due if event[0] < self.end]
         if self.implied or left:
-            raise Wrong(f"next event: the log ends before {[*self.implied, *sorted(left)][0]}")
+            raise RuleBroken(f"next event: the log ends before {[*self.implied, *sorted(left)][0]}")
 
     def happens(self, line: Event) -> None:
         """The next event of the calendar."""
         coming = min(self.due, default=None)
         if coming is None or coming[0] >= self.end or line != self.as_logged(coming):
-            raise Wrong(f"next event: {coming} is due, the log has {line}")
+            raise RuleBroken(f"next event: {coming} is due, the log has {line}")
         self.due.remove(coming)
         time, kind, sequence, unit = coming
         if kind == DISCHARGE:
@@ -100,8 +97,7 @@ class Judge:
     def as_logged(self, event: tuple[float, int, int, int]) -> Event:
         """The line of the log that tells of a due event."""
         time, kind, sequence, unit = event
-        words = {DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", REVIEW: "review", NEW_ARRIVAL: "arrival"}
-        return time, words[kind], NOBODY if kind == REVIEW else sequence, int(unit)
+        return time, IN_THE_LOG[kind], NOBODY if kind == REVIEW else sequence, int(unit)
 
     def decision(self, time: float, patient: int, home: int) -> list[tuple[str, Event]]:
         """What must become of an arriving patient, by the four steps of the model."""
@@ -120,7 +116,10 @@ class Judge:
 
     def place_for(self, patient: int, home: int) -> int | None:
         """The unit that must take the patient; None: turned away."""
-        own, asked = self.wards[home], [int(unit) for unit in self.rules.referral_order[home] if unit != NOBODY]
+        own, asked = (
+            self.wards[home],
+            [unit for unit in self.rules.referral_order[home].tolist() if unit != NOBODY],
+        )
         soft = self.case.intake.gate[patient] < self.rules.admit_while_closed[home]
         willing = [unit for unit in asked if self.wards[unit].incoming_open and self.wards[unit].free]
         any_free = [unit for unit in asked if self.wards[unit].free]
@@ -138,7 +137,9 @@ class Judge:
         """A bed is taken; the discharge is due after the stay in that unit."""
         ward, intake = self.wards[unit], self.case.intake
         if ward.load >= ward.beds:
-            raise Wrong(f"free bed: patient {patient} was put into unit {unit}, which was full at {time}")
+            raise RuleBroken(
+                f"free bed: patient {patient} was put into unit {unit}, which was full at {time}"
+            )
         stay = float(intake.stay[self.case.network.stay_class[unit], patient])
         if unit != intake.home[patient]:
             stay += self.case.network.extra_days
@@ -158,7 +159,9 @@ class Judge:
             ("incoming", rules.incoming_closes[unit], rules.incoming_reopens[unit]),
         ):
             is_open = getattr(ward, f"{gate}_open")
-            if (is_open and ward.load >= closes) or (not is_open and ward.load <= reopens and ward.load < closes):
+            must_close = is_open and ward.load >= closes
+            must_open = not is_open and ward.load <= reopens and ward.load < closes
+            if must_close or must_open:
                 setattr(ward, f"{gate}_open", not is_open)
                 word = "closes" if is_open else "opens"
                 moves.append(("gates", (time, f"{gate} gate {word}", NOBODY, int(unit))))
@@ -224,3 +227,13 @@ class Account:
         elif kind != "review":
             gate, _, move = kind.split()
             self.closed[gate][unit] = move == "closes"
+
+
+def differences(record: Record, book: Record) -> list[str]:
+    """Where a record departs from the accountant's: times by more than 1e-9 days, counts at all."""
+    return [
+        f"{field.name}: measured {measured.tolist()}, booked {booked.tolist()}"
+        for field in fields(Record)
+        for measured, booked in [(getattr(record, field.name), getattr(book, field.name))]
+        if not np.allclose(measured, booked, rtol=0, atol=1e-9 if measured.dtype.kind == "f" else 0)
+    ]

@@ -94,15 +94,15 @@ class Flows:
 
     def treated(self, unit: str) -> float:
         """Patients admitted to `unit` a day, of any home."""
-        return sum(number for (_, place), number in self.admitted.items() if place == unit)
+        return sum((number for (_, place), number in self.admitted.items() if place == unit), 0.0)
 
     def moved_from(self, home: str) -> float:
         """Patients of `home` who are treated elsewhere, a day."""
-        return sum(number for (origin, unit), number in self.admitted.items() if origin == home != unit)
+        return sum((number for (who, unit), number in self.admitted.items() if who == home != unit), 0.0)
 
     def moved_to(self, unit: str) -> float:
         """Patients of other homes admitted to `unit`, a day."""
-        return sum(number for (home, place), number in self.admitted.items() if place == unit != home)
+        return sum((number for (home, place), number in self.admitted.items() if place == unit != home), 0.0)
 
 
 def measured(scenario: Scenario, policy: Policy, chain: NetworkChain, probability: Numbers) -> ExactResult:
@@ -156,5 +156,5 @@ def _unit_measures(view: UnitView, flows: Flows, probability: Numbers) -> UnitMe
     )
 
 
-def _total(probability: NDArray[np.float64], where: NDArray[np.bool_]) -> float:
+def _total(probability: Numbers, where: NDArray[np.bool_]) -> float:
     return float(probability[where].sum())

@@ -101,7 +101,7 @@ class UnitStates:
         return len(self.load)
 
 
-@lru_cache(maxsize=1024)
+@lru_cache(maxsize=64)  # a game meets the same few spaces in every cell
 def unit_states(space: UnitSpace) -> UnitStates:
     """The states of a unit, state 0 the empty one; the arrays are shared and must not be written to."""
     states = [(counts, gates) for load, gates in space.levels() for counts in _spread(load, space.rates)]

@@ -7,15 +7,18 @@ every fault of a file and none is a mere consequence of another.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from functools import cached_property
 from typing import Any
 
-from sim.scenario.faults import Collector, nearest, shown
+from sim.scenario.faults import Collector
 from sim.scenario.game import TargetUtilisation
 from sim.scenario.positions import Path
 from sim.scenario.run import Run
 from sim.scenario.tables import MOST_PATIENTS, MOST_REVIEWS
+from sim.scenario.wording import nearest, shown
+
+_EVERYONE = ()  # the referral order of a unit that gives none
 
 
 class Draft:
@@ -33,8 +36,8 @@ class Draft:
         return default if value is None else value
 
     def below(self, *path: str | int) -> list[Path]:
-        """The paths of a table's or an array's entries, at fault or not; none where it is neither."""
-        held = self._collector.value(path)
+        """The paths of a table's or an array's entries, at fault or not; none where it is itself at fault."""
+        held = self._collector.value(path) if self._collector.standing(path) else None
         keys = held if isinstance(held, Mapping) else range(len(held)) if isinstance(held, list) else ()
         return [(*path, key) for key in keys]
 
@@ -46,10 +49,14 @@ class Draft:
         """A unit's name as the file has it, at fault or not: who refers to it means this unit."""
         return self._collector.value(("units", row, "name"))
 
+    def whole(self, table: str) -> bool:
+        """Whether no rows of an array of tables can have gone astray under a misspelt header."""
+        return self.rows(table) != [] and not self._collector.misspelt(table)
+
     @cached_property
     def every_unit_named(self) -> bool:
         """Whether every unit bears a name, so that a name which none of them bears can only be wrong."""
-        return bool(self.rows("units")) and all(isinstance(self.name(row), str) for row in self.rows("units"))
+        return self.whole("units") and all(isinstance(self.name(row), str) for row in self.rows("units"))
 
     @cached_property
     def beds(self) -> dict[str, int | None]:
@@ -57,19 +64,34 @@ class Draft:
         named = [row for row in self.rows("units") if isinstance(self.name(row), str)]
         counts = Counter(self.name(row) for row in named)
         return {
-            self.name(row): self.read("units", row, "beds") if counts[self.name(row)] == 1 else None for row in named
+            self.name(row): self.read("units", row, "beds") if counts[self.name(row)] == 1 else None
+            for row in named
         }
 
 
 def cross_check(collector: Collector) -> None:
     """Adds every broken rule between keys to the collector."""
     draft = Draft(collector)
-    for check in (_names, _thresholds, _referrals, _homes, _isolated_units, _strategies, _policies, _periods, _sizes):
+    for check in (
+        _names,
+        _thresholds,
+        _referrals,
+        _homes,
+        _isolated_units,
+        _strategies,
+        _policies,
+        _periods,
+        _sizes,
+    ):
         check(draft)
 
 
 def _names(draft: Draft) -> None:
-    for table, key, noun in (("units", "name", "unit"), ("patients", "group", "group"), ("policies", "name", "policy")):
+    for table, key, noun in (
+        ("units", "name", "unit"),
+        ("patients", "group", "group"),
+        ("policies", "name", "policy"),
+    ):
         seen: set[str] = set()
         for row in draft.rows(table):
             name = draft.read(table, row, key)
@@ -127,7 +149,7 @@ def _order(draft: Draft, path: Path, home: Any) -> None:
 
 
 def _known_unit(draft: Draft, path: Path, name: str) -> None:
-    """Where a unit has lost its name, only what is plainly a slip for a known name is held against the file."""
+    """A unit may have lost its name: then only what is plainly a slip for a known name is at fault."""
     if name in draft.beds:
         return
     remedy = nearest(name, draft.beds)
@@ -144,20 +166,32 @@ def _homes(draft: Draft) -> None:
 
 def _isolated_units(draft: Draft) -> None:
     """A unit that no patient can reach is a slip; one whose thresholds admit nobody is a choice."""
-    homes = [draft.read("patients", row, "home") for row in draft.rows("patients")]
-    orders = [
-        draft.read("units", row, "referral_order", default=draft.beds.keys() - {draft.name(row)})
-        for row in draft.rows("units")
-    ]
-    if not homes or None in homes or None in orders:
-        return  # whom the faulted ones would have named is not known
-    of_policies = [path for row in draft.rows("policies") for path in draft.below("policies", row, "referral_order")]
-    reached = {*homes}.union(*orders, *(draft.read(*path) or () for path in of_policies))
+    reached = _reached(draft)
     for row in draft.rows("units"):
         name = draft.read("units", row, "name")
-        if name is not None and name not in reached:
+        if None not in (reached, name) and name not in reached:
             rule = "must be some group's home or stand in some referral order"
-            draft.fault(("units", row), rule, "got neither", "add a group with this home, or refer patients to it")
+            draft.fault(
+                ("units", row), rule, "got neither", "add a group with this home, or refer patients to it"
+            )
+
+
+def _reached(draft: Draft) -> set[str] | None:
+    """The units that patients are brought or referred to; None where a fault leaves that open."""
+    homes = [draft.read("patients", row, "home") for row in draft.rows("patients")]
+    orders = [draft.read("units", row, "referral_order", default=_EVERYONE) for row in draft.rows("units")]
+    if not (draft.whole("patients") and draft.whole("units")) or None in homes or None in orders:
+        return None
+    of_policies = [
+        path for row in draft.rows("policies") for path in draft.below("policies", row, "referral_order")
+    ]
+    named = {*homes}.union(*orders, *(draft.read(*path) or () for path in of_policies))
+    asking = [
+        draft.name(row) for row, order in zip(draft.rows("units"), orders, strict=True) if order is _EVERYONE
+    ]
+    if asking:  # one alone asks everyone but itself
+        named |= draft.beds.keys() - (set(asking) if len(asking) == 1 else set())
+    return named
 
 
 def _strategies(draft: Draft) -> None:
@@ -168,9 +202,17 @@ def _strategies(draft: Draft) -> None:
 
 
 def _policies(draft: Draft) -> None:
-    per_unit = ("closure_threshold", "incoming_threshold", "reopening_gap", "admit_while_closed", "review_hours")
+    per_unit = (
+        "closure_threshold",
+        "incoming_threshold",
+        "reopening_gap",
+        "admit_while_closed",
+        "review_hours",
+    )
     for row in draft.rows("policies"):
-        for path in (path for key in (*per_unit, "referral_order") for path in draft.below("policies", row, key)):
+        for path in (
+            path for key in (*per_unit, "referral_order") for path in draft.below("policies", row, key)
+        ):
             _known_unit(draft, path, path[-1])
             if path[-2].endswith("threshold"):
                 _within_beds(draft, path, draft.beds.get(path[-1]))
@@ -179,27 +221,35 @@ def _policies(draft: Draft) -> None:
 
 
 def _periods(draft: Draft) -> None:
-    default = TargetUtilisation.model_fields["judged_over_days"].default
-    judged = draft.read("game", "goal", "judged_over_days", default=default)
+    path = ("game", "goal", "judged_over_days")
+    judged = draft.read(*path, default=TargetUtilisation.model_fields["judged_over_days"].default)
     measured = draft.read("run", "measured_days", default=Run.model_fields["measured_days"].default)
     squared = draft.read("game", "goal", "shape") == "squared"
     if squared and None not in (judged, measured) and judged > measured:
-        path = ("game", "goal", "judged_over_days")
-        remedy = f"lower it to {measured:g} or less, or raise `run.measured_days`"
-        draft.fault(path, "must not be longer than the measured days", f"got {judged:g} over {measured:g}", remedy)
+        by_default = "" if draft.read(*path) else " (the default)"
+        value = f"got {judged:,.12g}{by_default} over {measured:,.12g}"
+        remedy = f"give {measured:,.12g} or less, or raise `run.measured_days`"
+        draft.fault(path, "must not be longer than the measured days", value, remedy)
 
 
 def _sizes(draft: Draft) -> None:
-    days = [draft.read("run", key, default=Run.model_fields[key].default) for key in ("warm_up_days", "measured_days")]
+    days = [
+        draft.read("run", key, default=Run.model_fields[key].default)
+        for key in ("warm_up_days", "measured_days")
+    ]
     if None in days:
         return
     rates = [draft.read("patients", row, "per_day") for row in draft.rows("patients")]
     patients = sum(rate for rate in rates if rate is not None) * sum(days)
     if patients > MOST_PATIENTS:
         rule = f"a replication may hold at most {MOST_PATIENTS:,} patients"
-        draft.fault(("run", "measured_days"), rule, f"got about {patients:,.0f}", "shorten the run or lower the rates")
+        draft.fault(
+            ("run", "measured_days"), rule, f"got about {patients:,.0f}", "shorten the run or lower the rates"
+        )
     reviewed = [("units", row, "review_hours") for row in draft.rows("units")]
-    reviewed += [path for row in draft.rows("policies") for path in draft.below("policies", row, "review_hours")]
+    reviewed += [
+        path for row in draft.rows("policies") for path in draft.below("policies", row, "review_hours")
+    ]
     for path in reviewed:
         hours = draft.read(*path)
         if hours and sum(days) * 24 / hours > MOST_REVIEWS:

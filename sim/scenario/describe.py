@@ -1,4 +1,4 @@
-"""The scenario read back in numbers, before anything runs: offered load, stays, rules, size of the game, advice."""
+"""The scenario read back in numbers before anything runs: offered load, stays, rules, game, advice."""
 
 from __future__ import annotations
 
@@ -31,10 +31,10 @@ def describe(scenario: Scenario, policy: Policy) -> dict[str, Any]:
 def _unit(scenario: Scenario, policy: Policy, name: str) -> dict[str, Any]:
     unit, rules = scenario.unit(name), policy.units[name]
     own = [group for group in scenario.patients if group.home == name]
-    load = sum(group.per_day * group.mean_stay_days * unit.stay_factor for group in own)
+    load = sum((group.per_day * group.mean_stay_days * unit.stay_factor for group in own), 0.0)
     return {
         "beds": unit.beds,
-        "arrivals_per_day": sum(group.per_day for group in own),
+        "arrivals_per_day": sum((group.per_day for group in own), 0.0),
         "offered_load_beds": load,
         "offered_load_per_bed": load / unit.beds,
         "closure_threshold": rules.closure_threshold,
@@ -54,13 +54,17 @@ def _group(group: Any) -> dict[str, Any]:
         "home": group.home,
         "kind": group.kind,
         "per_day": group.per_day,
-        "varies_by_hour": group.hour_of_day is not None,
-        "varies_by_weekday": group.day_of_week is not None,
+        "varies_by_hour": _varies(group.hour_of_day),
+        "varies_by_weekday": _varies(group.day_of_week),
         "family": group.stay.family,
         "mean_days": stay.mean(),
         "cv": stay.cv(),
         "median_days": stay.median(),
     }
+
+
+def _varies(weights: tuple[float, ...] | None) -> bool:
+    return len(set(weights or ())) > 1
 
 
 def _diversion(scenario: Scenario, policy: Policy) -> dict[str, Any]:
@@ -69,7 +73,8 @@ def _diversion(scenario: Scenario, policy: Policy) -> dict[str, Any]:
     return {
         "when_all_closed": policy.when_all_closed,
         "delay": None if known is None else {
-            "family": delay.family, "mean_hours": known.mean(), "cv": known.cv(), "median_hours": known.median()
+            "family": delay.family, "mean_hours": known.mean(), "cv": known.cv(),
+            "median_hours": known.median(),
         },
         "extra_days": scenario.diversion.extra_days,
     }  # fmt: skip
@@ -104,17 +109,19 @@ def _warm_up(scenario: Scenario) -> list[str]:
     if given >= least:
         return []
     return [
-        f"run.warm_up_days is {given:g}, less than {WARM_UP_STAYS} mean stays ({least:.1f} days): measures will lean "
-        f"towards the empty network that a run starts from; raise it to at least {7 * math.ceil(least / 7)}"
+        f"run.warm_up_days is {given:g}, less than {WARM_UP_STAYS} mean stays ({least:.1f} days): measures will "
+        "lean towards the empty network that a run starts from; raise it to at least "
+        f"{7 * math.ceil(least / 7)}"
     ]
 
 
 def _whole_weeks(scenario: Scenario) -> list[str]:
-    if all(group.day_of_week is None for group in scenario.patients):
+    if not any(_varies(group.day_of_week) for group in scenario.patients):
         return []
     lengths = {key: getattr(scenario.run, key) for key in ("warm_up_days", "measured_days")}
     return [
-        f"run.{key} is {days:g}, no multiple of 7, and demand varies by weekday: some weekdays weigh more than others"
+        f"run.{key} is {days:g}, no multiple of 7, and demand varies by weekday: some weekdays weigh more than "
+        "others"
         for key, days in lengths.items()
         if days % 7
     ]
@@ -128,4 +135,6 @@ def _targets(scenario: Scenario) -> list[str]:
 
 
 def _one_replication(scenario: Scenario) -> list[str]:
-    return ["run.replications is 1: one replication gives no interval"] if scenario.run.replications == 1 else []
+    return (
+        ["run.replications is 1: one replication gives no interval"] if scenario.run.replications == 1 else []
+    )

@@ -17,8 +17,8 @@ from typing import Annotated, Any, Literal
 from pydantic import Discriminator, Field, PrivateAttr, Tag, ValidationInfo, create_model, model_validator
 
 from sim import stays
-from sim.scenario.faults import nearest
 from sim.scenario.tables import NotNegative, Positive, Row, Share, Table, breach
+from sim.scenario.wording import nearest
 
 MOST_STAGES = 200
 MOST_BYTES = 200_000_000
@@ -145,7 +145,7 @@ class Empirical(Duration):
 
 
 def read_column(path: Path, column: str) -> tuple[tuple[float, ...], str]:
-    """The numbers of one CSV column in file order, and the file's SHA-256; a breach where one is no duration."""
+    """The numbers of one CSV column in file order, and the file's SHA-256; a breach where one is no stay."""
     content = _content(path)
     try:
         text = unicodedata.normalize("NFC", content.decode("utf-8-sig"))
@@ -153,7 +153,10 @@ def read_column(path: Path, column: str) -> tuple[tuple[float, ...], str]:
         rows = [(reader.line_num, row) for row in reader]
     except (UnicodeDecodeError, csv.Error) as error:
         raise breach(
-            "must be a CSV file in UTF-8", f"{path.name!r} ({error})", "save it again as CSV in UTF-8", key=("file",)
+            "must be a CSV file in UTF-8",
+            f"{path.name!r} ({error})",
+            "save it again as CSV in UTF-8",
+            key=("file",),
         ) from None
     return _numbers(rows, path.name, column), hashlib.sha256(content).hexdigest()
 
@@ -178,7 +181,7 @@ def _content(path: Path) -> bytes:
 
 
 def _numbers(rows: list[tuple[int, list[str]]], file: str, column: str) -> tuple[float, ...]:
-    """The column below a header of the first line. Blank lines may end the file; elsewhere they are no stay."""
+    """The column below the header in line 1. Blank lines may end the file; elsewhere they are no stay."""
     header = [name.strip() for name in rows[0][1]] if rows else []
     if header.count(column) != 1:
         held = "twice" if column in header else nearest(column, filter(None, header))
@@ -225,13 +228,17 @@ class Mixture(Duration):
     @model_validator(mode="after")
     def _some_weight(self):
         if not any(part.weight > 0 for part in self.parts):
-            raise breach("must give at least one part a weight above 0", "only 0", "raise one", key=("parts",))
+            raise breach(
+                "must give at least one part a weight above 0", "only 0", "raise one", key=("parts",)
+            )
         return self
 
 
 def _variant(family: type[Duration], name: str, unit: str, **keys: Any) -> type[Duration]:
     """The family with its numbers in `unit`, and perhaps more keys."""
-    in_unit = type(name, (family,), {"model_config": {"alias_generator": _key_in(unit)}, "__module__": __name__})
+    in_unit = type(
+        name, (family,), {"model_config": {"alias_generator": _key_in(unit)}, "__module__": __name__}
+    )
     made = create_model(name, __base__=in_unit, __module__=__name__, **keys) if keys else in_unit
     return globals().setdefault(name, made)  # found again by name when a scenario goes to a worker process
 
@@ -247,7 +254,7 @@ def _one_of(models: dict[str, type[Duration]]) -> Any:
 
 def _duration(unit: str) -> Any:
     """The type of a duration whose keys name `unit`."""
-    weight = (Annotated[NotNegative, Field(examples=["weight = 0.3"])], ...)
+    weight = (Annotated[NotNegative, Field(le=1e6, examples=["weight = 0.3"])], ...)
     models, parts = {}, {}
     for family in FAMILIES:
         word = family.__name__.lower()
@@ -269,5 +276,7 @@ Delay = _duration("hours")
 def exponential_stay(mean_days: float) -> Duration:
     """An exponential stay of that mean; where the mean is 0 a constant one, which is the same thing."""
     if mean_days > 0:
-        return Exponential(family="exponential", mean_days=mean_days)
+        return Exponential.model_construct(
+            family="exponential", mean=mean_days
+        )  # whatever a coxian adds up to
     return Constant(family="constant", mean_days=0.0)

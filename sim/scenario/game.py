@@ -35,7 +35,9 @@ class Loss(Table):
     transfer_weight: Annotated[NotNegative, Field(le=1_000, examples=["transfer_weight = 0.3"])] = 0.0
 
 
-Welfare = Annotated[Annotated[Throughput, Tag("throughput")] | Annotated[Loss, Tag("loss")], Discriminator("kind")]
+Welfare = Annotated[
+    Annotated[Throughput, Tag("throughput")] | Annotated[Loss, Tag("loss")], Discriminator("kind")
+]
 
 
 _Several = Annotated[tuple[Threshold, ...], Row, Field(min_length=1)]
@@ -52,16 +54,27 @@ class Thresholds(Table):
     def _one_way_of_saying(self):
         ends = self.from_ is not None, self.to is not None
         if (self.values is not None) == any(ends) or any(ends) != all(ends):
-            raise breach("needs either both `from` and `to`, or `values`", self._said(), "give one of the two")
+            raise breach(
+                "needs either both `from` and `to`, or `values`", self._said(), "give one of the two"
+            )
         if all(ends) and self.from_ > self.to:
-            raise breach("must not be above `to`", f"{self.from_} above {self.to}", "swap or correct them", key=("from",))
+            raise breach(
+                "must not be above `to`",
+                f"{self.from_} above {self.to}",
+                "swap or correct them",
+                key=("from",),
+            )
         for place, value in enumerate(self.values or ()):
             if value in self.values[:place]:
-                raise breach("must not repeat a threshold", f"{value} again", "remove it", key=("values", place))
+                raise breach(
+                    "must not repeat a threshold", f"{value} again", "remove it", key=("values", place)
+                )
         return self
 
     def _said(self) -> str:
-        given = ((name, value) for name, value in (("from", self.from_), ("to", self.to), ("values", self.values)))
+        given = (
+            (name, value) for name, value in (("from", self.from_), ("to", self.to), ("values", self.values))
+        )
         return " and ".join(f"`{name}`" for name, value in given if value is not None) or "neither"
 
     def listed(self) -> tuple[int, ...]:
@@ -70,10 +83,14 @@ class Thresholds(Table):
 
 
 class Game(Table):
-    """The game between the units; `strategies` defaults to every closure threshold from 1 to the unit's beds."""
+    """The game between the units; `strategies` defaults to all closure thresholds from 1 to the beds."""
 
-    goal: Annotated[TargetUtilisation, Field(examples=['goal = { kind = "target_utilisation" }'])] = TargetUtilisation()
-    welfare: Annotated[Welfare, Field(examples=['welfare = { kind = "throughput" }'])] = Throughput(kind="throughput")
+    goal: Annotated[TargetUtilisation, Field(examples=['goal = { kind = "target_utilisation" }'])] = (
+        TargetUtilisation()
+    )
+    welfare: Annotated[Welfare, Field(examples=['welfare = { kind = "throughput" }'])] = Throughput(
+        kind="throughput"
+    )
     strategies: Annotated[
         dict[str, Thresholds], Field(examples=["strategies = { Ashgill = { from = 1, to = 12 } }"])
     ] = {}

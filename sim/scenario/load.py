@@ -55,9 +55,13 @@ def _text_of(path: Path) -> str:
         raise _unreadable(path, "must be text in UTF-8", at, "save it again in UTF-8") from None
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
-        raise _unreadable(path, "must be a file that can be read", reason.lower(), "correct the path") from None
+        raise _unreadable(
+            path, "must be a file that can be read", reason.lower(), "correct the path"
+        ) from None
     if len(content) > MOST_BYTES:
-        raise _unreadable(path, f"must be at most {MOST_BYTES:,} bytes", "it is larger", "put data into CSV files")
+        raise _unreadable(
+            path, f"must be at most {MOST_BYTES:,} bytes", "it is larger", "put data into CSV files"
+        )
     return text
 
 
@@ -72,16 +76,18 @@ def _toml(text: str, file: str) -> dict[str, Any]:
     except tomllib.TOMLDecodeError as error:
         line, value, remedy = _syntax(str(error), text)
     except RecursionError:
-        brackets = [line.count("[") + line.count("{") for line in text.split("\n")]
-        line, value, remedy = brackets.index(max(brackets)) + 1, "nested too deeply", "flatten it"
-    except ValueError:  # tomllib lets Python's own limit on long integers through
-        longest = max(re.finditer(r"[0-9_]+", text), key=lambda found: len(found[0]))
+        levels = [line.count("[") + line.count("{") + line.count(".") for line in text.split("\n")]
+        line, value, remedy = levels.index(max(levels)) + 1, "nested too deeply", "flatten it"
+    except ValueError:  # of an integer beyond what Python reads or writes
+        longest = max(re.finditer(r"[0-9A-Fa-f_]+", text), key=lambda found: len(found[0]))
         line = text.count("\n", 0, longest.start()) + 1
         value, remedy = "a number of thousands of digits", "shorten it"
     raise ScenarioError([Fault(line, "file", "must be valid TOML", value, remedy)], file) from None
 
 
 def _composed(value: Any) -> Any:
+    if isinstance(value, int):
+        str(value)  # ValueError beyond 4300 digits, which hexadecimal ones reach unseen
     if isinstance(value, dict):
         return {unicodedata.normalize("NFC", key): _composed(inner) for key, inner in value.items()}
     if isinstance(value, list):
@@ -95,6 +101,11 @@ _SYNTAX = {
         "a second table `[{0}]`", "write `[[{0}]]` in double brackets above each row"),
     r"Cannot declare \((.*?),?\) twice": ("a second table {0}", "join the two"),
     r"Invalid value": ("no value that TOML knows", "correct this line (text needs quotes)"),
+    r"Expected '=' after a key in a key/value pair": (
+        "a key without `=` after it", "write `key = value` (a key with spaces or accents needs quotes)"),
+    r"Illegal character '\\n'": ("a line that ends inside quotes", "close the quotes"),
+    r"Invalid statement|Invalid initial character for a key part": (
+        "no key where one was expected", "correct this line (a key with spaces or accents needs quotes)"),
 }  # fmt: skip
 
 
@@ -111,6 +122,8 @@ def _syntax(said: str, text: str) -> tuple[int, str, str]:
 
 def _data_hashes(scenario: Scenario) -> dict[str, str]:
     """Data file -> SHA-256, for every file that the scenario's stays and delays read."""
-    durations: list[Duration | None] = [group.stay for group in scenario.patients] + [scenario.diversion.delay]
+    durations: list[Duration | None] = [group.stay for group in scenario.patients] + [
+        scenario.diversion.delay
+    ]
     durations += [part for one in durations if isinstance(one, Mixture) for part in one.parts]
     return {one.file: one.sha256 for one in durations if isinstance(one, Empirical)}

@@ -18,6 +18,14 @@ def _not_all_zero(weights: tuple[float, ...]) -> tuple[float, ...]:
     return weights
 
 
+def _ever_arriving(rate: float) -> float:
+    if rate < 1e-9:  # where the times of arrivals would leave double precision
+        raise breach(
+            "must be at least 1e-9, a patient in three million years", rate, "raise it, or remove the group"
+        )
+    return rate
+
+
 Weights = Annotated[tuple[NotNegative, ...], Row, AfterValidator(_not_all_zero)]
 
 
@@ -27,9 +35,15 @@ class PatientGroup(Table):
     group: Annotated[Name, Field(examples=['group = "Ashgill emergencies"'])]
     home: Annotated[str, Field(examples=['home = "Ashgill"'])]
     kind: Annotated[Literal["emergency"], Field(examples=['kind = "emergency"'])] = "emergency"
-    per_day: Annotated[Positive, Field(le=10_000, examples=["per_day = 2.1"])]
-    hour_of_day: Annotated[Weights, Field(min_length=24, max_length=24)] | None = None  # midnight first
-    day_of_week: Annotated[Weights, Field(min_length=7, max_length=7)] | None = None  # Monday first
+    per_day: Annotated[Positive, AfterValidator(_ever_arriving), Field(le=10_000, examples=["per_day = 2.1"])]
+    hour_of_day: Annotated[  # midnight first
+        Annotated[Weights, Field(min_length=24, max_length=24)] | None,
+        Field(examples=["hour_of_day = [ ... 24 weights, midnight first ... ]"]),
+    ] = None
+    day_of_week: Annotated[
+        Annotated[Weights, Field(min_length=7, max_length=7)] | None,
+        Field(examples=["day_of_week = [1, 1, 1, 1, 1, 0.8, 0.8]"]),
+    ] = None
     stay: Annotated[Stay, Field(examples=['stay = { family = "lognormal", mean_days = 3.9, cv = 1.4 }'])]
 
     @property

@@ -77,7 +77,9 @@ class Policy:
 
     def after(self, row: PolicyRow) -> Policy:
         """This policy changed by a row of the file."""
-        changed = dataclasses.replace(self, name=row.name, when_all_closed=row.when_all_closed or self.when_all_closed)
+        changed = dataclasses.replace(
+            self, name=row.name, when_all_closed=row.when_all_closed or self.when_all_closed
+        )
         for field in dataclasses.fields(UnitRules):
             changed = changed.with_rule(field.name, getattr(row, field.name))
         return changed

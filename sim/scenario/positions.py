@@ -1,4 +1,4 @@
-"""Where each key of a TOML file stands: tomllib gives values without places, a syntax tree gives the places."""
+"""Where each key of a TOML file stands: tomllib gives values without places, a syntax tree has them."""
 
 from __future__ import annotations
 
@@ -31,7 +31,7 @@ class _Finder:
     def table(self, node: tree_sitter.Node) -> None:
         header, *pairs = [child for child in node.named_children if child.type != "comment"]
         *parents, last = _keys(header)
-        base = (*self.resolved((), parents), last)
+        base = (*self.entered((), parents, header), last)
         if node.type == "table_array_element":
             self.rows[base] = self.rows.get(base, -1) + 1
             self.lines.setdefault(base, _line(header))
@@ -40,21 +40,19 @@ class _Finder:
         for pair in pairs:
             self.pair(pair, base)
 
-    def resolved(self, base: Path, keys: list[str]) -> Path:
+    def entered(self, base: Path, keys: list[str], node: tree_sitter.Node) -> Path:
         """The path below `base`, standing in the latest row wherever a key names an array of tables."""
         for key in keys:
             base = (*base, key)
             if base in self.rows:
                 base = (*base, self.rows[base])
+            self.lines.setdefault(base, _line(node))
         return base
 
     def pair(self, node: tree_sitter.Node, base: Path) -> None:
         key, value = [child for child in node.named_children if child.type != "comment"][:2]
         *parents, last = _keys(key)
-        for parent in parents:
-            base = self.resolved(base, [parent])
-            self.lines.setdefault(base, _line(key))
-        path = (*base, last)
+        path = (*self.entered(base, parents, key), last)
         self.lines[path] = _line(key)
         self.value(value, path)
 

@@ -15,7 +15,7 @@ from sim.scenario.patients import PatientGroup
 from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
 from sim.scenario.tables import Row, Table, breach
-from sim.scenario.units import Unit
+from sim.scenario.units import Line, Unit
 
 
 @dataclass(frozen=True)
@@ -37,10 +37,12 @@ class Scenario(Table):
     """A network, its patients, its rules and its game, as one scenario file describes them."""
 
     schema_: Annotated[int, Field(alias="schema", examples=["schema = 1"]), AfterValidator(_known_schema)]
-    title: Annotated[str, Field(examples=['title = "Two invented units"'])] = ""
+    title: Annotated[Line, Field(examples=['title = "Two invented units"'])] = ""
     run: Annotated[Run, Field(examples=["[run]"])] = Run()
     units: Annotated[
-        tuple[Unit, ...], Row, Field(min_length=1, max_length=200, examples=['[[units]]` with `name = "Ashgill"'])
+        tuple[Unit, ...],
+        Row,
+        Field(min_length=1, max_length=200, examples=['[[units]]` with `name = "Ashgill"']),
     ]
     patients: Annotated[
         tuple[PatientGroup, ...],
@@ -106,8 +108,8 @@ class Scenario(Table):
         return self._changed(units=tuple(units))
 
     def exponential(self) -> Scenario:
-        """The exponential counterpart: exponential stays of the same means, transfers that take no time and add no
-        days, constant demand. Closure rules stay as they are."""
+        """The exponential counterpart: exponential stays of the same means, transfers that take no time and
+        add no days, constant demand. Closure rules stay as they are."""
         plain = self.diversion.model_copy(update={"delay": None, "extra_days": 0.0})
         groups = tuple(group.in_constant_exponential_form() for group in self.patients)
         return self._changed(patients=groups, diversion=plain)

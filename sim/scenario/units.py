@@ -7,30 +7,50 @@ from typing import Annotated
 
 from pydantic import AfterValidator, Field
 
-from sim.scenario.faults import shown
-from sim.scenario.tables import LONGEST_NAME, MOST_BEDS, NotNegative, Positive, Row, Share, Table, Whole, breach
+from sim.scenario.tables import (
+    LONGEST_NAME,
+    MOST_BEDS,
+    NotNegative,
+    Positive,
+    Row,
+    Share,
+    Table,
+    Whole,
+    breach,
+)
+from sim.scenario.wording import shown
 
 RESERVED_NAME = "network"
 
 
+def _of_one_line(text: str) -> str:
+    """Text that a terminal shows as it stands."""
+    if any(unicodedata.category(character) in ("Cc", "Cs", "Zl", "Zp") for character in text):
+        raise breach("must not hold control characters", shown(text), "remove them")
+    return text
+
+
 def _speakable(name: str) -> str:
     """A name that can stand in a table and on a command line."""
-    if name != name.strip() or not name:
-        raise breach("must not be empty, nor begin or end with a space", shown(name), "remove the spaces")
     if len(name) > LONGEST_NAME:
         raise breach(f"must have at most {LONGEST_NAME} characters", f"{len(name):,}", "shorten it")
-    if any(unicodedata.category(character) in ("Cc", "Cs", "Zl", "Zp") for character in name):
-        raise breach("must not hold control characters", shown(name), "remove them")
+    if not any(unicodedata.category(character)[0] in "LNPS" for character in name):
+        raise breach("must hold something that can be read", shown(name), "write a name")
+    if name != name.strip():
+        raise breach("must not begin or end with a space", shown(name), "remove the space")
     return name
 
 
 def _not_reserved(name: str) -> str:
     if name == RESERVED_NAME:
-        raise breach("is a reserved word (it stands for all units together)", shown(name), "choose another name")
+        raise breach(
+            "is a reserved word (it stands for all units together)", shown(name), "choose another name"
+        )
     return name
 
 
-Name = Annotated[str, AfterValidator(_speakable)]
+Line = Annotated[str, AfterValidator(_of_one_line)]
+Name = Annotated[Line, AfterValidator(_speakable)]
 Threshold = Annotated[Whole, Field(le=MOST_BEDS)]
 Gap = Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["reopening_gap = 1"])]
 ReviewHours = Annotated[NotNegative, Field(le=24 * 366, examples=["review_hours = 8"])]

@@ -15,16 +15,9 @@ from hypothesis import strategies as st
 
 from analysis.anarchy import NO_EQUILIBRIUM, NOT_POSITIVE, cost_of_selfishness, turning_weight
 from analysis.equilibria import pure_equilibria
+from tests.analysis.builders import table
 
 T_975_2 = 4.302653  # Student's t, 2 degrees of freedom, .975 (standard tables)
-
-
-def table(shape, payoffs_of):
-    """Payoffs (players, *shape) from a function of a profile of strategy numbers."""
-    payoffs = np.empty((len(shape), *shape))
-    for profile in itertools.product(*map(range, shape)):
-        payoffs[(slice(None), *profile)] = payoffs_of(*profile)
-    return payoffs
 
 
 def social_cost(payoffs, sense, welfare=None):
@@ -65,7 +58,7 @@ def pigou(travellers, degree=1):
 
 
 def test_pigous_price_of_anarchy_tends_to_4_thirds():
-    """Roughgarden and Tardos, "How bad is selfish routing?" (2002): at most 4/3 for linear latencies; computed."""
+    """Roughgarden and Tardos, "How bad is selfish routing?" (2002): at most 4/3 for linear latencies."""
     prices = {n: social_cost(pigou(n), "cost").price_of_anarchy.mean for n in (1, 3, 5, 9, 10)}
     assert prices[1] == 1 and prices[3] == pytest.approx(9 / 7)
     assert prices[1] < prices[3] < prices[5] < prices[9] < 4 / 3
@@ -73,13 +66,13 @@ def test_pigous_price_of_anarchy_tends_to_4_thirds():
 
 
 def test_pigous_price_of_anarchy_grows_with_the_degree():
-    """Roughgarden (2003), degree 2: 1.625752 (from memory, and computed) with infinitely many travellers."""
+    """Roughgarden (2003), degree 2: 1.625752 (from memory, and computed), with a continuum of travellers."""
     assert social_cost(pigou(12, degree=2), "cost").price_of_anarchy.mean == pytest.approx(1.625752, abs=1e-3)
 
 
 @pytest.mark.parametrize(("machines", "jobs"), [(2, (2, 2, 1, 1)), (3, (3, 3, 1, 1, 1, 1, 1, 1))])
 def test_balancing_loads_on_equal_machines_costs_at_most_2_less_2_over_m_plus_1(machines, jobs):
-    """Finn and Horowitz (1979; from memory): makespan of the worst pure equilibrium over the best makespan."""
+    """Finn and Horowitz (1979; from memory): worst equilibrium over the least makespan."""
     loads = table((machines,) * len(jobs), lambda *chosen: [load_of(chosen, jobs)[place] for place in chosen])
     cost = social_cost(loads, "cost", welfare=loads.max(axis=0))
     assert cost.price_of_anarchy.mean == pytest.approx(2 - 2 / (machines + 1), abs=1e-12)
@@ -223,7 +216,7 @@ def test_one_replication_gives_a_price_without_an_interval_and_says_why():
 
 
 def test_the_verdict_turns_where_patients_saved_equal_transfers_added():
-    """By hand: the best profile turns 0.3 fewer away at 1.2 more transfers a day, so it wins below a weight of 1/4."""
+    """By hand: the best profile turns 0.3 fewer away at 1.2 more transfers, so it wins below 1/4."""
     turned_away, transfers = np.array([0.1, 0.4]), np.array([1.5, 0.3])
     weight = turning_weight(turned_away, transfers, (1,)).weight
     assert weight == pytest.approx(0.25)

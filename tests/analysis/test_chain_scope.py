@@ -261,3 +261,4 @@ def test_the_result_as_plain_data():
         "diverted_in_per_day", "turned_away_per_day", "arrivals_per_day", "moved_share", "turned_away_share",
     }
     assert tree["units"]["B"]["moved_share"] is None
+    assert {type(value) for value in result.to_dict()["units"]["B"].values()} == {float, list, type(None)}

@@ -12,14 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from analysis.equilibria import as_costs, best_responses, deviations, pure_equilibria, regrets
-
-
-def table(shape, payoffs_of):
-    """Payoffs (players, *shape) from a function of a profile of strategy numbers."""
-    payoffs = np.empty((len(shape), *shape))
-    for profile in itertools.product(*map(range, shape)):
-        payoffs[(slice(None), *profile)] = payoffs_of(*profile)
-    return payoffs
+from tests.analysis.builders import table
 
 
 def bimatrix(*rows):
@@ -31,7 +24,7 @@ def bimatrix(*rows):
 
 
 def test_the_prisoners_dilemma_has_both_defecting_as_its_only_equilibrium():
-    """Nisan, Roughgarden, Tardos and Vazirani, Algorithmic Game Theory (2007), figure 1.1, in costs (from memory)."""
+    """Nisan, Roughgarden, Tardos and Vazirani, Algorithmic Game Theory (2007), figure 1.1 (from memory)."""
     dilemma = bimatrix([(2, 2), (5, 1)], [(1, 5), (4, 4)])  # strategies: cooperate, defect
     assert pure_equilibria(dilemma, "cost") == [(1, 1)]
     assert regrets(dilemma, "cost")[:, 0, 0].tolist() == [1, 1]  # from 2 to 1 by defecting alone
@@ -51,12 +44,15 @@ def test_matching_pennies_has_no_pure_equilibrium():
 
 
 def test_the_battle_of_the_sexes_has_two_pure_equilibria():
-    """Nau, Gomez Canovas and Hansen, "On the geometry of Nash equilibria and correlated equilibria" (2004), section 3."""
+    """Nau, Gomez Canovas and Hansen, "On the geometry of Nash equilibria and correlated equilibria" (2004).
+
+    Section 3: the pure ones are top left and bottom right.
+    """
     assert pure_equilibria(bimatrix([(3, 2), (0, 0)], [(0, 0), (2, 3)]), "gain") == [(0, 0), (1, 1)]
 
 
 def test_the_pure_ones_of_the_game_with_nine_equilibria():
-    """McKelvey and McLennan, "Computation of equilibria in finite games" (1996): 3 players, 2 strategies each.
+    """McKelvey and McLennan, "Computation of equilibria in finite games" (1996): 3 players, 2 choices each.
 
     Of its nine equilibria four are pure: all choose the first strategy, or exactly one player does.
     """
@@ -75,7 +71,7 @@ def test_jordans_three_player_matching_pennies_has_no_pure_equilibrium():
 
 
 def test_a_three_player_game_with_one_irrational_equilibrium_has_no_pure_one():
-    """Nau, Gomez Canovas and Hansen (2004), section 4; profiles listed with the first player's choice fastest."""
+    """Nau, Gomez Canovas and Hansen (2004), section 4; profiles listed with the first player fastest."""
     listed = [(3, 0, 2), (0, 1, 0), (0, 2, 0), (1, 0, 0), (1, 0, 0), (0, 3, 0), (0, 1, 0), (2, 0, 3)]
     game = table((2, 2, 2), lambda a, b, c: listed[a + 2 * b + 4 * c])
     assert pure_equilibria(game, "gain") == []
@@ -115,7 +111,7 @@ def test_cournots_duopoly_on_a_grid_has_ties_that_the_continuous_one_has_not(
 
 
 def test_the_minimum_effort_game_has_seven_strict_equilibria():
-    """Van Huyck, Battalio and Beil, "Tacit coordination games" (1990; from memory), two players, efforts 1 to 7."""
+    """Van Huyck, Battalio and Beil, "Tacit coordination games" (1990; from memory): here two players."""
     game = table((7, 7), lambda a, b: [0.2 * (min(a, b) + 1) - 0.1 * (own + 1) + 0.6 for own in (a, b)])
     assert pure_equilibria(game, "gain") == [(effort, effort) for effort in range(7)]
     assert all(
@@ -246,7 +242,7 @@ def test_renaming_strategies_renames_the_equilibria(payoffs, sense, random):
 
 @given(games(), SENSES, st.randoms(use_true_random=False))
 def test_what_the_others_choices_alone_give_a_player_changes_nothing(payoffs, sense, random):
-    """A constant added to a player's whole column, whichever strategy the player takes there, is no incentive."""
+    """A constant added to a player's whole column, whatever the player does there, is no incentive."""
     moved = payoffs.copy()
     for player in range(len(payoffs)):
         columns = np.moveaxis(moved[player], player, 0)  # a view: first axis the player's own strategies
