@@ -31,8 +31,10 @@ class Finding:
     basis: str
 
     def to_dict(self) -> dict[str, Any]:
-        """Plain values."""
+        """Plain values; an exact number is bare."""
         value = None if self.value is None else self.value.to_dict()
+        if value is not None and value["low"] is None and self.value.reason is None:
+            value = value["mean"]
         return {"statement": self.statement, "value": value, "unit": self.unit, "basis": self.basis}
 
 
@@ -80,7 +82,7 @@ def _turning(game: GameAnalysis, basis: str) -> Finding:
     return Finding(
         f"The verdict turns at a transfer weight of {turning.weight:.3f}: where one transfer counts for more than that "
         "many patients turned away, the profile that turns fewest away is no better than the worst listed equilibrium",
-        Estimate(turning.weight),
+        Estimate(turning.weight, reason=None if game.is_exact else "a point estimate; no interval is worked out"),
         "patients turned away per transfer",
         basis,
     )  # fmt: skip

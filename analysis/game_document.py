@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from analysis.confidence import Estimate
+from analysis.confidence import ONE_REPLICATION, Estimate
 from analysis.findings import findings_of
 from analysis.games import Equilibrium, GameAnalysis, welfare_estimate
 
@@ -71,8 +71,9 @@ def _payoffs(game: GameAnalysis, player: int) -> Any:
 def _nested(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> Any:
     if mean.ndim:
         return [_nested(*parts) for parts in zip(mean, low, high, strict=True)]
-    ends = [None if np.isnan(end) else float(end) for end in (low, high)]
-    return {"mean": float(mean), "low": ends[0], "high": ends[1]}
+    if np.isnan(low):
+        return Estimate(float(mean), reason=ONE_REPLICATION).to_dict()
+    return Estimate(float(mean), float(low), float(high)).to_dict()
 
 
 def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:

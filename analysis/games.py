@@ -132,8 +132,10 @@ def regret_estimate(table: PayoffTable, profile: Profile, player: int, confidenc
     """
     point = float(regrets(table.payoffs, table.goal.sense)[(player, *profile)])
     others = deviations(profile, player, table.profiles.shape[player])
-    if table.replicates is None or not others:
+    if table.replicates is None:
         return Estimate(point)
+    if not others:
+        return Estimate(point, point, point)
     if len(table.replicates) < 2:
         return Estimate(point, reason=ONE_REPLICATION)
     costs = as_costs(table.replicates[:, player], table.goal.sense)
@@ -141,4 +143,5 @@ def regret_estimate(table: PayoffTable, profile: Profile, player: int, confidenc
     gains = [costs[(slice(None), *profile)] - costs[(slice(None), *other)] for other in others]
     means = np.array([gain.mean() for gain in gains])
     halves = critical * np.array([standard_error(gain) for gain in gains])
-    return Estimate(point, max(0.0, float((means - halves).max())), max(point, float((means + halves).max())))
+    low, high = float((means - halves).max()), float((means + halves).max())
+    return Estimate(point, min(point, max(0.0, low)), max(point, high))

@@ -11,6 +11,7 @@ import numpy as np
 from analysis.confidence import Estimate, mean_estimate, ratio_estimate
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, combine, network_sums, unit_sums
 from sim.record import Record
+from sim.replicate import Run
 from sim.scenario import Scenario
 
 
@@ -74,3 +75,27 @@ def _occupancy(days: np.ndarray, scenario: Scenario, confidence: float) -> list[
     return [mean_estimate(level / scenario.run.measured_days, confidence) for level in days.T]
 
 
+def per_replication_measures(runs: Sequence[Run], scenario: Scenario) -> list[dict[str, Any]]:
+    """Raw measures of every run: what an outsider needs to reckon again. A share of no arrivals is None."""
+    beds = np.array([unit.beds for unit in scenario.units], float)
+    sums = unit_sums([run.record for run in runs], beds, scenario.run.measured_days)
+    whole = network_sums(sums)
+    units = {
+        name: {m.name: _plain(combine(m, of_unit(sums, place))) for m in UNIT_MEASURES}
+        for place, name in enumerate(scenario.unit_names)
+    }
+    network = {m.name: _plain(combine(m, whole)) for m in NETWORK_MEASURES}
+    return [
+        {
+            "replication": run.replication,
+            "units": {name: {m: values[row] for m, values in measures.items()} for name, measures in units.items()},
+            "network": {m: values[row] for m, values in network.items()},
+            "record_hash": run.record.hash,
+            "intake_hash": run.intake_hash,
+        }
+        for row, run in enumerate(runs)
+    ]
+
+
+def _plain(values: np.ndarray) -> list[float | None]:
+    return [None if np.isnan(value) else value for value in values.tolist()]

@@ -1,7 +1,8 @@
 """Where tasks run: in this process or in local worker processes, behind one small interface.
 
 A pool takes a function and addressed tasks and yields replies as they finish, in any order. A task that
-raises costs only itself: its reply carries the traceback. Other machines will stand behind the same interface.
+raises costs only itself: its reply carries the traceback. Other machines will stand behind the same
+interface.
 """
 
 from __future__ import annotations
@@ -49,8 +50,9 @@ class ThisProcess:
 class LocalProcesses:
     """joblib's loky processes on this machine.
 
-    A worker that dies takes down the tasks then under way. Each of those is run again alone, and reported as
-    failed if its worker dies once more; all other tasks go on.
+    Tasks are taken from the iterable as workers become free. A worker that dies takes down the tasks then
+    under way. Each of those is run again alone, and reported as failed if its worker dies once more; all
+    other tasks go on.
     """
 
     def __init__(self, count: int) -> None:
@@ -60,36 +62,43 @@ class LocalProcesses:
         """See Workers."""
         from joblib.externals.loky.process_executor import TerminatedWorkerError
 
-        left = dict(tasks)
-        while left:
+        waiting, under_way = iter(tasks), {}
+
+        def handed_out() -> Iterator[Task]:
+            for key, arguments in waiting:
+                under_way[key] = arguments
+                yield key, arguments
+
+        while True:
             try:
-                for reply in self._replies(function, left):
-                    del left[reply.key]
+                for reply in self._replies(function, handed_out()):
+                    del under_way[reply.key]
                     yield reply
+                return
             except TerminatedWorkerError:
                 stop_processes()
-                # joblib hands tasks out in order, two a worker: whatever was under way is among these.
-                for key in list(left)[: 2 * self.count]:
-                    yield self._alone(function, key, left.pop(key))
+            for key in list(under_way):
+                yield self._alone(function, key, under_way.pop(key))
 
     def _alone(self, function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
         from joblib.externals.loky.process_executor import TerminatedWorkerError
 
         try:
-            [reply] = self._replies(function, {key: arguments})
+            [reply] = self._replies(function, [(key, arguments)])
             return reply
         except TerminatedWorkerError as error:
             stop_processes()
-            return Reply(key, failure=f"{error}\nthe worker process died, with no other task beside this one (out of memory?)")
+            said = "the worker process died, with no other task beside this one (out of memory?)"
+            return Reply(key, failure=f"{error}\n{said}")
 
-    def _replies(self, function: Callable[..., Any], tasks: dict[Hashable, tuple]) -> Iterator[Reply]:
+    def _replies(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
         from joblib import Parallel, delayed
 
         pool = Parallel(n_jobs=self.count, backend="loky", batch_size=1, return_as="generator_unordered")
-        replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in list(tasks.items()))
+        replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in tasks)
         finished = False
         try:
-            for reply in replies:
+            for reply in replies:  # noqa: UP028 - `yield from` would close joblib's generator with a warning
                 yield reply
             finished = True
         finally:

@@ -70,7 +70,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
 
 
 def _simulated_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
-    from analysis.command.running import require_some, run_replications
+    from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums, simulated_table
     from sim.record import hash_records
     from sim.scenario.describe import advice
@@ -82,7 +82,7 @@ def _simulated_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
     sums = TableSums(request.scenario, profiles.cells, run.replications)
     policies = list(profiles.policies(request.policy))
     failures, interrupted = run_replications(request, policies, label="game", take=sums.add)
-    require_some(len(sums.complete))
+    require(len(sums.complete), interrupted)
     table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
     ran = {

@@ -12,6 +12,7 @@ from typing import Any
 from analysis.command.entry import CAUTION
 
 PLAIN_WIDTH = 132
+WRITTEN = ("result.json", "provenance.json", "table.csv", "payoffs-*.*", "verification.*")
 
 
 def put_json(document: Any) -> None:
@@ -88,9 +89,9 @@ def interval(estimate: dict[str, Any], digits: int = 3) -> str:
 
 
 def prepare_folder(folder: Path) -> Path:
-    """Makes the folder; what an earlier run left there is kept, moved into `earlier/N`."""
+    """Makes the folder; what an earlier run left there is kept, moved into `earlier/N`. Other files stay put."""
     folder.mkdir(parents=True, exist_ok=True)
-    left = [path for path in folder.iterdir() if path.name != "earlier"]
+    left = [path for pattern in WRITTEN for path in folder.glob(pattern)]
     if left:
         earlier = folder / "earlier"
         taken = [int(path.name) for path in earlier.glob("*") if path.name.isdecimal()] if earlier.exists() else []

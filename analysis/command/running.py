@@ -81,10 +81,13 @@ def run_replications(
     return failures, replies.interrupted
 
 
-def require_some(done: int) -> None:
-    """A result needs at least one finished replication."""
-    if done == 0:
-        raise RunError("no replication was finished, so there is nothing to show")
+def require(done: int, interrupted: bool, *, least: int = 1) -> None:
+    """A result needs at least so many finished replications; with fewer the command ends here."""
+    if done >= least:
+        return
+    if interrupted:
+        raise Interrupted
+    raise RunError(f"{done} replications were finished, but at least {least} are needed to show anything")
 
 
 def finish(failures: Sequence[Failure], interrupted: bool) -> None:

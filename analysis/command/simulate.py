@@ -19,8 +19,8 @@ from analysis.command.output import interval, prepare_folder, put_caution, put_j
 def simulate(request: Request, trace: Path | None, intake_out: Path | None, replication: int, per_replication: bool) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
-    from analysis.command.running import finish, require_some, run_replications
-    from analysis.simulation import summarise
+    from analysis.command.running import finish, require, run_replications
+    from analysis.simulation import per_replication_measures, summarise
     from sim.record import hash_records
     from sim.scenario.describe import advice
 
@@ -31,7 +31,7 @@ def simulate(request: Request, trace: Path | None, intake_out: Path | None, repl
     failures, interrupted = run_replications(
         request, [request.policy], label="simulate", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
     )
-    require_some(len(runs))
+    require(len(runs), interrupted)
     runs.sort(key=lambda run: run.replication)
     result = summarise([run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence)
     document = _heading(request) | result.to_dict() | {
@@ -44,11 +44,11 @@ def simulate(request: Request, trace: Path | None, intake_out: Path | None, repl
         "interrupted": interrupted,
     }  # fmt: skip
     if per_replication:
-        document["per_replication"] = _each(runs, request)
-    if trace is not None or intake_out is not None:
-        _write_trace(request, replication, trace, intake_out)
+        document["per_replication"] = per_replication_measures(runs, request.scenario)
     if request.out is not None:
         write_result(prepare_folder(request.out), document, provenance(request, "simulate", begun))
+    if trace is not None or intake_out is not None:  # perhaps into that very folder
+        _write_trace(request, replication, trace, intake_out)
     if request.as_json:
         put_json(document)
     else:
@@ -61,37 +61,6 @@ command = scenario_command(simulate)
 
 def _heading(request: Request) -> dict[str, Any]:
     return {"scenario": request.scenario.title, "policy": request.policy.name, "thresholds": request.policy.thresholds}
-
-
-def _each(runs: list[Any], request: Request) -> list[dict[str, Any]]:
-    """Raw measures of every replication: what an outsider needs to reckon again."""
-    import numpy as np
-
-    from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, combine, network_sums, unit_sums
-    from analysis.simulation import of_unit
-
-    beds = np.array([unit.beds for unit in request.scenario.units], float)
-    sums = unit_sums([run.record for run in runs], beds, request.scenario.run.measured_days)
-    whole = network_sums(sums)
-    units = {
-        name: {m.name: _plain(combine(m, of_unit(sums, place))) for m in UNIT_MEASURES}
-        for place, name in enumerate(request.scenario.unit_names)
-    }
-    network = {m.name: _plain(combine(m, whole)) for m in NETWORK_MEASURES}
-    return [
-        {
-            "replication": run.replication,
-            "units": {name: {m: values[row] for m, values in measures.items()} for name, measures in units.items()},
-            "network": {m: values[row] for m, values in network.items()},
-            "record_hash": run.record.hash,
-            "intake_hash": run.intake_hash,
-        }
-        for row, run in enumerate(runs)
-    ]
-
-
-def _plain(values: Any) -> list[float | None]:
-    return [None if value != value else value for value in values.tolist()]
 
 
 def _write_trace(request: Request, replication: int, trace: Path | None, intake_out: Path | None) -> None:

@@ -21,10 +21,10 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
     """Hold the simulation against the exact chain, measure by measure; status 1 if they disagree."""
     from analysis.chain import solve
     from analysis.command.provenance import provenance, started
-    from analysis.command.running import finish, run_replications
+    from analysis.command.running import finish, require, run_replications
     from analysis.verification import FALSE_ALARM_RATE
     from analysis.verification import verify as compare
-    from sim.errors import Fault, RunError, ScenarioError
+    from sim.errors import Fault, ScenarioError
 
     begun = started()
     if request.scenario.run.replications < LEAST_REPLICATIONS:
@@ -35,8 +35,7 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
     failures, interrupted = run_replications(
         request, [request.policy], label="verify", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
     )
-    if len(runs) < LEAST_REPLICATIONS:
-        raise RunError(f"only {len(runs)} replications were finished, too few to verify anything")
+    require(len(runs), interrupted, least=LEAST_REPLICATIONS)
     runs.sort(key=lambda run: run.replication)
     rate = false_alarm_rate or (1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE)
     result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)

@@ -6,43 +6,43 @@ events at one time. Both forms live in the same two arrays.
 
 from __future__ import annotations
 
-from numba import njit
+from sim.compiled.cache import compiled
 
 SEQUENCE_SHIFT, KIND_SHIFT = 8, 48
 MOST_UNITS = 1 << SEQUENCE_SHIFT
 MOST_SEQUENCE = 1 << (KIND_SHIFT - SEQUENCE_SHIFT)
 
 
-@njit(inline="always")
+@compiled
 def pack(kind, sequence, unit):
     """The key of an event."""
     return (kind << KIND_SHIFT) | (sequence << SEQUENCE_SHIFT) | unit
 
 
-@njit(inline="always")
+@compiled
 def kind_of(key):
     """The kind of event that a key names."""
     return key >> KIND_SHIFT
 
 
-@njit(inline="always")
+@compiled
 def sequence_of(key):
     """The sequence (the patient) that a key names."""
     return (key >> SEQUENCE_SHIFT) & (MOST_SEQUENCE - 1)
 
 
-@njit(inline="always")
+@compiled
 def unit_of(key):
     """The unit that a key names."""
     return key & (MOST_UNITS - 1)
 
 
-@njit(inline="always")
+@compiled
 def _before(time, key, other_time, other_key):
     return time < other_time or (time == other_time and key < other_key)
 
 
-@njit(inline="always")
+@compiled
 def push_sorted(times, keys, count, time, key):
     """Adds an event to `count` events held latest first, so that the next one stands at the end."""
     place = count
@@ -54,7 +54,7 @@ def push_sorted(times, keys, count, time, key):
     keys[place] = key
 
 
-@njit
+@compiled
 def push_heap(times, keys, count, time, key):
     """Adds an event to a binary heap of `count` events whose next one stands first."""
     place = count
@@ -69,7 +69,7 @@ def push_heap(times, keys, count, time, key):
     keys[place] = key
 
 
-@njit
+@compiled
 def pop_heap(times, keys, count):
     """Removes the first of `count` events of a heap."""
     last = count - 1

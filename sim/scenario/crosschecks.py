@@ -45,9 +45,10 @@ class Draft:
         """The row numbers of an array of tables."""
         return [path[-1] for path in self.below(table) if isinstance(self._collector.value(path), Mapping)]
 
-    def name(self, row: int) -> Any:
-        """A unit's name as the file has it, at fault or not: who refers to it means this unit."""
-        return self._collector.value(("units", row, "name"))
+    def name(self, row: int) -> str | None:
+        """A unit's name as the file has it, sound or not: who refers to it means this unit."""
+        name = self._collector.value(("units", row, "name"))
+        return name if isinstance(name, str) else None
 
     def whole(self, table: str) -> bool:
         """Whether no rows of an array of tables can have gone astray under a misspelt header."""
@@ -56,16 +57,17 @@ class Draft:
     @cached_property
     def every_unit_named(self) -> bool:
         """Whether every unit bears a name, so that a name which none of them bears can only be wrong."""
-        return self.whole("units") and all(isinstance(self.name(row), str) for row in self.rows("units"))
+        return self.whole("units") and None not in map(self.name, self.rows("units"))
 
     @cached_property
     def beds(self) -> dict[str, int | None]:
         """Unit name -> beds; None where the number is at fault, or where several units bear the name."""
-        named = [row for row in self.rows("units") if isinstance(self.name(row), str)]
-        counts = Counter(self.name(row) for row in named)
+        named = [(self.name(row), row) for row in self.rows("units")]
+        counts = Counter(name for name, _ in named)
         return {
-            self.name(row): self.read("units", row, "beds") if counts[self.name(row)] == 1 else None
-            for row in named
+            name: self.read("units", row, "beds") if counts[name] == 1 else None
+            for name, row in named
+            if name is not None
         }
 
 
@@ -132,7 +134,7 @@ def _referrals(draft: Draft) -> None:
         _order(draft, ("units", row, "referral_order"), draft.name(row))
 
 
-def _order(draft: Draft, path: Path, home: Any) -> None:
+def _order(draft: Draft, path: Path, home: str | None) -> None:
     """A referral order names other units, each once."""
     seen = set()
     for entry in draft.below(*path):

@@ -109,8 +109,8 @@ def _warm_up(scenario: Scenario) -> list[str]:
     if given >= least:
         return []
     return [
-        f"run.warm_up_days is {given:g}, less than {WARM_UP_STAYS} mean stays ({least:.1f} days): measures will "
-        "lean towards the empty network that a run starts from; raise it to at least "
+        f"run.warm_up_days is {given:g}, less than {WARM_UP_STAYS} mean stays ({least:.1f} days): measures "
+        "will lean towards the empty network that a run starts from; raise it to at least "
         f"{7 * math.ceil(least / 7)}"
     ]
 
@@ -120,8 +120,8 @@ def _whole_weeks(scenario: Scenario) -> list[str]:
         return []
     lengths = {key: getattr(scenario.run, key) for key in ("warm_up_days", "measured_days")}
     return [
-        f"run.{key} is {days:g}, no multiple of 7, and demand varies by weekday: some weekdays weigh more than "
-        "others"
+        f"run.{key} is {days:g}, no multiple of 7, and demand varies by weekday: some weekdays weigh "
+        "more than others"
         for key, days in lengths.items()
         if days % 7
     ]

@@ -184,8 +184,8 @@ def _numbers(rows: list[tuple[int, list[str]]], file: str, column: str) -> tuple
     """The column below the header in line 1. Blank lines may end the file; elsewhere they are no stay."""
     header = [name.strip() for name in rows[0][1]] if rows else []
     if header.count(column) != 1:
-        held = "twice" if column in header else nearest(column, filter(None, header))
-        raise breach(f"must name one column of {file}", repr(column), held, key=("column",))
+        remedy = _column_remedy(column, header)
+        raise breach(f"must name one column of {file}", repr(column), remedy, key=("column",))
     place = header.index(column)
     while not rows[-1][1]:
         rows.pop()
@@ -202,6 +202,14 @@ def _numbers(rows: list[tuple[int, list[str]]], file: str, column: str) -> tuple
             f"column {column!r} of {file} must hold at least one number", "none", "add rows", key=("column",)
         )
     return tuple(_number(text) for _, text in texts)
+
+
+def _column_remedy(column: str, header: list[str]) -> str:
+    if column in header:
+        return "several columns bear this name; rename all but one"
+    if len(header) == 1 and (";" in header[0] or "\t" in header[0]):
+        return "separate the columns by commas, not by semicolons or tabs"
+    return nearest(column, filter(None, header))
 
 
 def _number(text: str) -> float | None:

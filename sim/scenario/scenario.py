@@ -16,6 +16,7 @@ from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
 from sim.scenario.tables import Row, Table, breach
 from sim.scenario.units import Line, Unit
+from sim.scenario.wording import shown
 
 
 @dataclass(frozen=True)
@@ -29,7 +30,8 @@ class Source:
 
 def _known_schema(number: int) -> int:
     if number != 1:
-        raise breach("must be 1, the only form of scenario files so far", number, "write `schema = 1`")
+        rule = "must be 1, the only form of scenario files so far"
+        raise breach(rule, shown(number), "write `schema = 1`")
     return number
 
 

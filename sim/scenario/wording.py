@@ -16,7 +16,6 @@ Words = tuple[str, str, str]  # rule, value, remedy
 
 _LONGEST_SHOWN = 80
 _MOST_NAMED = 12
-_TURNS = ("raise", "lower")
 _MUST_BE = {
     "int_type": "a whole number", "int_from_float": "a whole number", "float_type": "a number",
     "string_type": "text in quotes", "bool_type": "true or false", "tuple_type": "an array",
@@ -64,9 +63,8 @@ def _shortened(text: str, longest: int = _LONGEST_SHOWN) -> str:
 
 def as_written(text: str) -> str:
     """A name or key as it stands, or in quotes where a terminal would not show it so."""
-    return _shortened(
-        text if text.isprintable() and text and text == text.strip() else repr(text), LONGEST_NAME
-    )
+    plain = text.isprintable() and text and text == text.strip()
+    return _shortened(text if plain else repr(text), LONGEST_NAME)
 
 
 def in_words(
@@ -91,20 +89,16 @@ def in_words(
         return _choice(error, got)
     if kind in ("too_short", "too_long"):
         return _length(kind, error["ctx"], len(error["input"]))
-    rule, remedy = _of_value(error, key)
-    return (
-        rule,
-        got,
-        f"write for example `{example}`" if example and not remedy.startswith(_TURNS) else remedy,
-    )
-
-
-def _of_value(error: Mapping[str, Any], key: str) -> tuple[str, str]:
-    """Rule and remedy of a value of the wrong size or kind."""
-    kind = error["type"]
     if kind in _BOUNDS:
         rule, remedy = _BOUNDS[kind]
-        return rule.format(**{name: _number(bound) for name, bound in error["ctx"].items()}), remedy
+        return rule.format(**{name: _number(bound) for name, bound in error["ctx"].items()}), got, remedy
+    rule, remedy = _of_kind(error, key)
+    return rule, got, f"write for example `{example}`" if example else remedy
+
+
+def _of_kind(error: Mapping[str, Any], key: str) -> tuple[str, str]:
+    """Rule and remedy where a value is of the wrong kind."""
+    kind = error["type"]
     if kind == "float_type" and type(error["input"]) is int:
         return "must be a number of reasonable size", "correct it"
     if kind == "dict_type":

@@ -39,6 +39,11 @@ def memoryless(*units: dict[str, Any], stay_days: float = 2.0, **tables: Any) ->
     return Scenario.model_validate({"schema": 1, "units": rows, "patients": groups, **tables})
 
 
+def no_constants(name: str) -> None:
+    """For `json.loads(..., parse_constant=no_constants)`: NaN and Infinity have no place in JSON."""
+    raise AssertionError(f"{name} stands in the JSON")
+
+
 def record(occupancy_days: Any, **counts: Any) -> Record:
     """A record from its occupancy, (periods, units, most beds + 1), and whatever else is not nought."""
     occupancy = np.array(occupancy_days, float)

@@ -1,7 +1,7 @@
 """Intervals against tables of Student's t, hand-worked numbers and their own coverage on made-up data.
 
 A coverage check counts how often intervals of 95 % hold a known truth, with a fixed seed. It states the
-chance that a correct procedure fails it, and a wrong procedure that must fail the same check stands beside it.
+chance that a correct procedure fails it, and a wrong procedure that must fail it too stands beside it.
 """
 
 import math
@@ -189,7 +189,7 @@ def test_an_unpaired_difference_of_paired_runs_is_caught():
 
 
 def shares_of(interval, seed):
-    """Intervals for the share 0.1 of patients turned away, where busy replications turn more than theirs away.
+    """Intervals for a share of .1 turned away, where busy replications turn away more than theirs.
 
     Patients vary from replication to replication with a coefficient of variation of .4; the share of a
     replication is proportional to them.

@@ -1,9 +1,9 @@
 """The game solved by the exact chain, against a loop of its own, simulation, and what is known of such games.
 
 What is known: with `any_bed` and equal stays, closing early costs nothing (any free bed is found, so patients
-are lost only when every bed is taken, whatever the thresholds: pooling); with the other last resorts the price
-of anarchy falls to 1 as the targets rise, for then nobody gains by closing early; the own utilisation never
-falls in the own threshold; and best replies never fall in the other's threshold (with strictly rising
+are lost only when every bed is taken, whatever the thresholds: pooling); with the other last resorts the
+price of anarchy falls to 1 as the targets rise, for then nobody gains by closing early; the own utilisation
+never falls in the own threshold; and best replies never fall in the other's threshold (with strictly rising
 utilisations; Topkis 1979, Milgrom and Roberts 1990, from memory).
 """
 
@@ -81,10 +81,9 @@ def test_every_number_of_the_game_can_be_had_cell_by_cell(resort):
         assert one.verdict == "exact" and all(0 <= r.mean <= TOLERANCE for r in one.regret.values())
 
 
-def test_what_stands_beside_a_ratio_is_that_profiles_own(resort="home_bed"):
-    game = exact_game(two_units(resort=resort))
-    place = game.place((0, 2))
-    utilisations, network = solved_apart((1, 3), resort=resort)
+def test_what_stands_beside_a_ratio_is_that_profiles_own():
+    place = exact_game(two_units()).place((0, 2))
+    utilisations, network = solved_apart((1, 3))
     assert place.thresholds == {"A": 1, "B": 3}
     assert list(place.utilisation.values()) == pytest.approx(utilisations)
     assert place.throughput_per_day == pytest.approx(network.throughput_per_day)
@@ -99,17 +98,17 @@ def test_worker_processes_change_nothing():
 
 
 def test_a_scenario_out_of_scope_is_refused_at_once():
-    scenario = two_units().model_copy(update={"patients": two_units().patients})
-    policy = scenario.policy().with_rule("review_hours", {"A": 8.0})
-    with pytest.raises(OutOfScope):
-        next(solve_cells(scenario, [policy]))
+    scenario = two_units()
+    reviewed = scenario.policy().with_rule("review_hours", {"A": 8.0})
+    with pytest.raises(OutOfScope, match="review"):
+        next(solve_cells(scenario, [reviewed]))
 
 
 # ---- against simulation ----
 
 
 def test_the_simulated_game_is_close_to_the_exact_one():
-    """Every payoff within its interval: at a confidence of 1 - 1e-4 / 24 each, false-alarm rate at most 1e-4."""
+    """Every payoff within its interval: 24 at 1 - 1e-4 / 24 each: a false-alarm rate of at most 1e-4."""
     run = {"seed": 8, "warm_up_days": 28.0, "measured_days": 280.0, "replications": 10}
     scenario = two_units(run=run)
     profiles = profiles_of(scenario)
@@ -155,20 +154,17 @@ def test_at_low_demand_with_home_bed_selfishness_costs_nothing():
     assert game.cost.price_of_anarchy.mean == pytest.approx(1, abs=1e-6)
 
 
-def test_a_transfer_weight_turns_the_verdict_where_open_units_move_more_patients():
-    scenario = two_units(per_day=(1.4, 1.8), targets=(0.4, 0.4), resort="turned_away")
-    game = exact_game(scenario)
+def test_the_verdict_turns_at_the_weight_named():
+    """Open units turn fewer away but move more: just below the weight they win, just above it they do not."""
+    game = exact_game(two_units(per_day=(1.4, 1.8), targets=(0.4, 0.4)))
+    outcomes, shape = game.table.outcomes, game.table.profiles.shape
     away, moved = (
-        values.sum(axis=-1).reshape(game.table.profiles.shape)
-        for values in (game.table.outcomes.turned_away, game.table.outcomes.diverted_out)
+        rates.sum(axis=-1).reshape(shape) for rates in (outcomes.turned_away, outcomes.diverted_out)
     )
-    fewest = np.unravel_index(np.argmin(away), away.shape)
-    if game.turning.weight is None:
-        assert moved[fewest] <= moved[game.cost.worst]
-    else:
-        for weight, wins in ((0.99 * game.turning.weight, True), (1.01 * game.turning.weight, False)):
-            loss = away + weight * moved
-            assert (loss[fewest] < loss[game.cost.worst]) == wins
+    fewest, worst = np.unravel_index(np.argmin(away), shape), game.cost.worst
+    for weight, wins in ((0.99 * game.turning.weight, True), (1.01 * game.turning.weight, False)):
+        loss = away + weight * moved
+        assert (loss[fewest] < loss[worst]) == wins
 
 
 RATES = st.floats(0.1, 2.0)
@@ -201,7 +197,9 @@ def exact_utilisations(scenario):
 def test_best_replies_never_fall_as_the_other_unit_opens(network):
     game = exact_game(two_units(**network))
     for player in range(2):
-        replies = [reply.best for reply in best_responses(game.table.payoffs, "cost") if reply.player == player]
+        replies = [
+            reply.best for reply in best_responses(game.table.payoffs, "cost") if reply.player == player
+        ]
         for before, after in itertools.pairwise(replies):
             assert min(after) >= min(before) and max(after) >= max(before)
 

@@ -167,7 +167,7 @@ def test_outcomes_stand_beside_the_table_by_cell_and_unit():
 
 
 def test_the_squared_goal_keeps_judged_periods_by_cell():
-    """Two judged periods of 5 days, one unit of 2 beds, two cells: utilisations .5, 1 and 0, 1; target 1/2."""
+    """Two periods of 5 days, one unit of 2 beds, two cells: utilisations .5, 1 and 0, 1; target .5."""
     scenario = memoryless(UNITS[0], run={"measured_days": DAYS})
     sums = TableSums(scenario, 2, 2)
     levels = {0: (1, 2), 1: (0, 2)}

@@ -1,4 +1,4 @@
-"""The simulation held against the chain: what it must pass, what it must catch, and how often it errs by chance."""
+"""The simulation held against the chain: what must pass, what must be caught, how often chance fails."""
 
 import dataclasses
 import json
@@ -134,7 +134,17 @@ def test_one_impossible_event_is_caught(demo):
 
 def test_the_command_says_so_with_its_status(monkeypatch, capsys):
     """Status 0 where all holds, 1 where it does not; the document is the same in form."""
-    command = ["verify", str(DEMO), "--json", "--replications", "8", "--workers", "1", "--engine", "reference"]
+    command = [
+        "verify",
+        str(DEMO),
+        "--json",
+        "--replications",
+        "8",
+        "--workers",
+        "1",
+        "--engine",
+        "reference",
+    ]
     assert run(command) == 0
     assert json.loads(capsys.readouterr().out)["agrees"] is True
     monkeypatch.setattr(reference.Unit, "set_gates", closes_a_bed_late)
@@ -161,7 +171,9 @@ def test_every_pool_expects_20_visits_and_all_levels_are_in_one(demo):
     exact = solve(demo, policy)
     result = held(demo, policy)
     for unit in demo.units:
-        pooled = [one for one in result.measures if one.where == unit.name and one.measure.startswith("occupancy")]
+        pooled = [
+            one for one in result.measures if one.where == unit.name and one.measure.startswith("occupancy")
+        ]
         assert sum(one.exact for one in pooled) == pytest.approx(1)
         least = LEAST_VISITS * 3.5 / (demo.run.measured_days * REPLICATIONS)  # 20 mean stays of 3.5 days
         assert all(one.exact >= least for one in pooled)
@@ -180,7 +192,9 @@ def test_a_measure_too_rare_to_test_is_listed_but_not_tested():
 
 def test_a_measure_without_spread_must_be_exact():
     """A unit that never admits is closed all the time, in the chain and in every replication."""
-    scenario = memoryless({"name": "A", "beds": 2, "per_day": 1.0, "closure_threshold": 0}, run={"measured_days": 56.0})
+    scenario = memoryless(
+        {"name": "A", "beds": 2, "per_day": 1.0, "closure_threshold": 0}, run={"measured_days": 56.0}
+    )
     scenario = scenario.model_copy(
         update={"diversion": scenario.diversion.model_copy(update={"when_all_closed": "turned_away"})}
     )
@@ -188,7 +202,9 @@ def test_a_measure_without_spread_must_be_exact():
     result = held(scenario, policy)
     closed = next(one for one in result.measures if one.measure == "closed_fraction")
     assert (closed.exact, closed.mean, closed.z, closed.agrees) == (1.0, 1.0, 0.0, True)
-    never_closed = [dataclasses.replace(one, gate_days=one.gate_days[:, ::-1]) for one in records_of(scenario, policy)]
+    never_closed = [
+        dataclasses.replace(one, gate_days=one.gate_days[:, ::-1]) for one in records_of(scenario, policy)
+    ]
     caught = verify(never_closed, solve(scenario, policy), scenario)
     assert ("A", "full_fraction") in off(caught)
     full = next(one for one in caught.measures if one.measure == "full_fraction")
@@ -204,7 +220,7 @@ NULL = memoryless(
     diversion={"when_all_closed": "turned_away"},
 )
 EXPERIMENTS, RATE = 300, 0.1
-# Binomial(300, .1) exceeds 52 with a chance of 3e-5 (computed): the bound of a criterion that keeps its promise.
+# Binomial(300, .1) exceeds 52 with a chance of 3e-5 (computed): the most of a criterion that keeps its word.
 MOST_REFUSED = 52
 
 
@@ -219,7 +235,9 @@ def null_record(exact, rng):
         gates[place, [0, FULL | OWN_CLOSED | INCOMING_CLOSED]] = (1 - shares[-1]) * days, shares[-1] * days
         arrived[place] = rng.poisson(NULL.patients[NULL.place_of(name)].per_day * days)
         lost[place] = rng.binomial(arrived[place], unit.occupancy[-1])
-    return record(occupancy, gate_days=gates, arrived=arrived, turned_away=lost, admitted=np.diag(arrived - lost))
+    return record(
+        occupancy, gate_days=gates, arrived=arrived, turned_away=lost, admitted=np.diag(arrived - lost)
+    )
 
 
 @pytest.fixture(scope="module")
@@ -231,7 +249,9 @@ def under_the_null():
 
 def refused_beyond(results, critical):
     """How many experiments would be refused at this critical value."""
-    return sum(max(abs(one.z) for one in result.measures if one.z is not None) > critical for result in results)
+    return sum(
+        max(abs(one.z) for one in result.measures if one.z is not None) > critical for result in results
+    )
 
 
 def test_a_right_engine_is_refused_no_more_often_than_stated(under_the_null):

@@ -4,7 +4,7 @@ Little, "A proof for the queuing formula L = lambda W", Operations Research 9 (1
 mean number of patients in beds is admissions a day times mean stay, in each unit and for any rules, because no
 rule looks at a stay before the patient is in bed. Beds held for patients on the road are no part of it.
 
-False alarms: fewer than 50 facts, 1 in 40,000 for the file (see `facts.py`). Planted errors: a mean stay 2 %
+False alarms: fewer than 50 facts, 1 in 40,000 for the file (see `facts.py`). Planted errors: a mean stay 3 %
 off, the road counted as time in bed, the extra days of a transfer or a unit's stay factor forgotten.
 """
 
@@ -22,12 +22,12 @@ UNITS = [
         "name": "Fenwick", "beds": 8, "closure_threshold": 7, "incoming_threshold": 6, "stay_factor": 1.25,
         "admit_while_closed": 0.3,
     },
-    {"name": "Hollin", "beds": 12, "closure_threshold": 11, "incoming_threshold": 9, "reopening_gap": 2},
+    {"name": "Hollin", "beds": 12, "closure_threshold": 11, "reopening_gap": 2, "stay_factor": 0.8},
     {"name": "Marsett", "beds": 16, "review_hours": 8, "closure_threshold": 15, "referral_order": ["Fenwick", "Hollin"]},
 ]  # fmt: skip
 DAY_OF_WEEK = [1.2, 1.1, 1.0, 1.0, 1.1, 0.8, 0.8]
 HOUR_OF_DAY = [1] * 8 + [3] * 10 + [2] * 6
-# Home, arrivals a day, mean stay in days: three laws, and two groups of one home with different means.
+# Home, arrivals a day, stay.
 GROUPS = {
     "Fenwick": ("Fenwick", 2.2, {"family": "lognormal", "mean_days": 3.0, "cv": 1.2}),
     "Hollin": ("Hollin", 4.0, {"family": "gamma", "mean_days": 2.5, "cv": 0.8}),
@@ -63,19 +63,20 @@ def days_owed(record, mean_stay=MEAN_STAY, factor=STAY_FACTOR, extra_days=EXTRA_
 
 
 def little_broken(records, **belief):
-    """The places of the units in which Little's law does not hold under these beliefs."""
+    """The units, or "network", in which Little's law does not hold under these beliefs."""
     gaps = np.array([occupied_days(record) - days_owed(record, **belief) for record in records])
-    return [unit for unit in range(len(UNITS)) if differs(gaps[:, unit])]
+    places = {unit["name"]: gaps[:, place] for place, unit in enumerate(UNITS)} | {"network": gaps.sum(axis=1)}
+    return [place for place, values in places.items() if differs(values)]
 
 
 class TestLittle:
-    def test_every_unit(self, simulated):
+    def test_every_unit_and_the_network(self, simulated):
         _, records = simulated
         assert not little_broken(records)
 
-    def test_a_mean_stay_two_per_cent_off_is_refuted(self, simulated):
+    def test_a_mean_stay_three_per_cent_off_is_refuted(self, simulated):
         _, records = simulated
-        assert little_broken(records, mean_stay=1.02 * MEAN_STAY)
+        assert little_broken(records, mean_stay=1.03 * MEAN_STAY)
 
     def test_forgotten_extra_days_are_refuted(self, simulated):
         _, records = simulated
@@ -118,13 +119,12 @@ class TestNobodyIsLost:
             assert not record.occupancy_days.sum(axis=0)[beyond].any()
             assert record.occupancy_days.sum(axis=(0, 2)) == pytest.approx(DAYS[1], rel=1e-12)
 
-    def test_a_lost_patient_is_noticed(self, simulated):
+    def test_a_patient_too_many_is_noticed(self, simulated):
         _, (record, *_) = simulated
+        one = np.array([1, 0, 0])
         assert not record.faults(DAYS[1])
-        lost = dataclasses.replace(record, turned_away=np.maximum(record.turned_away - 1, 0))
-        kept = dataclasses.replace(record, admitted=record.admitted + np.eye(len(UNITS), dtype=int))
-        assert kept.faults(DAYS[1])
-        assert lost.faults(DAYS[1]) or not record.turned_away.any()
+        assert dataclasses.replace(record, turned_away=record.turned_away + one).faults(DAYS[1])
+        assert dataclasses.replace(record, admitted=record.admitted + np.diag(one)).faults(DAYS[1])
 
 
 class TestFlows:
@@ -135,7 +135,7 @@ class TestFlows:
         facts = {(name, "arrivals_per_day"): per_day for name, per_day, _ in GROUPS.values()}
         facts["network", "arrivals_per_day"] = sum(per_day for _, per_day, _ in GROUPS.values())
         assert not refuted(facts, scenario, records=records)
-        assert refuted({place: 1.02 * value for place, value in facts.items()}, scenario, records=records)
+        assert refuted({place: 1.03 * value for place, value in facts.items()}, scenario, records=records)
 
     def test_throughput_is_what_arrives_and_is_not_turned_away(self, simulated):
         """Transfers on the road at the two ends of the window cancel on average."""

@@ -11,11 +11,11 @@ from hypothesis import given, settings
 from sim import reference
 from sim.lowering import HOME_BED, TURNED_AWAY
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED
+from sim.replicate import ENGINES
 from tests.builders import Case, traced
 from tests.judge import Account, Judge, differences
 from tests.strategies import cases
 
-ENGINES = {"reference": reference.run}
 each_engine = pytest.mark.parametrize("run", ENGINES.values(), ids=ENGINES.keys())
 many = settings(deadline=None, max_examples=120)
 some = settings(deadline=None, max_examples=40)

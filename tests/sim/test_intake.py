@@ -1,4 +1,4 @@
-"""The draws of a replication: their addresses, what leaves them alone, independence, and the intake as CSV."""
+"""The draws of a replication: their addresses, what leaves them alone, independence, the intake as CSV."""
 
 from __future__ import annotations
 
