@@ -51,7 +51,7 @@ def ratio_estimate(totals: np.ndarray, bases: np.ndarray, confidence: float, *, 
     """
     totals, bases = np.asarray(totals, float), np.asarray(bases, float)
     if bases.sum() <= 0:
-        return Estimate(None, reason="no arrivals to take a share of")
+        return Estimate(None, reason="nothing to take a share of")
     ratio = float(totals.sum() / bases.sum())
     influence = (totals - ratio * bases) / bases.mean()
     return _estimate(ratio, ratio + influence, confidence, comparisons)

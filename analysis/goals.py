@@ -23,12 +23,11 @@ Sense = Literal["cost", "gain"]
 class TargetGoal:
     """Every unit wants its utilisation at its own target.
 
-    targets, beds: (units,). shape: `absolute` is |E U - T|, `squared` is E (U over a judged period - T)^2.
+    targets: (units,). shape: `absolute` is |E U - T|, `squared` is E (U over a judged period - T)^2.
     judged_days: length of a judged period, for `squared`.
     """
 
     targets: np.ndarray
-    beds: np.ndarray
     shape: Literal["absolute", "squared"]
     judged_days: float
     sense: Sense = "cost"
@@ -56,12 +55,11 @@ class TargetGoal:
         if self.shape == "squared":
             values = self._squared(sums)
             return values.mean(axis=0), values
-        utilisation = sums["occupied_days"] / sums["bed_days"]
-        point = np.abs(utilisation.mean(axis=0) - self.targets)
-        n = len(utilisation)
-        if n < 2:
+        occupied, staffed = sums["occupied_days"], sums["bed_days"]
+        point = np.abs(_utilisation(occupied.sum(axis=0), staffed.sum(axis=0)) - self.targets)
+        if len(occupied) < 2:
             return point, point[None]
-        others = (utilisation.sum(axis=0) - utilisation) / (n - 1)
+        others = _utilisation(occupied.sum(axis=0) - occupied, staffed.sum(axis=0) - staffed)
         return point, jackknife(point, np.abs(others - self.targets))
 
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
@@ -69,7 +67,7 @@ class TargetGoal:
         if self.shape == "squared":
             low, high = _t_interval(self._squared(sums), confidence)
             return np.maximum(low, 0), high
-        low, high = _t_interval(sums["occupied_days"] / sums["bed_days"], confidence)
+        low, high = _ratio_interval(sums["occupied_days"], sums["bed_days"], confidence)
         below, above = low - self.targets, high - self.targets
         nearest = np.where((below <= 0) & (above >= 0), 0.0, np.minimum(np.abs(below), np.abs(above)))
         return nearest, np.maximum(np.abs(below), np.abs(above))
@@ -77,8 +75,22 @@ class TargetGoal:
     def _squared(self, sums: Mapping[str, np.ndarray]) -> np.ndarray:
         """Mean over judged periods of the squared distance, (replications, cells, units)."""
         whole = int(round(sums["days"].flat[0] / self.judged_days, 9))
-        periods = sums["period_occupied_days"][:, :, :whole] / (self.beds * self.judged_days)
+        periods = _utilisation(sums["period_occupied_days"][:, :, :whole], sums["period_bed_days"][:, :, :whole])
         return np.square(periods - self.targets).mean(axis=2)
+
+
+def _utilisation(occupied: np.ndarray, staffed: np.ndarray) -> np.ndarray:
+    """Occupied over staffed bed-time; 0 where no bed was ever staffed."""
+    return np.divide(occupied, staffed, out=np.zeros(np.shape(occupied)), where=staffed > 0)
+
+
+def _ratio_interval(
+    occupied: np.ndarray, staffed: np.ndarray, confidence: float
+) -> tuple[np.ndarray, np.ndarray]:
+    """Student's interval for a ratio of means over replications, by the delta method."""
+    ratio = _utilisation(occupied.sum(axis=0), staffed.sum(axis=0))
+    base = np.maximum(staffed.mean(axis=0), np.finfo(float).tiny)
+    return _t_interval(ratio + (occupied - ratio * staffed) / base, confidence)
 
 
 def _t_interval(values: np.ndarray, confidence: float) -> tuple[np.ndarray, np.ndarray]:
@@ -106,7 +118,6 @@ def goal_of(scenario: Scenario) -> TargetGoal:
     goal = scenario.game.goal
     return TargetGoal(
         targets=np.array([unit.target_utilisation for unit in scenario.units]),
-        beds=np.array([unit.beds for unit in scenario.units], float),
         shape=goal.shape,
         judged_days=goal.judged_over_days,
     )

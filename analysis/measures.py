@@ -1,7 +1,7 @@
 """The measures of a unit and of the network, defined once: each is a sum from the record over a base.
 
-Rates are per day, shares run from 0 to 1. The base of most measures is a constant (bed days, days); that of
-the shares by home is the number of arrivals, so those are ratios of two random sums.
+Rates are per day, shares run from 0 to 1. The base of most measures is a constant (days); staffed bed-time
+and the number of arrivals may be random, so measures are ratios of two sums.
 """
 
 from __future__ import annotations
@@ -25,11 +25,6 @@ class Measure:
     base: str
     reads: str
     by_home: bool = False
-
-    @property
-    def is_share_of_patients(self) -> bool:
-        """Whether the base is itself a random count."""
-        return self.base == "arrived"
 
 
 UNIT_MEASURES = (
@@ -75,8 +70,8 @@ def _gate_days(record: Record, counts: Callable[[int], int]) -> np.ndarray:
 def unit_sums(records: Sequence[Record], beds: np.ndarray, measured_days: float) -> Sums:
     """Every sum that a unit's measures need, per replication and unit: name -> (replications, units).
 
-    Besides: `occupancy_days` (replications, units, most beds + 1), and `period_occupied_days`
-    (replications, periods, units).
+    beds: (units,), staffed where the record does not say otherwise. Besides: `occupancy_days` (replications,
+    units, most beds + 1), and `period_occupied_days` and `period_bed_days` (replications, periods, units).
     """
     sums: Sums = {name: np.stack([total(record) for record in records]).astype(float) for name, total in _TOTALS.items()}
     occupancy = np.stack([record.occupancy_days for record in records])
@@ -84,10 +79,20 @@ def unit_sums(records: Sequence[Record], beds: np.ndarray, measured_days: float)
     sums["period_occupied_days"] = occupancy @ levels
     sums["occupancy_days"] = occupancy.sum(axis=1)
     sums["occupied_days"] = sums["occupancy_days"] @ levels
-    shape = sums["arrived"].shape
-    sums["days"] = np.full(shape, measured_days)
-    sums["bed_days"] = np.broadcast_to(beds * measured_days, shape).astype(float)
+    sums["days"] = np.full(sums["arrived"].shape, measured_days)
+    sums["period_bed_days"] = np.stack([_bed_days(record, beds) for record in records])
+    if records[0].staffed_days is None:
+        sums["bed_days"] = np.broadcast_to(beds * measured_days, sums["days"].shape).astype(float)
+    else:
+        sums["bed_days"] = sums["period_bed_days"].sum(axis=1)
     return sums
+
+
+def _bed_days(record: Record, beds: np.ndarray) -> np.ndarray:
+    """Staffed bed-time by period and unit, (periods, units)."""
+    if record.staffed_days is None:
+        return record.occupancy_days.sum(axis=-1) * beds
+    return record.staffed_days @ np.arange(record.staffed_days.shape[-1])
 
 
 def network_sums(sums: Sums) -> Sums:

@@ -155,7 +155,7 @@ def simulated_table(
     outcomes = Outcomes(
         **{name: rate.mean(axis=0) for name, rate in a_day.items() if name != "closed_free_days"},
         closed_free=a_day["closed_free_days"].mean(axis=0),
-        utilisation=(sums["occupied_days"] / sums["bed_days"]).mean(axis=0),
+        utilisation=sums["occupied_days"].mean(axis=0) / np.maximum(sums["bed_days"].mean(axis=0), 1e-300),
     )
     shape = profiles.shape
     return PayoffTable(

@@ -66,9 +66,7 @@ def of_unit(sums: Sums, place: int) -> Sums:
 
 def estimate_measure(measure: Measure, sums: Sums, confidence: float, *, comparisons: int = 1) -> Estimate:
     """A measure over replications, with Student's interval."""
-    if measure.is_share_of_patients:
-        return ratio_estimate(sums[measure.total], sums[measure.base], confidence, comparisons=comparisons)
-    return mean_estimate(combine(measure, sums), confidence, comparisons=comparisons)
+    return ratio_estimate(sums[measure.total], sums[measure.base], confidence, comparisons=comparisons)
 
 
 def _occupancy(days: np.ndarray, scenario: Scenario, confidence: float) -> list[Estimate]:

@@ -20,9 +20,13 @@ import numpy as np
 
 from sim.demand import arrival_times
 from sim.lowering import GroupDraws, IntakePlan
+from sim.rules import out_of_use
+from sim.rules.out_of_use import Staffing
+from sim.rules.soft_closure import GATE
+from sim.rules.transfer import DELAY
 
-# Purposes are numbered once for all; a new one takes the next number.
-ARRIVAL, STAY, DELAY, GATE = 1, 2, 3, 4
+# Purposes are numbered once for all; those of optional rules stand in their declarations (`sim/rules`).
+ARRIVAL, STAY = 1, 2
 
 UniformSource = Callable[[int], np.ndarray]
 
@@ -33,7 +37,7 @@ class Intake:
 
     arrival: days from the start of the warm-up. group, home: places in scenario order.
     stay: days by stay class, (classes, patients). delay: days on the road. gate: in (0, 1).
-    drawn_stay: days before any unit's stay factor.
+    drawn_stay: days before any unit's stay factor. staffing: None where all beds are always staffed.
     """
 
     arrival: np.ndarray
@@ -43,6 +47,7 @@ class Intake:
     stay: np.ndarray
     delay: np.ndarray
     gate: np.ndarray
+    staffing: Staffing | None = None
 
     def __len__(self) -> int:
         return len(self.arrival)
@@ -50,7 +55,10 @@ class Intake:
     @cached_property
     def hash(self) -> str:
         """SHA-256 over every array, names and shapes included."""
-        return hash_arrays({field.name: getattr(self, field.name) for field in fields(self)})
+        arrays = {field.name: getattr(self, field.name) for field in fields(self) if field.name != "staffing"}
+        if self.staffing is not None:
+            arrays |= {f"staffing_{name}": array for name, array in vars(self.staffing).items()}
+        return hash_arrays(arrays)
 
 
 def hash_arrays(arrays: dict[str, np.ndarray]) -> str:
@@ -94,7 +102,17 @@ def draw_intake(plan: IntakePlan, replication: int) -> Intake:
         stay=np.stack([stay * factor for factor in plan.stay_factors]),
         delay=delay[order],
         gate=gate[order],
+        staffing=_draw_staffing(plan, replication),
     )
+
+
+def _draw_staffing(plan: IntakePlan, replication: int) -> Staffing | None:
+    if plan.outages is None:
+        return None
+    return out_of_use.timetable(
+        plan.outages, plan.staffed_beds, plan.horizon_days,
+        lambda address, purpose: uniforms(plan.seed, replication, address, purpose),
+    )  # fmt: skip
 
 
 def _draw_group(plan: IntakePlan, place: int, replication: int) -> tuple[np.ndarray, ...]:

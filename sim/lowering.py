@@ -5,17 +5,25 @@ Everything that an engine would otherwise have to multiply or look up by name is
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
 from sim.demand import WeeklyPattern
+from sim.rules import RULES
+from sim.rules.last_resort import ANY_BED, HOME_BED, LAST_RESORTS, TURNED_AWAY
+from sim.rules.out_of_use import Outage
+from sim.rules.reviews import Reviews
 from sim.scenario import Policy, Scenario
 from sim.stays import Distribution
 
-LAST_RESORTS = ("turned_away", "home_bed", "any_bed")
-TURNED_AWAY, HOME_BED, ANY_BED = range(3)
 NOBODY = -1
+
+__all__ = [
+    "ANY_BED", "HOME_BED", "LAST_RESORTS", "NOBODY", "TURNED_AWAY", "GroupDraws", "IntakePlan", "Network", "Rules",
+    "lower_network", "lower_policy", "plan_intake", "stay_factors", "window_edges",
+]  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -44,22 +52,19 @@ class Rules:
     """One policy. A gate closes at `load >= closes` and reopens at `load <= reopens`.
 
     own_closes, own_reopens, incoming_closes, incoming_reopens: loads, (units,).
-    admit_while_closed: chance of admission at the own closed gate, (units,).
-    reviewed: whether the unit's gates may change only at reviews, (units,).
-    review_times, review_units: every review in the order it happens.
-    referral_order: (units, units - 1), padded with -1. last_resort: index into LAST_RESORTS.
+    referral_order: (units, units - 1), padded with -1. last_resort: a place in LAST_RESORTS.
+    admit_while_closed: chance of admission at the own closed gate, (units,); None where it is 0 everywhere.
+    reviews: None where all gates act at once.
     """
 
     own_closes: np.ndarray
     own_reopens: np.ndarray
     incoming_closes: np.ndarray
     incoming_reopens: np.ndarray
-    admit_while_closed: np.ndarray
-    reviewed: np.ndarray
-    review_times: np.ndarray
-    review_units: np.ndarray
     referral_order: np.ndarray
     last_resort: int
+    admit_while_closed: np.ndarray | None = None
+    reviews: Reviews | None = None
 
 
 @dataclass(frozen=True)
@@ -77,15 +82,17 @@ class GroupDraws:
 class IntakePlan:
     """Everything that the draws of a replication depend on.
 
-    stay_factors: one per stay class. delay_hours: None where transfers take no time. horizon_days: arrivals
-    fall before it.
+    stay_factors: one per stay class. horizon_days: arrivals fall before it. delay_hours: None where transfers
+    take no time. outages: None where all beds are always staffed; staffed_beds: (units,), undisturbed.
     """
 
     seed: int
     groups: tuple[GroupDraws, ...]
     stay_factors: tuple[float, ...]
-    delay_hours: Distribution | None
-    horizon_days: float = field(default=0.0)
+    horizon_days: float
+    delay_hours: Distribution | None = None
+    outages: tuple[Outage, ...] | None = None
+    staffed_beds: tuple[int, ...] = ()
 
 
 def lower_network(scenario: Scenario) -> Network:
@@ -95,9 +102,14 @@ def lower_network(scenario: Scenario) -> Network:
         unit_names=scenario.unit_names,
         beds=np.array([unit.beds for unit in scenario.units], np.int64),
         stay_class=np.array([factors.index(unit.stay_factor) for unit in scenario.units], np.int64),
-        extra_days=float(scenario.diversion.extra_days),
         edges=window_edges(scenario),
+        **_lowered("lower_network", scenario),
     )
+
+
+def _lowered(how: str, *of: object) -> dict[str, Any]:
+    """What every rule adds, by its function of that name."""
+    return {name: value for rule in RULES for name, value in getattr(rule, how)(*of).items()}
 
 
 def stay_factors(scenario: Scenario) -> tuple[float, ...]:
@@ -119,39 +131,11 @@ def window_edges(scenario: Scenario) -> np.ndarray:
 def lower_policy(scenario: Scenario, policy: Policy) -> Rules:
     """The rules of one policy, in scenario order."""
     rules = [policy.units[name] for name in scenario.unit_names]
-    own = np.array([unit.closure_threshold for unit in rules], np.int64)
-    incoming = np.array([unit.incoming for unit in rules], np.int64)
-    gap = np.array([unit.reopening_gap for unit in rules], np.int64)
-    hours = [unit.review_hours for unit in rules]
-    times, units = review_timetable(hours, scenario.run.warm_up_days + scenario.run.measured_days)
     return Rules(
-        own_closes=own,
-        own_reopens=np.maximum(0, own - gap),
-        incoming_closes=incoming,
-        incoming_reopens=np.maximum(0, incoming - gap),
-        admit_while_closed=np.array([unit.admit_while_closed for unit in rules], float),
-        reviewed=np.array([hour > 0 for hour in hours]),
-        review_times=times,
-        review_units=units,
+        own_closes=np.array([unit.closure_threshold for unit in rules], np.int64),
         referral_order=_referral_places(scenario, rules),
-        last_resort=LAST_RESORTS.index(policy.when_all_closed),
+        **_lowered("lower_policy", scenario, policy),
     )
-
-
-def review_timetable(review_hours: list[float], horizon_days: float) -> tuple[np.ndarray, np.ndarray]:
-    """Times (days) and units of all reviews before the horizon; review k of a unit is at (k * hours) / 24."""
-    times, units = [], []
-    for unit, hours in enumerate(review_hours):
-        if hours > 0:
-            count = int(horizon_days * 24 / hours) + 1
-            at = (np.arange(1, count + 1) * hours) / 24
-            times.append(at[at < horizon_days])
-            units.append(np.full(len(times[-1]), unit, np.int64))
-    if not times:
-        return np.empty(0), np.empty(0, np.int64)
-    all_times, all_units = np.concatenate(times), np.concatenate(units)
-    order = np.lexsort((all_units, all_times))
-    return all_times[order], all_units[order]
 
 
 def _referral_places(scenario: Scenario, rules: list) -> np.ndarray:
@@ -170,11 +154,10 @@ def plan_intake(scenario: Scenario) -> IntakePlan:
         )
         for group in scenario.patients
     )  # fmt: skip
-    delay = scenario.diversion.delay
     return IntakePlan(
         seed=scenario.run.seed,
         groups=tuple(groups),
         stay_factors=stay_factors(scenario),
-        delay_hours=None if delay is None else delay.distribution(),
         horizon_days=scenario.run.warm_up_days + scenario.run.measured_days,
+        **_lowered("plan", scenario),
     )

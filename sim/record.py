@@ -24,6 +24,7 @@ class Record:
     diverted: transfers decided, by home and by unit, (units, units).
     admitted: beds occupied, by home and by treating unit, (units, units).
     on_road_at_start, on_road_at_end: beds reserved, by unit, (units,).
+    staffed_days: days with n beds staffed, (periods, units, most beds + 1); None where all always are.
     """
 
     occupancy_days: np.ndarray
@@ -34,11 +35,17 @@ class Record:
     admitted: np.ndarray
     on_road_at_start: np.ndarray
     on_road_at_end: np.ndarray
+    staffed_days: np.ndarray | None = None
 
     @cached_property
     def hash(self) -> str:
         """SHA-256 over every array, names and shapes included."""
-        return hash_arrays({field.name: getattr(self, field.name) for field in fields(self)})
+        return hash_arrays(self.arrays())
+
+    def arrays(self) -> dict[str, np.ndarray]:
+        """Every array by name; those of rules that are off are left out."""
+        arrays = {field.name: getattr(self, field.name) for field in fields(self)}
+        return {name: array for name, array in arrays.items() if array is not None}
 
     def faults(self, measured_days: float) -> list[str]:
         """Broken invariants in words; empty for a sound record."""
@@ -48,10 +55,13 @@ class Record:
             admitted + self.turned_away.sum() + self.on_road_at_end.sum()
         ):
             broken.append("arrived + on the road at the start differs from admitted + turned away + on the road")
-        for name, days in (("occupancy", self.occupancy_days.sum(axis=(0, 2))), ("gate", self.gate_days.sum(axis=1))):
+        for name, array in self.arrays().items():
+            if not name.endswith("_days"):
+                continue
+            days = array.sum(axis=tuple(axis for axis in range(array.ndim) if axis != array.ndim - 2))
             if not np.allclose(days, measured_days, rtol=1e-9, atol=1e-9):
-                broken.append(f"{name} days do not add up to the measured days")
-        if any(np.any(getattr(self, field.name) < 0) for field in fields(self)):
+                broken.append(f"{name.removesuffix('_days')} days do not add up to the measured days")
+        if any(np.any(array < 0) for array in self.arrays().values()):
             broken.append("a count or a time is negative")
         if np.any(np.diagonal(self.diverted)):
             broken.append("a patient was diverted to the own home")

@@ -2,24 +2,26 @@
 
 A run is a pure function of a lowered network, one policy's rules and an intake. Nothing is drawn and nothing
 is multiplied here. Events happen in the order (time, kind, sequence), where the sequence is the patient's
-index in the intake, or the unit's for reviews; what is scheduled for now happens next, whatever its kind.
+index in the intake, or the unit's for reviews and changes of staffed beds; what is scheduled for now happens next, whatever its kind.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from heapq import heappush
-from itertools import pairwise
 
 import numpy as np
 import simpy
 
 from sim.intake import Intake
-from sim.lowering import ANY_BED, NOBODY, TURNED_AWAY, Network, Rules
+from sim.lowering import ANY_BED, NOBODY, TURNED_AWAY, IntakePlan, Network, Rules
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
+from sim.rules.out_of_use import STAFFING
+from sim.rules.reviews import REVIEW
+from sim.rules.transfer import TRANSFER_ARRIVAL
 from sim.trace import Trace
 
-WINDOW_EDGE, DISCHARGE, TRANSFER_ARRIVAL, REVIEW, NEW_ARRIVAL = 1, 10, 20, 40, 50
+WINDOW_EDGE, DISCHARGE, NEW_ARRIVAL = 1, 10, 50
 
 
 class Calendar(simpy.Environment):
@@ -44,8 +46,9 @@ class Unit:
         self.own_closes, self.own_reopens = int(rules.own_closes[place]), int(rules.own_reopens[place])
         self.incoming_closes = int(rules.incoming_closes[place])
         self.incoming_reopens = int(rules.incoming_reopens[place])
-        self.admit_while_closed = float(rules.admit_while_closed[place])
-        self.reviewed = bool(rules.reviewed[place])
+        soft = rules.admit_while_closed
+        self.admit_while_closed = 0.0 if soft is None else float(soft[place])
+        self.reviewed = rules.reviews is not None and bool(rules.reviews.reviewed[place])
         self.asks = [int(other) for other in rules.referral_order[place] if other != NOBODY]
         self.occupied = self.reserved = 0
         self.own_open, self.incoming_open = self.own_closes > 0, self.incoming_closes > 0
@@ -78,29 +81,35 @@ class Unit:
 
 
 class Tally:
-    """The record in the making. Before the window opens nothing is counted."""
+    """The record in the making. Before the window opens nothing is counted.
 
-    def __init__(self, units: list[Unit], periods: int, most_beds: int) -> None:
+    staffed_days: None where all beds are always staffed.
+    """
+
+    def __init__(self, units: list[Unit], periods: int, most_beds: int, *, staffing_changes: bool) -> None:
         self.units, n = units, len(units)
         self.open = False
         self.period = 0
         self.occupancy_days = np.zeros((periods, n, most_beds + 1))
+        self.staffed_days = np.zeros((periods, n, most_beds + 1)) if staffing_changes else None
         self.gate_days = np.zeros((n, GATE_STATES))
         self.arrived, self.turned_away = np.zeros(n, np.int64), np.zeros(n, np.int64)
         self.diverted, self.admitted = np.zeros((n, n), np.int64), np.zeros((n, n), np.int64)
-        self.occupied_since, self.gates_since = [0.0] * n, [0.0] * n
+        self.occupied_since, self.staffed_since, self.gates_since = [0.0] * n, [0.0] * n, [0.0] * n
         self.gate_state = [unit.gate_state for unit in units]
 
     def begin(self, now: float) -> None:
         """The measured window opens."""
         self.open = True
-        self.occupied_since, self.gates_since = [now] * len(self.units), [now] * len(self.units)
+        n = len(self.units)
+        self.occupied_since, self.staffed_since, self.gates_since = [now] * n, [now] * n, [now] * n
         self.on_road_at_start = np.array([unit.reserved for unit in self.units], np.int64)
 
     def close_period(self, now: float) -> None:
         """Cuts every integral at a window edge."""
         for unit in self.units:
             self.occupied_changes(unit, now)
+            self.staffed_changes(unit, now)
             self.add_gate_time(unit, now)
         self.period += 1
 
@@ -109,6 +118,12 @@ class Tally:
         if self.open:
             self.occupancy_days[self.period, unit.place, unit.occupied] += now - self.occupied_since[unit.place]
             self.occupied_since[unit.place] = now
+
+    def staffed_changes(self, unit: Unit, now: float) -> None:
+        """To be called before the number of staffed beds changes."""
+        if self.open and self.staffed_days is not None:
+            self.staffed_days[self.period, unit.place, unit.beds] += now - self.staffed_since[unit.place]
+            self.staffed_since[unit.place] = now
 
     def gates_may_have_changed(self, unit: Unit, now: float) -> None:
         """To be called after a change of load or gates; adds time only where the gate state did change."""
@@ -132,18 +147,19 @@ class Model:
     """The units, their patients and the rules by which a patient finds a bed."""
 
     def __init__(self, network: Network, rules: Rules, intake: Intake, trace: Trace | None) -> None:
-        self.network, self.rules, self.trace = network, rules, trace
+        self.network, self.rules, self.staffing, self.trace = network, rules, intake.staffing, trace
         self.arrival, self.home = intake.arrival.tolist(), intake.home.tolist()
         self.stay, self.delay, self.gate = intake.stay.tolist(), intake.delay.tolist(), intake.gate.tolist()
         self.calendar = Calendar()
         self.units = [Unit(place, network, rules) for place in range(len(network.beds))]
-        self.tally = Tally(self.units, len(network.edges) - 1, int(network.beds.max()))
+        periods, most_beds = len(network.edges) - 1, int(network.beds.max())
+        self.tally = Tally(self.units, periods, most_beds, staffing_changes=self.staffing is not None)
         self.discharges = [self._discharge_from(unit) for unit in self.units]
         self.transfer_arrivals = [self._transfer_arrival_at(unit) for unit in self.units]
 
     def run(self) -> Record:
         """Runs to the end of the measured window; what is due at its end does not happen."""
-        for process in (self.window(), self.new_arrivals(), self.reviews()):
+        for process in (self.window(), self.new_arrivals(), self.reviews(), self.staffing_changes()):
             self.calendar.process(process)
         end = float(self.network.edges[-1])
         self.calendar.run(until=end)
@@ -167,10 +183,25 @@ class Model:
 
     def reviews(self) -> Iterator[simpy.Event]:
         """Units with review hours set their gates only now."""
-        for time, place in zip(self.rules.review_times.tolist(), self.rules.review_units.tolist(), strict=True):
+        reviews = self.rules.reviews
+        if reviews is None:
+            return
+        for time, place in zip(reviews.times.tolist(), reviews.units.tolist(), strict=True):
             yield self.calendar.at(time, REVIEW, place)
             self.note("review", NOBODY, place)
             self.set_gates(self.units[place])
+
+    def staffing_changes(self) -> Iterator[simpy.Event]:
+        """Beds go out of use and come back; nobody leaves for it, and the thresholds stay as they are."""
+        staffing = self.staffing
+        if staffing is None:
+            return
+        for time, place, beds in zip(*(column.tolist() for column in vars(staffing).values()), strict=True):
+            yield self.calendar.at(time, STAFFING, place)
+            self.tally.staffed_changes(self.units[place], time)
+            self.units[place].beds = beds
+            self.note("staffing", NOBODY, place)
+            self.tally.gates_may_have_changed(self.units[place], time)
 
     def arrive(self, patient: int) -> None:
         """A patient falls ill: admitted at home, transferred, or turned away."""
@@ -282,6 +313,7 @@ class Model:
             turned_away=tally.turned_away, diverted=tally.diverted, admitted=tally.admitted,
             on_road_at_start=tally.on_road_at_start,
             on_road_at_end=np.array([unit.reserved for unit in self.units], np.int64),
+            staffed_days=tally.staffed_days,
         )  # fmt: skip
 
 
@@ -291,3 +323,12 @@ def run(network: Network, rules: Rules, intake: Intake, *, trace: Trace | None =
     network, rules: from `sim.lowering`. intake: from `sim.intake`. trace: filled with every event if given.
     """
     return Model(network, rules, intake, trace).run()
+
+
+def run_table(network: Network, rules: Sequence[Rules], intake: Intake) -> list[Record]:
+    """One replication under every policy."""
+    return [run(network, one, intake) for one in rules]
+
+
+def warm(network: Network, rules: Sequence[Rules], plan: IntakePlan) -> None:
+    """Nothing has to happen before this engine runs."""

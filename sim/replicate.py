@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import itertools
 import time
+import traceback
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 
-from sim import reference
+from sim import engines
 from sim.errors import RunError
 from sim.intake import Intake, draw_intake
 from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy, plan_intake
@@ -15,9 +17,9 @@ from sim.scenario import Policy, Scenario
 from sim.trace import Trace
 from sim.workers import ThisProcess, Workers
 
-ENGINES = {"reference": reference.run}
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
+TASKS_PER_WORKER = 4
 
 
 @dataclass(frozen=True)
@@ -44,6 +46,14 @@ class Failure:
         return f"seed {self.seed}, replication {self.replication}, {cells}: {self.traceback.strip().splitlines()[-1]}"
 
 
+@dataclass(frozen=True)
+class TaskSize:
+    """How many replications, and how many policies of each, make a task."""
+
+    replications: int = 1
+    cells: int | None = None
+
+
 def replicate(
     scenario: Scenario,
     policies: Sequence[Policy],
@@ -51,40 +61,75 @@ def replicate(
     *,
     engine: str = DEFAULT_ENGINE,
     workers: Workers | None = None,
-    cells_per_task: int | None = None,
+    task_size: TaskSize | None = None,
 ) -> Iterator[list[Run] | Failure]:
     """Runs every replication under every policy; all policies of a replication meet the same intake.
 
-    replications: their numbers, from 0; each can be had alone. cells_per_task: how many policies of one
-    replication make a task (default: all). Yields the runs of each task as it finishes, in any order; the
-    numbers depend neither on the workers nor on the tasks' size.
+    replications: their numbers, from 0; each can be had alone. task_size: default one replication under all
+    policies. Yields the runs of one replication's block of policies at a time as they finish, in any order;
+    the numbers depend neither on the workers nor on the tasks' size.
     """
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
-    size = cells_per_task or len(rules)
+    size = task_size or TaskSize()
+    block = size.cells or len(rules)
     tasks = (
-        ((replication, first), (network, plan, replication, first, rules[first : first + size], engine))
-        for replication in replications
-        for first in range(0, len(rules), size)
+        ((batch, first), (network, plan, batch, first, rules[first : first + block], engine))
+        for batch in _batches(replications, size.replications)
+        for first in range(0, len(rules), block)
     )
-    for reply in (workers or ThisProcess()).run(run_cells, tasks):
+    for reply in (workers or ThisProcess()).run(run_batch, tasks):
         if reply.failure is None:
-            yield reply.value
+            yield from reply.value
         else:
-            replication, first = reply.key
-            cells = tuple(range(first, min(first + size, len(rules))))
-            yield Failure(plan.seed, replication, cells, reply.failure)
+            batch, first = reply.key
+            cells = tuple(range(first, min(first + block, len(rules))))
+            yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
 
 
-def run_cells(
+def _batches(numbers: Iterable[int], size: int) -> Iterator[tuple[int, ...]]:
+    """The numbers in tuples of `size`, the last one perhaps shorter."""
+    numbers = iter(numbers)
+    while batch := tuple(itertools.islice(numbers, size)):
+        yield batch
+
+
+def run_batch(
+    network: Network, plan: IntakePlan, replications: Sequence[int], first: int, rules: Sequence[Rules], engine: str
+) -> list[list[Run] | Failure]:
+    """Consecutive cells of several replications; `first` is the number of the first cell.
+
+    A run that fails costs only itself.
+    """
+    replies: list[list[Run] | Failure] = []
+    for replication in replications:
+        try:
+            replies.append(_run_cells(network, plan, replication, first, rules, engine))
+        except Exception:
+            replies += _run_each(network, plan, replication, first, rules, engine)
+    return replies
+
+
+def _run_cells(
     network: Network, plan: IntakePlan, replication: int, first: int, rules: Sequence[Rules], engine: str
 ) -> list[Run]:
-    """The runs of consecutive cells of one replication; `first` is the number of the first cell."""
     intake = draw_intake(plan, replication)
+    records = engines.load(engine).run_table(network, rules, intake)
     return [
-        Run(replication, first + place, _sound(ENGINES[engine](network, one, intake), network), intake.hash)
-        for place, one in enumerate(rules)
+        Run(replication, first + place, _sound(record, network), intake.hash) for place, record in enumerate(records)
     ]
+
+
+def _run_each(
+    network: Network, plan: IntakePlan, replication: int, first: int, rules: Sequence[Rules], engine: str
+) -> Iterator[list[Run] | Failure]:
+    """The cells one by one, so that only those at fault are lost."""
+    for place in range(len(rules)):
+        cell = first + place
+        try:
+            yield _run_cells(network, plan, replication, cell, rules[place : place + 1], engine)
+        except Exception:
+            yield Failure(plan.seed, replication, (cell,), traceback.format_exc())
 
 
 def _sound(record: Record, network: Network) -> Record:
@@ -99,24 +144,49 @@ def trace_replication(
 ) -> tuple[Trace, Intake]:
     """Every event of one replication, and the intake that it met."""
     intake, trace = draw_intake(plan_intake(scenario), replication), Trace()
-    ENGINES[engine](lower_network(scenario), lower_policy(scenario, policy), intake, trace=trace)
+    engines.load(engine).run(lower_network(scenario), lower_policy(scenario, policy), intake, trace=trace)
     return trace, intake
 
 
-def seconds_per_run(scenario: Scenario, policy: Policy, *, engine: str = DEFAULT_ENGINE) -> float:
-    """An estimate of one run's time on this machine, from a trial of a few simulated weeks."""
+@dataclass(frozen=True)
+class Pace:
+    """Seconds on this machine: to draw one replication's intake, and to run it under one policy."""
+
+    drawing: float
+    running: float
+
+    def seconds(self, replications: int, cells: int) -> float:
+        """One worker's time for so many replications of so many policies."""
+        return replications * (self.drawing + cells * self.running)
+
+    def task_size(self, replications: int, cells: int, workers: int) -> TaskSize:
+        """Tasks of about a second, and enough of them for every worker."""
+        block = max(1, min(cells, int(SECONDS_PER_TASK / max(self.running, 1e-9))))
+        if block < cells:
+            return TaskSize(1, block)
+        in_a_second = int(SECONDS_PER_TASK / max(self.seconds(1, cells), 1e-9))
+        fair = -(-replications // (TASKS_PER_WORKER * workers))
+        return TaskSize(max(1, min(in_a_second, fair)), cells)
+
+
+def pace_of(scenario: Scenario, policy: Policy, *, engine: str = DEFAULT_ENGINE) -> Pace:
+    """An estimate of the pace on this machine, from a trial: a few simulated weeks, or for the compiled engine a
+    whole run."""
     whole = scenario.run.warm_up_days + scenario.run.measured_days
-    trial_days = min(whole, 28.0)
-    trial = scenario.with_run(warm_up_days=0.0, measured_days=trial_days)
-    network, rules = lower_network(trial), lower_policy(trial, policy)
-    intake = draw_intake(plan_intake(trial), 0)
-    started, runs = time.perf_counter(), 0
-    while runs == 0 or (time.perf_counter() - started < 0.05 and runs < 20):
-        ENGINES[engine](network, rules, intake)
-        runs += 1
-    return (time.perf_counter() - started) / runs * whole / trial_days
+    days = whole if engine == "compiled" else min(whole, 28.0)
+    trial = scenario.with_run(warm_up_days=0.0, measured_days=days)
+    network, rules, plan = lower_network(trial), lower_policy(trial, policy), plan_intake(trial)
+    loaded = engines.load(engine)
+    loaded.warm(network, [rules], plan)
+    drawing = _seconds(lambda: draw_intake(plan, 0))
+    intake = draw_intake(plan, 0)
+    return Pace(drawing * whole / days, _seconds(lambda: loaded.run_table(network, [rules], intake)) * whole / days)
 
 
-def cells_per_task(seconds: float, cells: int) -> int:
-    """How many cells make a task of about a second."""
-    return max(1, min(cells, round(SECONDS_PER_TASK / max(seconds, 1e-6))))
+def _seconds(work) -> float:
+    """Time of one call, averaged over about a twentieth of a second."""
+    started, calls = time.perf_counter(), 0
+    while calls == 0 or (time.perf_counter() - started < 0.05 and calls < 20):
+        work()
+        calls += 1
+    return (time.perf_counter() - started) / calls

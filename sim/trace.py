@@ -10,7 +10,7 @@ from sim.lowering import NOBODY
 
 KINDS = (
     "arrival", "admission", "transfer", "turned away", "discharge", "review", "own gate opens", "own gate closes",
-    "incoming gate opens", "incoming gate closes",
+    "incoming gate opens", "incoming gate closes", "staffing",
 )  # fmt: skip
 
 
@@ -19,7 +19,7 @@ class Trace:
     """Events in the order they happened: (time in days, kind, patient or -1, unit's place).
 
     Kinds: arrival (at the home), admission, transfer (the decision, at the unit that will take the patient),
-    turned away, discharge, review, and each gate that opens or closes.
+    turned away, discharge, review, staffing (staffed beds change), and each gate that opens or closes.
     """
 
     events: list[tuple[float, str, int, int]] = field(default_factory=list)

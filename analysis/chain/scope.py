@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Iterator
 
 from sim.errors import BrimlineError
+from sim.rules import RULES
 from sim.scenario import Policy, Scenario
 
 
@@ -25,7 +26,8 @@ def refusals(scenario: Scenario, policy: Policy) -> tuple[str, ...]:
     scenario: the network. policy: the rules it is run by.
     Returns one sentence a reason, `KEY: rule, value`, rows of the file by their names.
     """
-    return (*_stays(scenario), *_arrivals(scenario), *_transfers(scenario), *_reviews(policy))
+    of_rules = (reason for rule in RULES for reason in rule.chain_refuses(scenario, policy))
+    return (*_stays(scenario), *_arrivals(scenario), *of_rules)
 
 
 def _stays(scenario: Scenario) -> Iterator[str]:
@@ -69,22 +71,3 @@ def _arrivals(scenario: Scenario) -> Iterator[str]:
             if weights is not None and min(weights) < max(weights):
                 span = f"weights from {min(weights):g} to {max(weights):g}"
                 yield f"patients.{group.group}.{key}: arrivals must come at a constant rate, got {span}"
-
-
-def _transfers(scenario: Scenario) -> Iterator[str]:
-    diversion = scenario.diversion
-    # No delay is ever negative, so a mean of 0 is a delay that is always 0.
-    hours = diversion.delay.distribution().mean() if diversion.delay is not None else 0.0
-    if hours > 0:
-        family = diversion.delay.family
-        yield f"diversion.delay: transfers must take no time, got {family} with a mean of {hours:g} hours"
-    if diversion.extra_days > 0:
-        got = f"got {diversion.extra_days:g} days"
-        yield f"diversion.extra_days: a transfer must not lengthen the stay, {got}"
-
-
-def _reviews(policy: Policy) -> Iterator[str]:
-    for name, rules in policy.units.items():
-        if rules.review_hours > 0:
-            got = f"got a review every {rules.review_hours:g} hours"
-            yield f"units.{name}.review_hours: gates must act at once, {got}"

@@ -13,15 +13,17 @@ def check(request: Request) -> None:
     """Read the scenario back as tables before anything runs: offered load, stays, rules, size, time, advice."""
     from analysis.chain import chain_size, refusals
     from analysis.command.provenance import provenance
+    from analysis.command.running import expected
     from sim.scenario.describe import describe
 
     scenario, policy = request.scenario, request.policy
-    document = describe(scenario, policy) | {"expected": _expected(request)}
+    document = describe(scenario, policy)
+    document["expected"] = expected(request, document["game"]["cells"])
     reasons = list(refusals(scenario, policy))
     document["exact_chain"] = {"in_scope": not reasons, "reasons": reasons, "states": chain_size(scenario, policy)}
     document["faults"] = []
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "check"))
+        write_result(prepare_folder(request.out), document, provenance(request, "check", engine=document["expected"]["engine"]))
     if request.as_json:
         put_json(document)
     else:
@@ -29,13 +31,6 @@ def check(request: Request) -> None:
 
 
 command = scenario_command(check)
-
-
-def _expected(request: Request) -> dict[str, Any]:
-    """Time and memory of `simulate` and `game`, from a short trial run on this machine."""
-    from analysis.command.running import expected
-
-    return expected(request)
 
 
 def _show(document: dict[str, Any]) -> None:
@@ -63,14 +58,13 @@ def _show_units(units: dict[str, Any]) -> None:
         ],
     )  # fmt: skip
     put_table(
-        "Rules",
-        ("unit", "closes at", "to others at", "gap", "admits while closed", "review (h)", "refers to"),
+        "Closure thresholds (load: beds occupied or reserved) and referral orders",
+        ("unit", "closes at", "to others at", "refers to"),
         [
-            (name, u["closure_threshold"], u["incoming_threshold"], u["reopening_gap"], u["admit_while_closed"],
-             u["review_hours"], ", ".join(u["referral_order"]) or "nobody")
+            (name, u["closure_threshold"], u["incoming_threshold"], ", ".join(u["referral_order"]) or "nobody")
             for name, u in units.items()
         ],
-    )  # fmt: skip
+    )
 
 
 def _show_patients(patients: dict[str, Any]) -> None:
@@ -90,14 +84,11 @@ def _rhythm(group: dict[str, Any]) -> str:
 
 
 def _show_rest(document: dict[str, Any]) -> None:
-    diversion, game, expected = document["diversion"], document["game"], document["expected"]
-    delay = diversion["delay"]
-    road = "no time" if delay is None else f"{delay['mean_hours']:.2f} h on average ({delay['family']}, cv {delay['cv']:.2f})"
+    game, expected = document["game"], document["expected"]
+    put_text("Rules in force:", *(f"  {name}: {reads}." for name, reads in document["rules"].items()), "")
     put_text(
-        f"When every unit asked is closed or full: {diversion['when_all_closed']}. A transfer takes {road} and adds "
-        f"{diversion['extra_days']:g} days.",
         f"Game: {game['cells']} cells, {game['runs']} runs; expected {duration(expected['game_seconds'])} and "
-        f"{expected['game_bytes'] / 1e6:.0f} MB on {expected['workers']} worker(s). One policy (`simulate`): "
+        f"{expected['game_bytes'] / 1e6:.0f} MB on {expected['workers']} worker(s) with the {expected['engine']} engine. One policy (`simulate`): "
         f"{duration(expected['simulate_seconds'])}.",
     )
     chain = document["exact_chain"]

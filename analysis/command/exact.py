@@ -16,7 +16,7 @@ def exact(request: Request) -> None:
     begun = started()
     document = solve(request.scenario, request.policy).to_dict()
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "exact", begun))
+        write_result(prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain"))
     if request.as_json:
         put_json(document)
     else:

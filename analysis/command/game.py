@@ -39,17 +39,18 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
     from analysis.games import analyse
 
     begun = started()
-    table, ran, failures, interrupted = _exact_table(request) if exact else _simulated_table(request)
+    table, ran, told = _exact_table(request) if exact else _simulated_table(request)
     analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
     document = {"scenario": request.scenario.title, "method": "exact" if exact else "simulated"} | game_document(analysis)
-    document |= ran | {"interrupted": interrupted}
+    document |= told
     if request.out is not None:
-        _write(request, analysis, document, provenance(request, "game", begun))
+        _write(request, analysis, document, provenance(request, "game", begun, engine="exact chain" if ran is None else ran.engine.name))
     if request.as_json:
         put_json(document)
     else:
         _show(analysis, document)
-    finish(failures, interrupted)
+    if ran is not None:
+        finish(ran)
 
 
 command = scenario_command(game)
@@ -69,7 +70,8 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
     return profiles, goal, welfare_of(request.scenario)
 
 
-def _simulated_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
+def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
+    """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums, simulated_table
     from sim.record import hash_records
@@ -81,20 +83,18 @@ def _simulated_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
     run = request.scenario.run
     sums = TableSums(request.scenario, profiles.cells, run.replications)
     policies = list(profiles.policies(request.policy))
-    failures, interrupted = run_replications(request, policies, label="game", take=sums.add)
-    require(len(sums.complete), interrupted)
+    ran = run_replications(request, policies, label="game", take=sums.add)
+    require(len(sums.complete), ran.interrupted)
     table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
-    ran = {
-        "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed, "engine": request.engine,
+    told = {
+        "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
         "record_hash": hash_records(hashes),
-        "failed": [{"seed": f.seed, "replication": f.replication, "cells": list(f.cells), "traceback": f.traceback}
-                   for f in failures],
-    }  # fmt: skip
-    return table, ran, failures, interrupted
+    } | ran.to_dict()  # fmt: skip
+    return table, ran, told
 
 
-def _exact_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
+def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     from analysis.command.progress import progress
     from analysis.exact_tables import solve_cells
     from analysis.payoffs import exact_table
@@ -110,7 +110,7 @@ def _exact_table(request: Request) -> tuple[Any, dict[str, Any], Any, bool]:
         for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
             cells[cell] = units
             bar.advance()
-    return exact_table(profiles, goal, welfare, cells), {}, [], False
+    return exact_table(profiles, goal, welfare, cells), None, {"engine": "exact chain", "interrupted": False}
 
 
 def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:

@@ -15,7 +15,7 @@ import click
 from analysis.command.entry import CAUTION
 from sim.errors import Fault, ScenarioError
 
-ENGINES = ("reference",)
+ENGINES = ("compiled", "reference")
 
 
 @dataclass(frozen=True)
@@ -29,7 +29,7 @@ class Request:
     policy: Any
     confidence: float | None
     workers: int | None
-    engine: str
+    engine: str | None
     out: Path | None
     as_json: bool
 
@@ -55,7 +55,7 @@ _OPTIONS = (
     click.option("--replications", type=click.IntRange(1, 1_000_000), help="Number of replications."),
     click.option("--confidence", type=click.FloatRange(0, 1, min_open=True, max_open=True), help="Of every interval."),
     click.option("--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."),
-    click.option("--engine", type=click.Choice(ENGINES), default="reference", show_default=True, help="Simulation engine."),
+    click.option("--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."),
     click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the results."),
     click.option("--threshold", multiple=True, metavar="UNIT=K", help="Closure threshold of a unit (repeatable)."),
     click.option("--incoming", multiple=True, metavar="UNIT=K", help="Incoming threshold of a unit (repeatable)."),
@@ -93,7 +93,7 @@ def _request(values: Mapping[str, Any]) -> Request:
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
     if factor is None:
         return scenario
-    from sim.scenario.tables import MOST_PATIENTS
+    from sim.tables import MOST_PATIENTS
 
     days = scenario.run.warm_up_days + scenario.run.measured_days
     most = MOST_PATIENTS / (days * sum(group.per_day for group in scenario.patients))

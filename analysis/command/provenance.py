@@ -15,9 +15,11 @@ def started() -> datetime.datetime:
     return origin.now()
 
 
-def provenance(request: Request, command: str, begun: datetime.datetime | None = None) -> dict[str, Any]:
+def provenance(
+    request: Request, command: str, begun: datetime.datetime | None = None, *, engine: str
+) -> dict[str, Any]:
     """Where the command's result came from, with the arguments that repeat it."""
     arguments = ["brimline", *sys.argv[1:]] if sys.argv[1:2] == [command] else ["brimline", command]
     return origin.provenance(
-        request.scenario, command=arguments, engine=request.engine, started=begun or origin.now()
+        request.scenario, command=arguments, engine=engine, started=begun or origin.now()
     )

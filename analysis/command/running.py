@@ -10,66 +10,98 @@ from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import Request
 from analysis.command.progress import progress, until_interrupted
 from sim.errors import RunError
-from sim.replicate import Failure, cells_per_task, replicate, seconds_per_run
+from sim import engines
+from sim.lowering import lower_network, lower_policy, plan_intake
+from sim.replicate import Failure, Pace, pace_of, replicate
 from sim.workers import Workers, available_cores, local_workers
 
 WORTH_PROCESSES_SECONDS = 3.0
-BYTES_PER_CELL_UNIT = 14 * 8  # the sums that a table keeps of each run
+BYTES_PER_CELL_UNIT = 16 * 8  # the sums that a table keeps of each run
 
 
 @dataclass(frozen=True)
 class Effort:
-    """How much work is ahead, and how it is split."""
+    """How a job is done: the engine and why, its pace here, and the workers."""
 
-    seconds_per_run: float
+    engine: engines.Choice
+    pace: Pace
     workers: Workers
     count: int
 
 
-def effort(request: Request, runs: int) -> Effort:
-    """The workers for so many runs: one process where starting more would cost more than it saves."""
-    each = seconds_per_run(request.scenario, request.policy, engine=request.engine)
+def effort(request: Request, replications: int, cells: int) -> Effort:
+    """Engine and workers for a job: one process where starting more would cost more than it saves."""
+    pace = pace_of(request.scenario, request.policy, engine="reference")
+    choice = engines.choose(request.engine, pace.seconds(replications, cells))
+    if choice.name == "compiled":
+        _announce_compiling()
+        pace = pace_of(request.scenario, request.policy, engine="compiled")
     count = request.workers
     if count is None:
-        count = available_cores() if each * runs > WORTH_PROCESSES_SECONDS else 1
-    return Effort(each, local_workers(count), count)
+        count = available_cores() if pace.seconds(replications, cells) > WORTH_PROCESSES_SECONDS else 1
+    return Effort(choice, pace, local_workers(count), count)
 
 
-def expected(request: Request) -> dict[str, Any]:
-    """Expected seconds and bytes of `simulate` and `game`."""
-    from sim.scenario.describe import describe
+def _announce_compiling() -> None:
+    from sim.compiled.cache import cache_folder, folder_is_writable
 
+    if not folder_is_writable():
+        say(f"compiling the engine; {cache_folder()} cannot be written, so nothing is kept for the next run")
+    elif not engines.is_compiled():
+        say("compiling the engine, once on this machine (some seconds)")
+
+
+def expected(request: Request, cells: int) -> dict[str, Any]:
+    """Expected seconds and bytes of `simulate` and of a `game` of so many cells."""
     replications = request.scenario.run.replications
-    runs = describe(request.scenario, request.policy)["game"]["runs"]
-    planned = effort(request, runs)
+    planned = effort(request, replications, cells)
     return {
-        "seconds_per_run": planned.seconds_per_run,
-        "simulate_seconds": planned.seconds_per_run * replications / min(planned.count, replications),
-        "game_seconds": planned.seconds_per_run * runs / planned.count,
-        "game_bytes": runs * len(request.scenario.units) * BYTES_PER_CELL_UNIT,
+        "engine": planned.engine.name,
+        "seconds_per_run": planned.pace.running,
+        "simulate_seconds": planned.pace.seconds(replications, 1),
+        "game_seconds": planned.pace.seconds(replications, cells) / planned.count,
+        "game_bytes": replications * cells * len(request.scenario.units) * BYTES_PER_CELL_UNIT,
         "workers": planned.count,
     }
 
 
-def run_replications(
-    request: Request, policies: Sequence[Any], *, label: str, take: Any, scenario: Any = None, replications: int | None = None
-) -> tuple[list[Failure], bool]:
-    """Runs every replication under every policy and hands each reply to `take`.
+@dataclass(frozen=True)
+class Ran:
+    """How replications were run, and what went wrong."""
 
-    Returns the failures, and whether Ctrl-C ended it early. `scenario`, `replications`: instead of the
-    request's own.
-    """
-    scenario = scenario or request.scenario
-    count = replications or scenario.run.replications
-    planned = effort(request, count * len(policies))
+    engine: engines.Choice
+    failures: list[Failure]
+    interrupted: bool
+
+    def to_dict(self) -> dict[str, Any]:
+        """What a result says of it."""
+        failed = [
+            {"seed": one.seed, "replication": one.replication, "cells": list(one.cells), "traceback": one.traceback}
+            for one in self.failures
+        ]
+        return {
+            "engine": self.engine.name,
+            "engine_choice": self.engine.reason,
+            "failed": failed,
+            "interrupted": self.interrupted,
+        }
+
+
+def run_replications(request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
+    """Runs every replication of the request under every policy and hands each reply to `take`."""
+    scenario = request.scenario
+    count, cells = scenario.run.replications, len(policies)
+    planned = effort(request, count, cells)
+    rules = [lower_policy(scenario, policy) for policy in policies]
+    engines.load(planned.engine.name).warm(lower_network(scenario), rules, plan_intake(scenario))
     replies = until_interrupted(
         replicate(
-            scenario, policies, range(count), engine=request.engine, workers=planned.workers,
-            cells_per_task=cells_per_task(planned.seconds_per_run, len(policies)),
+            scenario, policies, range(count), engine=planned.engine.name, workers=planned.workers,
+            task_size=planned.pace.task_size(count, cells, planned.count),
         )
     )  # fmt: skip
     failures = []
-    with replies, progress(label, count * len(policies), "runs") as bar:
+    with replies, progress(label, count * cells, "runs") as bar:
         for reply in replies:
             take(reply)
             if isinstance(reply, Failure):
@@ -78,7 +110,7 @@ def run_replications(
             bar.advance(len(reply.cells) if isinstance(reply, Failure) else len(reply))
     if replies.interrupted:
         say("interrupted; what was computed is kept")
-    return failures, replies.interrupted
+    return Ran(planned.engine, failures, replies.interrupted)
 
 
 def require(done: int, interrupted: bool, *, least: int = 1) -> None:
@@ -90,9 +122,9 @@ def require(done: int, interrupted: bool, *, least: int = 1) -> None:
     raise RunError(f"{done} replications were finished, but at least {least} are needed to show anything")
 
 
-def finish(failures: Sequence[Failure], interrupted: bool) -> None:
+def finish(ran: Ran) -> None:
     """Ends a command whose result has been handed over, with the status that it deserves."""
-    if interrupted:
+    if ran.interrupted:
         raise Interrupted
-    if failures:
+    if ran.failures:
         raise CheckFailed

@@ -28,32 +28,29 @@ def simulate(request: Request, trace: Path | None, intake_out: Path | None, repl
     for said in advice(request.scenario):
         say(f"advice: {said}")
     runs: list[Any] = []
-    failures, interrupted = run_replications(
+    ran = run_replications(
         request, [request.policy], label="simulate", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
     )
-    require(len(runs), interrupted)
+    require(len(runs), ran.interrupted)
     runs.sort(key=lambda run: run.replication)
     result = summarise([run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence)
     document = _heading(request) | result.to_dict() | {
         "replications": result.replications,
         "confidence": result.confidence,
         "seed": request.scenario.run.seed,
-        "engine": request.engine,
         "record_hash": hash_records([run.record.hash for run in runs]),
-        "failed": [{"seed": f.seed, "replication": f.replication, "traceback": f.traceback} for f in failures],
-        "interrupted": interrupted,
-    }  # fmt: skip
+    } | ran.to_dict()  # fmt: skip
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "simulate", begun))
+        write_result(prepare_folder(request.out), document, provenance(request, "simulate", begun, engine=ran.engine.name))
     if trace is not None or intake_out is not None:  # perhaps into that very folder
-        _write_trace(request, replication, trace, intake_out)
+        _write_trace(request, ran.engine.name, replication, trace, intake_out)
     if request.as_json:
         put_json(document)
     else:
         _show(document, request)
-    finish(failures, interrupted)
+    finish(ran)
 
 
 command = scenario_command(simulate)
@@ -63,11 +60,11 @@ def _heading(request: Request) -> dict[str, Any]:
     return {"scenario": request.scenario.title, "policy": request.policy.name, "thresholds": request.policy.thresholds}
 
 
-def _write_trace(request: Request, replication: int, trace: Path | None, intake_out: Path | None) -> None:
+def _write_trace(request: Request, engine: str, replication: int, trace: Path | None, intake_out: Path | None) -> None:
     from sim.intake import write_intake
     from sim.replicate import trace_replication
 
-    events, intake = trace_replication(request.scenario, request.policy, replication, engine=request.engine)
+    events, intake = trace_replication(request.scenario, request.policy, replication, engine=engine)
     if trace is not None:
         events.write(trace, request.scenario.unit_names)
     if intake_out is not None:

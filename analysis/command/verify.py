@@ -32,27 +32,27 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
         raise ScenarioError([Fault(None, "replications", rule, got, "raise it, for example --replications 30")])
     exact = solve(request.scenario, request.policy)
     runs: list[Any] = []
-    failures, interrupted = run_replications(
+    ran = run_replications(
         request, [request.policy], label="verify", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
     )
-    require(len(runs), interrupted, least=LEAST_REPLICATIONS)
+    require(len(runs), ran.interrupted, least=LEAST_REPLICATIONS)
     runs.sort(key=lambda run: run.replication)
     rate = false_alarm_rate or (1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE)
     result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)
     document = {"scenario": request.scenario.title, "thresholds": request.policy.thresholds} | result.to_dict() | {
-        "states": exact.states, "seed": request.scenario.run.seed, "engine": request.engine, "interrupted": interrupted,
-    }  # fmt: skip
+        "states": exact.states, "seed": request.scenario.run.seed,
+    } | ran.to_dict()  # fmt: skip
     if request.out is not None:
         from analysis.figures import save_verification
 
         folder = prepare_folder(request.out)
-        write_result(folder, document, provenance(request, "verify", begun))
+        write_result(folder, document, provenance(request, "verify", begun, engine=ran.engine.name))
         save_verification(document, folder)
     if request.as_json:
         put_json(document)
     else:
         _show(document)
-    finish(failures, interrupted)
+    finish(ran)
     if not result.agrees:
         raise CheckFailed
 

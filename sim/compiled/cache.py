@@ -11,17 +11,15 @@ import os
 import sys
 from collections.abc import Callable
 from functools import cache
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
-
-import numba
-import numpy as np
 
 
 @cache
 def kernel_digest() -> str:
     """A digest of every kernel source and of the versions that compile them."""
-    digest = hashlib.sha256(f"{numba.__version__} {np.__version__} {sys.version}".encode())
+    digest = hashlib.sha256(f"{version('numba')} {version('numpy')} {sys.version}".encode())
     for source in sorted(Path(__file__).parent.glob("*.py")):
         digest.update(source.read_bytes())
     return digest.hexdigest()[:16]
@@ -52,6 +50,8 @@ def folder_is_writable() -> bool:
 
 def compiled(function: Callable[..., Any]) -> Any:
     """numba's compilation of a kernel, without the interpreter's lock, cached where a folder can be written."""
+    import numba
+
     if not folder_is_writable():
         return numba.njit(nogil=True)(function)
     before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(cache_folder())

@@ -12,6 +12,7 @@ from sim.errors import RunError
 from sim.intake import Intake
 from sim.lowering import IntakePlan, Network, Rules
 from sim.record import GATE_STATES, Record
+from sim.rules.out_of_use import Staffing
 from sim.trace import KINDS, Trace
 
 HEAP_ABOVE_BEDS = 120
@@ -25,7 +26,9 @@ def run(network: Network, rules: Rules, intake: Intake, *, trace: Trace | None =
     if trace is None:
         return run_table(network, [rules], intake)[0]
     table = Table(network, [rules], intake)
-    most = MOST_EVENTS_A_PATIENT * len(intake) + 3 * len(rules.review_times)
+    reviews = 0 if rules.reviews is None else len(rules.reviews.times)
+    changes = 0 if intake.staffing is None else len(intake.staffing.times)
+    most = MOST_EVENTS_A_PATIENT * len(intake) + 3 * (reviews + changes)
     note_times, notes = np.empty(most), np.empty((most, 3), np.int64)
     table.advance_first_cell(note_times, notes)
     count = table.counters[0, kernel.NOTED]
@@ -68,11 +71,12 @@ class Table:
         cells, units, most = len(rules), len(network.beds), int(network.beds.sum()) + 1
         self.network, self.rules, self.intake = network, rules, intake
         self.whole, self.referral, self.soft = _whole(network, rules), _stack(rules, "referral_order"), _soft(rules)
-        self.since = np.zeros((cells, units, 2))
+        self.since = np.zeros((cells, units, 3))
         self.times, self.keys = np.empty((cells, most)), np.empty((cells, most), np.int64)
-        self.counters = np.zeros((cells, 4), np.int64)
+        self.counters = np.zeros((cells, 5), np.int64)
         self.counters[:, kernel.PERIOD] = -1
         self.occupancy_days = np.zeros((cells, len(network.edges) - 1, units, int(network.beds.max()) + 1))
+        self.staffed_days = None if intake.staffing is None else np.zeros_like(self.occupancy_days)
         self.gate_days = np.zeros((cells, units, GATE_STATES))
         self.counts = np.zeros((cells, units, kernel.PAIRS + 2 * units), np.int64)
 
@@ -81,7 +85,7 @@ class Table:
         kernel.advance_table(
             *self._intake(), self.network.edges, self.network.extra_days, self.referral, self.soft, *self._reviews(),
             self.whole, self.since, self.times, self.keys, self.counters, self._in_heap(),
-            self.occupancy_days, self.gate_days, self.counts, first, last, block,
+            self.occupancy_days, self.staffed_days, self.gate_days, self.counts, first, last, block,
         )  # fmt: skip
 
     def advance_first_cell(self, note_times: np.ndarray, notes: np.ndarray) -> None:
@@ -90,7 +94,8 @@ class Table:
             *self._intake(), self.network.edges, self.network.extra_days, self.referral[0],
             None if self.soft is None else self.soft[0], *self._reviews(),
             self.whole[0], self.since[0], self.times[0], self.keys[0], self.counters[0], self._in_heap(),
-            self.occupancy_days[0], self.gate_days[0], self.counts[0], note_times, notes, 0, len(self.intake),
+            self.occupancy_days[0], None if self.staffed_days is None else self.staffed_days[0],
+            self.gate_days[0], self.counts[0], note_times, notes, 0, len(self.intake),
         )  # fmt: skip
 
     def record(self, cell: int) -> Record:
@@ -101,16 +106,19 @@ class Table:
             occupancy_days=self.occupancy_days[cell], gate_days=self.gate_days[cell], arrived=counts[:, kernel.ARRIVED],
             turned_away=counts[:, kernel.TURNED], diverted=pairs[:, :units], admitted=pairs[:, units:],
             on_road_at_start=counts[:, kernel.ON_ROAD_AT_START], on_road_at_end=counts[:, kernel.ON_ROAD_AT_END],
+            staffed_days=None if self.staffed_days is None else self.staffed_days[cell],
         )  # fmt: skip
 
     def _intake(self) -> tuple[np.ndarray | None, ...]:
         intake = self.intake
         delay = intake.delay if intake.delay.any() else None
-        return intake.arrival, intake.home, intake.stay, delay, None if self.soft is None else intake.gate
+        gate = None if self.soft is None else intake.gate
+        staffing = (None, None, None) if intake.staffing is None else tuple(vars(intake.staffing).values())
+        return intake.arrival, intake.home, intake.stay, delay, gate, *staffing
 
     def _reviews(self) -> tuple[np.ndarray | None, np.ndarray | None]:
-        first = self.rules[0]
-        return (first.review_times, first.review_units) if len(first.review_times) else (None, None)
+        reviews = self.rules[0].reviews
+        return (None, None) if reviews is None else (reviews.times, reviews.units)
 
     def _in_heap(self) -> bool:
         return int(self.network.beds.sum()) > HEAP_ABOVE_BEDS
@@ -128,7 +136,7 @@ def _whole(network: Network, rules: Sequence[Rules]) -> np.ndarray:
         kernel.INCOMING_CLOSES: incoming,
         kernel.INCOMING_REOPENS: _stack(rules, "incoming_reopens"),
         kernel.LAST_RESORT: np.array([[one.last_resort] for one in rules]),
-        kernel.REVIEWED: _stack(rules, "reviewed"),
+        kernel.REVIEWED: np.array([[0] if one.reviews is None else one.reviews.reviewed for one in rules]),
         kernel.GATE_STATE: (own == 0) * kernel.OWN_CLOSED | (incoming == 0) * kernel.INCOMING_CLOSED,
     }
     for column, values in columns.items():
@@ -141,20 +149,25 @@ def _stack(rules: Sequence[Rules], name: str) -> np.ndarray:
 
 
 def _soft(rules: Sequence[Rules]) -> np.ndarray | None:
-    soft = _stack(rules, "admit_while_closed")
-    return soft if soft.any() else None
+    if all(one.admit_while_closed is None for one in rules):
+        return None
+    none = np.zeros(len(rules[0].own_closes))
+    return np.stack([none if one.admit_while_closed is None else one.admit_while_closed for one in rules])
 
 
 def _by_timetable(rules: Sequence[Rules]) -> list[list[int]]:
     """Cells that share their review timetable."""
-    groups: dict[tuple[bytes, bytes], list[int]] = {}
+    groups: dict[tuple[bytes, ...], list[int]] = {}
     for cell, one in enumerate(rules):
-        groups.setdefault((one.review_times.tobytes(), one.review_units.tobytes()), []).append(cell)
+        timetable = () if one.reviews is None else tuple(column.tobytes() for column in vars(one.reviews).values())
+        groups.setdefault(timetable, []).append(cell)
     return list(groups.values())
 
 
 def _nobody(plan: IntakePlan) -> Intake:
-    """One patient who never comes, with a delay where the plan has them."""
+    """One patient who never comes, with a delay and changes of staffed beds where the plan has them."""
     never, home = np.array([np.inf]), np.zeros(1, np.int64)
     delay = np.array([0.0 if plan.delay_hours is None else plan.delay_hours.mean()])
-    return Intake(never, home, home, np.ones(1), np.ones((len(plan.stay_factors), 1)), delay, np.array([0.5]))
+    staffing = None if plan.outages is None else Staffing(never, home, home)
+    stay = np.ones((len(plan.stay_factors), 1))
+    return Intake(never, home, home, np.ones(1), stay, delay, np.array([0.5]), staffing)

@@ -24,33 +24,34 @@ NEVER = np.inf
     GATE_STATE,
 ) = range(11)  # fmt: skip
 COLUMNS = 11
-# Columns of `since`, (units, 2): when the present number of occupied beds, or gate state, began.
-SINCE_OCCUPIED, SINCE_GATES = range(2)
+# Columns of `since`, (units, 3): when the present number of occupied beds, the gate state, the staffed beds began.
+SINCE_OCCUPIED, SINCE_GATES, SINCE_STAFFED = range(3)
 # Bits of a gate state.
 OWN_CLOSED, INCOMING_CLOSED, FULL = 1, 2, 4
 # Columns of `counts`, (units, 4 + 2 units): by home or unit; diverted and admitted go by home and unit.
 ARRIVED, TURNED, ON_ROAD_AT_START, ON_ROAD_AT_END, PAIRS = range(5)
-# Entries of `counters`: events pending, next review, period (-1 until the window opens), events noted.
-PENDING, NEXT_REVIEW, PERIOD, NOTED = range(4)
+# Entries of `counters`: events pending, next review, next change of staffed beds, period (-1 until the window
+# opens), events noted.
+PENDING, NEXT_REVIEW, NEXT_STAFFING, PERIOD, NOTED = range(5)
 # What a trace calls each event, as places in sim.trace.KINDS.
 (
     ARRIVES, ADMITTED, TRANSFERRED, IS_TURNED_AWAY, DISCHARGED, REVIEWS, OWN_OPENS, OWN_CLOSES_NOW, INCOMING_OPENS,
-    INCOMING_CLOSES_NOW,
-) = range(10)  # fmt: skip
+    INCOMING_CLOSES_NOW, STAFFING_CHANGES,
+) = range(11)  # fmt: skip
 
 
 @compiled
 def advance(
-    arrival, home_of, stay, delay, gate,
+    arrival, home_of, stay, delay, gate, staffing_times, staffing_units, staffing_beds,
     edges, extra_days, referral, soft, review_times, review_units,
     whole, since, times, keys, counters, in_heap,
-    occupancy_days, gate_days, counts, note_times, notes,
+    occupancy_days, staffed_days, gate_days, counts, note_times, notes,
     first, last,
 ):  # fmt: skip
     """Runs patients `first` to `last` and all events before the last of them; the last block runs to the end.
 
-    arrival, home_of, delay, gate: (patients,); stay: (classes, patients). delay, gate, soft, review_times,
-    review_units, note_times, notes: None where no rule (or nobody) asks for them. The rest: see the columns.
+    arrival, home_of, delay, gate: (patients,); stay: (classes, patients). delay, gate, staffing_*, staffed_days, soft,
+    review_*, note_times, notes: None where no rule (or nobody) asks for them. The rest: see the columns.
     """
     end = edges[-1]
     units = len(whole)
@@ -59,20 +60,24 @@ def advance(
     pending = counters[PENDING]
     patient = first
     while patient < last or to_the_end:
-        # Which event is next: the first of the pending ones, a review or a new arrival, in this order at one time.
+        # Which event is next: the first of the pending ones, a change of staffed beds, a review or a new arrival,
+        # in this order at one time.
         now = arrival[patient] if patient < last else NEVER
         place = 0 if in_heap else pending - 1
-        review_time = next_review_time(review_times, counters)
-        is_queued = pending > 0 and times[place] <= now and times[place] <= review_time
-        is_review = not is_queued and review_time <= now
+        staffing_time = next_time(staffing_times, counters, NEXT_STAFFING)
+        review_time = next_time(review_times, counters, NEXT_REVIEW)
+        timer = min(staffing_time, review_time)
+        is_queued = pending > 0 and times[place] <= now and times[place] <= timer
+        is_staffing = not is_queued and staffing_time <= min(now, review_time)
+        is_review = not is_queued and not is_staffing and review_time <= now
         if is_queued:
             now = times[place]
-        elif is_review:
-            now = review_time
+        elif is_staffing or is_review:
+            now = timer
         if now >= end:
             break
         while now >= edges[period + 1]:
-            cross_edge(whole, since, occupancy_days, gate_days, counts, period, edges[period + 1])
+            cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1])
             period += 1
         counts_now = period >= 0
 
@@ -89,6 +94,9 @@ def advance(
             else:
                 more_occupied, due = 1, DISCHARGE
                 length = stay[whole[unit, STAY_CLASS], who] + extra_days
+        elif is_staffing:
+            who, unit = NOBODY, change_staffing(staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now)
+            note(note_times, notes, counters, now, STAFFING_CHANGES, NOBODY, unit)
         elif is_review:
             who, unit = NOBODY, review_unit(review_units, counters)
             note(note_times, notes, counters, now, REVIEWS, NOBODY, unit)
@@ -132,7 +140,7 @@ def advance(
         # The gates follow the load at once, or at reviews; time is added only where the gate state changes.
         state = whole[unit, GATE_STATE]
         own, incoming = state & OWN_CLOSED, state & INCOMING_CLOSED
-        if is_review or whole[unit, REVIEWED] == 0:
+        if is_review or (whole[unit, REVIEWED] == 0 and not is_staffing):
             if load >= whole[unit, OWN_CLOSES]:
                 own = OWN_CLOSED
             elif load <= whole[unit, OWN_REOPENS]:
@@ -158,7 +166,7 @@ def advance(
 
     if to_the_end:
         while period + 1 < len(edges):
-            cross_edge(whole, since, occupancy_days, gate_days, counts, period, edges[period + 1])
+            cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1])
             period += 1
     counters[PERIOD] = period
     counters[PENDING] = pending
@@ -166,10 +174,10 @@ def advance(
 
 @compiled
 def advance_table(
-    arrival, home_of, stay, delay, gate,
+    arrival, home_of, stay, delay, gate, staffing_times, staffing_units, staffing_beds,
     edges, extra_days, referral, soft, review_times, review_units,
     whole, since, times, keys, counters, in_heap,
-    occupancy_days, gate_days, counts,
+    occupancy_days, staffed_days, gate_days, counts,
     first, last, block,
 ):  # fmt: skip
     """Runs patients `first` to `last` of every cell, in blocks, so that a block of patients stays in the cache.
@@ -180,10 +188,10 @@ def advance_table(
         until = min(first + block, last)
         for cell in range(len(whole)):
             advance(
-                arrival, home_of, stay, delay, gate,
+                arrival, home_of, stay, delay, gate, staffing_times, staffing_units, staffing_beds,
                 edges, extra_days, referral[cell], cell_of(soft, cell), review_times, review_units,
                 whole[cell], since[cell], times[cell], keys[cell], counters[cell], in_heap,
-                occupancy_days[cell], gate_days[cell], counts[cell], None, None,
+                occupancy_days[cell], cell_of(staffed_days, cell), gate_days[cell], counts[cell], None, None,
                 first, until,
             )  # fmt: skip
         first = until
@@ -228,19 +236,21 @@ def choose_unit(whole, referral, soft, gate, patient, home):
 
 
 @compiled
-def cross_edge(whole, since, occupancy_days, gate_days, counts, period, edge):
+def cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edge):
     """Opens the measured window, or closes one of its periods."""
     for unit in range(len(whole)):
         on_road = whole[unit, LOAD] - whole[unit, OCCUPIED]
         if period < 0:
             since[unit, SINCE_OCCUPIED] = edge
             since[unit, SINCE_GATES] = edge
+            since[unit, SINCE_STAFFED] = edge
             counts[unit, ON_ROAD_AT_START] = on_road
         else:
             occupancy_days[period, unit, whole[unit, OCCUPIED]] += edge - since[unit, SINCE_OCCUPIED]
             gate_days[unit, whole[unit, GATE_STATE]] += edge - since[unit, SINCE_GATES]
             since[unit, SINCE_OCCUPIED] = edge
             since[unit, SINCE_GATES] = edge
+            settle_staffed(staffed_days, whole, since, period, unit, edge)
             counts[unit, ON_ROAD_AT_END] = on_road
 
 
@@ -248,12 +258,34 @@ def cross_edge(whole, since, occupancy_days, gate_days, counts, period, edge):
 
 
 @compiled
-def next_review_time(review_times, counters):
-    """When the next review is due."""
-    if review_times is None:
+def next_time(timetable, counters, which):
+    """When the next event of a timetable is due."""
+    if timetable is None:
         return NEVER
-    review = counters[NEXT_REVIEW]
-    return review_times[review] if review < len(review_times) else NEVER
+    place = counters[which]
+    return timetable[place] if place < len(timetable) else NEVER
+
+
+@compiled
+def change_staffing(staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now):
+    """Sets the staffed beds of the unit whose turn it is."""
+    if staffing_units is None:
+        return NOBODY
+    place = counters[NEXT_STAFFING]
+    counters[NEXT_STAFFING] = place + 1
+    unit = staffing_units[place]
+    if period >= 0:
+        settle_staffed(staffed_days, whole, since, period, unit, now)
+    whole[unit, BEDS] = staffing_beds[place]
+    return unit
+
+
+@compiled
+def settle_staffed(staffed_days, whole, since, period, unit, now):
+    """Adds the time at the present number of staffed beds, before it changes."""
+    if staffed_days is not None:
+        staffed_days[period, unit, whole[unit, BEDS]] += now - since[unit, SINCE_STAFFED]
+        since[unit, SINCE_STAFFED] = now
 
 
 @compiled

@@ -11,12 +11,13 @@ from collections.abc import Mapping
 from functools import cached_property
 from typing import Any
 
+from sim.rules import RULES, tables
 from sim.scenario.faults import Collector
 from sim.scenario.game import TargetUtilisation
 from sim.scenario.positions import Path
 from sim.scenario.run import Run
-from sim.scenario.tables import MOST_PATIENTS, MOST_REVIEWS
-from sim.scenario.wording import nearest, shown
+from sim.tables import MOST_PATIENTS
+from sim.wording import nearest, shown
 
 _EVERYONE = ()  # the referral order of a unit that gives none
 
@@ -71,20 +72,30 @@ class Draft:
         }
 
 
+    @cached_property
+    def run_days(self) -> float | None:
+        """The length of a run, warm-up included; None where it is at fault."""
+        keys = ("warm_up_days", "measured_days")
+        days = [self.read("run", key, default=Run.model_fields[key].default) for key in keys]
+        return None if None in days else sum(days)
+
+    def within_beds(self, path: Path, beds: int | None) -> bool:
+        """Whether the threshold at `path` is no larger than the unit's beds, as far as both are known."""
+        threshold = self.read(*path)
+        return None in (threshold, beds) or threshold <= beds
+
+    def fault_above_beds(self, path: Path, beds: int | None) -> None:
+        """A fault where the threshold at `path` is above the unit's beds."""
+        if not self.within_beds(path, beds):
+            rule, value = "must not be above the unit's beds", f"got {self.read(*path)} for {beds} beds"
+            self.fault(path, rule, value, f"choose a threshold from 0 to {beds}")
+
+
 def cross_check(collector: Collector) -> None:
     """Adds every broken rule between keys to the collector."""
     draft = Draft(collector)
-    for check in (
-        _names,
-        _thresholds,
-        _referrals,
-        _homes,
-        _isolated_units,
-        _strategies,
-        _policies,
-        _periods,
-        _sizes,
-    ):
+    own = (_names, _thresholds, _referrals, _homes, _isolated_units, _strategies, _policies, _periods, _sizes)
+    for check in (*own, *(rule.check for rule in RULES)):
         check(draft)
 
 
@@ -106,27 +117,7 @@ def _names(draft: Draft) -> None:
 
 def _thresholds(draft: Draft) -> None:
     for row in draft.rows("units"):
-        beds = draft.read("units", row, "beds")
-        own = draft.read("units", row, "closure_threshold")
-        incoming = draft.read("units", row, "incoming_threshold")
-        own_holds = _within_beds(draft, ("units", row, "closure_threshold"), beds)
-        path = ("units", row, "incoming_threshold")
-        if not own_holds or None in (own, incoming) or incoming <= own:
-            _within_beds(draft, path, beds)
-        else:
-            rule = "must not be above the closure threshold (units close to others first)"
-            remedy = f"lower it to {own} or less, or raise the closure threshold"
-            draft.fault(path, rule, f"got {incoming} above {own}", remedy)
-
-
-def _within_beds(draft: Draft, path: Path, beds: int | None) -> bool:
-    """Whether the threshold at `path` is no larger than the unit's beds, as far as both are known."""
-    threshold = draft.read(*path)
-    if None in (threshold, beds) or threshold <= beds:
-        return True
-    remedy = f"choose a threshold from 0 to {beds}"
-    draft.fault(path, "must not be above the unit's beds", f"got {threshold} for {beds} beds", remedy)
-    return False
+        draft.fault_above_beds(("units", row, "closure_threshold"), draft.read("units", row, "beds"))
 
 
 def _referrals(draft: Draft) -> None:
@@ -200,26 +191,19 @@ def _strategies(draft: Draft) -> None:
     for path in draft.below("game", "strategies"):
         _known_unit(draft, path, path[-1])
         for threshold in ((*path, "from"), (*path, "to"), *draft.below(*path, "values")):
-            _within_beds(draft, threshold, draft.beds.get(path[-1]))
+            draft.fault_above_beds(threshold, draft.beds.get(path[-1]))
 
 
 def _policies(draft: Draft) -> None:
-    per_unit = (
-        "closure_threshold",
-        "incoming_threshold",
-        "reopening_gap",
-        "admit_while_closed",
-        "review_hours",
-    )
+    of_rules = [key for keys in tables("policy_keys") for key in keys.model_fields]
     for row in draft.rows("policies"):
-        for path in (
-            path for key in (*per_unit, "referral_order") for path in draft.below("policies", row, key)
-        ):
-            _known_unit(draft, path, path[-1])
-            if path[-2].endswith("threshold"):
-                _within_beds(draft, path, draft.beds.get(path[-1]))
-            elif path[-2] == "referral_order":
-                _order(draft, path, path[-1])
+        for key in ("closure_threshold", *of_rules, "referral_order"):
+            for path in draft.below("policies", row, key):
+                _known_unit(draft, path, path[-1])
+                if key.endswith("threshold"):
+                    draft.fault_above_beds(path, draft.beds.get(path[-1]))
+                elif key == "referral_order":
+                    _order(draft, path, path[-1])
 
 
 def _periods(draft: Draft) -> None:
@@ -235,26 +219,12 @@ def _periods(draft: Draft) -> None:
 
 
 def _sizes(draft: Draft) -> None:
-    days = [
-        draft.read("run", key, default=Run.model_fields[key].default)
-        for key in ("warm_up_days", "measured_days")
-    ]
-    if None in days:
+    if draft.run_days is None:
         return
     rates = [draft.read("patients", row, "per_day") for row in draft.rows("patients")]
-    patients = sum(rate for rate in rates if rate is not None) * sum(days)
+    patients = sum(rate for rate in rates if rate is not None) * draft.run_days
     if patients > MOST_PATIENTS:
         rule = f"a replication may hold at most {MOST_PATIENTS:,} patients"
         draft.fault(
             ("run", "measured_days"), rule, f"got about {patients:,.0f}", "shorten the run or lower the rates"
         )
-    reviewed = [("units", row, "review_hours") for row in draft.rows("units")]
-    reviewed += [
-        path for row in draft.rows("policies") for path in draft.below("policies", row, "review_hours")
-    ]
-    for path in reviewed:
-        hours = draft.read(*path)
-        if hours and sum(days) * 24 / hours > MOST_REVIEWS:
-            rule = f"a replication may hold at most {MOST_REVIEWS:,} reviews of a unit"
-            remedy = "review less often, or give 0: gates act at once"
-            draft.fault(path, rule, f"got about {sum(days) * 24 / hours:,.6g}", remedy)

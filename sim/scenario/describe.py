@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
+from sim.rules import RULES
 from sim.scenario.policies import Policy
 from sim.scenario.scenario import Scenario
 
@@ -12,7 +13,7 @@ WARM_UP_STAYS = 5
 
 
 def describe(scenario: Scenario, policy: Policy) -> dict[str, Any]:
-    """Plain values, ready for JSON: `run`, `units`, `patients`, `diversion`, `game`, `policies`, `advice`.
+    """Plain values, ready for JSON: `run`, `units`, `patients`, `diversion`, `rules`, `game`, `policies`, `advice`.
 
     Loads are in beds, stays in days, delays in hours.
     """
@@ -22,6 +23,7 @@ def describe(scenario: Scenario, policy: Policy) -> dict[str, Any]:
         "units": {unit.name: _unit(scenario, policy, unit.name) for unit in scenario.units},
         "patients": {group.group: _group(group) for group in scenario.patients},
         "diversion": _diversion(scenario, policy),
+        "rules": {rule.name: said for rule in RULES if (said := rule.reads(scenario, policy)) is not None},
         "game": _game(scenario),
         "policies": [row.name for row in scenario.policies],
         "advice": advice(scenario),

@@ -11,7 +11,7 @@ from pydantic.fields import FieldInfo
 
 from sim.errors import Fault
 from sim.scenario.positions import Path, line_of
-from sim.scenario.wording import as_written, in_words, nearest, shown
+from sim.wording import as_written, in_words, nearest, shown
 
 __all__ = ["Collector", "nearest", "shown", "step"]
 

@@ -6,7 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
-from sim.scenario.tables import NotNegative, Row, Table, breach
+from sim.tables import NotNegative, Row, Table, breach
 from sim.scenario.units import Threshold
 
 

@@ -7,8 +7,8 @@ from typing import Annotated, Literal
 from pydantic import AfterValidator, Field
 
 from sim.demand import WeeklyPattern
-from sim.scenario.durations import Duration, Stay
-from sim.scenario.tables import NotNegative, Positive, Row, Table, breach
+from sim.durations import Duration, Stay
+from sim.tables import NotNegative, Positive, Row, Table, breach
 from sim.scenario.units import Name
 
 
@@ -58,7 +58,7 @@ class PatientGroup(Table):
 
     def in_constant_exponential_form(self) -> PatientGroup:
         """The same group with exponential stays of the same mean and arrivals at its mean rate."""
-        from sim.scenario.durations import exponential_stay
+        from sim.durations import exponential_stay
 
         plain: Duration = exponential_stay(self.mean_stay_days)
         return self.model_copy(update={"hour_of_day": None, "day_of_week": None, "stay": plain})

@@ -9,37 +9,27 @@ from typing import Annotated
 
 from pydantic import Field
 
-from sim.scenario.diversion import LastResort
-from sim.scenario.tables import Share, Table
-from sim.scenario.units import Gap, Name, Names, ReviewHours, Threshold, Unit
+from sim.rules import tables
+from sim.scenario.units import Name, Names, Unit
+from sim.tables import Table, Threshold
 
 
-class PolicyRow(Table):
+class PolicyRow(*tables("policy_keys"), Table):
     """A named change of the file's own rules; what a row does not name stays as the units have it."""
 
     name: Annotated[Name, Field(examples=['name = "close only when full"'])]
     closure_threshold: dict[str, Threshold] = {}
-    incoming_threshold: dict[str, Threshold] = {}
-    reopening_gap: dict[str, Gap] = {}
-    admit_while_closed: dict[str, Share] = {}
-    review_hours: dict[str, ReviewHours] = {}
     referral_order: dict[str, Names] = {}
-    when_all_closed: LastResort | None = None
 
 
 @dataclass(frozen=True)
-class UnitRules:
-    """The rules of one unit.
+class UnitRules(*tables("parameters")):
+    """The rules of one unit: its thresholds, its referral order, and what each optional rule adds.
 
-    incoming_threshold: None where it follows the closure threshold.
     referral_order: the units asked, in order, for a patient whose home this is.
     """
 
     closure_threshold: int
-    incoming_threshold: int | None
-    reopening_gap: int
-    admit_while_closed: float
-    review_hours: float
     referral_order: tuple[str, ...]
 
     @property
@@ -98,9 +88,6 @@ def policy_of_file(units: tuple[Unit, ...], when_all_closed: str) -> Policy:
 def _rules(unit: Unit, others: list[str]) -> UnitRules:
     return UnitRules(
         closure_threshold=unit.beds if unit.closure_threshold is None else unit.closure_threshold,
-        incoming_threshold=unit.incoming_threshold,
-        reopening_gap=unit.reopening_gap,
-        admit_while_closed=unit.admit_while_closed,
-        review_hours=unit.review_hours,
         referral_order=tuple(others) if unit.referral_order is None else unit.referral_order,
+        **{field.name: getattr(unit, field.name) for rule in tables("parameters") for field in dataclasses.fields(rule)},
     )

@@ -6,7 +6,7 @@ from typing import Annotated
 
 from pydantic import Field
 
-from sim.scenario.tables import MOST_DAYS, NotNegative, Positive, Table
+from sim.tables import MOST_DAYS, NotNegative, Positive, Table
 
 
 class Run(Table):

@@ -14,9 +14,9 @@ from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
 from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
-from sim.scenario.tables import Row, Table, breach
+from sim.tables import Row, Table, breach
 from sim.scenario.units import Line, Unit
-from sim.scenario.wording import shown
+from sim.wording import shown
 
 
 @dataclass(frozen=True)

@@ -7,18 +7,9 @@ from typing import Annotated
 
 from pydantic import AfterValidator, Field
 
-from sim.scenario.tables import (
-    LONGEST_NAME,
-    MOST_BEDS,
-    NotNegative,
-    Positive,
-    Row,
-    Share,
-    Table,
-    Whole,
-    breach,
-)
-from sim.scenario.wording import shown
+from sim.rules import tables
+from sim.tables import LONGEST_NAME, MOST_BEDS, Positive, Row, Table, Threshold, breach
+from sim.wording import shown
 
 RESERVED_NAME = "network"
 
@@ -51,15 +42,12 @@ def _not_reserved(name: str) -> str:
 
 Line = Annotated[str, AfterValidator(_of_one_line)]
 Name = Annotated[Line, AfterValidator(_speakable)]
-Threshold = Annotated[Whole, Field(le=MOST_BEDS)]
-Gap = Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["reopening_gap = 1"])]
-ReviewHours = Annotated[NotNegative, Field(le=24 * 366, examples=["review_hours = 8"])]
 Target = Annotated[float, Field(gt=0, le=1)]
 Names = Annotated[tuple[str, ...], Row]
 
 
-class Unit(Table):
-    """A unit with its staffed beds, its closure rules and its target.
+class Unit(*tables("unit_keys"), Table):
+    """A unit with its staffed beds, its closure threshold and its target; other rules add keys of their own.
 
     Thresholds count load: occupied beds and beds reserved for patients on the road.
     """
@@ -67,10 +55,6 @@ class Unit(Table):
     name: Annotated[Name, AfterValidator(_not_reserved), Field(examples=['name = "Ashgill"'])]
     beds: Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["beds = 12"])]
     closure_threshold: Annotated[Threshold | None, Field(examples=["closure_threshold = 11"])] = None
-    incoming_threshold: Annotated[Threshold | None, Field(examples=["incoming_threshold = 9"])] = None
-    reopening_gap: Gap = 1
-    admit_while_closed: Annotated[Share, Field(examples=["admit_while_closed = 0.2"])] = 0.0
-    review_hours: ReviewHours = 0.0
     target_utilisation: Annotated[Target | None, Field(examples=["target_utilisation = 0.75"])] = None
     referral_order: Annotated[Names | None, Field(examples=['referral_order = ["Norbeck"]'])] = None
     stay_factor: Annotated[Positive, Field(ge=0.01, le=100, examples=["stay_factor = 1.0"])] = 1.0

@@ -28,6 +28,7 @@ def breach(rule: str, value: object, remedy: str, *, key: tuple[str | int, ...] 
 
 
 Whole = Annotated[int, Field(ge=0)]
+Threshold = Annotated[Whole, Field(le=MOST_BEDS)]
 Share = Annotated[float, Field(ge=0, le=1)]
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]

@@ -17,8 +17,8 @@ from typing import Annotated, Any, Literal
 from pydantic import Discriminator, Field, PrivateAttr, Tag, ValidationInfo, create_model, model_validator
 
 from sim import stays
-from sim.scenario.tables import NotNegative, Positive, Row, Share, Table, breach
-from sim.scenario.wording import nearest
+from sim.tables import NotNegative, Positive, Row, Share, Table, breach
+from sim.wording import nearest
 
 MOST_STAGES = 200
 MOST_BYTES = 200_000_000

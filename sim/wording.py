@@ -10,7 +10,7 @@ from typing import Any
 
 from pydantic.fields import FieldInfo
 
-from sim.scenario.tables import LONGEST_NAME
+from sim.tables import LONGEST_NAME
 
 Words = tuple[str, str, str]  # rule, value, remedy
 
