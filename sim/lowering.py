@@ -89,8 +89,8 @@ class IntakePlan:
     seed: int
     groups: tuple[GroupDraws, ...]
     stay_factors: tuple[float, ...]
+    delay_hours: Distribution | None
     horizon_days: float
-    delay_hours: Distribution | None = None
     outages: tuple[Outage, ...] | None = None
     staffed_beds: tuple[int, ...] = ()
 

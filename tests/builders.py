@@ -11,6 +11,8 @@ from sim import reference
 from sim.intake import Intake
 from sim.lowering import HOME_BED, NOBODY, Network, Rules
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
+from sim.rules.out_of_use import Staffing
+from sim.rules.reviews import Reviews
 from sim.trace import Trace
 
 A, B, C = range(3)  # units
@@ -80,24 +82,32 @@ def rules(
     reviews = sorted(
         review for unit in range(n) for review in _reviews(unit, float(hours[unit]), float(of.edges[-1]))
     )
+    times = np.array([time for time, _ in reviews], float)
+    units = np.array([unit for _, unit in reviews], np.int64)
+    soft = np.array(np.broadcast_to(np.asarray(admit_while_closed, float), n))
     return Rules(
         own_closes=own_closes,
         own_reopens=np.maximum(own_closes - gaps, 0),
         incoming_closes=incoming_closes,
         incoming_reopens=np.maximum(incoming_closes - gaps, 0),
-        admit_while_closed=np.array(np.broadcast_to(np.asarray(admit_while_closed, float), n)),
-        reviewed=hours > 0,
-        review_times=np.array([time for time, _ in reviews], float),
-        review_units=np.array([unit for _, unit in reviews], np.int64),
         referral_order=_places(
             [[(u + i) % n for i in range(1, n)] for u in range(n)] if asks is None else asks
         ),
         last_resort=last_resort,
+        admit_while_closed=soft if soft.any() else None,
+        reviews=Reviews(times, units, hours > 0) if hours.any() else None,
     )
 
 
-def intake(*patients: Patient, stay_factors: Sequence[float] = (1.0,)) -> Intake:
-    """The patients in order of arrival, those of one instant in the order given; one stay class a factor."""
+def intake(
+    *patients: Patient,
+    stay_factors: Sequence[float] = (1.0,),
+    staffing: Sequence[tuple[float, int, int]] | None = None,
+) -> Intake:
+    """The patients in order of arrival, those of one instant in the order given; one stay class a factor.
+
+    staffing: (time, unit, staffed beds from then on), in order of time, then unit.
+    """
     ordered = sorted(patients, key=lambda patient: patient.arrival)
     stay = np.array([patient.stay for patient in ordered], float)
     return Intake(
@@ -108,14 +118,24 @@ def intake(*patients: Patient, stay_factors: Sequence[float] = (1.0,)) -> Intake
         stay=np.stack([stay * factor for factor in stay_factors]),
         delay=np.array([patient.delay for patient in ordered], float),
         gate=np.array([patient.gate for patient in ordered], float),
+        staffing=None if staffing is None else _staffing(staffing),
     )
 
 
+def _staffing(changes: Sequence[tuple[float, int, int]]) -> Staffing:
+    times, units, beds = zip(*changes, strict=True) if changes else ((), (), ())
+    return Staffing(np.array(times, float), np.array(units, np.int64), np.array(beds, np.int64))
+
+
 def play(
-    of: Network, by: Rules, *patients: Patient, stay_factors: Sequence[float] = (1.0,)
+    of: Network,
+    by: Rules,
+    *patients: Patient,
+    stay_factors: Sequence[float] = (1.0,),
+    staffing: Sequence[tuple[float, int, int]] | None = None,
 ) -> tuple[list[Event], Record]:
     """The reference engine's event log and its record, which must be sound."""
-    log, record = traced(Case(of, by, intake(*patients, stay_factors=stay_factors)))
+    log, record = traced(Case(of, by, intake(*patients, stay_factors=stay_factors, staffing=staffing)))
     assert record.faults(of.measured_days) == []
     return log, record
 

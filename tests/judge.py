@@ -6,7 +6,7 @@ Both are slow and plain on purpose, and share no code with an engine.
 from __future__ import annotations
 
 from collections import deque
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
@@ -15,8 +15,10 @@ from sim.lowering import ANY_BED, NOBODY, TURNED_AWAY
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
 from tests.builders import Case, Event
 
-DISCHARGE, TRANSFER_ARRIVAL, REVIEW, NEW_ARRIVAL = 10, 20, 40, 50
-IN_THE_LOG = {DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", REVIEW: "review", NEW_ARRIVAL: "arrival"}
+DISCHARGE, TRANSFER_ARRIVAL, STAFFING, REVIEW, NEW_ARRIVAL = 10, 20, 30, 40, 50
+IN_THE_LOG = {
+    DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", STAFFING: "staffing", REVIEW: "review", NEW_ARRIVAL: "arrival",
+}  # fmt: skip
 
 
 class RuleBroken(AssertionError):  # noqa: N818 - what it says is the finding, not a mishap
@@ -56,9 +58,10 @@ class Judge:
         ]
         # Whatever is still to come, as (time, kind, sequence, unit): the next event is the least of it.
         arrivals = zip(case.intake.arrival.tolist(), case.intake.home.tolist(), strict=True)
-        reviews = zip(case.rules.review_times.tolist(), case.rules.review_units.tolist(), strict=True)
         self.due = [(time, NEW_ARRIVAL, patient, home) for patient, (time, home) in enumerate(arrivals)]
-        self.due += [(time, REVIEW, unit, unit) for time, unit in reviews]
+        self.due += [(time, REVIEW, unit, unit) for time, unit in _timetable(case.rules.reviews)]
+        self.due += [(time, STAFFING, unit, unit) for time, unit in _timetable(case.intake.staffing)]
+        self.staffed = deque([] if case.intake.staffing is None else case.intake.staffing.beds.tolist())
         self.implied: deque[tuple[str, Event]] = deque()  # what must follow at once, and by which rule
 
     def follow(self, log: list[Event]) -> None:
@@ -89,6 +92,8 @@ class Judge:
         elif kind == TRANSFER_ARRIVAL:
             self.wards[unit].reserved -= 1
             self.occupy(*line)
+        elif kind == STAFFING:
+            self.wards[unit].beds = self.staffed.popleft()
         elif kind == REVIEW:
             self.implied.extend(self.gate_moves(time, unit))
         else:
@@ -97,7 +102,7 @@ class Judge:
     def as_logged(self, event: tuple[float, int, int, int]) -> Event:
         """The line of the log that tells of a due event."""
         time, kind, sequence, unit = event
-        return time, IN_THE_LOG[kind], NOBODY if kind == REVIEW else sequence, int(unit)
+        return time, IN_THE_LOG[kind], NOBODY if kind in (REVIEW, STAFFING) else sequence, int(unit)
 
     def decision(self, time: float, patient: int, home: int) -> list[tuple[str, Event]]:
         """What must become of an arriving patient, by the four steps of the model."""
@@ -120,7 +125,8 @@ class Judge:
             self.wards[home],
             [unit for unit in self.rules.referral_order[home].tolist() if unit != NOBODY],
         )
-        soft = self.case.intake.gate[patient] < self.rules.admit_while_closed[home]
+        chances = self.rules.admit_while_closed
+        soft = chances is not None and self.case.intake.gate[patient] < chances[home]
         willing = [unit for unit in asked if self.wards[unit].incoming_open and self.wards[unit].free]
         any_free = [unit for unit in asked if self.wards[unit].free]
         if own.free and (own.own_open or soft):
@@ -149,7 +155,8 @@ class Judge:
 
     def moves_at_once(self, time: float, unit: int) -> list[tuple[str, Event]]:
         """What the gates do when the load has changed: nothing where they wait for a review."""
-        return [] if self.rules.reviewed[unit] else self.gate_moves(time, unit)
+        reviews = self.rules.reviews
+        return [] if reviews is not None and reviews.reviewed[unit] else self.gate_moves(time, unit)
 
     def gate_moves(self, time: float, unit: int) -> list[tuple[str, Event]]:
         """The gate lines that the load of a unit calls for now."""
@@ -168,22 +175,31 @@ class Judge:
         return moves
 
 
+def _timetable(events) -> list[tuple[float, int]]:
+    """(time, unit) of reviews or changes of staffed beds; empty where the rule is off."""
+    return [] if events is None else list(zip(events.times.tolist(), events.units.tolist(), strict=True))
+
+
 class Account:
     """The record of a run as an accountant draws it up from the event log alone."""
 
     def __init__(self, case: Case) -> None:
         network, n = case.network, len(case.network.beds)
-        self.beds, self.edges, self.home = network.beds, network.edges, case.intake.home
+        self.beds, self.edges, self.home = network.beds.copy(), network.edges, case.intake.home
+        staffing = case.intake.staffing
+        self.staffed = deque([] if staffing is None else staffing.beds.tolist())
+        levels = (len(self.edges) - 1, n, int(network.beds.max()) + 1)
         self.occupied, self.reserved = np.zeros(n, np.int64), np.zeros(n, np.int64)
         self.closed = {"own": case.rules.own_closes == 0, "incoming": case.rules.incoming_closes == 0}
         self.on_road: set[int] = set()
         self.now = 0.0
         self.book = Record(
-            occupancy_days=np.zeros((len(self.edges) - 1, n, int(network.beds.max()) + 1)),
+            occupancy_days=np.zeros(levels),
             gate_days=np.zeros((n, GATE_STATES)),
             **{name: np.zeros(n, np.int64) for name in ("arrived", "turned_away", "on_road_at_start")},
             **{name: np.zeros((n, n), np.int64) for name in ("diverted", "admitted")},
             on_road_at_end=self.reserved,
+            staffed_days=None if staffing is None else np.zeros(levels),
         )
 
     def of(self, log: list[Event]) -> Record:
@@ -203,6 +219,8 @@ class Account:
             days = max(0.0, min(until, end) - max(self.now, start))
             self.book.occupancy_days[period, units, self.occupied] += days
             self.book.gate_days[units, state] += days
+            if self.book.staffed_days is not None:
+                self.book.staffed_days[period, units, self.beds] += days
         if self.now < self.edges[0] <= until:
             self.book.on_road_at_start[:] = self.reserved
         self.now = until
@@ -224,6 +242,8 @@ class Account:
             self.on_road.discard(patient)
         elif kind == "discharge":
             self.occupied[unit] -= 1
+        elif kind == "staffing":
+            self.beds[unit] = self.staffed.popleft()
         elif kind != "review":
             gate, _, move = kind.split()
             self.closed[gate][unit] = move == "closes"
@@ -231,9 +251,12 @@ class Account:
 
 def differences(record: Record, book: Record) -> list[str]:
     """Where a record departs from the accountant's: times by more than 1e-9 days, counts at all."""
+    if record.arrays().keys() != book.arrays().keys():
+        return [f"measured {list(record.arrays())}, booked {list(book.arrays())}"]
     return [
-        f"{field.name}: measured {measured.tolist()}, booked {booked.tolist()}"
-        for field in fields(Record)
-        for measured, booked in [(getattr(record, field.name), getattr(book, field.name))]
-        if not np.allclose(measured, booked, rtol=0, atol=1e-9 if measured.dtype.kind == "f" else 0)
+        f"{name}: measured {measured.tolist()}, booked {book.arrays()[name].tolist()}"
+        for name, measured in record.arrays().items()
+        if not np.allclose(
+            measured, book.arrays()[name], rtol=0, atol=1e-9 if measured.dtype.kind == "f" else 0
+        )
     ]

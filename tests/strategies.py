@@ -89,7 +89,20 @@ def intakes(draw: st.DrawFn, of: Network, tick: float, stay_factors: tuple[float
         )
         for _ in range(alike)
     ]
-    return intake(*patients[:MOST_PATIENTS], stay_factors=stay_factors)
+    return intake(
+        *patients[:MOST_PATIENTS], stay_factors=stay_factors, staffing=draw(staffing_of(of, tick))
+    )
+
+
+@st.composite
+def staffing_of(draw: st.DrawFn, of: Network, tick: float) -> list[tuple[float, int, int]] | None:
+    """No changes of staffed beds in most networks, else up to eight on the clock, down to no bed at all."""
+    if draw(st.sampled_from([True, True, False])):
+        return None
+    last = round(float(of.edges[-1]) / tick)
+    places = st.tuples(st.integers(0, last + 1), st.integers(0, len(of.beds) - 1))
+    changes = sorted(draw(st.sets(places, max_size=8)))
+    return [(time * tick, unit, draw(st.integers(0, int(of.beds[unit])))) for time, unit in changes]
 
 
 @st.composite

@@ -92,7 +92,7 @@ class Table:
         """Runs the first cell from beginning to end and notes every event."""
         kernel.advance(
             *self._intake(), self.network.edges, self.network.extra_days, self.referral[0],
-            None if self.soft is None else self.soft[0], *self._reviews(),
+            self.soft[0], *self._reviews(),
             self.whole[0], self.since[0], self.times[0], self.keys[0], self.counters[0], self._in_heap(),
             self.occupancy_days[0], None if self.staffed_days is None else self.staffed_days[0],
             self.gate_days[0], self.counts[0], note_times, notes, 0, len(self.intake),
@@ -111,10 +111,8 @@ class Table:
 
     def _intake(self) -> tuple[np.ndarray | None, ...]:
         intake = self.intake
-        delay = intake.delay if intake.delay.any() else None
-        gate = None if self.soft is None else intake.gate
         staffing = (None, None, None) if intake.staffing is None else tuple(vars(intake.staffing).values())
-        return intake.arrival, intake.home, intake.stay, delay, gate, *staffing
+        return intake.arrival, intake.home, intake.stay, intake.delay, intake.gate, *staffing
 
     def _reviews(self) -> tuple[np.ndarray | None, np.ndarray | None]:
         reviews = self.rules[0].reviews
@@ -148,9 +146,8 @@ def _stack(rules: Sequence[Rules], name: str) -> np.ndarray:
     return np.stack([getattr(one, name) for one in rules])
 
 
-def _soft(rules: Sequence[Rules]) -> np.ndarray | None:
-    if all(one.admit_while_closed is None for one in rules):
-        return None
+def _soft(rules: Sequence[Rules]) -> np.ndarray:
+    """Every cell's chances of admission while closed, (cells, units)."""
     none = np.zeros(len(rules[0].own_closes))
     return np.stack([none if one.admit_while_closed is None else one.admit_while_closed for one in rules])
 
@@ -165,9 +162,8 @@ def _by_timetable(rules: Sequence[Rules]) -> list[list[int]]:
 
 
 def _nobody(plan: IntakePlan) -> Intake:
-    """One patient who never comes, with a delay and changes of staffed beds where the plan has them."""
+    """One patient who never comes, and changes of staffed beds where the plan has them."""
     never, home = np.array([np.inf]), np.zeros(1, np.int64)
-    delay = np.array([0.0 if plan.delay_hours is None else plan.delay_hours.mean()])
     staffing = None if plan.outages is None else Staffing(never, home, home)
     stay = np.ones((len(plan.stay_factors), 1))
-    return Intake(never, home, home, np.ones(1), stay, delay, np.array([0.5]), staffing)
+    return Intake(never, home, home, np.ones(1), stay, np.zeros(1), np.array([0.5]), staffing)

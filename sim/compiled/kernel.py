@@ -2,7 +2,7 @@
 
 It only adds, subtracts and compares, in the order in which the reference engine does, so that records are
 equal to the last bit. What a rule needs comes as None where no cell uses the rule, and numba then compiles the
-loop without it. Arrays are passed one by one: in a tuple every use would count references, which costs more
+loop without it, unless the rule is asked about so rarely that it costs nothing anyway. Arrays are passed one by one: in a tuple every use would count references, which costs more
 than the simulation. Nothing here imports the reference engine, nor it this one.
 """
 
@@ -50,7 +50,7 @@ def advance(
 ):  # fmt: skip
     """Runs patients `first` to `last` and all events before the last of them; the last block runs to the end.
 
-    arrival, home_of, delay, gate: (patients,); stay: (classes, patients). delay, gate, staffing_*, staffed_days, soft,
+    arrival, home_of, delay, gate: (patients,); stay: (classes, patients); soft: (units,). staffing_*, staffed_days,
     review_*, note_times, notes: None where no rule (or nobody) asks for them. The rest: see the columns.
     """
     end = edges[-1]
@@ -119,9 +119,8 @@ def advance(
                 if counts_now:
                     counts[home, PAIRS + unit] += 1
                 note(note_times, notes, counters, now, TRANSFERRED, who, unit)
-                on_road = days_on_road(delay, who)
-                if on_road > 0:
-                    more_occupied, due, length = 0, TRANSFER_ARRIVAL, on_road
+                if delay[who] > 0:
+                    more_occupied, due, length = 0, TRANSFER_ARRIVAL, delay[who]
                 else:
                     length += extra_days
 
@@ -189,7 +188,7 @@ def advance_table(
         for cell in range(len(whole)):
             advance(
                 arrival, home_of, stay, delay, gate, staffing_times, staffing_units, staffing_beds,
-                edges, extra_days, referral[cell], cell_of(soft, cell), review_times, review_units,
+                edges, extra_days, referral[cell], soft[cell], review_times, review_units,
                 whole[cell], since[cell], times[cell], keys[cell], counters[cell], in_heap,
                 occupancy_days[cell], cell_of(staffed_days, cell), gate_days[cell], counts[cell], None, None,
                 first, until,
@@ -212,7 +211,7 @@ def choose_unit(whole, referral, soft, gate, patient, home):
     """The unit that takes the patient, or NOBODY."""
     state = whole[home, GATE_STATE]
     free_at_home = state & FULL == 0
-    if free_at_home and (state & OWN_CLOSED == 0 or is_let_in(soft, gate, patient, home)):
+    if free_at_home and (state & OWN_CLOSED == 0 or gate[patient] < soft[home]):
         return home
     for place in range(referral.shape[1]):
         unit = referral[home, place]
@@ -296,22 +295,6 @@ def review_unit(review_units, counters):
     review = counters[NEXT_REVIEW]
     counters[NEXT_REVIEW] = review + 1
     return review_units[review]
-
-
-@compiled
-def is_let_in(soft, gate, patient, home):
-    """Whether the patient's gate number lets them in at the closed home."""
-    if soft is None or gate is None:
-        return False
-    return gate[patient] < soft[home]
-
-
-@compiled
-def days_on_road(delay, patient):
-    """The patient's transfer delay."""
-    if delay is None:
-        return 0.0
-    return delay[patient]
 
 
 @compiled

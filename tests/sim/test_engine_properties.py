@@ -8,15 +8,15 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 
-from sim import reference
+from sim import engines, reference
 from sim.lowering import HOME_BED, TURNED_AWAY
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED
-from sim.replicate import ENGINES
-from tests.builders import Case, traced
+from tests.builders import Case, Event, traced
 from tests.judge import Account, Judge, differences
 from tests.strategies import cases
 
-each_engine = pytest.mark.parametrize("run", ENGINES.values(), ids=ENGINES.keys())
+RUNS = [engines.load(name).run for name in engines.ENGINES]
+each_engine = pytest.mark.parametrize("run", RUNS, ids=engines.ENGINES)
 many = settings(deadline=None, max_examples=120)
 some = settings(deadline=None, max_examples=40)
 
@@ -40,7 +40,7 @@ def test_the_networks_are_various_enough_to_test_every_rule():
 
 
 EVERYTHING = (
-    *("arrival", "admission", "discharge", "transfer", "turned away", "review"),
+    *("arrival", "admission", "discharge", "transfer", "turned away", "review", "staffing"),
     *("own gate closes", "own gate opens", "incoming gate closes", "incoming gate opens"),
     *(
         "on the road at the start",
@@ -49,6 +49,7 @@ EVERYTHING = (
         "closed with a free bed",
     ),
     *("closed to others only", "admitted at a closed gate", "turned away with no unit full"),
+    *("more patients than staffed beds",),
     *("stay of 0", "tie", "five at once", "more than one period", "warm-up"),
 )
 
@@ -68,6 +69,7 @@ def found_in(case: Case) -> set[str]:
         "closed to others only": record.gate_days[:, incoming & ~own].any(),
         "admitted at a closed gate": np.diagonal(record.admitted)[shut].any(),
         "turned away with no unit full": record.turned_away.any() and not record.gate_days[:, full].any(),
+        "more patients than staffed beds": overfull(case, log),
         "stay of 0": (case.intake.drawn_stay == 0).any(),
         "tie": len(set(times)) < len(times),
         "five at once": any(times.count(time) >= 5 for time in set(times)),
@@ -75,6 +77,18 @@ def found_in(case: Case) -> set[str]:
         "warm-up": case.network.edges[0] > 0,
     }
     return {line[1] for line in log} | {mark for mark, there in marks.items() if there}
+
+
+def overfull(case: Case, log: list[Event]) -> bool:
+    """Whether a unit ever had more patients than staffed beds."""
+    occupied, left = [0] * len(case.network.beds), iter([])
+    if case.intake.staffing is not None:
+        left = iter(case.intake.staffing.beds.tolist())
+    for _, kind, _, unit in log:
+        occupied[unit] += (kind == "admission") - (kind == "discharge")
+        if kind == "staffing" and occupied[unit] > next(left):
+            return True
+    return False
 
 
 # --- the event log of the reference engine ----------------------------------------------------------------
@@ -161,7 +175,8 @@ def test_gates_follow_their_thresholds(run, case):
             assert not gate_days[unit, ~own].any()
         if rules.incoming_closes[unit] == 0:
             assert not gate_days[unit, ~incoming].any()
-        if not rules.reviewed[unit]:  # a full unit is at or above every threshold
+        waits = rules.reviews is not None and rules.reviews.reviewed[unit]
+        if not waits and case.intake.staffing is None:  # a full unit is at or above every threshold
             assert not gate_days[unit, full & ~(own & incoming)].any()
             closes_when_full = rules.own_closes[unit] == case.network.beds[unit]
             if closes_when_full and rules.own_reopens[unit] == rules.own_closes[unit] - 1:
@@ -174,7 +189,8 @@ def test_gates_follow_their_thresholds(run, case):
 def test_last_resorts(run, case):
     record = run(case.network, case.rules, case.intake)
     if case.rules.last_resort == TURNED_AWAY:  # a unit never open, and no soft closure, keeps nobody
-        shut = (case.rules.own_closes == 0) & (case.rules.admit_while_closed == 0)
+        chances = case.rules.admit_while_closed
+        shut = (case.rules.own_closes == 0) & (True if chances is None else chances == 0)
         assert not np.diagonal(record.admitted)[shut].any()
     if case.rules.last_resort == HOME_BED and not case.rules.incoming_closes.any():  # nobody takes transfers
         assert not record.diverted.any()
@@ -208,6 +224,7 @@ def test_judged_periods_split_the_window_and_change_nothing_else(run, case):
 @given(case=cases())
 def test_nothing_after_the_window_matters(run, case):
     before = case.intake.arrival < case.network.edges[-1]
-    kept = {f.name: getattr(case.intake, f.name)[..., before] for f in dataclasses.fields(case.intake)}
+    names = [field.name for field in dataclasses.fields(case.intake) if field.name != "staffing"]
+    kept = {name: getattr(case.intake, name)[..., before] for name in names}
     cut = dataclasses.replace(case.intake, **kept)
     assert run(case.network, case.rules, cut).hash == run(case.network, case.rules, case.intake).hash

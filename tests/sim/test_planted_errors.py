@@ -153,8 +153,8 @@ def _after_init(patch: Patch, kind: type, change: Callable) -> None:
     """Has `change` done to every new object of that kind."""
     init = kind.__init__
 
-    def init_and_change(self, *arguments):
-        init(self, *arguments)
+    def init_and_change(self, *arguments, **named):
+        init(self, *arguments, **named)
         change(self)
 
     patch.setattr(kind, "__init__", init_and_change)
