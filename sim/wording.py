@@ -18,7 +18,7 @@ _LONGEST_SHOWN = 80
 _MOST_NAMED = 12
 _MUST_BE = {
     "int_type": "a whole number", "int_from_float": "a whole number", "float_type": "a number",
-    "string_type": "text in quotes", "bool_type": "true or false", "tuple_type": "an array",
+    "string_type": "text in quotes", "tuple_type": "an array",
     "dict_type": "a table", "model_type": "a table", "model_attributes_type": "a table",
     "finite_number": "a finite number",
 }  # fmt: skip

@@ -83,7 +83,7 @@ class Collector:
             if isinstance(part, int):
                 named = depth == 1 and isinstance(level, Mapping)
                 label = level.get(_NAMED_ROWS.get(path[0], "")) if named else None
-                part = label if isinstance(label, str) and label.strip() else f"{part + 1}"
+                part = label if isinstance(label, str) and label else f"{part + 1}"
             words.append(as_written(part))
         return ".".join(words) or "file"
 

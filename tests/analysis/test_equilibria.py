@@ -170,6 +170,15 @@ def test_best_responses_list_every_tie_and_name_the_others_choices():
     assert third == {(a, b, None): (0,) for a in range(2) for b in range(3)}
 
 
+def test_best_responses_take_the_tolerance_inclusively_too():
+    game = table((2, 1), lambda a, b: (0.25 * a, 0))
+    for tolerance, best in ((0.0, (0,)), (0.25, (0, 1))):
+        first = best_responses(game, "cost", tolerance=tolerance)[0]
+        assert (first.player, first.others, first.best) == (0, (None, 0), best)
+    tied = table((2, 1), lambda a, b: (1, 0))
+    assert best_responses(tied, "cost", tolerance=0)[0].best == (0, 1)
+
+
 def test_a_player_with_one_strategy_has_no_regret():
     game = table((1, 3), lambda a, b: (7, b))
     assert regrets(game, "cost")[0].tolist() == [[0, 0, 0]]

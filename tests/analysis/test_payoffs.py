@@ -93,7 +93,7 @@ def run(replication, cell):
     occupancy = np.zeros((1, 3, 10))
     for unit, level in enumerate((a, b, c)):
         occupancy[0, unit, level] = DAYS
-    admitted = np.diag([10, 20, cell])
+    admitted = np.diag([10 + replication, 20, cell])
     return Run(
         replication, cell, record(occupancy, turned_away=[replication, 0, cell], admitted=admitted), ""
     )
@@ -153,8 +153,9 @@ def test_a_simulated_table_is_laid_out_like_an_exact_one():
         assert table.payoffs[(slice(None), *profile)] == pytest.approx(expected)
         assert np.all(table.low[(slice(None), *profile)] <= np.add(expected, 1e-12))
         assert np.all(table.high[(slice(None), *profile)] >= np.subtract(expected, 1e-12))
-        assert table.welfare[profile] == pytest.approx((30 + cell) / DAYS)
-        assert table.welfare_replicates[(slice(None), *profile)] == pytest.approx((30 + cell) / DAYS)
+        assert table.welfare[profile] == pytest.approx((31 + cell) / DAYS)
+        treated = [(30 + replication + cell) / DAYS for replication in range(3)]
+        assert table.welfare_replicates[(slice(None), *profile)] == pytest.approx(treated)
 
 
 def test_outcomes_stand_beside_the_table_by_cell_and_unit():
@@ -162,7 +163,7 @@ def test_outcomes_stand_beside_the_table_by_cell_and_unit():
     assert outcomes.turned_away[7] == pytest.approx(
         [0.1, 0.0, 0.7]
     )  # mean of 0, 1, 2 over 10 days; 7 over 10
-    assert outcomes.admitted[7] == pytest.approx([1, 2, 0.7])
+    assert outcomes.admitted[7] == pytest.approx([1.1, 2, 0.7])
     assert outcomes.utilisation[7, 2] == pytest.approx(7 / 9)
 
 

@@ -24,7 +24,7 @@ from sim.scenario import Scenario, parse_scenario
 FALSE_ALARM = 5e-7  # of one fact
 REPLICATIONS = 40
 
-Where = tuple[str, str]  # a unit, or "network", and a measure; of a unit also "occupancy n" and "beds"
+Where = tuple[str, str]  # a unit, or "network", and a measure; of a unit also "occupancy n"
 
 
 def network(
@@ -40,18 +40,27 @@ def network(
     """The scenario with these rows; `days`: warm-up and measured days; `folder`: where its data files lie."""
     tables = {
         "schema": 1,
-        "run": {"seed": seed, "warm_up_days": days[0], "measured_days": days[1], "replications": REPLICATIONS},
+        "run": {
+            "seed": seed,
+            "warm_up_days": days[0],
+            "measured_days": days[1],
+            "replications": REPLICATIONS,
+        },
         "units": units,
         "patients": patients,
         "diversion": {"when_all_closed": resort, **diversion},
     }
-    return parse_scenario("\n".join(f"{key} = {in_toml(value)}" for key, value in tables.items()), folder=folder)
+    return parse_scenario(
+        "\n".join(f"{key} = {in_toml(value)}" for key, value in tables.items()), folder=folder
+    )
 
 
 def in_toml(value: Any) -> str:
     """A value as TOML writes it in one line; strings, numbers and truth values are those of JSON."""
     if isinstance(value, Mapping):
-        return "{ " + ", ".join(f"{json.dumps(key)} = {in_toml(inner)}" for key, inner in value.items()) + " }"
+        return (
+            "{ " + ", ".join(f"{json.dumps(key)} = {in_toml(inner)}" for key, inner in value.items()) + " }"
+        )
     if isinstance(value, list | tuple):
         return "[" + ", ".join(map(in_toml, value)) + "]"
     return json.dumps(value)
@@ -78,7 +87,11 @@ def refuted(
     records = records_of(scenario) if records is None else records
     simulation = summarise(records, scenario, confidence=1 - FALSE_ALARM)
     judged = ((place, value, estimate_at(place, simulation)) for place, value in facts.items())
-    return [f"{place}: {value:.6g} is expected, {seen} was simulated" for place, value, seen in judged if misses(seen, value)]
+    return [
+        f"{place}: {value:.6g} is expected, {seen} was simulated"
+        for place, value, seen in judged
+        if misses(seen, value)
+    ]
 
 
 def estimate_at(place: Where, simulation: Simulation) -> Estimate:

@@ -25,7 +25,7 @@ DATA_SHA256 = "d53b3fdadbacc959583be2317edb153bd3f4a8849a5ede2bd1eefcc7410d3da2"
 DATA = "usr/lib/R/site-library/kmi/data/icu.pneu.rda"
 
 
-class Unavailable(Exception):
+class Unavailable(Exception):  # noqa: N818
     """The data cannot be had here: no apt, no network, or another version is served."""
 
 
@@ -78,13 +78,15 @@ def _unpacked(folder: Path) -> Path:
 
 def _call(*command: str, folder: Path | None = None) -> str:
     """The command's output; Unavailable where it fails or hangs."""
+    said = f"`{' '.join(command)}`"
     try:
         done = subprocess.run(
-            command, cwd=folder, env=os.environ | {"LC_ALL": "C"}, capture_output=True, text=True, timeout=300, check=True
+            command, cwd=folder, env=os.environ | {"LC_ALL": "C"}, capture_output=True, text=True, timeout=300
         )
-    except (subprocess.CalledProcessError, subprocess.TimeoutExpired) as error:
-        said = (error.stderr or b"") if isinstance(error.stderr, bytes) else (error.stderr or "").strip()
-        raise Unavailable(f"`{' '.join(command)}` failed: {said or error}") from None
+    except subprocess.TimeoutExpired:
+        raise Unavailable(f"{said} had not finished after 300 seconds") from None
+    if done.returncode != 0:
+        raise Unavailable(f"{said} failed: {done.stderr.strip()}")
     return done.stdout
 
 

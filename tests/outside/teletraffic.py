@@ -1,7 +1,7 @@
 """Published formulas of loss systems, written apart from the program that they judge.
 
-`test_loss_systems.py` first holds them against printed tables. Offered loads are in beds (arrivals a day times
-mean stay in days).
+`test_loss_systems.py` first holds them against printed tables. Offered loads are in beds: arrivals a day
+times mean stay in days.
 """
 
 from __future__ import annotations
@@ -30,12 +30,14 @@ def occupancy_of_loss_unit(beds: int, offered: float) -> np.ndarray:
     return weights / weights.sum()
 
 
-def occupancy_of_closing_unit(beds: int, closes_to_transfers_at: int, own: float, transfers: float) -> np.ndarray:
+def occupancy_of_closing_unit(
+    beds: int, closes_to_transfers_at: int, own: float, transfers: float
+) -> np.ndarray:
     """Distribution of occupied beds, (beds + 1,), of a unit that takes transfers only below a threshold.
 
-    own, transfers: offered loads. Any law of stay, the same for both kinds of patients. Source: Oakes, "Random
-    overlapping intervals - a generalization of Erlang's loss formula", Annals of Probability 4, 1976, 940-946
-    (abstract read; title from memory): p(n+1) / p(n) = load offered at n / (n + 1).
+    own, transfers: offered loads. Any law of stay, the same for both kinds of patients. Source: Oakes,
+    "Random overlapping intervals - a generalization of Erlang's loss formula", Annals of Probability 4, 1976,
+    940-946 (abstract read; title from memory): p(n+1) / p(n) = load offered at n / (n + 1).
     """
     loads = own + transfers * (np.arange(beds) < closes_to_transfers_at)
     weights = np.cumprod(np.append(1.0, loads / np.arange(1, beds + 1)))

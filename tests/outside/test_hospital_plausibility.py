@@ -1,10 +1,11 @@
 """Published arithmetic and published experience of hospital beds.
 
 Two kinds of statements, kept apart. The arithmetic behind the "85 %" rule is exact and is tested as such, by
-simulation with stays as intensive-care registries report them; at most 50 facts, a false alarm 1 in 40,000 for
-that part (see `facts.py`), planted errors a bed and 5 % of a stay. The statements of plausibility reproduce no
-number of the papers they name (their bed numbers and rates were not at hand): they say that the simulator's
-units behave as those papers describe, and that the invented demonstrations lie within what is observed.
+simulation with stays as intensive-care registries report them; at most 50 facts, a false alarm 1 in 40,000
+for that part (see `facts.py`), planted errors a bed and 5 % of a stay. The statements of plausibility
+reproduce no number of the papers they name (their bed numbers and rates were not at hand): they say that the
+simulator's units behave as those papers describe, and that the invented demonstrations lie within what is
+observed.
 """
 
 from __future__ import annotations
@@ -19,14 +20,19 @@ from sim.stays import Lognormal
 from tests.outside.facts import network, patients_of, records_of, refuted
 from tests.outside.teletraffic import erlang_b, offered_at_refusal, offered_at_utilisation
 
-# Computed from Erlang's loss formula (1917): the share refused where utilisation is 85 %, and the utilisation where
-# 5 % are refused, by staffed beds. The message is that of de Bruin, Bekker, van Zanten & Koole, "Dimensioning hospital
-# wards using the Erlang loss model", Annals of Operations Research 178 (2010), 23-43 (abstract read).
-REFUSED_AT_85 = {6: 0.464, 10: 0.327, 12: 0.282, 15: 0.231, 20: 0.173, 24: 0.141, 30: 0.108, 40: 0.074, 60: 0.040}
-UTILISATION_AT_5 = {6: 0.469, 10: 0.590, 12: 0.629, 15: 0.673, 20: 0.724, 24: 0.753, 30: 0.785, 40: 0.822, 60: 0.864}
+# Computed from Erlang's loss formula (1917): the share refused where utilisation is 85 %, and the utilisation
+# where 5 % are refused, by staffed beds. The message is that of de Bruin, Bekker, van Zanten & Koole,
+# "Dimensioning hospital wards using the Erlang loss model", Annals of Operations Research 178 (2010), 23-43
+# (abstract read).
+REFUSED_AT_85 = {
+    6: 0.464, 10: 0.327, 12: 0.282, 15: 0.231, 20: 0.173, 24: 0.141, 30: 0.108, 40: 0.074, 60: 0.040,
+}  # fmt: skip
+UTILISATION_AT_5 = {
+    6: 0.469, 10: 0.590, 12: 0.629, 15: 0.673, 20: 0.724, 24: 0.753, 30: 0.785, 40: 0.822, 60: 0.864,
+}  # fmt: skip
 
-# Length of stay of 111,663 patients in 131 intensive care units, 2008-09: mean 3.4, standard deviation 5.1, median 1.8
-# days (BMC Medical Research Methodology 12:68, 2012, abstract read).
+# Length of stay of 111,663 patients in 131 intensive care units, 2008-09: mean 3.4, standard deviation 5.1,
+# median 1.8 days (BMC Medical Research Methodology 12:68, 2012, abstract read).
 MEAN_STAY, CV, MEDIAN = 3.4, 1.5, 1.8
 STAY = {"family": "lognormal", "mean_days": MEAN_STAY, "cv": CV}
 SCENARIOS = sorted((Path(__file__).parents[2] / "scenarios").glob("*.toml"))
@@ -36,7 +42,9 @@ def loss_unit(beds, offered, *, mean_days=MEAN_STAY, patients=2_000):
     """A unit with this offered load, long enough for so many patients in each replication."""
     per_day = offered / MEAN_STAY
     stay = STAY | {"mean_days": mean_days}
-    return network([{"name": "A", "beds": beds}], [patients_of("A", per_day, stay)], days=(98, patients / per_day))
+    return network(
+        [{"name": "A", "beds": beds}], [patients_of("A", per_day, stay)], days=(98, patients / per_day)
+    )
 
 
 class TestArithmeticOfThe85PercentRule:
@@ -50,7 +58,11 @@ class TestArithmeticOfThe85PercentRule:
 
     def facts(self, beds):
         refused = erlang_b(beds, offered_at_utilisation(beds, 0.85))
-        return {("A", "utilisation"): 0.85, ("A", "turned_away_share"): refused, ("A", "full_fraction"): refused}
+        return {
+            ("A", "utilisation"): 0.85,
+            ("A", "turned_away_share"): refused,
+            ("A", "full_fraction"): refused,
+        }
 
     @pytest.mark.parametrize("beds", [6, 12, 24, 60])
     def test_simulated(self, beds):
@@ -100,18 +112,19 @@ def seen_in(scenario):
     """Utilisation of the network, and transfers per admission, in three replications."""
     simulation = summarise(records_of(scenario, replications=3), scenario, confidence=0.95)
     occupied = sum(unit["mean_occupied"].mean for unit in simulation.units.values())
-    beds = sum(unit.beds for unit in scenario.units)
-    return occupied / beds, simulation.network["transfers_per_day"].mean / simulation.network["throughput_per_day"].mean
+    beds, whole = sum(unit.beds for unit in scenario.units), simulation.network
+    return occupied / beds, whole["transfers_per_day"].mean / whole["throughput_per_day"].mean
 
 
 def is_plausible(utilisation, transfers):
     """Whether a network could be one of those observed.
 
-    Mean hourly occupancy of 97 intensive care units: 68.2 %, standard deviation 21.3 (Wunsch et al., Critical Care
-    Medicine 2013); 70 to 75 % is thought best (Tierney & Conroy, Australian Critical Care 2014); above 85 % lies
-    risk (Bagust, Place & Posnett, BMJ 319, 1999, 155-158, abstract read). Transfers per admission: 0.25 % in 198
-    units (Barratt et al., Critical Care 16:R179, 2012; author from memory) to 6.6 % at a tertiary centre (Journal of
-    Intensive Care 2020, s40560-020-00501-z). A demonstration of diversion may show up to twice that.
+    Mean hourly occupancy of 97 intensive care units: 68.2 %, standard deviation 21.3 (Wunsch et al., Critical
+    Care Medicine 2013); 70 to 75 % is thought best (Tierney & Conroy, Australian Critical Care 2014); above
+    85 % lies risk (Bagust, Place & Posnett, BMJ 319, 1999, 155-158, abstract read). Transfers per admission:
+    0.25 % in 198 units (Barratt et al., Critical Care 16:R179, 2012; author from memory) to 6.6 % at a
+    tertiary centre (Journal of Intensive Care 2020, s40560-020-00501-z). A demonstration of diversion may
+    show up to twice that.
     """
     return 0.60 <= utilisation <= 0.85 and 0.0025 <= transfers <= 2 * 0.066
 

@@ -26,16 +26,16 @@ from tests.outside.teletraffic import (
 ERLANG_B = {
     (1, 1): 0.5, (2, 1): 0.2, (5, 3): 0.110054347826, (6, 4): 0.117162471396, (8, 6): 0.121875783666,
     (10, 5): 0.0183845703366, (10, 8): 0.121661064253, (12, 10): 0.119739188445, (15, 10): 0.0364969454724,
-    (20, 12): 0.00979563942006, (20, 15): 0.0455932155898, (20, 20): 0.158891961542, (32, 20): 0.00338030929178,
-    (100, 84.0644): 0.0100004811776, (100, 100): 0.0757004527109,
+    (20, 12): 0.00979563942006, (20, 15): 0.0455932155898, (20, 20): 0.158891961542, 
+    (32, 20): 0.00338030929178, (100, 84.0644): 0.0100004811776, (100, 100): 0.0757004527109,
 }  # fmt: skip
 
-# Offered load at which 9 beds refuse a share, as printed with one decimal in "Carrier Grade Voice over IP", second
-# edition, Appendix A, Table of Erlang B.
+# Offered load at which 9 beds refuse a share, as printed with one decimal in "Carrier Grade Voice over IP",
+# second edition, Appendix A, Table of Erlang B.
 NINE_BEDS = {0.0001: 1.8, 0.001: 2.6, 0.01: 3.8, 0.02: 4.3, 0.05: 5.4}
 
-# The same for more beds and 0.1, 1, 2 and 5 %: standard Erlang B tables (from memory) print 4.46, 12.0 and 84.1 for
-# 10, 20 and 100 beds at 1 %; computed to the digits shown.
+# The same for more beds and 0.1, 1, 2 and 5 %: standard Erlang B tables (from memory) print 4.46, 12.0 and
+# 84.1 for 10, 20 and 100 beds at 1 %; computed to the digits shown.
 GRADES = {
     1: (0.001001, 0.010101, 0.020408, 0.052632), 2: (0.045756, 0.152593, 0.223467, 0.381316),
     5: (0.762115, 1.360787, 1.657143, 2.218472), 10: (3.092045, 4.461177, 5.084005, 6.215707),
@@ -132,7 +132,7 @@ def loss_facts(beds, per_day, mean_days):
         ("A", "turned_away_share"): refused,
         ("A", "mean_occupied"): per_day * mean_days * (1 - refused),
         ("network", "throughput_per_day"): per_day * (1 - refused),
-        **{("A", f"occupancy {level}"): share for level, share in levels if 0.05 < share and level < beds},
+        **{("A", f"occupancy {level}"): share for level, share in levels if share > 0.05 and level < beds},
     }
 
 
@@ -166,17 +166,21 @@ class TestOneUnit:
     def test_trauma_bays_held_too_long_are_refuted(self):
         assert refuted(self.TRAUMA, loss_unit(3, 8, longer(TWO_HOURS, 1.05), days=(5, 350)))
 
-    @pytest.mark.parametrize(("law", "factor"), [("exponential", 0.97), ("constant", 1.03), ("lognormal", 1.05)])
+    @pytest.mark.parametrize(
+        ("law", "factor"), [("exponential", 0.97), ("constant", 1.03), ("lognormal", 1.05)]
+    )
     def test_a_wrong_mean_stay_is_refuted(self, law, factor):
         assert refuted(loss_facts(10, 8, 1), loss_unit(10, 8, longer(STAYS[law], factor)))
 
     def test_a_unit_that_keeps_a_bed_back_is_refuted(self):
         units = [{"name": "A", "beds": 10, "closure_threshold": 9}]
-        assert refuted(loss_facts(10, 8, 1), network(units, [patients_of("A", 8, STAYS["exponential"])], days=DAYS))
+        assert refuted(
+            loss_facts(10, 8, 1), network(units, [patients_of("A", 8, STAYS["exponential"])], days=DAYS)
+        )
 
 
 def closing_unit(stay, closes_at=8):
-    """Own patients, and transfers from a unit that never admits, meet a unit that closes to transfers early."""
+    """Own patients, and transfers from a unit that never admits, meet a unit that closes to these early."""
     units = [
         {"name": "A", "beds": 10, "incoming_threshold": closes_at, "referral_order": []},
         {"name": "sends", "beds": 1, "closure_threshold": 0, "referral_order": ["A"]},
@@ -284,7 +288,7 @@ def spread_around(records, mean, unit=1):
 
 @pytest.mark.parametrize(("beds", "per_day"), [(5, 3), (10, 8), (20, 20)])
 def test_overflow_moments(beds, per_day):
-    """Mean and variance of what overflows; the variance needs exponential stays, and tells them from others."""
+    """Mean and variance of what overflows; the variance needs exponential stays, unlike the mean."""
     mean, variance = overflow_moments(beds, per_day)
     scenario = overflow_into_wide_unit(beds, per_day, STAYS["exponential"])
     records = records_of(scenario)
@@ -319,12 +323,14 @@ def overflows():
 class TestTwoOverflowsIntoSharedBeds:
     """Units of 6 and 8 beds overflow into 5 shared ones.
 
-    The equivalent random method of Wilkinson (1956), which Litvak, van Rijsbergen, Boucherie & van Houdenhoven,
-    "Managing the overflow of intensive care patients", EJOR 185 (2008), 998-1010, use for regional beds and
-    call quite accurate (abstract read). Here it is 0.6 % off a chain solved elsewhere (.0814688413).
+    The equivalent random method of Wilkinson (1956), which Litvak, van Rijsbergen, Boucherie & van
+    Houdenhoven, "Managing the overflow of intensive care patients", EJOR 185 (2008), 998-1010, use for
+    regional beds and call quite accurate (abstract read). Here it is 0.6 % off a chain solved elsewhere
+    (.0814688413).
     """
 
     STREAMS, SHARED, QUALITY = ((6, 4), (8, 6)), 5, 0.01
+
     def lost(self, load):
         overflow = sum(overflow_moments(*stream)[0] for stream in self.STREAMS)
         return {("network", "turned_away_per_day"): load, ("shared", "mean_occupied"): overflow - load}

@@ -18,8 +18,8 @@ from analysis.command.entry import run
 from sim.intake import draw_intake
 from sim.lowering import plan_intake
 from sim.scenario import read_scenario
+from tests.outside import real_stays
 from tests.outside.facts import FALSE_ALARM, differs
-from tests.outside.real_stays import Unavailable, by_patient, fetch, read_rows
 from tests.outside.teletraffic import erlang_b
 
 BEDS, LOADS, TARGETS = {"Ellerbeck": 8, "Thornholme": 6}, {"Ellerbeck": 6.0, "Thornholme": 4.0}, (0.7, 0.65)
@@ -55,15 +55,16 @@ def rows(request, tmp_path_factory):
     """The data as they are; kept between runs in pytest's cache, which git ignores."""
     cache = getattr(request.config, "cache", None)
     try:
-        return read_rows(fetch(tmp_path_factory.mktemp("stays") if cache is None else cache.mkdir("real-stays")))
-    except Unavailable as reason:
+        folder = tmp_path_factory.mktemp("stays") if cache is None else cache.mkdir("real-stays")
+        return real_stays.read_rows(real_stays.fetch(folder))
+    except real_stays.Unavailable as reason:
         pytest.skip(f"real stays are not at hand: {reason}")
 
 
 @pytest.fixture(scope="session")
 def patients(rows):
     """One row a patient."""
-    return by_patient(rows)
+    return real_stays.by_patient(rows)
 
 
 @pytest.fixture(scope="session")
@@ -102,6 +103,35 @@ def command(capsys):
     return json_of
 
 
+class TestFetching:
+    """Only what cannot be had is skipped; what is wrong is a failure."""
+
+    def test_other_content_under_the_right_name_fails(self, tmp_path, monkeypatch):
+        def served_wrongly(*command, folder=None):
+            if "download" in command:
+                (folder / "wrong.deb").write_bytes(b"something else")
+            return f"Candidate: {real_stays.VERSION}"
+
+        monkeypatch.setattr(real_stays, "_call", served_wrongly)
+        monkeypatch.setattr(real_stays.shutil, "which", str)
+        with pytest.raises(AssertionError, match="wrong.deb"):
+            real_stays.fetch(tmp_path)
+
+    @pytest.mark.parametrize(
+        ("said", "reason"), [("Candidate: 9.9-1", "9.9-1 is served"), ("", "no package list")]
+    )
+    def test_another_version_or_none_is_unavailable(self, tmp_path, monkeypatch, said, reason):
+        monkeypatch.setattr(real_stays, "_call", lambda *command, folder=None: said)
+        monkeypatch.setattr(real_stays.shutil, "which", str)
+        with pytest.raises(real_stays.Unavailable, match=reason):
+            real_stays.fetch(tmp_path)
+
+    def test_no_apt_is_unavailable(self, tmp_path, monkeypatch):
+        monkeypatch.setattr(real_stays.shutil, "which", lambda tool: None)
+        with pytest.raises(real_stays.Unavailable, match="apt-get"):
+            real_stays.fetch(tmp_path)
+
+
 class TestTheDataThemselves:
     def test_as_its_help_page_describes_it(self, rows):
         """1,421 observations; whoever had stayed at least a day; death or discharge alive as the end."""
@@ -137,7 +167,9 @@ class TestTheEmpiricalFamily:
         u = np.concatenate([(np.arange(n) + 0.5) / n, [1e-9, 0.1, 1 / 3, 0.5, 0.999, 1 - 1e-9]])
         ordered = sorted(stays)
         assert family.quantile(u).tolist() == [ordered[int(n * one)] for one in u]
-        assert (family.mean(), family.cv()) == pytest.approx((stays.mean(), stays.std() / stays.mean()), rel=1e-12)
+        assert (family.mean(), family.cv()) == pytest.approx(
+            (stays.mean(), stays.std() / stays.mean()), rel=1e-12
+        )
 
     def misfit(self, scenario, stays):
         """Whether the stays drawn in 150 replications are too far from the data (chi-squared)."""
@@ -158,7 +190,9 @@ class TestTheEmpiricalFamily:
 def little_gaps(document, mean_stay):
     """Occupied beds minus admissions a day times mean stay, over all units, of each replication."""
     units = [one["units"].values() for one in document["per_replication"]]
-    owed = [sum(unit["mean_occupied"] - unit["admissions_per_day"] * mean_stay for unit in each) for each in units]
+    owed = [
+        sum(unit["mean_occupied"] - unit["admissions_per_day"] * mean_stay for unit in each) for each in units
+    ]
     return np.array(owed)
 
 
@@ -173,12 +207,13 @@ class TestTheMainJob:
             assert group["median_days"] == 9
 
     def test_simulated_use_is_the_offered_load_that_was_not_turned_away(self, scenario, command, stays):
-        """Little's law; and the two units, which help each other freely, are one loss system of 14 beds (Erlang 1917)."""
+        """Little's law; and two units that help each other freely are one of 14 beds (Erlang 1917)."""
         document = command("simulate", scenario, "--per-replication", "--workers", 1)
         assert not differs(little_gaps(document, stays.mean()))
         refused = erlang_b(sum(BEDS.values()), sum(LOADS.values()))
         runs = [one["network"] for one in document["per_replication"]]
-        assert not differs(np.array([one["turned_away_per_day"] / one["arrivals_per_day"] for one in runs]), refused)
+        beyond = [one["turned_away_per_day"] - refused * one["arrivals_per_day"] for one in runs]
+        assert not differs(np.array(beyond))
         occupied = [[unit["utilisation"] * BEDS[name] for name, unit in one["units"].items()]
                     for one in document["per_replication"]]  # fmt: skip
         assert not differs(np.sum(occupied, axis=1), sum(LOADS.values()) * (1 - refused))
@@ -187,7 +222,9 @@ class TestTheMainJob:
     def test_rows_taken_for_patients_are_found_out(self, tmp_path, command, rows, stays):
         pieces = (rows["stop"] - rows["start"]).to_numpy()
         assert pieces.mean() < 0.93 * stays.mean()
-        document = command("simulate", written(tmp_path, pieces, stays.mean()), "--per-replication", "--workers", 1)
+        document = command(
+            "simulate", written(tmp_path, pieces, stays.mean()), "--per-replication", "--workers", 1
+        )
         assert differs(little_gaps(document, stays.mean()))
 
     def test_a_small_game_is_the_one_that_the_simulations_make(self, scenario, command):
@@ -196,7 +233,9 @@ class TestTheMainJob:
         cells = list(product(*CHOICES.values()))
         costs, treated = {}, {}
         for cell in cells:
-            rules = [part for name, k in zip(BEDS, cell, strict=True) for part in ("--threshold", f"{name}={k}")]
+            rules = [
+                part for name, k in zip(BEDS, cell, strict=True) for part in ("--threshold", f"{name}={k}")
+            ]
             document = command("simulate", scenario, *rules, *few)
             use = [document["units"][name]["utilisation"]["mean"] for name in BEDS]
             costs[cell] = [abs(one - target) for one, target in zip(use, TARGETS, strict=True)]

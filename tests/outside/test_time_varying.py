@@ -1,9 +1,10 @@
 """Demand that moves over the day and the week, in a unit that never fills: an infinite-server system.
 
-Source: Eick, Massey & Whitt, "Mt/G/infinity queues with sinusoidal arrival rates", Management Science 39 (1993),
-241-252 (abstract read, formulas from memory). The mean number occupied is the integral of the past arrival rate
-times the chance of being still there. So every rhythm in the rate comes through weaker and later, by a factor
-and a lag that depend on the whole law of stay: here, unlike in averages, a wrong shape is found out.
+Source: Eick, Massey & Whitt, "Mt/G/infinity queues with sinusoidal arrival rates", Management Science 39
+(1993), 241-252 (abstract read, formulas from memory). The mean number occupied is the integral of the past
+arrival rate times the chance of being still there. So every rhythm in the rate comes through weaker and
+later, by a factor and a lag that depend on the whole law of stay: here, unlike in averages, a wrong shape is
+found out.
 
 False alarms: at most 200 facts, 1 in 10,000 for the file (see `facts.py`). Planted errors: the wrong day, the
 wrong hour, no rhythm, a stay 3 % too long, a wrong shape.
@@ -118,7 +119,7 @@ def harmonic_of_rates(rates, frequency):
 
 
 class TestTheTheoryItself:
-    """The judge before the judged: factor and lag as published, and the integration against a true sinusoid."""
+    """The judge before the judged: factor and lag as published, and the integration of a true sinusoid."""
 
     @pytest.mark.parametrize(
         ("law", "days", "factor", "lag"),
@@ -166,8 +167,13 @@ class Seen:
 def simulated(name, *, factor=1.0, days_late=0, hours_late=0, flat=False):
     """The simulator's occupancy by time of the week, perhaps with an error planted in its scenario."""
     stay = LAWS[name].stay
-    rhythm = {"day_of_week": list(np.roll(DAY_OF_WEEK, days_late)), "hour_of_day": list(np.roll(HOUR_OF_DAY, hours_late))}
-    patients = patients_of("A", PER_DAY, stay | {"mean_days": stay["mean_days"] * factor}, **({} if flat else rhythm))
+    rhythm = {
+        "day_of_week": list(np.roll(DAY_OF_WEEK, days_late)),
+        "hour_of_day": list(np.roll(HOUR_OF_DAY, hours_late)),
+    }
+    patients = patients_of(
+        "A", PER_DAY, stay | {"mean_days": stay["mean_days"] * factor}, **({} if flat else rhythm)
+    )
     scenario = network([{"name": "A", "beds": BEDS}], [patients], days=(WARM_UP, MEASURED))
     traces = [trace_replication(scenario, scenario.policy(), number)[0] for number in range(REPLICATIONS)]
     changes = [occupied_changes(trace.events) for trace in traces]
@@ -195,7 +201,8 @@ def mean_by_bin(times, steps):
 
 def harmonic(times, steps, frequency):
     """(2 / T) times the integral of occupied(t) exp(-i g t) over the measured window."""
-    from_then_on = np.exp(-1j * frequency * np.maximum(times, WARM_UP)) - np.exp(-1j * frequency * (WARM_UP + MEASURED))
+    after, until = np.maximum(times, WARM_UP), WARM_UP + MEASURED
+    from_then_on = np.exp(-1j * frequency * after) - np.exp(-1j * frequency * until)
     return 2 / MEASURED * steps @ from_then_on / (1j * frequency)
 
 
@@ -238,7 +245,9 @@ def test_a_wrong_mean_stay_is_refuted():
     assert wrong_rhythm("constant", simulated("constant", factor=1.03), DAY)
 
 
-@pytest.mark.parametrize(("true", "believed"), [("exponential", "hyperexponential"), ("constant", "lognormal")])
+@pytest.mark.parametrize(
+    ("true", "believed"), [("exponential", "hyperexponential"), ("constant", "lognormal")]
+)
 def test_a_wrong_shape_of_the_same_mean_is_refuted(true, believed):
     assert wrong_bins(believed, simulated(true))
 

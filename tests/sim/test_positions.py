@@ -25,7 +25,8 @@ SELF_NUMBERED = {
     "comments and blank lines": "# about\n\na = 3 # three\n# nothing\nb = 5",
     "tables": "[run]\nseed = 2\n[game]\nx = 4\n[run.more]\ny = 6\n",
     "arrays of tables": (
-        "[[units]]\nx = 2\n[[units]]\nx = 4\n[units.sub]\ny = 6\n[[units.parts]]\nz = 8\n[[units.parts]]\nz = 10\n"
+        "[[units]]\nx = 2\n[[units]]\nx = 4\n[units.sub]\ny = 6\n"
+        "[[units.parts]]\nz = 8\n[[units.parts]]\nz = 10\n"
     ),
     "dotted keys": "a.b.c = 1\na . b . d = 2\n[t]\nu.v = 4\nu.w = 5\n",
     "dotted headers": "[ a . b ]\nx = 2\n[a.c]\nx = 4\n[[d.e]]\nx = 6\n[[d.e]]\nx = 8\n",

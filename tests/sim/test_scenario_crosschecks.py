@@ -130,10 +130,15 @@ def test_a_unit_without_its_name_makes_no_stranger_of_its_patients():
 
 @pytest.mark.parametrize(("header", "slip"), [("[[units]]", "[[unit]]"), ("[[patients]]", "[[patient]]")])
 def test_rows_astray_under_a_misspelt_header_are_the_only_fault(header, slip):
-    before, after = unit("A") + patients("A"), unit("B") + patients("B")
+    before, after = (unit(name, referral_order=[]) + patients(name) for name in "AB")
     told = said(before, after.replace(header, slip))
     assert len(told) == 1
     assert told[0].endswith(f"did you mean `{header.strip('[]')}`?")
+
+
+def test_a_fault_of_one_unit_hides_no_stranger_among_the_homes():
+    told = said(unit("A", 0), patients("A", "Elsewhere"))
+    assert [one.split(":")[0] for one in told] == ["units.A.beds", "patients.from Elsewhere.home"]
 
 
 def test_without_units_nothing_is_said_of_homes():

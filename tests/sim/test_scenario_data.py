@@ -48,6 +48,7 @@ ENTRIES = f"{STAY}.column: every entry of column 'days' of stays.csv must be a n
 
 def test_sound_data(tmp_path):
     assert told_of(tmp_path, "days\n0\n36500\n") == []
+    assert told_of(tmp_path, "id, days ,note\n1, 2.5 ,\n") == []
 
 
 @pytest.mark.parametrize(

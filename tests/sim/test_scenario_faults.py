@@ -143,6 +143,9 @@ OUT_OF_BOUNDS = [
     ("per_day = 2.1", "0", "patients.Ashgill emergencies.per_day: must be above 0, got 0, raise it"),
     ("per_day = 2.1", "1e300",
      "patients.Ashgill emergencies.per_day: must be at most 10,000, got 1e+300, lower it"),
+    ("per_day = 2.1", "1e-12",
+     "patients.Ashgill emergencies.per_day: must be at least 1e-9, a patient in three million years, "
+     "got 1e-12, raise it, or remove the group"),
     ("extra_days", "-1", "diversion.extra_days: must be at least 0, got -1, raise it"),
 ]  # fmt: skip
 
@@ -277,6 +280,13 @@ INLINE = [
     ('stay = { family = "exponential"', "stay = { family = 'mixture' }",
      "patients.Norbeck emergencies.stay.parts: is required, missing, add for example "
      '`parts = [{ family = "exponential", mean_days = 3.9, weight = 1 }]`'),
+    ('stay = { family = "exponential"',
+     "stay = { family = 'mixture', parts = [{ family = 'constant', mean_days = 1, weight = 0 }] }",
+     "patients.Norbeck emergencies.stay.parts: must give at least one part a weight above 0, got only 0, "
+     "raise one"),
+    ('stay = { family = "exponential"', "stay = { family = 'coxian', rates_per_day = [1, 2], goes_on = [] }",
+     "patients.Norbeck emergencies.stay.goes_on: needs one entry fewer than the rates (a patient may go on after "
+     "every phase but the last), got 0, give 1"),
     ("delay", "delay = { family = 'constant' }",
      "diversion.delay.mean_hours: is required, missing, add for example `mean_hours = 3.9`"),
     ("goal", "goal = { kind = 'throughput' }",
@@ -287,6 +297,12 @@ INLINE = [
      "game.welfare.kind: is required, missing, add `kind = ...`"),
     ("strategies", "strategies = { Ashgill = { from = 5 } }",
      "game.strategies.Ashgill: needs either both `from` and `to`, or `values`, got `from`, "
+     "give one of the two"),
+    ("strategies", "strategies = { Ashgill = { from = 5, values = [5] } }",
+     "game.strategies.Ashgill: needs either both `from` and `to`, or `values`, got `from` and `values`, "
+     "give one of the two"),
+    ("strategies", "strategies = { Ashgill = {} }",
+     "game.strategies.Ashgill: needs either both `from` and `to`, or `values`, got neither, "
      "give one of the two"),
     ("strategies", "strategies = { Ashgill = { from = 5, to = 2 } }",
      "game.strategies.Ashgill.from: must not be above `to`, got 5 above 2, swap or correct them"),
