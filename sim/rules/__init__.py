@@ -4,7 +4,7 @@ from sim.rules import hysteresis, incoming, last_resort, out_of_use, reviews, so
 from sim.rules.declaration import Rule
 
 RULES: tuple[Rule, ...] = (
-    incoming.RULE, hysteresis.RULE, soft_closure.RULE, reviews.RULE, last_resort.RULE, transfer.RULE, out_of_use.RULE
+    incoming.RULE, hysteresis.RULE, soft_closure.RULE, last_resort.RULE, transfer.RULE, reviews.RULE, out_of_use.RULE
 )  # fmt: skip
 
 

@@ -97,7 +97,7 @@ def test_one_replication_gives_no_interval_and_says_why():
 
 def test_a_share_of_no_patients_is_null_with_a_reason():
     plain = ratio_estimate(np.zeros(3), np.zeros(3), 0.95).to_dict()
-    assert plain["mean"] is None and "no arrivals" in plain["reason"]
+    assert plain["mean"] is None and "nothing to take a share of" in plain["reason"]
 
 
 def test_a_full_estimate_carries_no_reason():

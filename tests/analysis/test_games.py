@@ -20,7 +20,7 @@ def table_of(costs, payoffs=None):
     rates = Outcomes(*(np.arange(6.0).reshape(3, 2) + 10 * place for place in range(6)))
     return PayoffTable(
         PROFILES,
-        TargetGoal(np.zeros(2), np.array([8.0, 4.0]), "absolute", 365.0),
+        TargetGoal(np.zeros(2), "absolute", 365.0),
         Welfare("throughput"),
         payoffs=replicates.mean(axis=0) if payoffs is None else payoffs,
         welfare=np.array([[4.0], [6.0], [5.0]]),

@@ -12,8 +12,8 @@ from tests.analysis.builders import memoryless
 T_975_2 = 4.302653  # Student's t, 2 degrees of freedom, .975 (standard tables)
 
 
-def goal(targets, beds=(10,), shape="absolute", judged_days=10.0):
-    return TargetGoal(np.array(targets), np.array(beds, float), shape, judged_days)
+def goal(targets, shape="absolute", judged_days=10.0):
+    return TargetGoal(np.array(targets), shape, judged_days)
 
 
 def utilisations(*rows, beds=10.0):
@@ -26,7 +26,8 @@ def periods(*replications, beds=10.0, judged=10.0, days=20.0):
     """Sums of one cell and one unit: utilisation of every judged period, a row a replication."""
     values = np.array(replications, float)[:, None, :, None]
     shape = (len(replications), 1, 1)
-    return {"period_occupied_days": values * beds * judged, "days": np.full(shape, days)}
+    staffed = np.full(values.shape, beds * judged)
+    return {"period_occupied_days": values * staffed, "period_bed_days": staffed, "days": np.full(shape, days)}
 
 
 # ---- the distance of mean utilisation from the target ----
@@ -35,7 +36,7 @@ def periods(*replications, beds=10.0, judged=10.0, days=20.0):
 def test_exact_payoffs_are_distances_from_each_units_own_target():
     utilisation = np.array([[0.6, 0.9], [0.7, 0.8]])  # (cells, units)
     expected = [[0.1, 0.1], [0.0, 0.0]]
-    assert goal([0.7, 0.8], beds=(10, 5)).exact(utilisation) == pytest.approx(np.array(expected), abs=1e-12)
+    assert goal([0.7, 0.8]).exact(utilisation) == pytest.approx(np.array(expected), abs=1e-12)
 
 
 def test_it_is_the_mean_that_is_judged_not_every_replication():
@@ -139,10 +140,10 @@ def test_a_goal_needs_every_units_target_and_names_those_without():
     assert "--target" in error.value.faults[0].remedy
 
 
-def test_a_goal_has_the_scenarios_targets_and_beds_in_file_order():
+def test_a_goal_has_the_scenarios_targets_in_file_order():
     units = (UNITS[0], UNITS[1] | {"target_utilisation": 0.7})
     found = goal_of(memoryless(*units, game={"goal": {"shape": "squared", "judged_over_days": 30.0}}))
-    assert found.targets.tolist() == [0.6, 0.7] and found.beds.tolist() == [4, 6]
+    assert found.targets.tolist() == [0.6, 0.7]
     assert (found.shape, found.judged_days, found.sense) == ("squared", 30.0, "cost")
 
 

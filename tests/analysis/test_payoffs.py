@@ -18,7 +18,7 @@ UNITS = (
     {"name": "C", "beds": 9, "per_day": 1.0, "target_utilisation": 0.5},
 )
 SCENARIO = memoryless(*UNITS, run={"measured_days": DAYS})
-GOAL = TargetGoal(np.array([0.0, 0.0, 0.0]), np.array([2.0, 3.0, 9.0]), "absolute", 365.0)
+GOAL = TargetGoal(np.array([0.0, 0.0, 0.0]), "absolute", 365.0)
 
 
 def utilisation_of(thresholds):
@@ -177,6 +177,6 @@ def test_the_squared_goal_keeps_judged_periods_by_cell():
         for period, level in enumerate(levels[cell]):
             occupancy[period, 0, level] = 5.0
         sums.add([Run(replication, cell, record(occupancy), "")])
-    goal = TargetGoal(np.array([0.5]), np.array([2.0]), "squared", 5.0)
+    goal = TargetGoal(np.array([0.5]), "squared", 5.0)
     table = simulated_table(Profiles(("A",), ((1, 2),)), goal, Welfare("throughput"), sums.sums(), 0.95)
     assert table.payoffs == pytest.approx(np.array([[0.125, 0.25]]))

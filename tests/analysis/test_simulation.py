@@ -70,7 +70,7 @@ def test_occupancy_has_a_share_for_every_number_of_beds_of_that_unit(result):
 
 def test_a_unit_that_is_nobodys_home_has_no_shares_but_a_reason(result):
     share = result.units["B"]["moved_share"]
-    assert share.mean is None and "no arrivals" in share.reason
+    assert share.mean is None and "nothing to take a share of" in share.reason
 
 
 def test_the_tree_has_every_measure_as_mean_low_and_high(result):

@@ -7,7 +7,8 @@ import dataclasses
 import numpy as np
 import pytest
 
-from sim.lowering import LAST_RESORTS, NOBODY, lower_network, lower_policy, plan_intake, review_timetable
+from sim.lowering import LAST_RESORTS, NOBODY, lower_network, lower_policy, plan_intake
+from sim.rules.reviews import timetable
 from sim.scenario import Scenario, parse_scenario
 
 THREE_UNITS = """
@@ -101,21 +102,22 @@ def test_soft_closure_and_reviews_are_each_units_own():
     one = scenario(ashgill="admit_while_closed = 0.25, review_hours = 8")
     rules = lower_policy(one, one.policy())
     assert rules.admit_while_closed.tolist() == [0.25, 0.0, 0.0]
-    assert rules.reviewed.tolist() == [True, False, False]
-    assert set(rules.review_units.tolist()) == {0}
+    assert rules.reviews.reviewed.tolist() == [True, False, False]
+    assert set(rules.reviews.units.tolist()) == {0}
     # Review k at (k * 8) / 24, to the last bit, all before day 35.
-    assert rules.review_times.tolist() == [(k * 8.0) / 24 for k in range(1, 105)]
+    assert rules.reviews.times.tolist() == [(k * 8.0) / 24 for k in range(1, 105)]
 
 
 def test_reviews_of_several_units_go_by_time_then_unit():
-    times, units = review_timetable([12.0, 0.0, 8.0, 12.0], 1.25)
+    reviews = timetable([12.0, 0.0, 8.0, 12.0], 1.25)
+    times, units = reviews.times, reviews.units
     expected = [(8 / 24, 2), (0.5, 0), (0.5, 3), (16 / 24, 2), (1.0, 0), (1.0, 2), (1.0, 3)]
     assert list(zip(times.tolist(), units.tolist(), strict=True)) == expected
 
 
 @pytest.mark.parametrize("hours", [0.1, 0.7, 1.1, 6.0, 7.3, 24.0, 100.0])
 def test_the_last_review_is_the_last_before_the_end(hours):
-    times, _ = review_timetable([hours], 30.0)
+    times = timetable([hours], 30.0).times
     k = len(times)
     assert times.tolist() == [(i * hours) / 24 for i in range(1, k + 1)]
     assert (k * hours) / 24 < 30.0 <= ((k + 1) * hours) / 24
