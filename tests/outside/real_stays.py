@@ -86,7 +86,7 @@ def _call(*command: str, folder: Path | None = None) -> str:
     except subprocess.TimeoutExpired:
         raise Unavailable(f"{said} had not finished after 300 seconds") from None
     if done.returncode != 0:
-        raise Unavailable(f"{said} failed: {done.stderr.strip()}")
+        raise Unavailable(f"{said} failed: {' '.join(done.stderr.splitlines()[-1:])}")
     return done.stdout
 
 

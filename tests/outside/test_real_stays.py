@@ -214,10 +214,12 @@ class TestTheMainJob:
         runs = [one["network"] for one in document["per_replication"]]
         beyond = [one["turned_away_per_day"] - refused * one["arrivals_per_day"] for one in runs]
         assert not differs(np.array(beyond))
-        occupied = [[unit["utilisation"] * BEDS[name] for name, unit in one["units"].items()]
-                    for one in document["per_replication"]]  # fmt: skip
-        assert not differs(np.sum(occupied, axis=1), sum(LOADS.values()) * (1 - refused))
-        assert differs(np.sum(occupied, axis=1), sum(LOADS.values()))
+        units = [one["units"] for one in document["per_replication"]]
+        occupied = np.array(
+            [sum(one[name]["utilisation"] * beds for name, beds in BEDS.items()) for one in units]
+        )
+        assert not differs(occupied, sum(LOADS.values()) * (1 - refused))
+        assert differs(occupied, sum(LOADS.values()))
 
     def test_rows_taken_for_patients_are_found_out(self, tmp_path, command, rows, stays):
         pieces = (rows["stop"] - rows["start"]).to_numpy()
@@ -244,8 +246,14 @@ class TestTheMainJob:
         for player, name in enumerate(BEDS):
             payoffs = [one["mean"] for row in game["payoffs"][name] for one in row]
             assert payoffs == pytest.approx([costs[cell][player] for cell in cells], abs=1e-12)
-        listed = {tuple(one["thresholds"].values()) for one in game["equilibria"] if one["kind"] == "pure"}
-        assert listed == {cell for cell in cells if is_equilibrium(cell, costs)}
+        listed = {
+            tuple(one["thresholds"].values()): one for one in game["equilibria"] if one["kind"] == "pure"
+        }
+        assert {cell for cell in cells if max(regrets(cell, costs)) == 0} <= listed.keys()  # Nash 1950
+        for cell, one in listed.items():
+            assert [one["regret"][name]["mean"] for name in BEDS] == pytest.approx(
+                regrets(cell, costs), abs=1e-12
+            )
         best = max(treated.values())
         assert {tuple(one.values()) for one in game["optimum"]["thresholds"]} == {
             cell for cell in cells if treated[cell] >= best - 1e-12
@@ -253,11 +261,12 @@ class TestTheMainJob:
         assert game["optimum"]["welfare"]["mean"] == pytest.approx(best, rel=1e-12)
 
 
-def is_equilibrium(cell, costs):
-    """Nash 1950: nobody can lower their own cost alone."""
+def regrets(cell, costs):
+    """The most that each player could save by another threshold of their own alone."""
+    saved = []
     for player, choices in enumerate(CHOICES.values()):
-        for choice in choices:
-            other = tuple(choice if place == player else k for place, k in enumerate(cell))
-            if costs[other][player] < costs[cell][player] - 1e-9:
-                return False
-    return True
+        others = [
+            tuple(choice if place == player else k for place, k in enumerate(cell)) for choice in choices
+        ]
+        saved.append(costs[cell][player] - min(costs[other][player] for other in others))
+    return saved

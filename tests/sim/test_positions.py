@@ -30,7 +30,7 @@ SELF_NUMBERED = {
     ),
     "dotted keys": "a.b.c = 1\na . b . d = 2\n[t]\nu.v = 4\nu.w = 5\n",
     "dotted headers": "[ a . b ]\nx = 2\n[a.c]\nx = 4\n[[d.e]]\nx = 6\n[[d.e]]\nx = 8\n",
-    "quoted keys": "\"two words\" = 1\n'dots.inside' = 2\n\"\" = 3\n[\"North = South\"]\nx = 5\n",
+    "quoted keys": '"two words" = 1\n\'dots.inside\' = 2\n"" = 3\n["North = South"]\nx = 5\n',
     "escaped keys": '"\\u0041shgill" = 1\n',
     "inline tables": "a = { b = 1, c = { d = 1, e = [1, { f = 1 }] } }\n",
     "arrays over several lines": "a = [\n  2, # two\n  # none\n\n  5, 5,\n  6\n]\nb = 8",

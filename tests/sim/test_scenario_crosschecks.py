@@ -193,6 +193,7 @@ def test_strategies_lie_between_0_and_the_beds():
         f"game.strategies.B.values.2: {ABOVE_BEDS}, got 19 for 18 beds, {remedy} 18",
         f"game.strategies.B.values.4: {ABOVE_BEDS}, got 30 for 18 beds, {remedy} 18",
     ]
+    assert said(alone(), "[game]\nstrategies = { A = { from = 12, to = 12 } }\n") == []
     told = said(alone(), "[game]\nstrategies = { A = { from = 13, to = 14 } }\n")
     assert [one.split(":")[0] for one in told] == ["game.strategies.A.from", "game.strategies.A.to"]
 

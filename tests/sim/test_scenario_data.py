@@ -67,6 +67,11 @@ def test_rows_at_fault_are_counted_and_the_first_are_shown_by_their_lines(tmp_pa
     ]
 
 
+def test_three_rows_at_fault_are_all_shown(tmp_path):
+    (one,) = told_of(tmp_path, "days\n-1\n-2\n-3\n")
+    assert "got line 2: '-1'; line 3: '-2'; line 4: '-3', mend" in one
+
+
 def test_a_blank_line_between_stays_is_a_stay_that_was_not_recorded(tmp_path):
     assert told_of(tmp_path, "days\n1\n\n2\n\n\n") == [
         f"{ENTRIES}, got line 3: '', mend or remove those rows"

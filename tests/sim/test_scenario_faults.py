@@ -285,8 +285,8 @@ INLINE = [
      "patients.Norbeck emergencies.stay.parts: must give at least one part a weight above 0, got only 0, "
      "raise one"),
     ('stay = { family = "exponential"', "stay = { family = 'coxian', rates_per_day = [1, 2], goes_on = [] }",
-     "patients.Norbeck emergencies.stay.goes_on: needs one entry fewer than the rates (a patient may go on after "
-     "every phase but the last), got 0, give 1"),
+     "patients.Norbeck emergencies.stay.goes_on: needs one entry fewer than the rates (a patient may go on "
+     "after every phase but the last), got 0, give 1"),
     ("delay", "delay = { family = 'constant' }",
      "diversion.delay.mean_hours: is required, missing, add for example `mean_hours = 3.9`"),
     ("goal", "goal = { kind = 'throughput' }",
