@@ -32,13 +32,21 @@ def module_of(path: Path) -> str:
 
 
 def imports(module: str, text: str) -> Iterator[str]:
-    """Every name that a module imports, wherever in the file: `from a.b import c` is `a.b.c`."""
-    for node in ast.walk(ast.parse(text)):
+    """Every name that a module imports when it runs, wherever in the file: `from a.b import c` is `a.b.c`."""
+    for node in _running(ast.parse(text)):
         if isinstance(node, ast.Import):
             yield from (one.name for one in node.names)
         elif isinstance(node, ast.ImportFrom):
             assert node.level == 0, f"{module} imports relatively; name the whole module"
             yield from (f"{node.module}.{one.name}" for one in node.names)
+
+
+def _running(node: ast.AST) -> Iterator[ast.AST]:
+    """Every node but those that only a type checker reads."""
+    yield node
+    for child in ast.iter_child_nodes(node):
+        if not (isinstance(child, ast.If) and getattr(child.test, "id", "") == "TYPE_CHECKING"):
+            yield from _running(child)
 
 
 def within(name: str, *rooms: str) -> bool:

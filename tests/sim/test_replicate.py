@@ -19,7 +19,7 @@ from sim import reference
 from sim.intake import draw_intake
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.record import hash_records
-from sim.replicate import Failure, Run, cells_per_task, replicate, seconds_per_run, trace_replication
+from sim.replicate import Failure, Pace, Run, TaskSize, pace_of, replicate, trace_replication
 from sim.scenario import parse_scenario
 from sim.workers import LocalProcesses, ThisProcess, local_workers
 
@@ -78,13 +78,13 @@ def test_all_policies_of_a_replication_meet_the_same_patients(plain):
 
 @pytest.mark.parametrize("size", [1, 2, 3, 100])
 def test_the_size_of_tasks_changes_no_number(plain, size):
-    assert hashes(replicate(SCENARIO, POLICIES, range(4), cells_per_task=size)) == plain
+    assert hashes(replicate(SCENARIO, POLICIES, range(4), task_size=TaskSize(cells=size))) == plain
 
 
 def test_the_number_of_workers_changes_no_number(plain):
     assert hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(1))) == plain
     assert (
-        hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(2), cells_per_task=2)) == plain
+        hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(2), task_size=TaskSize(cells=2))) == plain
     )
 
 
@@ -108,10 +108,14 @@ def test_a_trace_is_of_the_replication_asked_for(plain):
 
 
 def test_tasks_take_about_a_second():
-    assert cells_per_task(0.1, 1000) == 10
-    assert cells_per_task(0.1, 4) == 4
-    assert cells_per_task(60.0, 1000) == 1
-    assert seconds_per_run(SCENARIO, POLICIES[0]) > 0
+    assert Pace(0.0, 0.1).task_size(8, 1000, 2) == TaskSize(1, 10)
+    assert Pace(0.0, 60.0).task_size(8, 1000, 2) == TaskSize(1, 1)
+    assert Pace(0.01, 0.01).task_size(1000, 4, 2) == TaskSize(20, 4)  # 0.05 s a replication
+    assert Pace(0.01, 0.01).task_size(16, 4, 2) == TaskSize(2, 4)  # every worker gets its share
+    assert Pace(0.5, 0.1).seconds(10, 5) == pytest.approx(10.0)
+    for engine in ("reference", "compiled"):
+        pace = pace_of(SCENARIO, POLICIES[0], engine=engine)
+        assert pace.drawing > 0 and pace.running > 0
 
 
 # --- failures ---------------------------------------------------------------------------------------------
@@ -132,12 +136,12 @@ class Sabotage:
 
 @pytest.mark.parametrize("count", [1, 2])
 def test_a_failing_task_is_reported_with_its_address_and_the_rest_is_kept(plain, count):
-    workers = Sabotage(local_workers(count), address=(1, 2))
-    replies = list(replicate(SCENARIO, POLICIES * 2, range(3), workers=workers, cells_per_task=2))
-    [failure] = [reply for reply in replies if isinstance(reply, Failure)]
-    assert (failure.seed, failure.replication, failure.cells) == (5, 1, (2, 3))
-    assert "KeyError" in failure.traceback and "run_cells" in failure.traceback
-    assert str(failure) == "seed 5, replication 1, cells 2 to 3: KeyError: 'no such engine'"
+    workers = Sabotage(local_workers(count), address=((1,), 2))
+    replies = list(replicate(SCENARIO, POLICIES * 2, range(3), workers=workers, task_size=TaskSize(cells=2)))
+    failures = [reply for reply in replies if isinstance(reply, Failure)]
+    assert [(one.seed, one.replication, one.cells) for one in failures] == [(5, 1, (2,)), (5, 1, (3,))]
+    assert "KeyError" in failures[0].traceback and "run_cells" in failures[0].traceback
+    assert str(failures[1]) == "seed 5, replication 1, cell 3: KeyError: 'no such engine'"
     kept = hashes(reply for reply in replies if not isinstance(reply, Failure))
     assert sorted(kept) == [
         (k, cell) for k in range(3) for cell in range(6) if (k, cell) not in ((1, 2), (1, 3))
@@ -146,13 +150,15 @@ def test_a_failing_task_is_reported_with_its_address_and_the_rest_is_kept(plain,
 
 
 def test_a_record_that_breaks_its_own_laws_is_a_failure(monkeypatch):
+    engine = reference.run
+
     def forgetful(network, rules, intake):
-        record = reference.run(network, rules, intake)
+        record = engine(network, rules, intake)
         record.turned_away[:] += 1
         return record
 
-    monkeypatch.setitem(sim.replicate.ENGINES, "forgetful", forgetful)
-    [failure] = replicate(SCENARIO, POLICIES[:1], [7], engine="forgetful")
+    monkeypatch.setattr(reference, "run", forgetful)
+    [failure] = replicate(SCENARIO, POLICIES[:1], [7], engine="reference")
     assert (failure.replication, failure.cells) == (7, (0,))
     assert str(failure).startswith("seed 5, replication 7, cell 0: ")
     assert "arrived + on the road at the start differs" in str(failure)
