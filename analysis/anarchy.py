@@ -60,10 +60,17 @@ def cost_of_selfishness(
         none = Estimate(None, reason=NO_EQUILIBRIUM)
         return Cost(optimum, None, None, none, none, none)
     ranked = sorted(equilibria, key=lambda profile: float(gains[profile]))
-    best = _numbers(np.unravel_index(np.argmax(gains), gains.shape))  # no tie: a tie may be worse by a rounding error
+    best = _numbers(
+        np.unravel_index(np.argmax(gains), gains.shape)
+    )  # no tie: a tie may be worse by a rounding error
     pair = _Pair(welfare, sense, replicates, confidence, best)
     return Cost(
-        optimum, ranked[0], ranked[-1], pair.ratio(ranked[0]), pair.ratio(ranked[-1]), pair.lost_a_year(ranked[0])
+        optimum,
+        ranked[0],
+        ranked[-1],
+        pair.ratio(ranked[0]),
+        pair.ratio(ranked[-1]),
+        pair.lost_a_year(ranked[0]),
     )
 
 
@@ -126,11 +133,16 @@ def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profil
     if worst is None:
         return TurningWeight(None, NO_EQUILIBRIUM)
     fewest = np.flatnonzero(turned_away.ravel() <= turned_away.min() + DEFAULT_TOLERANCE)
-    place = fewest[np.argmin(transfers.ravel()[fewest])]  # of those that turn fewest away, the one that moves fewest
+    place = fewest[
+        np.argmin(transfers.ravel()[fewest])
+    ]  # of those that turn fewest away, the one that moves fewest
     saved = float(turned_away[worst] - turned_away.ravel()[place])
     moved = float(transfers.ravel()[place] - transfers[worst])
     if saved <= DEFAULT_TOLERANCE:
         return TurningWeight(None, "the worst equilibrium turns no more patients away than the best profile")
     if moved <= 0:
-        return TurningWeight(None, "the best profile moves no more patients than the worst equilibrium, so it wins at any weight")
+        return TurningWeight(
+            None,
+            "the best profile moves no more patients than the worst equilibrium, so it wins at any weight",
+        )
     return TurningWeight(saved / moved)

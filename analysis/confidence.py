@@ -43,7 +43,9 @@ def mean_estimate(values: np.ndarray, confidence: float, *, comparisons: int = 1
     return _estimate(float(values.mean()), values, confidence, comparisons)
 
 
-def ratio_estimate(totals: np.ndarray, bases: np.ndarray, confidence: float, *, comparisons: int = 1) -> Estimate:
+def ratio_estimate(
+    totals: np.ndarray, bases: np.ndarray, confidence: float, *, comparisons: int = 1
+) -> Estimate:
     """Ratio of two means over replications, (replications,) each, with an interval by the delta method.
 
     The ratio of means estimates the long-run share; a mean of ratios would be biased. Source: Law, Simulation

@@ -27,7 +27,9 @@ def regrets(payoffs: np.ndarray, sense: Sense) -> np.ndarray:
     return np.stack([cost - cost.min(axis=player, keepdims=True) for player, cost in enumerate(costs)])
 
 
-def pure_equilibria(payoffs: np.ndarray, sense: Sense, *, tolerance: float = DEFAULT_TOLERANCE) -> list[Profile]:
+def pure_equilibria(
+    payoffs: np.ndarray, sense: Sense, *, tolerance: float = DEFAULT_TOLERANCE
+) -> list[Profile]:
     """Every profile where no player gains more than the tolerance by deviating alone, in table order.
 
     tolerance: absolute, in the goal's unit, inclusive.
@@ -45,7 +47,9 @@ class BestResponse:
     best: tuple[int, ...]
 
 
-def best_responses(payoffs: np.ndarray, sense: Sense, *, tolerance: float = DEFAULT_TOLERANCE) -> list[BestResponse]:
+def best_responses(
+    payoffs: np.ndarray, sense: Sense, *, tolerance: float = DEFAULT_TOLERANCE
+) -> list[BestResponse]:
     """Every player's best responses to every choice of the others, ties within the tolerance included."""
     replies = []
     for player, regret in enumerate(regrets(payoffs, sense)):
@@ -58,4 +62,8 @@ def best_responses(payoffs: np.ndarray, sense: Sense, *, tolerance: float = DEFA
 
 def deviations(profile: Profile, player: int, strategies: int) -> list[Profile]:
     """The profiles that the player can reach alone."""
-    return [(*profile[:player], one, *profile[player + 1 :]) for one in range(strategies) if one != profile[player]]
+    return [
+        (*profile[:player], one, *profile[player + 1 :])
+        for one in range(strategies)
+        if one != profile[player]
+    ]

@@ -69,7 +69,11 @@ def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
         marker = "osD^vP*X"[wheres.index(one["where"]) % 8]
         face = "black" if one["agrees"] else "white"
         ax.scatter(one["z"], place, marker=marker, s=22, facecolors=face, edgecolors="black", zorder=3)
-    ax.set_yticks(range(len(tested)), [f"{one['where']}: {one['measure'].replace('_', ' ')}" for one in tested], fontsize=7)
+    ax.set_yticks(
+        range(len(tested)),
+        [f"{one['where']}: {one['measure'].replace('_', ' ')}" for one in tested],
+        fontsize=7,
+    )
     ax.set_ylim(len(tested) - 0.3, -0.7)
     ax.set(xlabel="z = (simulated - exact) / standard error", title="Simulation against the exact chain")
     ax.legend(loc="lower right", fontsize=8)
@@ -78,12 +82,25 @@ def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
 
 def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str) -> Axes:
     """One unit's occupancy: exact shares as a line, simulated ones as points with simultaneous limits."""
-    levels = [one for one in document["measures"] if one["where"] == where and one["measure"].startswith("occupancy ")]
+    levels = [
+        one
+        for one in document["measures"]
+        if one["where"] == where and one["measure"].startswith("occupancy ")
+    ]
     names = [one["measure"].removeprefix("occupancy ").replace(" to ", "–") for one in levels]
     at = np.arange(len(levels))
     mean, low, high = (np.array([one[key] for one in levels], float) for key in ("mean", "low", "high"))
     ax.step(at, [one["exact"] for one in levels], where="mid", color="0.4", label="exact")
-    ax.errorbar(at, mean, yerr=[mean - low, high - mean], fmt="o", color="black", markersize=4, capsize=2, label="simulated")
+    ax.errorbar(
+        at,
+        mean,
+        yerr=[mean - low, high - mean],
+        fmt="o",
+        color="black",
+        markersize=4,
+        capsize=2,
+        label="simulated",
+    )
     ax.set_xticks(at, names, fontsize=8)
     ax.set(title=where, xlabel="occupied beds (rare levels pooled)", ylabel="share of time", ylim=(0, None))
     ax.legend(fontsize=8)

@@ -56,7 +56,9 @@ def _findings(game: GameAnalysis) -> Iterator[Finding]:
 def _basis(game: GameAnalysis) -> str:
     if game.is_exact:
         return "exact Markov chain"
-    return f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals, {ESTIMATED}"
+    return (
+        f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals, {ESTIMATED}"
+    )
 
 
 def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
@@ -71,8 +73,15 @@ def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
         yield Finding(f"No price of anarchy: {ratio.reason}", None, "ratio", basis)
     else:
         yield Finding(f"Price of anarchy {_words(ratio, 4)}", ratio, "ratio", basis)
-        yield Finding(f"Price of stability {_words(cost.price_of_stability, 4)}", cost.price_of_stability, "ratio", basis)
-    yield Finding(f"The worst listed equilibrium forgoes {_words(lost, 1)} {what} a year", lost, f"{what} a year", basis)
+        yield Finding(
+            f"Price of stability {_words(cost.price_of_stability, 4)}",
+            cost.price_of_stability,
+            "ratio",
+            basis,
+        )
+    yield Finding(
+        f"The worst listed equilibrium forgoes {_words(lost, 1)} {what} a year", lost, f"{what} a year", basis
+    )
 
 
 def _turning(game: GameAnalysis, basis: str) -> Finding:

@@ -28,8 +28,14 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
         "players": list(players),
         "goal": table.goal.reads,
         "sense": table.goal.sense,
-        "welfare": {"kind": table.welfare_goal.kind, "reads": table.welfare_goal.reads, "sense": table.welfare_goal.sense},
-        "strategies": {player: list(mine) for player, mine in zip(players, table.profiles.strategies, strict=True)},
+        "welfare": {
+            "kind": table.welfare_goal.kind,
+            "reads": table.welfare_goal.reads,
+            "sense": table.welfare_goal.sense,
+        },
+        "strategies": {
+            player: list(mine) for player, mine in zip(players, table.profiles.strategies, strict=True)
+        },
         "payoffs": {player: _payoffs(game, place) for place, player in enumerate(players)},
         "equilibria": [_equilibrium(game, one) for one in game.equilibria],
         "best_responses": _best_responses(game),
@@ -45,7 +51,11 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
         "transfer_weight_at_which_the_verdict_turns": asdict(game.turning),
         "tolerance": game.tolerance,
         "undecided": [] if game.is_exact else None,
-        **({} if game.is_exact else {"undecided_reason": "a point estimate decides nothing; every verdict is `estimated`"}),
+        **(
+            {}
+            if game.is_exact
+            else {"undecided_reason": "a point estimate decides nothing; every verdict is `estimated`"}
+        ),
         "findings": [finding.to_dict() for finding in findings_of(game)],
     }
 
@@ -117,7 +127,10 @@ def game_frame(game: GameAnalysis) -> pd.DataFrame:
     for place, player in enumerate(profiles.players):
         columns[f"payoff {player}"] = table.payoffs[place].ravel()
         if table.low is not None and table.high is not None:
-            columns[f"payoff {player} low"], columns[f"payoff {player} high"] = table.low[place].ravel(), table.high[place].ravel()
+            columns[f"payoff {player} low"], columns[f"payoff {player} high"] = (
+                table.low[place].ravel(),
+                table.high[place].ravel(),
+            )
         columns[f"regret {player}"] = regret[place].ravel()
     columns["welfare"] = table.welfare.ravel()
     for name, values in vars(table.outcomes).items():

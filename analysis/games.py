@@ -94,9 +94,16 @@ def analyse(
     sense = table.goal.sense
     found = pure_equilibria(table.payoffs, sense, tolerance=tolerance)
     shape = table.profiles.shape
-    network = [values.sum(axis=-1).reshape(shape) for values in (table.outcomes.turned_away, table.outcomes.diverted_out)]
+    network = [
+        values.sum(axis=-1).reshape(shape)
+        for values in (table.outcomes.turned_away, table.outcomes.diverted_out)
+    ]
     cost = cost_of_selfishness(
-        table.welfare, table.welfare_goal.sense, found, replicates=table.welfare_replicates, confidence=confidence
+        table.welfare,
+        table.welfare_goal.sense,
+        found,
+        replicates=table.welfare_replicates,
+        confidence=confidence,
     )
     return GameAnalysis(
         table,
@@ -111,10 +118,16 @@ def analyse(
 
 def _equilibrium(table: PayoffTable, profile: Profile, confidence: float) -> Equilibrium:
     players = table.profiles.players
-    regret = {player: regret_estimate(table, profile, place, confidence) for place, player in enumerate(players)}
+    regret = {
+        player: regret_estimate(table, profile, place, confidence) for place, player in enumerate(players)
+    }
     verdict = EXACT if table.replicates is None else ESTIMATED
     return Equilibrium(
-        profile, table.profiles.thresholds(profile), verdict, regret, welfare_estimate(table, profile, confidence)
+        profile,
+        table.profiles.thresholds(profile),
+        verdict,
+        regret,
+        welfare_estimate(table, profile, confidence),
     )
 
 

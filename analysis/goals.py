@@ -75,7 +75,9 @@ class TargetGoal:
     def _squared(self, sums: Mapping[str, np.ndarray]) -> np.ndarray:
         """Mean over judged periods of the squared distance, (replications, cells, units)."""
         whole = int(round(sums["days"].flat[0] / self.judged_days, 9))
-        periods = _utilisation(sums["period_occupied_days"][:, :, :whole], sums["period_bed_days"][:, :, :whole])
+        periods = _utilisation(
+            sums["period_occupied_days"][:, :, :whole], sums["period_bed_days"][:, :, :whole]
+        )
         return np.square(periods - self.targets).mean(axis=2)
 
 

@@ -52,7 +52,9 @@ NETWORK_MEASURES = (
 _TOTALS: dict[str, Callable[[Record], np.ndarray]] = {
     "full_days": lambda record: _gate_days(record, lambda state: state & FULL),
     "closed_days": lambda record: _gate_days(record, lambda state: state & OWN_CLOSED),
-    "closed_free_days": lambda record: _gate_days(record, lambda state: state & OWN_CLOSED and not state & FULL),
+    "closed_free_days": lambda record: _gate_days(
+        record, lambda state: state & OWN_CLOSED and not state & FULL
+    ),
     "incoming_closed_days": lambda record: _gate_days(record, lambda state: state & INCOMING_CLOSED),
     "arrived": lambda record: record.arrived,
     "admitted": lambda record: record.admitted.sum(axis=0),
@@ -73,7 +75,9 @@ def unit_sums(records: Sequence[Record], beds: np.ndarray, measured_days: float)
     beds: (units,), staffed where the record does not say otherwise. Besides: `occupancy_days` (replications,
     units, most beds + 1), and `period_occupied_days` and `period_bed_days` (replications, periods, units).
     """
-    sums: Sums = {name: np.stack([total(record) for record in records]).astype(float) for name, total in _TOTALS.items()}
+    sums: Sums = {
+        name: np.stack([total(record) for record in records]).astype(float) for name, total in _TOTALS.items()
+    }
     occupancy = np.stack([record.occupancy_days for record in records])
     levels = np.arange(occupancy.shape[-1])
     sums["period_occupied_days"] = occupancy @ levels

@@ -37,7 +37,8 @@ class Profiles:
     def thresholds(self, profile: Sequence[int]) -> dict[str, int]:
         """Player -> closure threshold, for a profile of strategy numbers."""
         return {
-            player: mine[place] for player, mine, place in zip(self.players, self.strategies, profile, strict=True)
+            player: mine[place]
+            for player, mine, place in zip(self.players, self.strategies, profile, strict=True)
         }
 
     def policies(self, base: Policy) -> Iterator[Policy]:
@@ -189,7 +190,9 @@ def exact_table(
         closed_free=column("closed_with_free_bed_fraction"),
         utilisation=column("utilisation"),
     )
-    worth = welfare.value(*(rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out)))
+    worth = welfare.value(
+        *(rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out))
+    )
     payoffs = goal.exact(outcomes.utilisation)
     return PayoffTable(
         profiles, goal, welfare, _by_player(payoffs, profiles.shape), worth.reshape(profiles.shape), outcomes

@@ -36,7 +36,10 @@ class Simulation:
             | {"occupancy": [estimate.to_dict() for estimate in self.occupancy[name]]}
             for name, measures in self.units.items()
         }
-        return {"units": units, "network": {name: estimate.to_dict() for name, estimate in self.network.items()}}
+        return {
+            "units": units,
+            "network": {name: estimate.to_dict() for name, estimate in self.network.items()},
+        }
 
 
 def summarise(records: Sequence[Record], scenario: Scenario, *, confidence: float) -> Simulation:
@@ -86,7 +89,9 @@ def per_replication_measures(runs: Sequence[Run], scenario: Scenario) -> list[di
     return [
         {
             "replication": run.replication,
-            "units": {name: {m: values[row] for m, values in measures.items()} for name, measures in units.items()},
+            "units": {
+                name: {m: values[row] for m, values in measures.items()} for name, measures in units.items()
+            },
             "network": {m: values[row] for m, values in network.items()},
             "record_hash": run.record.hash,
             "intake_hash": run.intake_hash,

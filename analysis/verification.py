@@ -83,7 +83,11 @@ class _Pair:
 
 
 def verify(
-    records: Sequence[Record], exact: ExactResult, scenario: Scenario, *, false_alarm_rate: float = FALSE_ALARM_RATE
+    records: Sequence[Record],
+    exact: ExactResult,
+    scenario: Scenario,
+    *,
+    false_alarm_rate: float = FALSE_ALARM_RATE,
 ) -> Verification:
     """Compares the records of one policy, at least two replications, with the exact measures.
 
@@ -109,8 +113,19 @@ def _pairs(records: Sequence[Record], exact: ExactResult, scenario: Scenario) ->
         mine, values = of_unit(sums, place), tree["units"][unit.name]
         for measure in UNIT_MEASURES:
             value = values[measure.name]
-            yield _pair(unit.name, measure, value, mine, occasions.of(measure.name, value, values.get("arrivals_per_day")))
-        yield from _levels(unit.name, sums["occupancy_days"][:, place, : unit.beds + 1] / days, values["occupancy"], occasions)
+            yield _pair(
+                unit.name,
+                measure,
+                value,
+                mine,
+                occasions.of(measure.name, value, values.get("arrivals_per_day")),
+            )
+        yield from _levels(
+            unit.name,
+            sums["occupancy_days"][:, place, : unit.beds + 1] / days,
+            values["occupancy"],
+            occasions,
+        )
     whole = network_sums(sums)
     for measure in NETWORK_MEASURES:
         value = tree["network"][measure.name]
@@ -183,7 +198,9 @@ def _judge(pair: _Pair, confidence: float, comparisons: int, critical: float) ->
     if pair.exact is None or estimate.mean is None:
         return Comparison(*facts, z=None, agrees=True, reason="no patients of its own, so no share")
     if pair.visits < LEAST_VISITS:
-        return Comparison(*facts, z=None, agrees=True, reason=f"not tested: {pair.visits:.1f} occasions expected in all")
+        return Comparison(
+            *facts, z=None, agrees=True, reason=f"not tested: {pair.visits:.1f} occasions expected in all"
+        )
     if estimate.low is None:
         return Comparison(*facts, z=None, agrees=True, reason=estimate.reason)
     off, half = estimate.mean - pair.exact, (estimate.high - estimate.low) / 2

@@ -139,5 +139,7 @@ def write_intake(intake: Intake, path: Path, *, groups: list[str], units: list[s
         rows = csv.writer(file)
         rows.writerow(["patient", "arrival_days", "group", "home", "kind", "stay_days", "delay_days", "gate"])
         columns = (intake.arrival, intake.group, intake.home, intake.drawn_stay, intake.delay, intake.gate)
-        for patient, (at, group, home, stay, delay, gate) in enumerate(zip(*map(np.ndarray.tolist, columns), strict=True)):
+        for patient, (at, group, home, stay, delay, gate) in enumerate(
+            zip(*map(np.ndarray.tolist, columns), strict=True)
+        ):
             rows.writerow([patient, at, groups[group], units[home], "emergency", stay, delay, gate])

@@ -54,7 +54,11 @@ def provenance(
             "data_sha256": dict(source.data),
         },
         "versions": {"python": platform.python_version()} | {name: _version(name) for name in PACKAGES},
-        "machine": {"system": platform.system(), "processor": platform.machine(), "fingerprint": fingerprint()},
+        "machine": {
+            "system": platform.system(),
+            "processor": platform.machine(),
+            "fingerprint": fingerprint(),
+        },
         "started": started.isoformat(timespec="seconds"),
         "ended": now().isoformat(timespec="seconds"),
     }
@@ -85,5 +89,7 @@ def _commit() -> str | None:
 
 
 def _git(folder: Path, *arguments: str) -> str:
-    done = subprocess.run(["git", "-C", str(folder), *arguments], capture_output=True, text=True, check=True, timeout=10)
+    done = subprocess.run(
+        ["git", "-C", str(folder), *arguments], capture_output=True, text=True, check=True, timeout=10
+    )
     return done.stdout.strip()

@@ -54,7 +54,9 @@ class Record:
         if self.arrived.sum() + self.on_road_at_start.sum() != (
             admitted + self.turned_away.sum() + self.on_road_at_end.sum()
         ):
-            broken.append("arrived + on the road at the start differs from admitted + turned away + on the road")
+            broken.append(
+                "arrived + on the road at the start differs from admitted + turned away + on the road"
+            )
         for name, array in self.arrays().items():
             if not name.endswith("_days"):
                 continue

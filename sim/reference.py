@@ -27,7 +27,9 @@ WINDOW_EDGE, DISCHARGE, NEW_ARRIVAL = 1, 10, 50
 class Calendar(simpy.Environment):
     """SimPy's environment, able to schedule at an absolute time and in the model's order of events."""
 
-    def at(self, time: float, kind: int, sequence: int, *actions: Callable[[simpy.Event], None]) -> simpy.Event:
+    def at(
+        self, time: float, kind: int, sequence: int, *actions: Callable[[simpy.Event], None]
+    ) -> simpy.Event:
         """An event at exactly `time` (`now + (time - now)` need not be); its value is the sequence."""
         event = simpy.Event(self)
         event._ok, event._value = True, sequence
@@ -66,7 +68,11 @@ class Unit:
     @property
     def gate_state(self) -> int:
         """The unit's gates and fullness as bits."""
-        return (not self.own_open) * OWN_CLOSED | (not self.incoming_open) * INCOMING_CLOSED | (not self.has_free_bed) * FULL
+        return (
+            (not self.own_open) * OWN_CLOSED
+            | (not self.incoming_open) * INCOMING_CLOSED
+            | (not self.has_free_bed) * FULL
+        )
 
     def set_gates(self) -> None:
         """Closes or reopens the gates for the present load; between the two levels they stay as they are."""
@@ -116,7 +122,9 @@ class Tally:
     def occupied_changes(self, unit: Unit, now: float) -> None:
         """To be called before the number of occupied beds changes."""
         if self.open:
-            self.occupancy_days[self.period, unit.place, unit.occupied] += now - self.occupied_since[unit.place]
+            self.occupancy_days[self.period, unit.place, unit.occupied] += (
+                now - self.occupied_since[unit.place]
+            )
             self.occupied_since[unit.place] = now
 
     def staffed_changes(self, unit: Unit, now: float) -> None:

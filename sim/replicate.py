@@ -42,7 +42,9 @@ class Failure:
     traceback: str
 
     def __str__(self) -> str:
-        cells = f"cells {self.cells[0]} to {self.cells[-1]}" if len(self.cells) > 1 else f"cell {self.cells[0]}"
+        cells = (
+            f"cells {self.cells[0]} to {self.cells[-1]}" if len(self.cells) > 1 else f"cell {self.cells[0]}"
+        )
         return f"seed {self.seed}, replication {self.replication}, {cells}: {self.traceback.strip().splitlines()[-1]}"
 
 
@@ -95,7 +97,12 @@ def _batches(numbers: Iterable[int], size: int) -> Iterator[tuple[int, ...]]:
 
 
 def run_batch(
-    network: Network, plan: IntakePlan, replications: Sequence[int], first: int, rules: Sequence[Rules], engine: str
+    network: Network,
+    plan: IntakePlan,
+    replications: Sequence[int],
+    first: int,
+    rules: Sequence[Rules],
+    engine: str,
 ) -> list[list[Run] | Failure]:
     """Consecutive cells of several replications; `first` is the number of the first cell.
 
@@ -116,7 +123,8 @@ def _run_cells(
     intake = draw_intake(plan, replication)
     records = engines.load(engine).run_table(network, rules, intake)
     return [
-        Run(replication, first + place, _sound(record, network), intake.hash) for place, record in enumerate(records)
+        Run(replication, first + place, _sound(record, network), intake.hash)
+        for place, record in enumerate(records)
     ]
 
 
@@ -180,7 +188,9 @@ def pace_of(scenario: Scenario, policy: Policy, *, engine: str = DEFAULT_ENGINE)
     loaded.warm(network, [rules], plan)
     drawing = _seconds(lambda: draw_intake(plan, 0))
     intake = draw_intake(plan, 0)
-    return Pace(drawing * whole / days, _seconds(lambda: loaded.run_table(network, [rules], intake)) * whole / days)
+    return Pace(
+        drawing * whole / days, _seconds(lambda: loaded.run_table(network, [rules], intake)) * whole / days
+    )
 
 
 def _seconds(work) -> float:

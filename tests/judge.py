@@ -91,7 +91,7 @@ class Judge:
             self.implied.extend(self.moves_at_once(time, unit))
         elif kind == TRANSFER_ARRIVAL:
             self.wards[unit].reserved -= 1
-            self.occupy(*line)
+            self.occupy(*line, reserved=True)
         elif kind == STAFFING:
             self.wards[unit].beds = self.staffed.popleft()
         elif kind == REVIEW:
@@ -139,10 +139,10 @@ class Judge:
             return any_free[0]
         return None
 
-    def occupy(self, time: float, _: str, patient: int, unit: int) -> None:
+    def occupy(self, time: float, _: str, patient: int, unit: int, *, reserved: bool = False) -> None:
         """A bed is taken; the discharge is due after the stay in that unit."""
         ward, intake = self.wards[unit], self.case.intake
-        if ward.load >= ward.beds:
+        if ward.load >= ward.beds and not reserved:  # a reserved bed is kept even where staffed beds fall
             raise RuleBroken(
                 f"free bed: patient {patient} was put into unit {unit}, which was full at {time}"
             )

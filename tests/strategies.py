@@ -89,9 +89,7 @@ def intakes(draw: st.DrawFn, of: Network, tick: float, stay_factors: tuple[float
         )
         for _ in range(alike)
     ]
-    return intake(
-        *patients[:MOST_PATIENTS], stay_factors=stay_factors, staffing=draw(staffing_of(of, tick))
-    )
+    return intake(*patients[:MOST_PATIENTS], stay_factors=stay_factors, staffing=draw(staffing_of(of, tick)))
 
 
 @st.composite

@@ -5,7 +5,15 @@ from __future__ import annotations
 from typing import Any
 
 from analysis.command.options import Request, scenario_command
-from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.output import (
+    count,
+    prepare_folder,
+    put_caution,
+    put_json,
+    put_table,
+    put_text,
+    write_result,
+)
 from analysis.command.progress import duration
 
 
@@ -20,10 +28,18 @@ def check(request: Request) -> None:
     document = describe(scenario, policy)
     document["expected"] = expected(request, document["game"]["cells"])
     reasons = list(refusals(scenario, policy))
-    document["exact_chain"] = {"in_scope": not reasons, "reasons": reasons, "states": chain_size(scenario, policy)}
+    document["exact_chain"] = {
+        "in_scope": not reasons,
+        "reasons": reasons,
+        "states": chain_size(scenario, policy),
+    }
     document["faults"] = []
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "check", engine=document["expected"]["engine"]))
+        write_result(
+            prepare_folder(request.out),
+            document,
+            provenance(request, "check", engine=document["expected"]["engine"]),
+        )
     if request.as_json:
         put_json(document)
     else:
@@ -61,7 +77,12 @@ def _show_units(units: dict[str, Any]) -> None:
         "Closure thresholds (load: beds occupied or reserved) and referral orders",
         ("unit", "closes at", "to others at", "refers to"),
         [
-            (name, u["closure_threshold"], u["incoming_threshold"], ", ".join(u["referral_order"]) or "nobody")
+            (
+                name,
+                u["closure_threshold"],
+                u["incoming_threshold"],
+                ", ".join(u["referral_order"]) or "nobody",
+            )
             for name, u in units.items()
         ],
     )
@@ -72,9 +93,27 @@ def _show_patients(patients: dict[str, Any]) -> None:
         "Patients and their length of stay (days)",
         ("group", "home", "a day", "rhythm", "stay", "mean", "cv", "median"),
         [
-            (name, g["home"], g["per_day"], _rhythm(g), g["family"], g["mean_days"], g["cv"], g["median_days"])
+            (
+                name,
+                g["home"],
+                g["per_day"],
+                _rhythm(g),
+                g["family"],
+                g["mean_days"],
+                g["cv"],
+                g["median_days"],
+            )
             for name, g in patients.items()
         ],
+    )
+
+
+def _game_takes(expected: dict[str, Any]) -> str:
+    if expected["game_seconds"] is None:
+        return expected["reason"][0].upper() + expected["reason"][1:] + "."
+    return (
+        f"Expected: about {duration(expected['game_seconds'])} and {expected['game_bytes'] / 1e6:.0f} MB on "
+        f"{expected['workers']} worker(s) with the {expected['engine']} engine."
     )
 
 
@@ -87,9 +126,8 @@ def _show_rest(document: dict[str, Any]) -> None:
     game, expected = document["game"], document["expected"]
     put_text("Rules in force:", *(f"  {name}: {reads}." for name, reads in document["rules"].items()), "")
     put_text(
-        f"Game: {game['cells']} cells, {game['runs']} runs; expected {duration(expected['game_seconds'])} and "
-        f"{expected['game_bytes'] / 1e6:.0f} MB on {expected['workers']} worker(s) with the {expected['engine']} engine. One policy (`simulate`): "
-        f"{duration(expected['simulate_seconds'])}.",
+        f"Game: {count(game['cells'])} cells, {count(game['runs'])} runs. {_game_takes(expected)}",
+        f"One policy (`simulate`): about {duration(expected['simulate_seconds'])}.",
     )
     chain = document["exact_chain"]
     if chain["in_scope"]:

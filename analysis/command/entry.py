@@ -52,7 +52,7 @@ class LazyCommands(click.Group):
 
     def resolve_command(self, ctx: click.Context, args: list[str]):
         if args and args[0] not in COMMANDS:
-            from sim.scenario.faults import nearest
+            from sim.wording import nearest
 
             raise click.UsageError(f"There is no command `{args[0]}`; {nearest(args[0], COMMANDS)}", ctx)
         return super().resolve_command(ctx, args)
@@ -73,6 +73,9 @@ def brimline() -> None:
 
 def main(arguments: Sequence[str] | None = None) -> None:
     """Runs the command line and exits with its status."""
+    for stream in (sys.stdout, sys.stderr):  # a name that the terminal cannot show is shown in escapes
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
     sys.exit(run(list(sys.argv[1:] if arguments is None else arguments)))
 
 
@@ -116,7 +119,9 @@ def say(text: str) -> None:
 def _usage_fault(error: click.ClickException, as_json: bool) -> int:
     error.show(sys.stderr)
     parameter = getattr(error, "param", None)
-    key = getattr(error, "option_name", None) or (parameter.opts[-1] if parameter is not None else "command line")
+    key = getattr(error, "option_name", None) or (
+        parameter.opts[-1] if parameter is not None else "command line"
+    )
     if as_json:
         _put_faults([Fault(None, key, "is not a valid use", error.format_message(), "see --help")])
     return AT_FAULT

@@ -16,7 +16,9 @@ def exact(request: Request) -> None:
     begun = started()
     document = solve(request.scenario, request.policy).to_dict()
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain"))
+        write_result(
+            prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain")
+        )
     if request.as_json:
         put_json(document)
     else:
@@ -40,7 +42,9 @@ def _show(document: dict[str, Any]) -> None:
         ],
     )
     put_table(
-        "Network", ("measure", "value"), [(m.reads, _digits(document["network"][m.name])) for m in NETWORK_MEASURES]
+        "Network",
+        ("measure", "value"),
+        [(m.reads, _digits(document["network"][m.name])) for m in NETWORK_MEASURES],
     )
     put_caution()
 

@@ -10,6 +10,7 @@ import click
 from analysis.command.entry import say
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import (
+    count,
     interval,
     number,
     prepare_folder,
@@ -41,10 +42,18 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
     begun = started()
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
     analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
-    document = {"scenario": request.scenario.title, "method": "exact" if exact else "simulated"} | game_document(analysis)
+    document = {
+        "scenario": request.scenario.title,
+        "method": "exact" if exact else "simulated",
+    } | game_document(analysis)
     document |= told
     if request.out is not None:
-        _write(request, analysis, document, provenance(request, "game", begun, engine="exact chain" if ran is None else ran.engine.name))
+        _write(
+            request,
+            analysis,
+            document,
+            provenance(request, "game", begun, engine="exact chain" if ran is None else ran.engine.name),
+        )
     if request.as_json:
         put_json(document)
     else:
@@ -64,7 +73,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
 
     goal, profiles = goal_of(request.scenario), profiles_of(request.scenario)
     if profiles.cells > MOST_CELLS:
-        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {profiles.cells:,}"
+        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
         remedy = "list fewer thresholds for some units"
         raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
     return profiles, goal, welfare_of(request.scenario)
@@ -103,7 +112,13 @@ def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     profiles, goal, welfare = _axes(request)
     if goal.shape == "squared":
         rule, remedy = "must be `absolute` with --exact", "drop --exact, or use the absolute goal"
-        fault = Fault(None, "game.goal.shape", rule, "got 'squared': the chain has no finite-period variance here", remedy)
+        fault = Fault(
+            None,
+            "game.goal.shape",
+            rule,
+            "got 'squared': the chain has no finite-period variance here",
+            remedy,
+        )
         raise ScenarioError([fault], request.scenario.source.file)
     cells = [None] * profiles.cells
     with progress("game --exact", profiles.cells, "cells") as bar:
@@ -129,9 +144,14 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
 def _show(analysis: Any, document: dict[str, Any]) -> None:
     from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING
 
-    put_text(document["scenario"] or "(no title)", f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
+    put_text(
+        document["scenario"] or "(no title)",
+        f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
+    )
     if not analysis.is_exact:
-        put_text(f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals.")
+        put_text(
+            f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
+        )
     put_text("")
     if len(document["players"]) == 2:
         for player in (0, 1):
@@ -157,7 +177,9 @@ def _show_payoffs(analysis: Any, player: int) -> None:
     scale, scale_reads = table.goal.display_scale
 
     def cell(row: int, column: int) -> str:
-        text = number(float(table.payoffs[player][row, column]) * scale, 1) + ("*" if best[row, column] else "")
+        text = number(float(table.payoffs[player][row, column]) * scale, 1) + (
+            "*" if best[row, column] else ""
+        )
         return f"[{text}]" if (row, column) in equilibria else text
 
     aim = "smaller is better" if table.goal.sense == "cost" else "larger is better"
@@ -200,7 +222,16 @@ def _show_outcomes(document: dict[str, Any]) -> None:
     """Refusals, transfers and closed-with-a-free-bed time at the optimum and at the extreme equilibria, by home."""
     put_table(
         "What comes with it (a day; by home population for turned away and moved, by unit for closed time)",
-        ("profile", "home or unit", "threshold", "turned away", "moved", "closed with a free bed", "utilisation", "treated"),
+        (
+            "profile",
+            "home or unit",
+            "threshold",
+            "turned away",
+            "moved",
+            "closed with a free bed",
+            "utilisation",
+            "treated",
+        ),
         [row for name, outcome in _named_outcomes(document) for row in _outcome_rows(name, outcome)],
     )
 

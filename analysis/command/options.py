@@ -16,6 +16,8 @@ from analysis.command.entry import CAUTION
 from sim.errors import Fault, ScenarioError
 
 ENGINES = ("compiled", "reference")
+LEAST_PER_DAY = 1e-9
+LONGEST_THRESHOLD = 9  # digits
 
 
 @dataclass(frozen=True)
@@ -50,19 +52,33 @@ def scenario_command(function: Callable[..., Any]) -> click.Command:
 
 _OPTIONS = (
     click.argument("scenario", type=click.Path(path_type=Path)),
-    click.option("--json", "as_json", is_flag=True, help="One JSON document on standard output, nothing else there."),
+    click.option(
+        "--json", "as_json", is_flag=True, help="One JSON document on standard output, nothing else there."
+    ),
     click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of every draw."),
     click.option("--replications", type=click.IntRange(1, 1_000_000), help="Number of replications."),
-    click.option("--confidence", type=click.FloatRange(0, 1, min_open=True, max_open=True), help="Of every interval."),
-    click.option("--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."),
-    click.option("--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."),
+    click.option(
+        "--confidence", type=click.FloatRange(0, 1, min_open=True, max_open=True), help="Of every interval."
+    ),
+    click.option(
+        "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
+    ),
+    click.option(
+        "--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."
+    ),
     click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the results."),
-    click.option("--threshold", multiple=True, metavar="UNIT=K", help="Closure threshold of a unit (repeatable)."),
-    click.option("--incoming", multiple=True, metavar="UNIT=K", help="Incoming threshold of a unit (repeatable)."),
+    click.option(
+        "--threshold", multiple=True, metavar="UNIT=K", help="Closure threshold of a unit (repeatable)."
+    ),
+    click.option(
+        "--incoming", multiple=True, metavar="UNIT=K", help="Incoming threshold of a unit (repeatable)."
+    ),
     click.option("--demand", type=float, metavar="X", help="Multiply every arrival rate."),
     click.option("--target", type=float, metavar="T", help="Target utilisation of every unit."),
     click.option("--policy", metavar="NAME", help="One of the scenario's policies."),
-    click.option("--exponential", is_flag=True, help="Exponential stays of the same means, no delay, constant demand."),
+    click.option(
+        "--exponential", is_flag=True, help="Exponential stays of the same means, no delay, constant demand."
+    ),
 )
 _COMMON = (
     "scenario", "as_json", "seed", "replications", "confidence", "workers", "engine", "out", "threshold", "incoming",
@@ -83,11 +99,21 @@ def _request(values: Mapping[str, Any]) -> Request:
         scenario = scenario.exponential()
     policy = _policy(scenario, values["policy"], faults)
     policy = policy.with_thresholds(_per_unit("--threshold", values["threshold"], scenario, faults))
-    policy = policy.with_rule("incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults))
+    policy = policy.with_rule(
+        "incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults)
+    )
     _writable(values["out"], faults)
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
-    return Request(scenario, policy, values["confidence"], values["workers"], values["engine"], values["out"], values["as_json"])
+    return Request(
+        scenario,
+        policy,
+        values["confidence"],
+        values["workers"],
+        values["engine"],
+        values["out"],
+        values["as_json"],
+    )
 
 
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
@@ -95,10 +121,15 @@ def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> An
         return scenario
     from sim.tables import MOST_PATIENTS
 
-    days = scenario.run.warm_up_days + scenario.run.measured_days
-    most = MOST_PATIENTS / (days * sum(group.per_day for group in scenario.patients))
-    if not 0 < factor <= most:
-        faults.append(Fault(None, "--demand", f"must be above 0 and at most {most:.6g}", f"got {factor:g}", "correct it"))
+    days = max(1.0, scenario.run.warm_up_days + scenario.run.measured_days)
+    rates = [group.per_day for group in scenario.patients]
+    least, most = LEAST_PER_DAY / min(rates), MOST_PATIENTS / (days * sum(rates))
+    if not least <= factor <= most:
+        rule, remedy = (
+            f"must be from {least:.3g} to {most:.6g} here",
+            "give a factor such as 1.1 for 10 % more patients",
+        )
+        faults.append(Fault(None, "--demand", rule, f"got {factor:g}", remedy))
         return scenario
     return scenario.with_demand(factor)
 
@@ -107,40 +138,65 @@ def _with_target(scenario: Any, target: float | None, faults: list[Fault]) -> An
     if target is None:
         return scenario
     if not 0 < target <= 1:
-        faults.append(Fault(None, "--target", "must be above 0 and at most 1", f"got {target:g}", "correct it"))
+        faults.append(
+            Fault(
+                None,
+                "--target",
+                "must be above 0 and at most 1",
+                f"got {target:g}",
+                "give a share such as 0.75",
+            )
+        )
         return scenario
     return scenario.with_target(target)
 
 
 def _policy(scenario: Any, name: str | None, faults: list[Fault]) -> Any:
-    from sim.scenario.faults import nearest
+    from sim.wording import nearest, shown
 
     try:
         return scenario.policy(None if name is None else unicodedata.normalize("NFC", name))
     except KeyError:
         known = [row.name for row in scenario.policies]
-        faults.append(Fault(None, "--policy", "must name a policy of the scenario", f"got {name!r}", nearest(name, known)))
+        faults.append(
+            Fault(
+                None,
+                "--policy",
+                "must name a policy of the scenario",
+                f"got {shown(name)}",
+                nearest(name, known),
+            )
+        )
         return scenario.policy()
 
 
 def _per_unit(option: str, entries: tuple[str, ...], scenario: Any, faults: list[Fault]) -> dict[str, int]:
     """The thresholds of repeated UNIT=K options; the last one for a unit holds."""
-    from sim.scenario.faults import nearest
+    from sim.wording import nearest, shown
 
     chosen = {}
     for entry in entries:
         name, found, number = unicodedata.normalize("NFC", entry).rpartition("=")
-        if not found or not number.strip().isdecimal():
-            faults.append(Fault(None, option, "must be UNIT=K, K a whole number", f"got {entry!r}", 'write "Ashgill=9"'))
+        digits = number.strip().lstrip("0") or number.strip()[-1:]
+        if not found or not digits.isdecimal() or len(digits) > LONGEST_THRESHOLD:
+            rule, remedy = (
+                "must be UNIT=K, K a whole number, 0 or more",
+                f'write "{scenario.unit_names[0]}=9"',
+            )
+            faults.append(Fault(None, option, rule, f"got {shown(entry)}", remedy))
         elif name not in scenario.unit_names:
             remedy = nearest(name, scenario.unit_names)
-            faults.append(Fault(None, option, "must name a unit of the scenario", f"got {name!r}", remedy))
-        elif int(number) > scenario.unit(name).beds:
+            faults.append(
+                Fault(None, option, "must name a unit of the scenario", f"got {shown(name)}", remedy)
+            )
+        elif int(digits) > scenario.unit(name).beds:
             beds = scenario.unit(name).beds
             rule = "must not be above the unit's beds"
-            faults.append(Fault(None, option, rule, f"got {entry!r} for {beds} beds", f"choose from 0 to {beds}"))
+            faults.append(
+                Fault(None, option, rule, f"got {shown(entry)} for {beds} beds", f"choose from 0 to {beds}")
+            )
         else:
-            chosen[name] = int(number)
+            chosen[name] = int(digits)
     return chosen
 
 

@@ -67,6 +67,11 @@ def put_caution() -> None:
     put_text("", CAUTION)
 
 
+def count(whole: int) -> str:
+    """A count, in full or, where it is vast, as a power of ten."""
+    return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
+
+
 def number(value: Any, digits: int = 3) -> str:
     """A number as a table shows it; a dash for none."""
     if value is None:
@@ -94,7 +99,11 @@ def prepare_folder(folder: Path) -> Path:
     left = [path for pattern in WRITTEN for path in folder.glob(pattern)]
     if left:
         earlier = folder / "earlier"
-        taken = [int(path.name) for path in earlier.glob("*") if path.name.isdecimal()] if earlier.exists() else []
+        taken = (
+            [int(path.name) for path in earlier.glob("*") if path.name.isdecimal()]
+            if earlier.exists()
+            else []
+        )
         shelf = earlier / str(max(taken, default=0) + 1)
         shelf.mkdir(parents=True)
         for path in left:

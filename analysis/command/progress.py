@@ -53,14 +53,18 @@ class _Bar:
         from rich.progress import Progress as RichProgress
 
         columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn(unit))
-        self._bar = RichProgress(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True)
+        self._bar = RichProgress(
+            *columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True
+        )
         self._task = self._bar.add_task(label, total=total)
 
     def __enter__(self) -> _Bar:
         self._bar.__enter__()
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
         self._bar.__exit__(kind, error, trace)
 
     def advance(self, count: int = 1) -> None:

@@ -9,8 +9,8 @@ from typing import Any
 from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import Request
 from analysis.command.progress import progress, until_interrupted
-from sim.errors import RunError
 from sim import engines
+from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.replicate import Failure, Pace, pace_of, replicate
 from sim.workers import Workers, available_cores, local_workers
@@ -52,16 +52,26 @@ def _announce_compiling() -> None:
 
 
 def expected(request: Request, cells: int) -> dict[str, Any]:
-    """Expected seconds and bytes of `simulate` and of a `game` of so many cells."""
+    """Expected seconds and bytes of `simulate`, and of a `game` of so many cells (null where it is too large)."""
+    from analysis.payoffs import MOST_CELLS
+
     replications = request.scenario.run.replications
-    planned = effort(request, replications, cells)
+    feasible = cells <= MOST_CELLS
+    planned = effort(request, replications, cells if feasible else 1)
     return {
         "engine": planned.engine.name,
         "seconds_per_run": planned.pace.running,
         "simulate_seconds": planned.pace.seconds(replications, 1),
-        "game_seconds": planned.pace.seconds(replications, cells) / planned.count,
-        "game_bytes": replications * cells * len(request.scenario.units) * BYTES_PER_CELL_UNIT,
+        "game_seconds": planned.pace.seconds(replications, cells) / planned.count if feasible else None,
+        "game_bytes": replications * cells * len(request.scenario.units) * BYTES_PER_CELL_UNIT
+        if feasible
+        else None,
         "workers": planned.count,
+        **(
+            {}
+            if feasible
+            else {"reason": f"a game may have at most {MOST_CELLS:,} cells: list fewer thresholds"}
+        ),
     }
 
 
@@ -76,7 +86,12 @@ class Ran:
     def to_dict(self) -> dict[str, Any]:
         """What a result says of it."""
         failed = [
-            {"seed": one.seed, "replication": one.replication, "cells": list(one.cells), "traceback": one.traceback}
+            {
+                "seed": one.seed,
+                "replication": one.replication,
+                "cells": list(one.cells),
+                "traceback": one.traceback,
+            }
             for one in self.failures
         ]
         return {

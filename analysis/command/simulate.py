@@ -9,14 +9,30 @@ import click
 
 from analysis.command.entry import say
 from analysis.command.options import Request, scenario_command
-from analysis.command.output import interval, prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.output import (
+    interval,
+    prepare_folder,
+    put_caution,
+    put_json,
+    put_table,
+    put_text,
+    write_result,
+)
 
 
-@click.option("--trace", type=click.Path(path_type=Path, dir_okay=False), help="CSV of one replication's events.")
-@click.option("--intake-out", type=click.Path(path_type=Path, dir_okay=False), help="CSV of that replication's intake.")
-@click.option("--replication", type=click.IntRange(0, 999_999), default=0, show_default=True, help="Which one to trace.")
+@click.option(
+    "--trace", type=click.Path(path_type=Path, dir_okay=False), help="CSV of one replication's events."
+)
+@click.option(
+    "--intake-out", type=click.Path(path_type=Path, dir_okay=False), help="CSV of that replication's intake."
+)
+@click.option(
+    "--replication", type=click.IntRange(0, 999_999), default=0, show_default=True, help="Which one to trace."
+)
 @click.option("--per-replication", is_flag=True, help="Raw measures and hashes of each replication.")
-def simulate(request: Request, trace: Path | None, intake_out: Path | None, replication: int, per_replication: bool) -> None:
+def simulate(
+    request: Request, trace: Path | None, intake_out: Path | None, replication: int, per_replication: bool
+) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
     from analysis.command.running import finish, require, run_replications
@@ -29,11 +45,16 @@ def simulate(request: Request, trace: Path | None, intake_out: Path | None, repl
         say(f"advice: {said}")
     runs: list[Any] = []
     ran = run_replications(
-        request, [request.policy], label="simulate", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
+        request,
+        [request.policy],
+        label="simulate",
+        take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
     )
     require(len(runs), ran.interrupted)
     runs.sort(key=lambda run: run.replication)
-    result = summarise([run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence)
+    result = summarise(
+        [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
+    )
     document = _heading(request) | result.to_dict() | {
         "replications": result.replications,
         "confidence": result.confidence,
@@ -43,7 +64,11 @@ def simulate(request: Request, trace: Path | None, intake_out: Path | None, repl
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
     if request.out is not None:
-        write_result(prepare_folder(request.out), document, provenance(request, "simulate", begun, engine=ran.engine.name))
+        write_result(
+            prepare_folder(request.out),
+            document,
+            provenance(request, "simulate", begun, engine=ran.engine.name),
+        )
     if trace is not None or intake_out is not None:  # perhaps into that very folder
         _write_trace(request, ran.engine.name, replication, trace, intake_out)
     if request.as_json:
@@ -57,10 +82,16 @@ command = scenario_command(simulate)
 
 
 def _heading(request: Request) -> dict[str, Any]:
-    return {"scenario": request.scenario.title, "policy": request.policy.name, "thresholds": request.policy.thresholds}
+    return {
+        "scenario": request.scenario.title,
+        "policy": request.policy.name,
+        "thresholds": request.policy.thresholds,
+    }
 
 
-def _write_trace(request: Request, engine: str, replication: int, trace: Path | None, intake_out: Path | None) -> None:
+def _write_trace(
+    request: Request, engine: str, replication: int, trace: Path | None, intake_out: Path | None
+) -> None:
     from sim.intake import write_intake
     from sim.replicate import trace_replication
 

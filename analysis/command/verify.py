@@ -28,16 +28,26 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
 
     begun = started()
     if request.scenario.run.replications < LEAST_REPLICATIONS:
-        rule, got = f"must be at least {LEAST_REPLICATIONS} to verify", f"got {request.scenario.run.replications}"
-        raise ScenarioError([Fault(None, "replications", rule, got, "raise it, for example --replications 30")])
+        rule, got = (
+            f"must be at least {LEAST_REPLICATIONS} to verify",
+            f"got {request.scenario.run.replications}",
+        )
+        raise ScenarioError(
+            [Fault(None, "replications", rule, got, "raise it, for example --replications 30")]
+        )
     exact = solve(request.scenario, request.policy)
     runs: list[Any] = []
     ran = run_replications(
-        request, [request.policy], label="verify", take=lambda reply: runs.extend(reply if isinstance(reply, list) else [])
+        request,
+        [request.policy],
+        label="verify",
+        take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
     )
     require(len(runs), ran.interrupted, least=LEAST_REPLICATIONS)
     runs.sort(key=lambda run: run.replication)
-    rate = false_alarm_rate or (1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE)
+    rate = false_alarm_rate or (
+        1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE
+    )
     result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)
     document = {"scenario": request.scenario.title, "thresholds": request.policy.thresholds} | result.to_dict() | {
         "states": exact.states, "seed": request.scenario.run.seed,
@@ -66,13 +76,26 @@ def _show(document: dict[str, Any]) -> None:
         f"Simulation ({document['replications']} replications) against the exact chain ({document['states']} states)",
         ("where", "measure", "exact", "simulated", "low", "high", "z", "verdict"),
         [
-            (one["where"], one["measure"], one["exact"], one["mean"], one["low"], one["high"], one["z"], _verdict(one))
+            (
+                one["where"],
+                one["measure"],
+                one["exact"],
+                one["mean"],
+                one["low"],
+                one["high"],
+                one["z"],
+                _verdict(one),
+            )
             for one in document["measures"]
         ],
     )
     off = [one for one in document["measures"] if not one["agrees"]]
     rate, critical = document["false_alarm_rate"], document["critical_z"]
-    said = "The simulation agrees with the exact chain" if document["agrees"] else f"{len(off)} measures DISAGREE"
+    said = (
+        "The simulation agrees with the exact chain"
+        if document["agrees"]
+        else f"{len(off)} measures DISAGREE"
+    )
     put_text(
         f"{said}: every |z| is compared with {critical:.2f} (Student, Bonferroni over all measures tested); a correct "
         f"simulator would be refused with a chance of at most {rate:g}.",

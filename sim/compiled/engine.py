@@ -70,7 +70,11 @@ class Table:
             )
         cells, units, most = len(rules), len(network.beds), int(network.beds.sum()) + 1
         self.network, self.rules, self.intake = network, rules, intake
-        self.whole, self.referral, self.soft = _whole(network, rules), _stack(rules, "referral_order"), _soft(rules)
+        self.whole, self.referral, self.soft = (
+            _whole(network, rules),
+            _stack(rules, "referral_order"),
+            _soft(rules),
+        )
         self.since = np.zeros((cells, units, 3))
         self.times, self.keys = np.empty((cells, most)), np.empty((cells, most), np.int64)
         self.counters = np.zeros((cells, 5), np.int64)
@@ -156,7 +160,9 @@ def _by_timetable(rules: Sequence[Rules]) -> list[list[int]]:
     """Cells that share their review timetable."""
     groups: dict[tuple[bytes, ...], list[int]] = {}
     for cell, one in enumerate(rules):
-        timetable = () if one.reviews is None else tuple(column.tobytes() for column in vars(one.reviews).values())
+        timetable = (
+            () if one.reviews is None else tuple(column.tobytes() for column in vars(one.reviews).values())
+        )
         groups.setdefault(timetable, []).append(cell)
     return list(groups.values())
 

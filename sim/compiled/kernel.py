@@ -77,7 +77,9 @@ def advance(
         if now >= end:
             break
         while now >= edges[period + 1]:
-            cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1])
+            cross_edge(
+                whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1]
+            )
             period += 1
         counts_now = period >= 0
 
@@ -95,7 +97,12 @@ def advance(
                 more_occupied, due = 1, DISCHARGE
                 length = stay[whole[unit, STAY_CLASS], who] + extra_days
         elif is_staffing:
-            who, unit = NOBODY, change_staffing(staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now)
+            who, unit = (
+                NOBODY,
+                change_staffing(
+                    staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now
+                ),
+            )
             note(note_times, notes, counters, now, STAFFING_CHANGES, NOBODY, unit)
         elif is_review:
             who, unit = NOBODY, review_unit(review_units, counters)
@@ -165,7 +172,9 @@ def advance(
 
     if to_the_end:
         while period + 1 < len(edges):
-            cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1])
+            cross_edge(
+                whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1]
+            )
             period += 1
     counters[PERIOD] = period
     counters[PENDING] = pending
@@ -315,7 +324,15 @@ def note_gates(note_times, notes, counters, time, unit, before, after):
     if note_times is not None:
         moved = before ^ after
         if moved & OWN_CLOSED:
-            note(note_times, notes, counters, time, OWN_CLOSES_NOW if after & OWN_CLOSED else OWN_OPENS, NOBODY, unit)
+            note(
+                note_times,
+                notes,
+                counters,
+                time,
+                OWN_CLOSES_NOW if after & OWN_CLOSED else OWN_OPENS,
+                NOBODY,
+                unit,
+            )
         if moved & INCOMING_CLOSED:
             kind = INCOMING_CLOSES_NOW if after & INCOMING_CLOSED else INCOMING_OPENS
             note(note_times, notes, counters, time, kind, NOBODY, unit)

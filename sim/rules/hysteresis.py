@@ -53,5 +53,10 @@ def reads(scenario: Scenario, policy: Policy) -> str | None:
 
 
 RULE = Rule(
-    "reopening gap", reads, unit_keys=UnitKeys, policy_keys=PolicyKeys, parameters=Parameters, lower_policy=lower
+    "reopening gap",
+    reads,
+    unit_keys=UnitKeys,
+    policy_keys=PolicyKeys,
+    parameters=Parameters,
+    lower_policy=lower,
 )

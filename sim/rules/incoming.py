@@ -51,12 +51,18 @@ def check(draft: Draft) -> None:
 
 def lower(scenario: Scenario, policy: Policy) -> Lowered:
     """incoming_closes: the load at which the incoming gate closes, (units,)."""
-    return {"incoming_closes": np.array([policy.units[name].incoming for name in scenario.unit_names], np.int64)}
+    return {
+        "incoming_closes": np.array([policy.units[name].incoming for name in scenario.unit_names], np.int64)
+    }
 
 
 def reads(scenario: Scenario, policy: Policy) -> str | None:
     """Where units close to others first."""
-    early = {name: rules.incoming for name, rules in policy.units.items() if rules.incoming < rules.closure_threshold}
+    early = {
+        name: rules.incoming
+        for name, rules in policy.units.items()
+        if rules.incoming < rules.closure_threshold
+    }
     return "; ".join(f"{name} closes to others at {threshold}" for name, threshold in early.items()) or None
 
 

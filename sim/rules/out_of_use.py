@@ -22,6 +22,7 @@ from sim.tables import MOST_BEDS, MOST_DAYS, NotNegative, Positive, Row, Table, 
 if TYPE_CHECKING:
     from sim.scenario import Policy, Scenario
     from sim.scenario.crosschecks import Draft
+    from sim.scenario.units import Unit
 
 STAFFING = 30  # the place of a change of staffed beds in the order of events
 OUTAGE_START, OUTAGE_LENGTH = 5, 6  # the purposes of random outages
@@ -52,6 +53,11 @@ class OutOfUse(Table):
                 "give one of the two pairs",
             )
         return self
+
+    @property
+    def can_happen(self) -> bool:
+        """Whether it takes a bed at all."""
+        return self.is_dated or self.per_year > 0
 
     @property
     def is_dated(self) -> bool:
@@ -104,13 +110,16 @@ def plan(scenario: Scenario) -> Lowered:
         Outage(place, f"{unit.name}\x1f{number}", row)
         for place, unit in enumerate(scenario.units)
         for number, row in enumerate(unit.out_of_use)
-        if row.is_dated or row.per_year > 0
+        if row.can_happen
     )
     return {"outages": outages or None, "staffed_beds": tuple(unit.beds for unit in scenario.units)}
 
 
 def timetable(
-    outages: tuple[Outage, ...], beds: tuple[int, ...], horizon_days: float, stream: Callable[[str, int], UniformSource]
+    outages: tuple[Outage, ...],
+    beds: tuple[int, ...],
+    horizon_days: float,
+    stream: Callable[[str, int], UniformSource],
 ) -> Staffing:
     """Every change of staffed beds before the horizon.
 
@@ -146,8 +155,13 @@ def _spans(
 
 def reads(scenario: Scenario, policy: Policy) -> str | None:
     """Which beds are out, when."""
-    said = [f"{unit.name}: {_row_reads(row)}" for unit in scenario.units for row in unit.out_of_use]
+    said = [f"{unit.name}: {_row_reads(row)}" for unit, row in _rows(scenario)]
     return "; ".join(said) or None
+
+
+def _rows(scenario: Scenario) -> Iterator[tuple[Unit, OutOfUse]]:
+    """Every row that can take a bed, with its unit."""
+    yield from ((unit, row) for unit in scenario.units for row in unit.out_of_use if row.can_happen)
 
 
 def _row_reads(row: OutOfUse) -> str:
@@ -159,9 +173,8 @@ def _row_reads(row: OutOfUse) -> str:
 
 def chain_refuses(scenario: Scenario, policy: Policy) -> Iterator[str]:
     """The chain's beds are fixed."""
-    for unit in scenario.units:
-        for row in unit.out_of_use:
-            yield f"units.{unit.name}.out_of_use: staffed beds must stay the same, got {_row_reads(row)}"
+    for unit, row in _rows(scenario):
+        yield f"units.{unit.name}.out_of_use: staffed beds must stay the same, got {_row_reads(row)}"
 
 
 RULE = Rule(

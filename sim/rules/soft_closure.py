@@ -44,7 +44,9 @@ def lower(scenario: Scenario, policy: Policy) -> Lowered:
 
 def reads(scenario: Scenario, policy: Policy) -> str | None:
     """Units that close softly."""
-    return in_words(of_units(policy, "admit_while_closed"), lambda share: f"still takes {100 * share:g} % of its own")
+    return in_words(
+        of_units(policy, "admit_while_closed"), lambda share: f"still takes {100 * share:g} % of its own"
+    )
 
 
 RULE = Rule(

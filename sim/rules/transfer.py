@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Annotated
 
 from pydantic import Field
 
-from sim.rules.declaration import Lowered, Rule
 from sim.durations import Delay
+from sim.rules.declaration import Lowered, Rule
 from sim.tables import NotNegative, Table
 
 if TYPE_CHECKING:
@@ -43,7 +43,9 @@ def reads(scenario: Scenario, policy: Policy) -> str | None:
     parts = []
     if delay is not None:
         hours = delay.distribution()
-        parts.append(f"a transfer takes {hours.mean():.2f} h on average ({delay.family}, cv {hours.cv():.2f})")
+        parts.append(
+            f"a transfer takes {hours.mean():.2f} h on average ({delay.family}, cv {hours.cv():.2f})"
+        )
     if extra > 0:
         parts.append(f"it adds {extra:g} days to the stay")
     return "; ".join(parts) or None

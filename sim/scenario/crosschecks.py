@@ -71,7 +71,6 @@ class Draft:
             if name is not None
         }
 
-
     @cached_property
     def run_days(self) -> float | None:
         """The length of a run, warm-up included; None where it is at fault."""

@@ -6,8 +6,8 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
-from sim.tables import NotNegative, Row, Table, breach
 from sim.scenario.units import Threshold
+from sim.tables import NotNegative, Row, Table, breach
 
 
 class TargetUtilisation(Table):

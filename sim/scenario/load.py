@@ -10,9 +10,9 @@ from typing import Any
 
 from pydantic import ValidationError
 
+from sim.durations import Duration, Empirical, Mixture
 from sim.errors import Fault, ScenarioError
 from sim.scenario.crosschecks import cross_check
-from sim.durations import Duration, Empirical, Mixture
 from sim.scenario.faults import Collector
 from sim.scenario.positions import key_lines
 from sim.scenario.scenario import Scenario, Source

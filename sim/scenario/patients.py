@@ -8,8 +8,8 @@ from pydantic import AfterValidator, Field
 
 from sim.demand import WeeklyPattern
 from sim.durations import Duration, Stay
-from sim.tables import NotNegative, Positive, Row, Table, breach
 from sim.scenario.units import Name
+from sim.tables import NotNegative, Positive, Row, Table, breach
 
 
 def _not_all_zero(weights: tuple[float, ...]) -> tuple[float, ...]:

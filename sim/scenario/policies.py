@@ -89,5 +89,9 @@ def _rules(unit: Unit, others: list[str]) -> UnitRules:
     return UnitRules(
         closure_threshold=unit.beds if unit.closure_threshold is None else unit.closure_threshold,
         referral_order=tuple(others) if unit.referral_order is None else unit.referral_order,
-        **{field.name: getattr(unit, field.name) for rule in tables("parameters") for field in dataclasses.fields(rule)},
+        **{
+            field.name: getattr(unit, field.name)
+            for rule in tables("parameters")
+            for field in dataclasses.fields(rule)
+        },
     )

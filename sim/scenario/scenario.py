@@ -14,8 +14,8 @@ from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
 from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
-from sim.tables import Row, Table, breach
 from sim.scenario.units import Line, Unit
+from sim.tables import Row, Table, breach
 from sim.wording import shown
 
 

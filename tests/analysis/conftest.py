@@ -3,13 +3,9 @@
 import json
 
 import pytest
-from hypothesis import settings
 
 from analysis.command.entry import run
 from tests.analysis.builders import no_constants
-
-settings.register_profile("untimed", deadline=None)  # no test asserts how fast it is
-settings.load_profile("untimed")
 
 TWO = """
 schema = 1

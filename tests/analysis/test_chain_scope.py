@@ -253,12 +253,26 @@ def test_the_result_as_plain_data():
     assert (tree["scenario"], tree["thresholds"], tree["states"]) == ("Two units", {"A": 2, "B": 1}, 6)
     assert [len(unit["occupancy"]) for unit in tree["units"].values()] == [3, 2]
     assert set(tree["network"]) == {
-        "throughput_per_day", "transfers_per_day", "turned_away_per_day", "arrivals_per_day"
+        "throughput_per_day",
+        "transfers_per_day",
+        "turned_away_per_day",
+        "arrivals_per_day",
     }
     assert set(tree["units"]["A"]) == {
-        "utilisation", "mean_occupied", "full_fraction", "closed_fraction", "incoming_closed_fraction",
-        "closed_with_free_bed_fraction", "occupancy", "admissions_per_day", "diverted_out_per_day",
-        "diverted_in_per_day", "turned_away_per_day", "arrivals_per_day", "moved_share", "turned_away_share",
+        "utilisation",
+        "mean_occupied",
+        "full_fraction",
+        "closed_fraction",
+        "incoming_closed_fraction",
+        "closed_with_free_bed_fraction",
+        "occupancy",
+        "admissions_per_day",
+        "diverted_out_per_day",
+        "diverted_in_per_day",
+        "turned_away_per_day",
+        "arrivals_per_day",
+        "moved_share",
+        "turned_away_share",
     }
     assert tree["units"]["B"]["moved_share"] is None
     assert {type(value) for value in result.to_dict()["units"]["B"].values()} == {float, list, type(None)}

@@ -9,7 +9,7 @@ from statistics import fmean
 
 import pytest
 
-from sim import replicate
+from sim import reference
 
 UNIT = {
     "utilisation", "mean_occupied", "full_fraction", "closed_fraction", "closed_with_free_bed_fraction",

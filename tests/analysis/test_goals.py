@@ -27,7 +27,11 @@ def periods(*replications, beds=10.0, judged=10.0, days=20.0):
     values = np.array(replications, float)[:, None, :, None]
     shape = (len(replications), 1, 1)
     staffed = np.full(values.shape, beds * judged)
-    return {"period_occupied_days": values * staffed, "period_bed_days": staffed, "days": np.full(shape, days)}
+    return {
+        "period_occupied_days": values * staffed,
+        "period_bed_days": staffed,
+        "days": np.full(shape, days),
+    }
 
 
 # ---- the distance of mean utilisation from the target ----

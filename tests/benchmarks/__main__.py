@@ -31,14 +31,18 @@ def engines() -> None:
         work["C"] = lambda: loop(network, rules, intake)
     taken = in_turn(work)
     share = FEW / len(rules)
-    print(f"{len(rules)} cells, {len(intake)} patients, one replication; ratios of CPU time, median (least to greatest) of 5")
+    print(
+        f"{len(rules)} cells, {len(intake)} patients, one replication; ratios of CPU time, median (least to greatest) of 5"
+    )
     _row("plain SimPy script / compiled", ratio(taken, "plain", "compiled", slow_share=share), ">= 150")
     _row("reference engine / compiled", ratio(taken, "reference", "compiled", slow_share=share), ">= 30")
     if loop is not None:
         _row("compiled / the same loop in C", ratio(taken, "compiled", "C"), "<= 1.6")
     _row("one cell with its own draws: plain / compiled", ratio(taken, "plain alone", "alone"), ">= 40")
     table = min(taken["compiled"])
-    print(f"whole table, 30 replications: {30 * table:.2f} s of CPU (bar 1 to 3 s); {table / len(rules) * 1e6:.0f} us a cell\n")
+    print(
+        f"whole table, 30 replications: {30 * table:.2f} s of CPU (bar 1 to 3 s); {table / len(rules) * 1e6:.0f} us a cell\n"
+    )
 
 
 def _row(name: str, ratios: tuple[float, float, float], bar: str) -> None:
@@ -52,11 +56,15 @@ def _same_results(network, some, intake, loop) -> None:
         record = compiled.run(network, one, intake)
         assert record.hash == reference.run(network, one, intake).hash
         occupied, transfers, away = plain.run(network, one, intake)
-        assert np.allclose(occupied, record.occupancy_days.sum(axis=0) @ np.arange(network.beds.max() + 1), rtol=1e-9)
+        assert np.allclose(
+            occupied, record.occupancy_days.sum(axis=0) @ np.arange(network.beds.max() + 1), rtol=1e-9
+        )
         assert (transfers, away) == (record.diverted.sum(), record.turned_away.sum())
         if loop is not None:
             occupancy, gates, _ = (array[0] for array in loop(network, some[place : place + 1], intake))
-            assert np.array_equal(occupancy, record.occupancy_days[0]) and np.array_equal(gates, record.gate_days)
+            assert np.array_equal(occupancy, record.occupancy_days[0]) and np.array_equal(
+                gates, record.gate_days
+            )
 
 
 def growth() -> None:

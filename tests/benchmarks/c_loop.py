@@ -36,12 +36,18 @@ def build() -> Callable[..., list[np.ndarray]] | None:
     return run_table
 
 
-def _call(loop: Callable[..., None], network: Network, rules: Sequence[Rules], intake: Intake) -> list[np.ndarray]:
+def _call(
+    loop: Callable[..., None], network: Network, rules: Sequence[Rules], intake: Intake
+) -> list[np.ndarray]:
     """Occupancy (cells, units, levels), gate days (cells, units, 8) and counts of every cell."""
     units, levels, cells = len(network.beds), int(network.beds.max()) + 1, len(rules)
     names = ("own_closes", "own_reopens", "incoming_closes", "incoming_reopens")
     thresholds = np.ascontiguousarray([[getattr(one, name) for name in names] for one in rules], np.int64)
-    sums = [np.zeros((cells, units, levels)), np.zeros((cells, units, 8)), np.zeros((cells, units, 2 + 2 * units), np.int64)]
+    sums = [
+        np.zeros((cells, units, levels)),
+        np.zeros((cells, units, 8)),
+        np.zeros((cells, units, 2 + 2 * units), np.int64),
+    ]
     room = [np.zeros(units * _SIZE_OF_UNIT, np.uint8), np.zeros((int(network.beds.sum()) + 1) * 16, np.uint8)]
     whole, double = ctypes.c_int64, ctypes.c_double
 

@@ -9,7 +9,9 @@ from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy
 from sim.scenario import Scenario, parse_scenario
 
 
-def network_of(beds: Sequence[int], *, warm_up: float = 63, measured: float = 364, load: float = 0.78) -> Scenario:
+def network_of(
+    beds: Sequence[int], *, warm_up: float = 63, measured: float = 364, load: float = 0.78
+) -> Scenario:
     """Units with these beds, lognormal stays of 3.9 days and a transfer delay; `load` is offered per bed."""
     units = "\n".join(f'[[units]]\nname = "Unit {i}"\nbeds = {b}\n' for i, b in enumerate(beds))
     stay = 'stay = { family = "lognormal", mean_days = 3.9, cv = 1.4 }'
@@ -27,7 +29,9 @@ def lowered(scenario: Scenario, cells: int) -> tuple[Network, list[Rules], Intak
     ranges = [range(max(1, unit.beds // 2), unit.beds + 1) for unit in scenario.units]
     profiles = itertools.islice(itertools.cycle(itertools.product(*ranges)), cells)
     base, names = scenario.policy(), scenario.unit_names
-    rules = [lower_policy(scenario, base.with_thresholds(dict(zip(names, one, strict=True)))) for one in profiles]
+    rules = [
+        lower_policy(scenario, base.with_thresholds(dict(zip(names, one, strict=True)))) for one in profiles
+    ]
     return lower_network(scenario), rules, plan_intake(scenario)
 
 
@@ -36,5 +40,7 @@ def two_units() -> tuple[Network, list[Rules], IntakePlan]:
     scenario = network_of([16, 20], warm_up=60, measured=365)
     base, names = scenario.policy(), scenario.unit_names
     profiles = itertools.product(range(17), range(21))
-    rules = [lower_policy(scenario, base.with_thresholds(dict(zip(names, one, strict=True)))) for one in profiles]
+    rules = [
+        lower_policy(scenario, base.with_thresholds(dict(zip(names, one, strict=True)))) for one in profiles
+    ]
     return lower_network(scenario), rules, plan_intake(scenario)

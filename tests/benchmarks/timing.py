@@ -19,7 +19,9 @@ def in_turn(work: Mapping[str, Callable[[], object]], *, rounds: int = 5) -> dic
     return taken
 
 
-def ratio(taken: Mapping[str, list[float]], slow: str, fast: str, *, slow_share: float = 1.0) -> tuple[float, float, float]:
+def ratio(
+    taken: Mapping[str, list[float]], slow: str, fast: str, *, slow_share: float = 1.0
+) -> tuple[float, float, float]:
     """Median, least and greatest ratio, round by round; `slow_share`: the part of the fast one's work that slow did."""
     ratios = [a / slow_share / b for a, b in zip(taken[slow], taken[fast], strict=True)]
     return statistics.median(ratios), min(ratios), max(ratios)

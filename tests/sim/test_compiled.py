@@ -91,7 +91,9 @@ def test_a_large_network_uses_the_heap_and_gives_the_same_bits():
         f'[[patients]]\ngroup = "g{i}"\nhome = "Unit {i}"\nper_day = 12\nstay = {{ family = "gamma", mean_days = 3.5, cv = 1.2 }}\n'
         for i in range(4)
     )
-    scenario = parse_scenario(f"schema = 1\nrun = {{ warm_up_days = 28, measured_days = 84 }}\n{units}{groups}")
+    scenario = parse_scenario(
+        f"schema = 1\nrun = {{ warm_up_days = 28, measured_days = 84 }}\n{units}{groups}"
+    )
     of = lower_network(scenario)
     assert of.beds.sum() > HEAP_ABOVE_BEDS
     by, drawn = lower_policy(scenario, scenario.policy()), draw_intake(plan_intake(scenario), 0)
@@ -108,12 +110,19 @@ TIE = Case(  # a discharge and an arrival at one instant, in a unit of one bed
 def test_a_difference_planted_in_the_reference_engine_is_caught(monkeypatch):
     monkeypatch.setattr(reference, "NEW_ARRIVAL", 5)
     with pytest.raises(AssertionError, match="differ|mismatch|not equal"):
-        assert_equal(compiled.run(TIE.network, TIE.rules, TIE.intake), reference.run(TIE.network, TIE.rules, TIE.intake))
+        assert_equal(
+            compiled.run(TIE.network, TIE.rules, TIE.intake),
+            reference.run(TIE.network, TIE.rules, TIE.intake),
+        )
 
 
 def test_a_difference_planted_in_the_compiled_engine_is_caught(monkeypatch):
     """The kernel's own Python is run with the kinds of two events swapped; compiled code cannot be patched."""
-    plain = {name: getattr(kernel, name).py_func for name in vars(kernel) if hasattr(getattr(kernel, name), "py_func")}
+    plain = {
+        name: getattr(kernel, name).py_func
+        for name in vars(kernel)
+        if hasattr(getattr(kernel, name), "py_func")
+    }
     for name, function in plain.items():
         monkeypatch.setattr(kernel, name, function)
     two = Case(
@@ -142,13 +151,19 @@ def test_the_log_sees_a_swap_of_kinds_that_time_averages_do_not():
 
 
 @settings(deadline=None, max_examples=200, derandomize=True, database=None)
-@given(st.lists(st.tuples(st.integers(0, 6), st.sampled_from([10, 20]), st.integers(0, 50)), max_size=60, unique=True))
+@given(
+    st.lists(
+        st.tuples(st.integers(0, 6), st.sampled_from([10, 20]), st.integers(0, 50)), max_size=60, unique=True
+    )
+)
 def test_both_queues_hand_out_events_by_time_kind_and_sequence(events):
     expected = sorted(events)
     times, keys = np.empty(len(events) + 1), np.empty(len(events) + 1, np.int64)
     for count, (time, kind, sequence) in enumerate(events):
         push_sorted(times, keys, count, float(time), pack(kind, sequence, 3))
-    assert [(times[i], kind_of(keys[i]), sequence_of(keys[i])) for i in reversed(range(len(events)))] == expected
+    assert [
+        (times[i], kind_of(keys[i]), sequence_of(keys[i])) for i in reversed(range(len(events)))
+    ] == expected
     for count, (time, kind, sequence) in enumerate(events):
         push_heap(times, keys, count, float(time), pack(kind, sequence, 3))
     found = []
@@ -185,7 +200,12 @@ print(fingerprint()["probe_intake"], runs[0].intake_hash, runs[0].record.hash)
 def probe(python: str = sys.executable, **environment: str) -> list[str]:
     """Hashes from a fresh interpreter: of the fingerprint's probe, of an intake, of a record."""
     done = subprocess.run(
-        [python, "-c", PROBE], cwd=ROOT, env=os.environ | environment, capture_output=True, text=True, check=True
+        [python, "-c", PROBE],
+        cwd=ROOT,
+        env=os.environ | environment,
+        capture_output=True,
+        text=True,
+        check=True,
     )
     return done.stdout.split()
 
@@ -198,7 +218,9 @@ def test_another_instruction_set_changes_the_fingerprint():
     """numpy's exp, log and power give other last bits on other processors; the fingerprint must tell them apart."""
     found = np.show_config(mode="dicts")["SIMD Extensions"].get("found", [])
     if not found:
-        pytest.skip("numpy found nothing above the baseline here, so there is no other instruction set to try")
+        pytest.skip(
+            "numpy found nothing above the baseline here, so there is no other instruction set to try"
+        )
     plain = probe()
     assert probe(NPY_DISABLE_CPU_FEATURES=" ".join(found))[0] != plain[0]
 

@@ -28,7 +28,7 @@ def close(measured: np.ndarray, expected: np.ndarray) -> None:
 def test_the_networks_are_various_enough_to_test_every_rule():
     seen: dict[str, int] = {}
 
-    @settings(deadline=None, max_examples=200, derandomize=True, database=None)
+    @settings(deadline=None, max_examples=500, derandomize=True, database=None)
     @given(cases())
     def look(case: Case) -> None:
         for what in found_in(case):

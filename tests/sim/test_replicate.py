@@ -14,7 +14,6 @@ from pathlib import Path
 
 import pytest
 
-import sim.replicate
 from sim import reference
 from sim.intake import draw_intake
 from sim.lowering import lower_network, lower_policy, plan_intake
@@ -84,7 +83,8 @@ def test_the_size_of_tasks_changes_no_number(plain, size):
 def test_the_number_of_workers_changes_no_number(plain):
     assert hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(1))) == plain
     assert (
-        hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(2), task_size=TaskSize(cells=2))) == plain
+        hashes(replicate(SCENARIO, POLICIES, range(4), workers=local_workers(2), task_size=TaskSize(cells=2)))
+        == plain
     )
 
 
