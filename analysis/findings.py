@@ -16,8 +16,8 @@ POINT_ESTIMATE_WARNING = (
     "look at the upper end of each regret, and repeat with more replications before relying on any of them."
 )
 ONE_NETWORK = (
-    "The price of anarchy is the ratio of this one network under the stated goals, not a bound over a class of networks; "
-    "'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do better still."
+    "The price of anarchy is the ratio of this one network under the stated goals, not a bound over a class of "
+    "networks; 'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do better still."
 )
 
 
@@ -47,7 +47,8 @@ def _findings(game: GameAnalysis) -> Iterator[Finding]:
     basis = _basis(game)
     count = len(game.equilibria)
     verdict = "in the estimated table " if not game.is_exact else ""
-    said = f"{count} pure {'equilibrium' if count == 1 else 'equilibria'} {verdict}within a regret of {game.tolerance:g}"
+    noun = "equilibrium" if count == 1 else "equilibria"
+    said = f"{count} pure {noun} {verdict}within a regret of {game.tolerance:g}"
     yield Finding(said, None, "profiles", basis)
     yield from _prices(game, basis)
     yield _turning(game, basis)

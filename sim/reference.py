@@ -2,7 +2,8 @@
 
 A run is a pure function of a lowered network, one policy's rules and an intake. Nothing is drawn and nothing
 is multiplied here. Events happen in the order (time, kind, sequence), where the sequence is the patient's
-index in the intake, or the unit's for reviews and changes of staffed beds; what is scheduled for now happens next, whatever its kind.
+index in the intake, or the unit's for reviews and changes of staffed beds; what is scheduled for now happens
+next, whatever its kind.
 """
 
 from __future__ import annotations

@@ -17,7 +17,8 @@ from tests.builders import Case, Event
 
 DISCHARGE, TRANSFER_ARRIVAL, STAFFING, REVIEW, NEW_ARRIVAL = 10, 20, 30, 40, 50
 IN_THE_LOG = {
-    DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", STAFFING: "staffing", REVIEW: "review", NEW_ARRIVAL: "arrival",
+    DISCHARGE: "discharge", TRANSFER_ARRIVAL: "admission", STAFFING: "staffing", REVIEW: "review",
+    NEW_ARRIVAL: "arrival",
 }  # fmt: skip
 
 

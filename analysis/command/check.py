@@ -53,8 +53,8 @@ def _show(document: dict[str, Any]) -> None:
     run = document["run"]
     put_text(
         document["title"] or "(no title)",
-        f"{run['replications']} replications of {run['warm_up_days']:g} days warm-up and {run['measured_days']:g} measured "
-        f"days, seed {run['seed']}, {100 * run['confidence']:g} % confidence",
+        f"{run['replications']} replications of {run['warm_up_days']:g} days warm-up and "
+        f"{run['measured_days']:g} measured days, seed {run['seed']}, {100 * run['confidence']:g} % confidence",
         "",
     )
     _show_units(document["units"])

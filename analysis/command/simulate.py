@@ -110,8 +110,8 @@ def _show(document: dict[str, Any], request: Request) -> None:
         document["scenario"] or "(no title)",
         f"Policy: {document['policy']}; closure thresholds "
         + ", ".join(f"{name} {k}" for name, k in document["thresholds"].items()),
-        f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, seed {document['seed']}, "
-        f"engine {document['engine']}",
+        f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, "
+        f"seed {document['seed']}, engine {document['engine']}",
         "",
     )
     units = document["units"]

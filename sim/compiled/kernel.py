@@ -2,8 +2,9 @@
 
 It only adds, subtracts and compares, in the order in which the reference engine does, so that records are
 equal to the last bit. What a rule needs comes as None where no cell uses the rule, and numba then compiles the
-loop without it, unless the rule is asked about so rarely that it costs nothing anyway. Arrays are passed one by one: in a tuple every use would count references, which costs more
-than the simulation. Nothing here imports the reference engine, nor it this one.
+loop without it, unless the rule is asked about so rarely that it costs nothing anyway. Arrays are passed one by
+one: in a tuple every use would count references, which costs more than the simulation. Nothing here imports the
+reference engine, nor it this one.
 """
 
 from __future__ import annotations

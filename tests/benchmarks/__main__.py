@@ -32,7 +32,8 @@ def engines() -> None:
     taken = in_turn(work)
     share = FEW / len(rules)
     print(
-        f"{len(rules)} cells, {len(intake)} patients, one replication; ratios of CPU time, median (least to greatest) of 5"
+        f"{len(rules)} cells, {len(intake)} patients, one replication; ratios of CPU time, "
+        "median (least to greatest) of 5"
     )
     _row("plain SimPy script / compiled", ratio(taken, "plain", "compiled", slow_share=share), ">= 150")
     _row("reference engine / compiled", ratio(taken, "reference", "compiled", slow_share=share), ">= 30")
@@ -41,7 +42,8 @@ def engines() -> None:
     _row("one cell with its own draws: plain / compiled", ratio(taken, "plain alone", "alone"), ">= 40")
     table = min(taken["compiled"])
     print(
-        f"whole table, 30 replications: {30 * table:.2f} s of CPU (bar 1 to 3 s); {table / len(rules) * 1e6:.0f} us a cell\n"
+        f"whole table, 30 replications: {30 * table:.2f} s of CPU (bar 1 to 3 s); "
+        f"{table / len(rules) * 1e6:.0f} us a cell\n"
     )
 
 

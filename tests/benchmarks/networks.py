@@ -36,7 +36,7 @@ def lowered(scenario: Scenario, cells: int) -> tuple[Network, list[Rules], Intak
 
 
 def two_units() -> tuple[Network, list[Rules], IntakePlan]:
-    """The yardstick: 17 x 21 thresholds of two units of 16 and 20 beds, 60 + 365 days, about 1,200 admissions a unit-year."""
+    """The yardstick: 17 x 21 thresholds of two units of 16 and 20 beds, 60 + 365 days, 1,200 admissions a unit-year."""
     scenario = network_of([16, 20], warm_up=60, measured=365)
     base, names = scenario.policy(), scenario.unit_names
     profiles = itertools.product(range(17), range(21))

@@ -101,7 +101,9 @@ CASES = {
         on={"unit": "incoming_threshold = 1"},
         off={"unit": "incoming_threshold = 4"},
         # B (2 beds) takes others' patients only while empty; A never takes anybody.
-        case=hand([1, 2], Patient(1.0, B, FOREVER), Patient(2.0, A), own=[0, 2], incoming=[0, 1], last_resort=TURNED_AWAY),
+        case=hand(
+            [1, 2], Patient(1.0, B, FOREVER), Patient(2.0, A), own=[0, 2], incoming=[0, 1], last_resort=TURNED_AWAY
+        ),
         log=[
             (1.0, "arrival", 0, B), (1.0, "admission", 0, B), (1.0, "incoming gate closes", NOBODY, B),
             (2.0, "arrival", 1, A), (2.0, "turned away", 1, A),
@@ -194,7 +196,10 @@ CASES = {
         chain_refuses=True,
     ),
     "beds out of use": RuleCase(
-        on={"unit": "out_of_use = [{ from_day = 10, days = 15, beds = 3 }, { per_year = 30, mean_days = 3, beds = 1 }]"},
+        on={
+            "unit": "out_of_use = [{ from_day = 10, days = 15, beds = 3 }, "
+            "{ per_year = 30, mean_days = 3, beds = 1 }]"
+        },
         off={"unit": "out_of_use = [{ per_year = 0, mean_days = 3, beds = 1 }]"},
         # Two beds, both taken; one falls away at 2.0: nobody leaves, and the bed that empties at 3.0 is not staffed.
         case=hand(

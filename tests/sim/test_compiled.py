@@ -88,7 +88,8 @@ def test_demo_networks_give_the_same_bits_with_either_engine(name):
 def test_a_large_network_uses_the_heap_and_gives_the_same_bits():
     units = "\n".join(f'[[units]]\nname = "Unit {i}"\nbeds = 45\nclosure_threshold = 40\n' for i in range(4))
     groups = "\n".join(
-        f'[[patients]]\ngroup = "g{i}"\nhome = "Unit {i}"\nper_day = 12\nstay = {{ family = "gamma", mean_days = 3.5, cv = 1.2 }}\n'
+        f'[[patients]]\ngroup = "g{i}"\nhome = "Unit {i}"\nper_day = 12\n'
+        'stay = { family = "gamma", mean_days = 3.5, cv = 1.2 }\n'
         for i in range(4)
     )
     scenario = parse_scenario(
