@@ -42,7 +42,7 @@ class Distribution(ABC):
         rounding elsewhere). Raises ValueError where a number lies outside (0, 1).
         """
         u = np.asarray(u, dtype=float)
-        if not np.all((u > 0.0) & (u < 1.0)):
+        if u.size and not (u.min() > 0.0 and u.max() < 1.0):  # false too for NaN
             raise ValueError("a uniform number must lie strictly between 0 and 1")
         # One contiguous row, whatever came in: numpy may take another code path for strided numbers.
         return self._quantile(np.ascontiguousarray(u).ravel()).reshape(u.shape)

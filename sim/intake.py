@@ -13,7 +13,7 @@ import hashlib
 import unicodedata
 from collections.abc import Callable
 from dataclasses import dataclass, fields
-from functools import cached_property
+from functools import cached_property, lru_cache
 from pathlib import Path
 
 import numpy as np
@@ -76,15 +76,20 @@ def uniforms(seed: int, replication: int, group: str, purpose: int) -> UniformSo
 
     A uniform is (i + 1/2) * 2**-52 with i of 52 random bits, so never 0 or 1.
     """
-    digest = hashlib.sha256(unicodedata.normalize("NFC", group).encode()).digest()
-    words = (int.from_bytes(digest[:4], "big"), int.from_bytes(digest[4:8], "big"))
-    address = np.random.SeedSequence(seed, spawn_key=(replication, *words, purpose))
+    address = np.random.SeedSequence(seed, spawn_key=(replication, *_words(group), purpose))
     bits = np.random.Philox(address)
 
     def next_uniforms(n: int) -> np.ndarray:
         return ((bits.random_raw(n) >> np.uint64(12)).astype(np.float64) + 0.5) * 2.0**-52
 
     return next_uniforms
+
+
+@lru_cache(maxsize=10_000)
+def _words(group: str) -> tuple[int, int]:
+    """The first eight bytes of the SHA-256 of the NFC name, as two 32-bit words, the first byte highest."""
+    digest = hashlib.sha256(unicodedata.normalize("NFC", group).encode()).digest()
+    return int.from_bytes(digest[:4], "big"), int.from_bytes(digest[4:8], "big")
 
 
 def draw_intake(plan: IntakePlan, replication: int) -> Intake:

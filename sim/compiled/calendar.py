@@ -1,14 +1,18 @@
 """Pending events of one run, earliest first: a sorted array for small networks, a binary heap for large ones.
 
 An event is a time and a key; the key packs kind, sequence and unit so that its order is the model's order of
-events at one time. Both forms live in the same two arrays.
+events at one time. Both forms live in the same two arrays; the sorted one is kept by the kernel itself, in place.
 """
 
 from __future__ import annotations
 
+import numpy as np
+
 from sim.compiled.cache import compiled
 
 SEQUENCE_SHIFT, KIND_SHIFT = 8, 48
+# Places that are known not to be negative spare numba the question at every use of them.
+NONE, ONE = np.uintp(0), np.uintp(1)
 MOST_UNITS = 1 << SEQUENCE_SHIFT
 MOST_SEQUENCE = 1 << (KIND_SHIFT - SEQUENCE_SHIFT)
 
@@ -40,18 +44,6 @@ def unit_of(key):
 @compiled
 def _before(time, key, other_time, other_key):
     return time < other_time or (time == other_time and key < other_key)
-
-
-@compiled
-def push_sorted(times, keys, count, time, key):
-    """Adds an event to `count` events held latest first, so that the next one stands at the end."""
-    place = count
-    while place > 0 and _before(times[place - 1], keys[place - 1], time, key):
-        times[place] = times[place - 1]
-        keys[place] = keys[place - 1]
-        place -= 1
-    times[place] = time
-    keys[place] = key
 
 
 @compiled

@@ -3,7 +3,8 @@
 It only adds, subtracts and compares, in the order in which the reference engine does, so that records are
 equal to the last bit. What a rule needs comes as None where no cell uses the rule, and numba then compiles the
 loop without it, unless the rule is asked about so rarely that it costs nothing anyway. Arrays are passed one by
-one: in a tuple every use would count references, which costs more than the simulation. Nothing here imports the
+one and what happens at every event stands in one function: numba counts references wherever an array is handed on,
+which would cost more than the simulation. Nothing here imports the
 reference engine, nor it this one.
 """
 
@@ -12,10 +13,11 @@ from __future__ import annotations
 import numpy as np
 
 from sim.compiled.cache import compiled
-from sim.compiled.calendar import kind_of, pack, pop_heap, push_heap, push_sorted, sequence_of, unit_of
+from sim.compiled.calendar import NONE, ONE, kind_of, pack, pop_heap, push_heap, sequence_of, unit_of
 
 DISCHARGE, TRANSFER_ARRIVAL = 10, 20
 TURNED_AWAY, ANY_BED = 0, 2
+NO_TIMER, STAFFING, REVIEW = 0, 30, 40
 NOBODY = -1
 NEVER = np.inf
 
@@ -59,34 +61,39 @@ def advance(
     to_the_end = last == len(arrival)
     period = counters[PERIOD]
     pending = counters[PENDING]
+    next_edge = edges[period + 1] if period + 1 < len(edges) else NEVER
     patient = first
     while patient < last or to_the_end:
         # Which event is next: the first of the pending ones, a change of staffed beds, a review or a new arrival,
         # in this order at one time.
         now = arrival[patient] if patient < last else NEVER
-        place = 0 if in_heap else pending - 1
-        staffing_time = next_time(staffing_times, counters, NEXT_STAFFING)
-        review_time = next_time(review_times, counters, NEXT_REVIEW)
-        timer = min(staffing_time, review_time)
-        is_queued = pending > 0 and times[place] <= now and times[place] <= timer
-        is_staffing = not is_queued and staffing_time <= min(now, review_time)
-        is_review = not is_queued and not is_staffing and review_time <= now
+        place = np.uintp(0 if in_heap else pending - 1)
+        is_queued = pending > 0 and times[place] <= now
         if is_queued:
             now = times[place]
-        elif is_staffing or is_review:
-            now = timer
+        timer = timer_before(now, is_queued, staffing_times, review_times, counters)
+        if timer != NO_TIMER:
+            now = timer_time(timer, staffing_times, review_times, counters)
         if now >= end:
             break
-        while now >= edges[period + 1]:
-            cross_edge(
-                whole, since, occupancy_days, staffed_days, gate_days, counts, period, edges[period + 1]
-            )
+        while now >= next_edge:
+            cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, next_edge)
             period += 1
+            next_edge = edges[period + 1]
         counts_now = period >= 0
 
         # What it does to the load and the occupied beds of which unit.
         more_load, more_occupied, length, due = 0, 0, 0.0, 0
-        if is_queued:
+        if timer == STAFFING:
+            who = NOBODY
+            unit = change_staffing(
+                staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now
+            )
+            note(note_times, notes, counters, now, STAFFING_CHANGES, NOBODY, unit)
+        elif timer == REVIEW:
+            who, unit = NOBODY, review_unit(review_units, counters)
+            note(note_times, notes, counters, now, REVIEWS, NOBODY, unit)
+        elif is_queued:
             key = keys[place]
             if in_heap:
                 pop_heap(times, keys, pending)
@@ -97,17 +104,6 @@ def advance(
             else:
                 more_occupied, due = 1, DISCHARGE
                 length = stay[whole[unit, STAY_CLASS], who] + extra_days
-        elif is_staffing:
-            who, unit = (
-                NOBODY,
-                change_staffing(
-                    staffing_units, staffing_beds, counters, staffed_days, whole, since, period, now
-                ),
-            )
-            note(note_times, notes, counters, now, STAFFING_CHANGES, NOBODY, unit)
-        elif is_review:
-            who, unit = NOBODY, review_unit(review_units, counters)
-            note(note_times, notes, counters, now, REVIEWS, NOBODY, unit)
         else:
             who = patient
             patient += 1
@@ -115,7 +111,26 @@ def advance(
             if counts_now:
                 counts[home, ARRIVED] += 1
             note(note_times, notes, counters, now, ARRIVES, who, home)
-            unit = choose_unit(whole, referral, soft, gate, who, home)
+            # The home, if its gate lets the patient in; else the first unit asked; else the last resort.
+            state = whole[home, GATE_STATE]
+            free_at_home = state & FULL == 0
+            unit = NOBODY
+            if free_at_home and (state & OWN_CLOSED == 0 or gate[who] < soft[home]):
+                unit = home
+            else:
+                last_resort = whole[home, LAST_RESORT]
+                if free_at_home and last_resort != TURNED_AWAY:
+                    unit = home
+                for asked in range(referral.shape[1]):
+                    other = referral[home, asked]
+                    if other == NOBODY:
+                        break
+                    others_state = whole[other, GATE_STATE]
+                    if others_state & (INCOMING_CLOSED | FULL) == 0:
+                        unit = other
+                        break
+                    if unit == NOBODY and last_resort == ANY_BED and others_state & FULL == 0:
+                        unit = other  # unless a unit asked later is open
             if unit == NOBODY:
                 if counts_now:
                     counts[home, TURNED] += 1
@@ -147,7 +162,7 @@ def advance(
         # The gates follow the load at once, or at reviews; time is added only where the gate state changes.
         state = whole[unit, GATE_STATE]
         own, incoming = state & OWN_CLOSED, state & INCOMING_CLOSED
-        if is_review or (whole[unit, REVIEWED] == 0 and not is_staffing):
+        if timer == REVIEW or (timer == NO_TIMER and whole[unit, REVIEWED] == 0):
             if load >= whole[unit, OWN_CLOSES]:
                 own = OWN_CLOSED
             elif load <= whole[unit, OWN_REOPENS]:
@@ -165,10 +180,19 @@ def advance(
             note_gates(note_times, notes, counters, now, unit, state, new_state)
 
         if due != 0:
+            time, key = now + length, pack(due, who, unit)
             if in_heap:
-                push_heap(times, keys, pending, now + length, pack(due, who, unit))
-            else:
-                push_sorted(times, keys, pending, now + length, pack(due, who, unit))
+                push_heap(times, keys, pending, time, key)
+            else:  # held latest first, so that the next one stands at the end
+                free = np.uintp(pending)
+                while free > NONE and (
+                    times[free - ONE] < time or (times[free - ONE] == time and keys[free - ONE] < key)
+                ):
+                    times[free] = times[free - ONE]
+                    keys[free] = keys[free - ONE]
+                    free -= ONE
+                times[free] = time
+                keys[free] = key
             pending += 1
 
     if to_the_end:
@@ -217,34 +241,6 @@ def cell_of(array, cell):
 
 
 @compiled
-def choose_unit(whole, referral, soft, gate, patient, home):
-    """The unit that takes the patient, or NOBODY."""
-    state = whole[home, GATE_STATE]
-    free_at_home = state & FULL == 0
-    if free_at_home and (state & OWN_CLOSED == 0 or gate[patient] < soft[home]):
-        return home
-    for place in range(referral.shape[1]):
-        unit = referral[home, place]
-        if unit == NOBODY:
-            break
-        if whole[unit, GATE_STATE] & (INCOMING_CLOSED | FULL) == 0:
-            return unit
-    last_resort = whole[home, LAST_RESORT]
-    if last_resort == TURNED_AWAY:
-        return NOBODY
-    if free_at_home:
-        return home
-    if last_resort == ANY_BED:
-        for place in range(referral.shape[1]):
-            unit = referral[home, place]
-            if unit == NOBODY:
-                break
-            if whole[unit, GATE_STATE] & FULL == 0:
-                return unit
-    return NOBODY
-
-
-@compiled
 def cross_edge(whole, since, occupancy_days, staffed_days, gate_days, counts, period, edge):
     """Opens the measured window, or closes one of its periods."""
     for unit in range(len(whole)):
@@ -273,6 +269,27 @@ def next_time(timetable, counters, which):
         return NEVER
     place = counters[which]
     return timetable[place] if place < len(timetable) else NEVER
+
+
+@compiled
+def timer_before(now, is_queued, staffing_times, review_times, counters):
+    """Which timer comes before the event at `now`: after a pending event of one time, before a new arrival."""
+    if staffing_times is None and review_times is None:
+        return NO_TIMER
+    staffing = next_time(staffing_times, counters, NEXT_STAFFING)
+    review = next_time(review_times, counters, NEXT_REVIEW)
+    first = min(staffing, review)
+    if first > now or (first == now and is_queued):
+        return NO_TIMER
+    return STAFFING if staffing <= review else REVIEW
+
+
+@compiled
+def timer_time(timer, staffing_times, review_times, counters):
+    """When that timer is due."""
+    if timer == STAFFING:
+        return next_time(staffing_times, counters, NEXT_STAFFING)
+    return next_time(review_times, counters, NEXT_REVIEW)
 
 
 @compiled

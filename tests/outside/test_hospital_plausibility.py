@@ -123,10 +123,9 @@ def is_plausible(utilisation, transfers):
     Care Medicine 2013); 70 to 75 % is thought best (Tierney & Conroy, Australian Critical Care 2014); above
     85 % lies risk (Bagust, Place & Posnett, BMJ 319, 1999, 155-158, abstract read). Transfers per admission:
     0.25 % in 198 units (Barratt et al., Critical Care 16:R179, 2012; author from memory) to 6.6 % at a
-    tertiary centre (Journal of Intensive Care 2020, s40560-020-00501-z). A demonstration of diversion may
-    show up to twice that.
+    tertiary centre (Journal of Intensive Care 2020, s40560-020-00501-z).
     """
-    return 0.60 <= utilisation <= 0.85 and 0.0025 <= transfers <= 2 * 0.066
+    return 0.60 <= utilisation <= 0.85 and 0.0025 <= transfers <= 0.066
 
 
 class TestPlausibilityOfTheDemonstrations:
