@@ -17,7 +17,8 @@ POINT_ESTIMATE_WARNING = (
 )
 ONE_NETWORK = (
     "The price of anarchy is the ratio of this one network under the stated goals, not a bound over a class of "
-    "networks; 'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do better still."
+    "networks; 'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do "
+    "better still."
 )
 
 

@@ -16,23 +16,31 @@ from sim.demand import WeeklyPattern
 from sim.intake import draw_intake
 from sim.lowering import GroupDraws, IntakePlan
 from sim.scenario import Scenario
-from sim.stays import Gamma, Lognormal
+from sim.stays import Coxian, Exponential, Gamma, Hyperexponential, Lognormal, Weibull
 
-PACKAGES = ("numpy", "scipy", "simpy", "pandas", "joblib", "pydantic")
+PACKAGES = ("numpy", "scipy", "numba", "simpy", "pandas", "joblib", "pydantic")
 
 
 @cache
 def fingerprint() -> dict[str, str]:
     """What must agree for two machines to give the same bits: versions, and the hash of a probe intake."""
+    families = {
+        "lognormal": Lognormal(4.0, 1.4),
+        "gamma": Gamma(3.0, 0.7),
+        "weibull": Weibull(3.0, 1.3),
+        "exponential": Exponential(3.0),
+        "hyperexponential": Hyperexponential(3.0, 1.5),
+        "coxian": Coxian((1.0, 0.3), (0.4,)),
+    }
     probe = IntakePlan(
         seed=1,
-        groups=(
-            GroupDraws("probe a", 0, 3.0, WeeklyPattern(tuple(range(1, 25)), None), Lognormal(4.0, 1.4)),
-            GroupDraws("probe b", 0, 2.0, WeeklyPattern(None, None), Gamma(3.0, 0.7)),
+        groups=tuple(
+            GroupDraws(f"probe {name}", 0, 2.0, WeeklyPattern(tuple(range(1, 25)), None), stay)
+            for name, stay in families.items()
         ),
         stay_factors=(1.0, 1.1),
         delay_hours=Lognormal(2.5, 0.5),
-        horizon_days=200.0,
+        horizon_days=100.0,
     )
     return {"numpy": version("numpy"), "scipy": version("scipy"), "probe_intake": draw_intake(probe, 0).hash}
 

@@ -3,9 +3,8 @@
 It only adds, subtracts and compares, in the order in which the reference engine does, so that records are
 equal to the last bit. What a rule needs comes as None where no cell uses the rule, and numba then compiles the
 loop without it, unless the rule is asked about so rarely that it costs nothing anyway. Arrays are passed one by
-one and what happens at every event stands in one function: numba counts references wherever an array is handed on,
-which would cost more than the simulation. Nothing here imports the
-reference engine, nor it this one.
+one, and what happens at every event stands in one function: numba counts references wherever an array is handed
+on, which would cost more than the simulation. Nothing here imports the reference engine, nor it this one.
 """
 
 from __future__ import annotations
