@@ -19,7 +19,9 @@ from analysis.equilibria import regrets  # noqa: E402
 from analysis.games import GameAnalysis  # noqa: E402
 
 matplotlib.rcParams["svg.hashsalt"] = "brimline"  # the same bytes every time
+matplotlib.rcParams["text.parse_math"] = False  # a $ in a unit's name is a $
 FORMATS = ("png", "svg")
+LONGEST_LABEL = 32
 
 
 def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
@@ -28,7 +30,7 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     Open circles mark the player's best responses, filled diamonds the equilibria.
     """
     table = game.table
-    names, strategies = table.profiles.players, table.profiles.strategies
+    names, strategies = [_short(name) for name in table.profiles.players], table.profiles.strategies
     sns.heatmap(
         table.payoffs[player], ax=ax, cmap="cividis_r" if table.goal.sense == "cost" else "cividis",
         xticklabels=strategies[1], yticklabels=strategies[0], cbar_kws={"label": _scale(game)},
@@ -45,6 +47,11 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     ax.tick_params(axis="y", rotation=0)
     ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
     return ax
+
+
+def _short(name: str) -> str:
+    """A unit's name as far as a figure has room for it."""
+    return name if len(name) <= LONGEST_LABEL else name[: LONGEST_LABEL - 1] + "…"
 
 
 def _scale(game: GameAnalysis) -> str:
@@ -71,7 +78,7 @@ def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
         ax.scatter(one["z"], place, marker=marker, s=22, facecolors=face, edgecolors="black", zorder=3)
     ax.set_yticks(
         range(len(tested)),
-        [f"{one['where']}: {one['measure'].replace('_', ' ')}" for one in tested],
+        [f"{_short(one['where'])}: {one['measure'].replace('_', ' ')}" for one in tested],
         fontsize=7,
     )
     ax.set_ylim(len(tested) - 0.3, -0.7)
@@ -102,7 +109,7 @@ def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str)
         label="simulated",
     )
     ax.set_xticks(at, names, fontsize=8)
-    ax.set(title=where, xlabel="occupied beds (rare levels pooled)", ylabel="share of time", ylim=(0, None))
+    ax.set(title=_short(where), xlabel="occupied beds (rare levels pooled)", ylabel="share of time", ylim=(0, None))
     ax.legend(fontsize=8)
     return ax
 

@@ -5,6 +5,7 @@ Outside scripts read these documents, so their keys are held here one by one.
 
 import csv
 import json
+from pathlib import Path
 from statistics import fmean
 
 import pytest
@@ -318,3 +319,23 @@ def test_a_person_reads_tables_and_the_caution(show, two, command):
     assert "For planning only" in out and "nan" not in out.lower()
     with pytest.raises(json.JSONDecodeError):
         json.loads(out)
+
+
+@pytest.mark.filterwarnings("ignore:Glyph")
+@pytest.mark.parametrize(
+    "name", [r"$\frac{$", "<script>alert('x')</script>", "[bold]A[/red]", "مستشفى %s {}", "x" * 200]
+)
+def test_a_hostile_name_is_harmless_in_tables_and_pictures(show, two, tmp_path, name):
+    """Mathematical, HTML and console markup, right-to-left text and format signs are only letters of a name."""
+    quoted = json.dumps(name, ensure_ascii=False)
+    text = Path(two).read_text(encoding="utf-8").replace('"A"', quoted).replace("{ A =", "{ " + quoted + " =")
+    hostile = tmp_path / "hostile.toml"
+    hostile.write_text(text, encoding="utf-8")
+    for command in ("check", "simulate", "verify", "game"):
+        status, out, err = show(command, hostile, "--replications", 5, "--out", tmp_path / command)
+        assert status == 0, err
+        assert "unexpectedly" not in err
+        if len(name) < 30:
+            assert name in out
+    document = json.loads((tmp_path / "game" / "result.json").read_text(encoding="utf-8"))
+    assert document["players"][0] == name

@@ -20,8 +20,10 @@ from sim.compiled.engine import HEAP_ABOVE_BEDS, Table
 from sim.intake import draw_intake
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.record import Record
+from sim.replicate import TaskSize, replicate
 from sim.scenario import parse_scenario, read_scenario
 from sim.trace import KINDS, Trace
+from sim.workers import local_workers
 from tests.builders import FOREVER, A, Case, Patient, intake, network, rules
 from tests.strategies import cases, policies
 
@@ -258,3 +260,20 @@ def test_an_edit_in_any_kernel_file_gives_another_cache_folder(monkeypatch, tmp_
     assert cache.kernel_digest() != before
     monkeypatch.undo()
     cache.kernel_digest.cache_clear()
+
+
+@pytest.mark.parametrize("count", [1, 2])
+@pytest.mark.parametrize("size", [TaskSize(), TaskSize(3, 2), TaskSize(1, 1)])
+def test_workers_and_tasks_change_no_bit(count, size):
+    scenario = read_scenario(ROOT / "scenarios" / "two-units.toml").with_run(
+        warm_up_days=14.0, measured_days=91.0
+    )
+    policies = [scenario.policy().with_thresholds({"Ashgill": k, "Norbeck": k}) for k in (0, 5, 12)]
+
+    def hashes(engine, **how):
+        replies = replicate(scenario, policies, range(4), engine=engine, **how)
+        return {(run.replication, run.cell): run.record.hash for runs in replies for run in runs}
+
+    expected = hashes("reference")
+    assert len(expected) == 12
+    assert hashes("compiled", workers=local_workers(count), task_size=size) == expected
