@@ -1,19 +1,16 @@
-"""Central control against exhaustive enumeration, against what is known of it, and against the exact game.
+"""Central control against exhaustive enumeration, trunk reservation, the chain and a plain network.
 
 What is known. One unit, one rate, groups of different worth: the best rule is a threshold in the number of
 free beds for each group, lower worth never admitted with fewer free beds than higher, and the worthiest
 always (trunk reservation: Miller, "A queueing reward system with several customer classes", Management
 Science 1969; Lippman, "Applying a new device in the optimization of exponential queuing systems", Operations
-Research 1975; both from memory). Patients treated, equal stays, every bed within everybody's reach: the units
-pool, and Erlang's loss formula (1917) gives the best throughput. No fixed thresholds beat control, and no
-equilibrium beats the best fixed thresholds.
+Research 1975; both from memory). The other checks are computed independently, in `control_cases`.
 """
 
 from __future__ import annotations
 
 import itertools
 from dataclasses import replace
-from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -21,117 +18,28 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from analysis.chain import ChainTooLarge, OutOfScope, solve
-from analysis.control import Bounds, best_control, compared, solver, states
-from analysis.control.display import rule_frame, rule_maps
+from analysis.control import best_control, solver, states
+from analysis.control.display import rule_maps
 from analysis.control.rule import worth
 from analysis.control.solver import RELATIVE, gain_of, optimum
 from analysis.control.states import NO_STATE, control_problem
-from analysis.exact_tables import solve_cells
-from analysis.games import analyse
-from analysis.goals import Welfare, goal_of, welfare_of
-from analysis.payoffs import exact_table, profiles_of
 from sim.errors import RunError
 from sim.scenario import Scenario
-from tests.analysis.builders import memoryless
-
-THROUGHPUT, LOSS = Welfare("throughput"), Welfare("loss", 0.4)
-CLOSE = 1e-8  # of the numbers below, which are all near 1
-
-
-def network(beds, patients, *, orders=None, factors=None, game=None, resort="home_bed", **keys):
-    """Units A, B, ... ; patients: (home, arrivals a day, mean stay in days) of each group."""
-    names = "ABCD"[: len(beds)]
-    units = [{"name": name, "beds": b} for name, b in zip(names, beds, strict=True)]
-    for place, unit in enumerate(units):
-        unit |= {} if orders is None or orders[place] is None else {"referral_order": list(orders[place])}
-        unit |= {} if factors is None else {"stay_factor": factors[place]}
-        unit |= {key: values[place] for key, values in keys.items()}
-    groups = [
-        {"group": f"g{place}", "home": home, "per_day": rate, "stay": _stay(mean)}
-        for place, (home, rate, mean) in enumerate(patients)
-    ]
-    tables = {"diversion": {"when_all_closed": resort}} | ({} if game is None else {"game": game})
-    return Scenario.model_validate({"schema": 1, "units": units, "patients": groups, **tables})
-
-
-def _stay(mean):
-    return {"family": "exponential", "mean_days": mean}
-
+from tests.analysis.control_cases import (
+    CLOSE,
+    LOSS,
+    THROUGHPUT,
+    TINY,
+    WELFARES,
+    Plain,
+    as_plain,
+    erlang_loss,
+    network,
+)
 
 # ---- against every deterministic stationary rule, one by one ----
 
 
-class Plain:
-    """A tiny network in dictionaries: a state holds each unit's patients by mean stay."""
-
-    def __init__(self, scenario, welfare):
-        self.scenario, self.welfare = scenario, welfare
-        self.units = {unit.name: unit for unit in scenario.units}
-        self.means = sorted({group.mean_stay_days for group in scenario.patients})
-        per_unit = [
-            [
-                c
-                for c in itertools.product(range(unit.beds + 1), repeat=len(self.means))
-                if sum(c) <= unit.beds
-            ]
-            for unit in scenario.units
-        ]
-        self.states = list(itertools.product(*per_unit))
-        self.decisions = {
-            (state, group.group): self.options(state, group)
-            for state in self.states
-            for group in scenario.patients
-        }
-
-    def options(self, state, group):
-        free = {
-            n for n, patients in zip(self.units, state, strict=True) if sum(patients) < self.units[n].beds
-        }
-        reach = [group.home, *self.scenario.policy().units[group.home].referral_order]
-        return [unit for unit in reach if unit in free] + [None]
-
-    def changed(self, state, unit, mean, change):
-        counts = [list(patients) for patients in state]
-        counts[list(self.units).index(unit)][self.means.index(mean)] += change
-        return tuple(map(tuple, counts))
-
-    def gain(self, rule):
-        """Long-run welfare a day of a rule {(state, group): unit or None}, more being better."""
-        place = {state: index for index, state in enumerate(self.states)}
-        flow, reward = np.zeros((len(place), len(place))), np.zeros(len(place))
-        for state, here in place.items():
-            for group in self.scenario.patients:
-                unit = rule[state, group.group]
-                reward[here] += group.per_day * self.value(group.home, unit)
-                if unit is not None:
-                    flow[here, place[self.changed(state, unit, group.mean_stay_days, +1)]] += group.per_day
-            for name, patients in zip(self.units, state, strict=True):
-                for mean, number in zip(self.means, patients, strict=True):
-                    if number:
-                        rate = number / (mean * self.units[name].stay_factor)
-                        flow[here, place[self.changed(state, name, mean, -1)]] += rate
-        balance = flow - np.diag(flow.sum(axis=1))
-        balance[:, 0] = 1.0
-        return np.linalg.solve(balance.T, np.eye(len(place))[0]) @ reward
-
-    def value(self, home, unit):
-        if self.welfare.kind == "throughput":
-            return float(unit is not None)
-        return -1.0 if unit is None else -self.welfare.transfer_weight * (unit != home)
-
-    def best(self):
-        """The largest gain of all deterministic stationary rules; decisions with one option are not chosen."""
-        rules = itertools.product(*self.decisions.values())
-        return max(self.gain(dict(zip(self.decisions, rule, strict=True))) for rule in rules)
-
-
-TINY = {
-    "equal stays": network((1, 2), [("A", 0.9, 2.0), ("B", 1.4, 2.0)]),
-    "unequal stays": network((1, 1), [("A", 0.9, 1.0), ("B", 0.5, 6.0)]),
-    "slower elsewhere": network((1, 1), [("A", 1.2, 1.0), ("B", 0.7, 1.0)], factors=(1.0, 2.5)),
-    "one road only": network((1, 2), [("A", 0.9, 2.0), ("B", 1.8, 2.0)], orders=(None, ())),
-}
-WELFARES = {"throughput": THROUGHPUT, "loss": LOSS}
 BEST = {}
 
 
@@ -156,23 +64,6 @@ def test_no_rule_of_all_is_better_and_the_rule_given_is_as_good(name, welfare):
     assert low - 1e-12 <= best_of_all(name, welfare) <= high + 1e-12
     plain = Plain(scenario, value)
     assert plain.gain(as_plain(plain, result)) == pytest.approx(best_of_all(name, welfare), abs=CLOSE)
-
-
-def as_plain(plain, result):
-    """The rule as the file gives it: a row a state, an action a group."""
-    frame = rule_frame(result)
-    assert len(frame) == result.problem.states
-    rule = {}
-    for _, row in frame.iterrows():
-        counts = [[0] * len(plain.means) for _ in plain.units]
-        for column in (name for name in row.index if name.startswith("occupied ")):
-            unit, _, stay = column.removeprefix("occupied ").partition(", mean stay ")
-            mean = float(stay.removesuffix(" days") or plain.means[0])
-            counts[list(plain.units).index(unit)][plain.means.index(mean)] = row[column]
-        for group in plain.scenario.patients:
-            action = row[f"action {group.group}"]
-            rule[tuple(map(tuple, counts)), group.group] = None if action == "turned away" else action
-    return rule
 
 
 def without(stream, *choices):
@@ -342,99 +233,6 @@ def test_what_comes_with_the_rule_adds_up():
         assert refused <= outcome.turned_away_per_day[home] + CLOSE
 
 
-# ---- beside the exact game ----
-
-
-def exact_game(scenario):
-    profiles = profiles_of(scenario)
-    cells = dict(solve_cells(scenario, profiles.policies(scenario.policy())))
-    units = [cells[cell] for cell in range(profiles.cells)]
-    return analyse(exact_table(profiles, goal_of(scenario), welfare_of(scenario), units))
-
-
-def beside(scenario):
-    result = best_control(scenario, scenario.policy(), welfare_of(scenario))
-    return compared(result, exact_game(scenario))
-
-
-@settings(max_examples=20, deadline=None, derandomize=True)
-@given(
-    beds=st.tuples(st.integers(1, 3), st.integers(1, 4)),
-    rates=st.tuples(st.floats(0.2, 2.5), st.floats(0.2, 2.5)),
-    means=st.sampled_from([(2.0, 2.0), (1.0, 4.0)]),
-    targets=st.tuples(st.floats(0.2, 0.9), st.floats(0.2, 0.9)),
-    resort=st.sampled_from(["turned_away", "home_bed", "any_bed"]),
-    weight=st.sampled_from([None, 0.0, 0.3, 1.2]),
-)
-def test_control_beats_fixed_thresholds_and_these_beat_equilibria(
-    beds, rates, means, targets, resort, weight
-):
-    welfare = {"kind": "throughput"} if weight is None else {"kind": "loss", "transfer_weight": weight}
-    patients = [(home, rate, mean) for home, rate, mean in zip("AB", rates, means, strict=True)]
-    found = beside(
-        network(beds, patients, game={"welfare": welfare}, resort=resort, target_utilisation=targets)
-    )
-    sign = 1 if weight is None else -1
-    ends = [sign * found.control.low, sign * found.control.high]
-    assert max(ends) >= sign * found.best_static - 1e-12
-    assert 0 <= found.static_thresholds.low <= found.static_thresholds.high
-    if found.worst_equilibrium is None:
-        assert found.selfishness is None
-        return
-    assert sign * found.best_static >= sign * found.best_equilibrium >= sign * found.worst_equilibrium
-    steps = found.static_thresholds.middle + found.selfishness
-    assert steps == pytest.approx(sum(ends) / 2 - sign * found.worst_equilibrium, abs=CLOSE)
-
-
-def test_an_answer_below_fixed_thresholds_is_never_handed_out():
-    """Planted: bounds moved down by a thousandth of a patient."""
-    scenario = memoryless(
-        {"name": "A", "beds": 2, "per_day": 0.8, "target_utilisation": 0.6},
-        {"name": "B", "beds": 2, "per_day": 0.9, "target_utilisation": 0.6},
-        diversion={"when_all_closed": "any_bed"},
-    )
-    result, game = best_control(scenario, scenario.policy(), THROUGHPUT), exact_game(scenario)
-    compared(result, game)
-    lower = replace(result, welfare=Bounds(result.welfare.low - 1e-3, result.welfare.high - 1e-3))
-    with pytest.raises(RunError, match="fixed thresholds beat"):
-        compared(lower, game)
-
-
-def erlang_loss(offered, beds):
-    """Share of arrivals turned away by Erlang's formula, by its recursion over the beds."""
-    share = 1.0
-    for bed in range(1, beds + 1):
-        share = offered * share / (bed + offered * share)
-    return share
-
-
-def test_units_that_pool_leave_control_nothing_to_gain():
-    scenario = network(
-        (3, 4), [("A", 1.2, 2.0), ("B", 1.6, 2.0)], resort="any_bed", target_utilisation=(0.5, 0.5)
-    )
-    found = beside(scenario)
-    pooled = 2.8 * (1 - erlang_loss(2.8 * 2.0, 7))
-    assert found.control.low - 1e-12 <= pooled <= found.control.high + 1e-12
-    assert found.static_thresholds.high <= 1e-8 and found.selfishness == pytest.approx(0, abs=1e-8)
-    assert [one.rows for one in rule_maps(found.result)] == [
-        ("HHHHH",) * 3 + ("BBBB-",),
-        ("HHHHA",) * 3 + ("HHHH-",),
-    ]
-
-
-def test_control_gains_where_transfers_cost_and_where_stays_differ():
-    """Outside pooling there is something to gain: neither step of the split is nought by construction."""
-    costly = network(
-        (3, 4), [("A", 1.6, 2.0), ("B", 2.1, 2.0)], target_utilisation=(0.5, 0.5),
-        game={"welfare": {"kind": "loss", "transfer_weight": 0.4}},
-    )  # fmt: skip
-    slow = network((3, 3), [("A", 1.8, 1.0), ("B", 0.4, 8.0)], target_utilisation=(0.5, 0.5))
-    for scenario in (costly, slow):
-        assert beside(scenario).static_thresholds.low > 1e-3
-    refused = best_control(slow, slow.policy(), THROUGHPUT).outcome.refused_with_free_bed_per_day
-    assert refused["A"] == pytest.approx(0, abs=CLOSE) and refused["B"] > 0.01
-
-
 # ---- bounds, limits, refusals ----
 
 
@@ -493,74 +291,3 @@ def test_a_network_too_large_is_refused_before_it_is_built():
     scenario = network((60, 60, 60), [("A", 20.0, 2.0), ("B", 20.0, 2.0)])
     with pytest.raises(ChainTooLarge, match="226,981 states"):
         control_problem(scenario, scenario.policy())
-
-
-# ---- the map ----
-
-
-@pytest.mark.parametrize(
-    ("names", "letters"), [(("Ewe", "Tern"), "TE"), (("Tern", "Teal"), "21"), (("Hay", "Ewe"), "E1")]
-)
-def test_letters_of_the_map_mean_one_thing_each(names, letters):
-    units = [{"name": name, "beds": 2, "per_day": 1.0} for name in names]
-    scenario = memoryless(*units)
-    maps = rule_maps(best_control(scenario, scenario.policy(), THROUGHPUT))
-    for one, letter, other in zip(maps, letters, reversed(names), strict=True):
-        assert one.letters == {"H": one.home, letter: other, "-": "turned away"}
-    assert [row[0] for row in maps[0].rows] == ["H", "H", letters[0]]
-
-
-def test_groups_alike_share_a_map_and_others_have_none():
-    same = network((1, 1), [("A", 0.5, 2.0), ("B", 0.5, 2.0), ("A", 0.1, 2.0)])
-    maps = rule_maps(best_control(same, same.policy(), THROUGHPUT))
-    assert [one.groups for one in maps] == [("g0", "g2"), ("g1",)]
-    for scenario in (TINY["unequal stays"], three_units("home_bed")):
-        assert rule_maps(best_control(scenario, scenario.policy(), THROUGHPUT)) == []
-
-
-# ---- the command ----
-
-
-def test_the_document_splits_the_loss(call, two):
-    status, document = call("game", two, "--exact", "--control", "--target", "0.3")
-    control = document["control"]
-    assert status == 0 and control["states"] == 12
-    assert control["best_static_welfare"] == pytest.approx(document["optimum"]["welfare"])
-    assert control["static_thresholds"]["per_day"]["low"] >= 0
-    selfish = control["selfishness"]
-    assert selfish["per_year"] == pytest.approx(document["lost_per_year"]) and selfish["per_day"] > 0
-    assert selfish["per_year"] == pytest.approx(365 * selfish["per_day"])
-    assert [len(one["rows"]) for one in control["maps"]] == [3, 3]
-    assert "control" not in call("game", two, "--exact")[1]
-
-
-def test_the_rule_is_shown_and_written(show, three, two, tmp_path):
-    status, text, _ = show("game", two, "--exact", "--control", "--out", tmp_path / "out")
-    assert status == 0 and "Best rule for A emergencies (home A): H A, B B=b, - turned away" in text
-    assert "2 B B B -" in text
-    written = (tmp_path / "out" / "control.csv").read_text(encoding="utf-8").splitlines()
-    assert written[0] == "occupied A,occupied B=b,action A emergencies,action B emergencies"
-    assert len(written) == 13 and written[-1] == "2,3,turned away,turned away"
-    assert "--out writes it to control.csv" in show("game", three, "--exact", "--control")[1]
-
-
-def test_an_earlier_rule_is_kept_apart(show, two, tmp_path):
-    show("game", two, "--exact", "--control", "--out", tmp_path / "out")
-    show("game", two, "--exact", "--out", tmp_path / "out")
-    assert not (tmp_path / "out" / "control.csv").exists()
-    assert (tmp_path / "out" / "earlier" / "1" / "control.csv").exists()
-
-
-def test_control_needs_the_exact_game(show, two):
-    status, text, said = show("game", two, "--control")
-    assert status == 2 and not text and "--control: needs --exact" in said
-
-
-def test_no_equilibrium_leaves_selfishness_open():
-    """An empty list of equilibria gives a reason, never a number."""
-    scenario = TINY["equal stays"]
-    result = best_control(scenario, scenario.policy(), THROUGHPUT)
-    table = SimpleNamespace(welfare=np.array([[1.0, 1.1]]), welfare_goal=THROUGHPUT)
-    game = SimpleNamespace(table=table, cost=SimpleNamespace(best=None, worst=None))
-    tree = compared(result, game).to_dict()
-    assert tree["selfishness"] is None and tree["reason"] == "selfishness: no equilibrium is listed"
