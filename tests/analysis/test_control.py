@@ -66,6 +66,22 @@ def test_no_rule_of_all_is_better_and_the_rule_given_is_as_good(name, welfare):
     assert plain.gain(as_plain(plain, result)) == pytest.approx(best_of_all(name, welfare), abs=CLOSE)
 
 
+@pytest.mark.parametrize(("close", "tie"), [(0.05, 0.0), (1e-12, 0.3)])
+@pytest.mark.parametrize("name", TINY)
+def test_bounds_hold_however_early_the_iteration_stops(monkeypatch, name, close, tie):
+    """Stopped early, or with a tie so wide that the rule is a poor one: still between the bounds."""
+    for limit, value in {"RELATIVE": 9.0, "CLOSE": close, "TIE": tie}.items():
+        monkeypatch.setattr(solver, limit, value)
+    monkeypatch.setattr(solver, "DIRECT", 0)
+    monkeypatch.setattr(solver, "SWEEPS", 1)
+    result = best_control(TINY[name], TINY[name].policy(), LOSS)
+    low, high = -result.welfare.high, -result.welfare.low
+    plain = Plain(TINY[name], LOSS)
+    own = plain.gain(as_plain(plain, result))
+    assert low - 1e-12 <= own <= best_of_all(name, "loss") + 1e-12 <= high + 2e-12
+    assert high - low > 1e-3 and (tie == 0 or own < best_of_all(name, "loss") - 1e-4)
+
+
 def without(stream, *choices):
     """A stream that forgot some choices, by number, wherever another is left."""
     after = stream.after.copy()
