@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.entry import say
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import (
@@ -29,7 +30,8 @@ MOST_LISTED = 25
 @click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
 @click.option("--tolerance", type=click.FloatRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
-def game(request: Request, exact: bool, tolerance: float) -> None:
+@click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
+def game(request: Request, exact: bool, tolerance: float, control: bool) -> None:
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
@@ -40,6 +42,7 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
     from analysis.games import analyse
 
     begun = started()
+    best = best_rule(request, exact) if control else None
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
     analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
     document = {
@@ -47,6 +50,8 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
         "method": "exact" if exact else "simulated",
     } | game_document(analysis)
     document |= told
+    if best is not None:
+        document["control"] = beside(best, analysis)
     if request.out is not None:
         _write(
             request,
@@ -54,6 +59,8 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
             document,
             provenance(request, "game", begun, engine="exact chain" if ran is None else ran.engine.name),
         )
+        if best is not None:
+            write_rule(best, request.out)
     if request.as_json:
         put_json(document)
     else:
@@ -160,6 +167,8 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
     _show_outcomes(document)
     for finding in document["findings"]:
         put_text(finding["statement"] + ".")
+    if "control" in document:
+        show_control(document)
     put_text("", ONE_NETWORK)
     if not analysis.is_exact:
         put_text("", POINT_ESTIMATE_WARNING)

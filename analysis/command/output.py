@@ -12,7 +12,7 @@ from typing import Any
 from analysis.command.entry import CAUTION
 
 PLAIN_WIDTH = 132
-WRITTEN = ("result.json", "provenance.json", "table.csv", "payoffs-*.*", "verification.*")
+WRITTEN = ("result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*")
 
 
 def put_json(document: Any) -> None:
