@@ -1,7 +1,9 @@
 """What a scenario's run length and replications will give: the intervals to expect, before anything runs.
 
 The spread of a run's averages is taken from the exact chain of the exponential counterpart (`analysis.chain`);
-runs are independent, so Student's interval over them follows.
+runs are independent, so Student's interval over them follows. Another shape of stay changes it: in a unit that
+never closes (M/G/infinity) the covariance at lag s is the arrival rate times the mean stay left beyond s, so the
+variance is the arrival rate times the stay's second moment, (1 + cv^2) / 2 times that of exponential stays.
 """
 
 from __future__ import annotations

@@ -45,10 +45,10 @@ EMPTY = {"network": "empty", "policy": None, "thresholds": None, "arrivals_per_d
 class Day:
     """The network at one time.
 
-    day: days after the start. measures: rates and shares at that time, not since the start. error_bound: no
-    probability or share is further from the exact one; a mean number of occupied beds by no more than that times
-    the beds, a rate a day by that times the arrivals a day. distance_to_long_run: half the sum of the
-    distances from the long-run probabilities, 0 to 1: no share is further from its long-run value.
+    day: days after the start. measures: rates and shares at that time, not since the start. error_bound: given
+    where it starts, no probability or share is further from the exact one; a mean number of occupied beds by no
+    more than that times the beds, a rate a day by that times the arrivals a day. distance_to_long_run: half the
+    sum of the distances from the long-run probabilities, 0 to 1: no share is further from its long-run value.
     """
 
     day: float

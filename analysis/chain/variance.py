@@ -15,6 +15,7 @@ second its covariance with what the state does to later rates (the count of a Ma
 
 from __future__ import annotations
 
+from collections import defaultdict
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -81,10 +82,11 @@ def asymptotic_variances(scenario: Scenario, policy: Policy, *, limits: Limits =
     found = dict(zip(watched, averages, strict=True))
     for view in chain.units:
         _same_in_and_out(view.layout.name, found)
-    of = {where: {m: one for (place, m), one in found.items() if place == where} for where, _ in found}
-    return Variances(
-        {unit.layout.name: of[unit.layout.name] for unit in chain.units}, of[None], chain.moves.states
-    )
+    by_place: dict[str | None, dict[str, TimeAverage]] = defaultdict(dict)
+    for (place, measure), average in found.items():
+        by_place[place][measure] = average
+    network = by_place.pop(None)
+    return Variances(dict(by_place), network, chain.moves.states)
 
 
 def _same_in_and_out(unit: str, found: dict[tuple[str | None, str], TimeAverage]) -> None:
@@ -97,7 +99,8 @@ def _same_in_and_out(unit: str, found: dict[tuple[str | None, str], TimeAverage]
     if not apart <= ALIKE * (admissions.variance + admissions.mean):
         raise RunError(
             f"the variance of time averages failed its check: admissions and discharges of {unit} vary by "
-            f"{admissions.variance:.9g} and {discharges.variance:.9g}; please report this scenario, and simulate instead"
+            f"{admissions.variance:.9g} and {discharges.variance:.9g} a day; "
+            "please report this scenario, and simulate instead"
         )
 
 

@@ -151,8 +151,9 @@ def _show_rest(document: dict[str, Any]) -> None:
 
 
 def _show_precision(precision: dict[str, Any], run: dict[str, Any]) -> None:
-    """Intervals to expect; nothing where the chain does not tell, for that is said of the chain already."""
+    """Intervals to expect, or why the chain does not tell them."""
     if not precision["units"]:
+        put_text(f"The intervals to expect are not known beforehand: {precision['reason']}.")
         return
     wanted = precision["half_width"]
     put_table(

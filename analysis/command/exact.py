@@ -152,9 +152,9 @@ def _show_days(document: dict[str, Any]) -> None:
     )
     bound = max((day["error_bound"] for day in document["days"]), default=0.0)
     put_text(
-        "Shares and rates are those at that moment, not averages since the start. No share is off by more than "
-        f"{bound:.1e}; a mean of beds by that times the beds, a rate by that times the arrivals a day. The distance "
-        "to the long run is the most by which any share differs from its long-run value."
+        "Shares and rates are those at that moment, not averages since the start. Given the start, no share is off by "
+        f"more than {bound:.1e}; a mean of beds by that times the beds, a rate by that times the arrivals a day. The "
+        "distance to the long run is the most by which any share differs from its long-run value."
     )
     put_caution()
 
