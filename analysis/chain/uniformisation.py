@@ -21,7 +21,9 @@ from analysis.chain.gth import Transitions
 Numbers = NDArray[np.float64]
 
 TAIL = 1e-14  # Poisson probability left out at each time
-SETTLED = 1e-13  # a distribution so near the long-run one is taken for it
+SETTLED = (
+    1e-13  # a distribution so near the long-run one is taken for it, or nearer than rounding may have led it
+)
 LOOK_EVERY = 8  # steps between two looks at how near it is
 UNIT_ROUNDOFF = 2.0**-53
 
@@ -61,9 +63,10 @@ class PoissonWindow:
         """Bound of the sum of the distances of the weights from the chances, and of a sum with these weights.
 
         What is cut off counts twice, for it is spread over the rest; each weight takes two roundings more than
-        its neighbour nearer the mode, and each term of the sum one.
+        its neighbour nearer the mode, and each term of the sum one. The mean may have been rounded too, and two
+        Poisson numbers are no further apart than twice the distance of their means.
         """
-        return 2 * TAIL + 4 * len(self.weight) * UNIT_ROUNDOFF
+        return 2 * TAIL + (4 * len(self.weight) + 2 * self.last) * UNIT_ROUNDOFF
 
 
 def poisson_window(mean: float) -> PoissonWindow:
@@ -129,9 +132,11 @@ def _mix(
     """Adds up the mixtures in `total`; returns the steps done and, where it settled, how near it came."""
     now, last = start, max((window.last for window in windows), default=0)
     for step in range(last + 1):
-        if long_run is not None and step % LOOK_EVERY == 0 and (near := _distance(now, long_run)) <= SETTLED:
-            total += np.outer([window.beyond(step) for window in windows], long_run)
-            return step, near
+        if long_run is not None and step % LOOK_EVERY == 0:
+            near = _distance(now, long_run)
+            if near <= max(SETTLED, step * steps.rounding):
+                total += np.outer([window.beyond(step) for window in windows], long_run)
+                return step, near
         for place, window in enumerate(windows):
             if window.first <= step <= window.last:
                 total[place] += window.weight[step - window.first] * now
