@@ -16,6 +16,7 @@ from typing import Any
 from analysis.chain import ChainTooLarge, Limits, refusals
 from analysis.chain.variance import TimeAverage, asymptotic_variances
 from analysis.confidence import critical_value
+from sim.errors import RunError
 from sim.scenario import Policy, Scenario
 from sim.scenario.run import Run
 
@@ -52,7 +53,11 @@ class Precision:
     reason: str | None = None
 
     def to_dict(self) -> dict[str, Any]:
-        """The tree of `check --json` at `precision`."""
+        """The tree of `check --json` at `precision`.
+
+        `units`: unit -> measure -> `mean`, `half_width` and `replications_needed`; besides `half_width` (the one
+        asked for), `memoryless`, `states`, `reason` and `basis`.
+        """
         units = {name: {m: vars(one) for m, one in each.items()} for name, each in self.units.items()}
         return {**vars(self), "basis": "exponential counterpart", "units": units}
 
@@ -69,7 +74,7 @@ def expected_precision(scenario: Scenario, policy: Policy, *, half_width: float 
         return Precision({}, half_width, memoryless, reason="; ".join(reasons))
     try:
         found = asymptotic_variances(counterpart, policy, limits=QUICK)
-    except ChainTooLarge as error:
+    except (ChainTooLarge, RunError) as error:
         return Precision({}, half_width, memoryless, reason=str(error))
     run = scenario.run
     units = {

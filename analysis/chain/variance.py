@@ -111,7 +111,7 @@ def time_averages(moves: Transitions, probability: Numbers, watched: Sequence[Wa
     Raises RunError where Poisson's equation is not solved to rounding.
     """
     rewards = np.stack([one.reward for one in watched], axis=1)
-    bias = _bias(moves, probability, rewards - probability @ rewards)
+    bias = _bias(moves, probability, rewards)
     return [
         TimeAverage(float(probability @ one.reward), _variance(moves, probability, one, bias[:, place]))
         for place, one in enumerate(watched)
@@ -128,14 +128,15 @@ def _variance(moves: Transitions, probability: Numbers, watched: Watched, bias: 
     return max(0.0, float(probability @ watched.reward + 2 * later))
 
 
-def _bias(moves: Transitions, probability: Numbers, centred: Numbers) -> Numbers:
-    """Solutions g of Q g = -centred with pi g = 0, one a column, shape (states, rewards).
+def _bias(moves: Transitions, probability: Numbers, rewards: Numbers) -> Numbers:
+    """Solutions g of Q g = mean - reward with pi g = 0, one a column, both of shape (states, rewards).
 
     One state is set to 0 and its equation left out; it follows from the others if all is well, which is checked.
     """
     from scipy.sparse import csc_array
     from scipy.sparse.linalg import splu
 
+    centred = rewards - probability @ rewards
     states, place = moves.states, np.arange(moves.states)
     leaving = np.bincount(moves.origin, weights=moves.rate, minlength=states)
     rows, columns = np.append(moves.origin, place), np.append(moves.target, place)
@@ -144,7 +145,7 @@ def _bias(moves: Transitions, probability: Numbers, centred: Numbers) -> Numbers
     if len(rest):
         inside = csc_array(rates[rest][:, rest])
         bias[rest] = splu(inside, "MMD_AT_PLUS_A", diag_pivot_thresh=0.0).solve(-centred[rest])
-    _check(rates @ bias + centred, np.abs(centred).max(axis=0) + leaving.max() * np.abs(bias).max(axis=0))
+    _check(rates @ bias + centred, np.abs(rewards).max(axis=0) + leaving.max() * np.abs(bias).max(axis=0))
     return bias - probability @ bias
 
 

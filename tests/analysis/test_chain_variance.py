@@ -25,7 +25,8 @@ COUNTS = ("admissions_per_day", "diverted_out_per_day", "diverted_in_per_day", "
 
 def one_unit(beds, per_day, stay_days, **keys):
     """The variances of a single unit that keeps all its patients or turns them away."""
-    scenario = memoryless({"name": "Ewe", "beds": beds, "per_day": per_day, **keys}, stay_days=stay_days)
+    unit, lost = {"name": "Ewe", "beds": beds, "per_day": per_day, **keys}, {"when_all_closed": "turned_away"}
+    scenario = memoryless(unit, stay_days=stay_days, diversion=lost)
     return asymptotic_variances(scenario, scenario.policy()).units["Ewe"]
 
 
@@ -59,6 +60,21 @@ def test_one_bed_by_hand(lam, mu):
     assert unit["turned_away_per_day"].variance == pytest.approx(
         lost * (1 + 2 * lam * mu / both**2), rel=1e-12
     )
+
+
+def test_what_never_changes_does_not_vary():
+    """A unit that is always closed: nobody is in it, and all of its Poisson arrivals are turned away or moved."""
+    units = [
+        {"name": "Ewe", "beds": 3, "closure_threshold": 0, "per_day": 3.0},
+        {"name": "Tern", "beds": 2, "per_day": 1.1},
+    ]
+    scenario = memoryless(*units, stay_days=2.0, diversion={"when_all_closed": "turned_away"})
+    found = asymptotic_variances(scenario, scenario.policy())
+    assert found.units["Ewe"]["closed_fraction"] == TimeAverage(1.0, pytest.approx(0.0, abs=1e-12))
+    assert found.units["Ewe"]["utilisation"] == TimeAverage(0.0, 0.0)
+    assert found.units["Ewe"]["turned_away_per_day"].variance > found.units["Ewe"]["turned_away_per_day"].mean
+    alone = one_unit(3, 3.0, 2.0, closure_threshold=0)
+    assert alone["turned_away_per_day"] == TimeAverage(3.0, pytest.approx(3.0))
 
 
 def erlang(beds, load):

@@ -2,10 +2,11 @@
 
 import math
 
+import numpy as np
 import pytest
 from scipy import stats
 
-from analysis.chain import Limits
+from analysis.chain import Limits, variance
 from analysis.planning import expected_precision, half_width_of, replications_needed
 from analysis.simulation import summarise
 from sim.replicate import replicate
@@ -92,6 +93,13 @@ def test_check_gives_the_expected_intervals(call, show, delayed):
 def test_one_replication_gives_no_interval(call, two):
     unit = call("check", two, "--replications", 1)[1]["precision"]["units"]["A"]["utilisation"]
     assert unit["half_width"] is None and unit["mean"] > 0
+
+
+def test_a_failed_certificate_is_a_reason_and_does_not_end_check(call, two, monkeypatch):
+    right = variance._bias
+    monkeypatch.setattr(variance, "_bias", lambda *arguments: right(*arguments) + np.arange(12)[:, None] ** 2)
+    status, document = call("check", two)
+    assert status == 0 and "failed its check" in document["precision"]["reason"]
 
 
 def test_check_says_why_it_expects_nothing(call, tmp_path, two, monkeypatch):
