@@ -6,8 +6,8 @@ counted over all that can be reached from the start, not from the empty network 
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import replace
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,7 +18,7 @@ from analysis.chain.layout import UnitLayout, layout, state_bound
 from analysis.chain.limits import Limits
 from analysis.chain.network_states import NetworkChain, UnitView
 from analysis.chain.settled import Settled
-from analysis.chain.unit_states import Gates, unit_states
+from analysis.chain.unit_states import Gates, UnitSpace, unit_states
 from sim.scenario import Policy, Scenario
 
 Numbers = NDArray[np.float64]
@@ -36,7 +36,7 @@ def chain_from(
     """
     units = layout(scenario, policy)
     if start is not None:
-        units = tuple(_holding(unit, view.layout) for unit, view in zip(units, start[0].units, strict=True))
+        units = tuple(_holding(unit, view) for unit, view in zip(units, start[0].units, strict=True))
     limits.check_bound(state_bound(units))
     whole = _whole_chain(scenario, policy, units)
     first = _empty(whole) if start is None else _carried(start, whole)
@@ -45,16 +45,52 @@ def chain_from(
     return _part(scenario, policy, whole, chosen), first[chosen], _carried(long_run, whole)[chosen]
 
 
-def _holding(unit: UnitLayout, before: UnitLayout) -> UnitLayout:
+@dataclass(frozen=True)
+class StartedSpace(UnitSpace):
+    """What bounds the states of a unit that need not have been empty at first.
+
+    started: the loads, each with gates, that it may start with besides. Rules that have long been in force may
+    never bring these about: a gate that was closed stays so until its unit is empty enough.
+    """
+
+    started: tuple[tuple[int, Gates], ...]
+
+    def levels(self) -> list[tuple[int, Gates]]:
+        """Each load with each position of the gates that it can have, least load first."""
+        ahead, found = list(self.started), set(super().levels())
+        while ahead:
+            load, gates = level = ahead.pop()
+            if level not in found and 0 <= load <= self.most:
+                found.add(level)
+                ahead += [(other, self.gates(other, gates)) for other in (load - 1, load + 1)]
+        return sorted(found, key=lambda level: (level[0], level[1].own_open, level[1].incoming_open))
+
+
+def _holding(unit: UnitLayout, before: UnitView) -> UnitLayout:
     """The unit with room in its states for the patients and the gates that it had before."""
-    rates = tuple(sorted({*unit.discharge_rates, *before.discharge_rates}))
+    rates = tuple(sorted({*unit.discharge_rates, *before.layout.discharge_rates}))
     per_day = {
         home: dict(zip(unit.discharge_rates, each, strict=True)) for home, each in unit.arrivals.items()
     }
     arrivals = {home: tuple(each.get(rate, 0.0) for rate in rates) for home, each in per_day.items()}
-    most = max(unit.space.most, before.space.most, unit.space.closure_threshold)
-    space = replace(unit.space, most=most, rates=len(rates))
-    return replace(unit, discharge_rates=rates, arrivals=arrivals, space=space)
+    space = replace(unit.space, most=max(unit.space.most, before.layout.space.most), rates=len(rates))
+    started = dict.fromkeys(zip(before.own.load.tolist(), _gates_now(before, space), strict=True))
+    return replace(
+        unit,
+        discharge_rates=rates,
+        arrivals=arrivals,
+        space=StartedSpace(**vars(space), started=tuple(started)),
+    )
+
+
+def _gates(view: UnitView) -> Iterator[Gates]:
+    """The gates in each of a unit's own states."""
+    return map(Gates, view.own.own_open.tolist(), view.own.incoming_open.tolist())
+
+
+def _gates_now(view: UnitView, space: UnitSpace) -> Iterator[Gates]:
+    """The same once the rules of another space come into force."""
+    return map(space.gates, view.own.load.tolist(), _gates(view))
 
 
 def _whole_chain(scenario: Scenario, policy: Policy, units: tuple[UnitLayout, ...]) -> NetworkChain:
@@ -88,15 +124,13 @@ def _places(view: UnitView, target: UnitView) -> Places:
     columns = [target.layout.discharge_rates.index(rate) for rate in view.layout.discharge_rates]
     counts = np.zeros((view.own.size, len(target.layout.discharge_rates)), dtype=np.int64)
     counts[:, columns] = view.own.counts
-    gates = map(Gates, view.own.own_open.tolist(), view.own.incoming_open.tolist())
-    moved = map(target.layout.space.gates, view.own.load.tolist(), gates)
-    return np.array([known[tuple(row), now] for row, now in zip(counts.tolist(), moved, strict=True)])
+    gates = _gates_now(view, target.layout.space)
+    return np.array([known[tuple(row), now] for row, now in zip(counts.tolist(), gates, strict=True)])
 
 
 def _numbered(view: UnitView) -> Mapping[tuple[tuple[int, ...], Gates], int]:
     """Patients by rate and gates -> the unit's own state."""
-    gates = map(Gates, view.own.own_open.tolist(), view.own.incoming_open.tolist())
-    states = zip(map(tuple, view.own.counts.tolist()), gates, strict=True)
+    states = zip(map(tuple, view.own.counts.tolist()), _gates(view), strict=True)
     return {state: number for number, state in enumerate(states)}
 
 

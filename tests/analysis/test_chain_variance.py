@@ -4,6 +4,7 @@ import math
 
 import numpy as np
 import pytest
+from hypothesis import HealthCheck, assume, given, settings
 from scipy import stats
 from scipy.linalg import eigvals
 
@@ -14,7 +15,7 @@ from analysis.simulation import summarise
 from sim.errors import RunError
 from sim.replicate import replicate
 from tests.analysis.builders import memoryless
-from tests.analysis.test_chain_random import RULES, Plain, as_scenario, walked
+from tests.analysis.test_chain_random import RULES, Plain, as_scenario, networks, walked
 
 SHARES = (
     "utilisation", "mean_occupied", "full_fraction", "closed_fraction", "closed_with_free_bed_fraction",
@@ -212,6 +213,20 @@ def test_every_measure_of_a_network_by_the_growth_of_its_generating_function(whi
     for measure, marked in totals.items():
         expected = curvature(plainly.rates, np.zeros(len(plainly.states)), marked, 0.01)
         assert found.network[measure].variance == pytest.approx(expected, rel=1e-4), measure
+
+
+@given(networks())
+@settings(
+    max_examples=30, derandomize=True, deadline=None, suppress_health_check=[HealthCheck.filter_too_much]
+)
+def test_random_networks_by_the_growth_of_their_generating_functions(plain):
+    walk = walked(Plain(plain))
+    assume(walk is not None and len(walk[0]) < 50)
+    scenario, plainly = as_scenario(plain), Plainly(plain)
+    for name, unit in asymptotic_variances(scenario, scenario.policy()).units.items():
+        expected = plainly.unit(name)
+        for measure, average in unit.items():
+            assert average.variance == pytest.approx(expected[measure], rel=1e-4, abs=1e-5), (name, measure)
 
 
 def test_the_means_are_those_of_the_exact_measures():
