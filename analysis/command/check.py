@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from typing import Any
 
+import click
+
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import (
     count,
+    number,
     prepare_folder,
     put_caution,
     put_json,
@@ -17,11 +20,16 @@ from analysis.command.output import (
 from analysis.command.progress import duration
 
 
-def check(request: Request) -> None:
+@click.option(
+    "--half-width", metavar="H", type=click.FloatRange(0, 1, min_open=True),
+    help="Say how many replications each unit's utilisation needs to be known within H (a share, such as 0.005).",
+)  # fmt: skip
+def check(request: Request, half_width: float | None) -> None:
     """Read the scenario back as tables before anything runs: offered load, stays, rules, size, time, advice."""
     from analysis.chain import chain_size, refusals
     from analysis.command.provenance import provenance
     from analysis.command.running import expected
+    from analysis.planning import expected_precision
     from sim.scenario.describe import describe
 
     scenario, policy = request.scenario, request.policy
@@ -33,6 +41,7 @@ def check(request: Request) -> None:
         "reasons": reasons,
         "states": chain_size(scenario, policy),
     }
+    document["precision"] = expected_precision(scenario, policy, half_width=half_width).to_dict()
     document["faults"] = []
     if request.out is not None:
         write_result(
@@ -134,7 +143,38 @@ def _show_rest(document: dict[str, Any]) -> None:
         put_text(f"The exact chain covers this scenario, with at most {chain['states']} states.")
     else:
         put_text("The exact chain does not cover this scenario: " + "; ".join(chain["reasons"]) + ".")
+    _show_precision(document["precision"], document["run"])
     if document["policies"]:
         put_text("Policies: " + "; ".join(document["policies"]) + ".")
     for said in document["advice"]:
         put_text(f"Advice: {said}.")
+
+
+def _show_precision(precision: dict[str, Any], run: dict[str, Any]) -> None:
+    """Intervals to expect, or why the chain does not tell them."""
+    if not precision["units"]:
+        put_text(f"The intervals to expect are not known beforehand: {precision['reason']}.")
+        return
+    wanted = precision["half_width"]
+    put_table(
+        f"Intervals to expect from {run['replications']} replications (the exponential counterpart's)",
+        ("unit", "utilisation", "+/-", "time full", "+/-", "time closed", "+/-",
+         *(() if wanted is None else (f"replications for utilisation +/- {wanted:g}",))),
+        [(name, *_expected(unit), *(() if wanted is None else (_needed(unit["utilisation"]),)))
+         for name, unit in precision["units"].items()],
+    )  # fmt: skip
+    if not precision["memoryless"]:
+        put_text(
+            "These are the exact chain's for exponential stays, constant demand and no delay. Stays that vary more "
+            "widen the intervals: by the factor sqrt((1 + cv^2) / 2) in a unit that never closes."
+        )
+
+
+def _expected(unit: dict[str, Any]) -> list[str]:
+    shown = [unit[measure] for measure in ("utilisation", "full_fraction", "closed_fraction")]
+    return [number(one[key], 4) for one in shown for key in ("mean", "half_width")]
+
+
+def _needed(utilisation: dict[str, Any]) -> str:
+    needed = utilisation["replications_needed"]
+    return "more than a million" if needed is None else count(needed)
