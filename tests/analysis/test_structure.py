@@ -121,6 +121,16 @@ def test_replies_are_called_monotone_just_where_no_least_or_greatest_one_falls(g
     assert structure(game).replies_monotone == (not falls)
 
 
+@pytest.mark.parametrize(
+    "utilisation",
+    [[[0.2, 0.2], [0.4, 0.2]], [[0.7, 0.6], [0.7, 0.65]]],
+    ids=["below the target the least", "above it the greatest"],
+)
+def test_a_plateau_makes_one_reply_fall(utilisation):
+    shown = structure(planted([utilisation, [[0.4, 0.5], [0.4, 0.5]]], (0.5, 0.5)))
+    assert shown.replies.falls == 1 and shown.replies.level == 3 and not shown.replies_monotone
+
+
 @settings(max_examples=150, deadline=None, derandomize=True)
 @given(st.one_of(any_games(), monotone_games()))
 def test_where_an_equilibrium_is_promised_there_is_one(game):
@@ -149,10 +159,14 @@ def chosen(cells: Cells, rows) -> Cells:
 
 
 def test_pairs_that_are_no_neighbours_are_compared_where_cells_are_missing():
-    """A's own strategy 0 against B at 0 and at 2 only: the rise between them must be seen all the same."""
-    cells = cells_of(planted([[[0.3, 0.3, 0.4]], [[0.3, 0.5, 0.6]]], (0.5, 0.5)).table)
-    some = structure_of(chosen(cells, [2, 0]))
-    assert some.others.rises == 1 and some.others.most.change == pytest.approx(0.1)
+    """A keeps its threshold while B and C both open, one cell to the other: the rise between them is seen."""
+    flat = np.full((1, 2, 2), 0.5)
+    rising = flat + [[[0.0, 0.0], [0.0, 0.1]]]
+    cells = cells_of(planted([rising, flat, flat], (0.5, 0.5, 0.5)).table)
+    some = structure_of(chosen(cells, [3, 0]))
+    assert some.others.rises == some.others.comparisons == 1
+    assert some.others.most.change == pytest.approx(0.1)
+    assert (some.others.most.lower, some.others.most.upper) == ((0, 0, 0), (0, 1, 1))
 
 
 def test_the_order_of_the_cells_changes_nothing():
