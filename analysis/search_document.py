@@ -216,6 +216,7 @@ def search_document(search: Search) -> dict[str, Any]:
         ),
         "tolerance": search.tolerance,
         "undecided": [],
+        "stopped": search.stopped,
         "interrupted": search.interrupted,
         "walks": [_walk(walk, profiles) for walk in search.walks],
         "bracket": _bracket(search),

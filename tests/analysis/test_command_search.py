@@ -197,5 +197,6 @@ def test_an_interrupted_search_hands_over_what_it_knows(call, wide, monkeypatch)
 
     monkeypatch.setattr("analysis.search.chain_solver", until_five)
     status, document = call("game", wide, "--exact", "--search", "best_reply")
-    assert status == 130 and document["interrupted"] and len(document["visited"]) == 5
+    assert status == 130 and document["stopped"] == "interrupted" and document["interrupted"]
+    assert len(document["visited"]) == 5
     assert not document["bracket"]["shown"]
