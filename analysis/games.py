@@ -19,7 +19,7 @@ from analysis.equilibria import (
     pure_equilibria,
     regrets,
 )
-from analysis.payoffs import PayoffTable
+from analysis.payoffs import Outcomes, PayoffTable
 
 EXACT, ESTIMATED = "exact", "estimated"
 
@@ -71,15 +71,19 @@ class GameAnalysis:
     def place(self, profile: Profile) -> Place:
         """What happens at a profile."""
         cell = int(np.ravel_multi_index(profile, self.table.profiles.shape))
-        outcomes, players = self.table.outcomes, self.table.profiles.players
+        return place_at(self.table.outcomes, cell, self.table.profiles.thresholds(profile))
 
-        def by_unit(values: np.ndarray) -> dict[str, float]:
-            return dict(zip(players, values[cell].tolist(), strict=True))
 
-        return Place(
-            self.table.profiles.thresholds(profile), by_unit(outcomes.turned_away), by_unit(outcomes.diverted_out),
-            by_unit(outcomes.closed_free), by_unit(outcomes.utilisation), float(outcomes.admitted[cell].sum()),
-        )  # fmt: skip
+def place_at(outcomes: Outcomes, cell: int, thresholds: Mapping[str, int]) -> Place:
+    """What happens in a cell, whose thresholds are given by player."""
+
+    def by_unit(values: np.ndarray) -> dict[str, float]:
+        return dict(zip(thresholds, values[cell].tolist(), strict=True))
+
+    return Place(
+        thresholds, by_unit(outcomes.turned_away), by_unit(outcomes.diverted_out), by_unit(outcomes.closed_free),
+        by_unit(outcomes.utilisation), float(outcomes.admitted[cell].sum()),
+    )  # fmt: skip
 
 
 def analyse(

@@ -174,22 +174,32 @@ def simulated_table(
 _RATES = ("admitted", "turned_away", "diverted_out", "arrived", "closed_free_days")
 
 
+EXACT_MEASURES = {
+    "turned_away": "turned_away_per_day",
+    "diverted_out": "diverted_out_per_day",
+    "admitted": "admissions_per_day",
+    "arrived": "arrivals_per_day",
+    "closed_free": "closed_with_free_bed_fraction",
+    "utilisation": "utilisation",
+}
+
+
+def exact_outcomes(units: Sequence[Sequence[Mapping[str, float]]]) -> Outcomes:
+    """What happens in each cell, from exact measures: `units[cell][unit]` maps measure names to values."""
+    return Outcomes(
+        **{
+            name: np.array([[unit[measure] for unit in cell] for cell in units])
+            for name, measure in EXACT_MEASURES.items()
+        }
+    )
+
+
 def exact_table(
     profiles: Profiles, goal: TargetGoal, welfare: Welfare, units: Sequence[Sequence[Mapping[str, float]]]
 ) -> PayoffTable:
     """The table from exact measures: `units[cell][unit]` maps measure names to values."""
 
-    def column(name: str) -> np.ndarray:
-        return np.array([[unit[name] for unit in cell] for cell in units])
-
-    outcomes = Outcomes(
-        turned_away=column("turned_away_per_day"),
-        diverted_out=column("diverted_out_per_day"),
-        admitted=column("admissions_per_day"),
-        arrived=column("arrivals_per_day"),
-        closed_free=column("closed_with_free_bed_fraction"),
-        utilisation=column("utilisation"),
-    )
+    outcomes = exact_outcomes(units)
     worth = welfare.value(
         *(rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out))
     )

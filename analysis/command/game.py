@@ -8,7 +8,7 @@ from typing import Any
 import click
 
 from analysis.command.central import beside, best_rule, show_control, write_rule
-from analysis.command.entry import say
+from analysis.command.entry import Interrupted, say
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import (
     count,
@@ -31,16 +31,27 @@ MOST_LISTED = 25
 @click.option("--tolerance", type=click.FloatRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
-def game(request: Request, exact: bool, tolerance: float, control: bool) -> None:
+@click.option("--search", type=click.Choice(["table", "best_reply"]),
+              help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
+def game(request: Request, exact: bool, tolerance: float, control: bool, search: str | None) -> None:
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
     """
+    from analysis.command import game_search
     from analysis.command.provenance import provenance, started
     from analysis.command.running import finish
     from analysis.game_document import game_document
     from analysis.games import analyse
 
+    if search is not None and not exact:
+        raise click.BadOptionUsage("--search", "--search is for --exact only")
+    if control and search == game_search.BEST_REPLY:
+        raise click.BadOptionUsage("--search", "--control is compared with a full table, not with a search")
+    choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
+    if choice is not None and choice.method == game_search.BEST_REPLY:
+        _finish_search(request, game_search.searched(request, choice, tolerance))
+        return
     begun = started()
     best = best_rule(request, exact) if control else None
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
@@ -52,6 +63,8 @@ def game(request: Request, exact: bool, tolerance: float, control: bool) -> None
     document |= told
     if best is not None:
         document["control"] = beside(best, analysis)
+    if choice is not None:
+        document |= game_search.structure_of_table(analysis, choice)
     if request.out is not None:
         _write(
             request,
@@ -114,19 +127,8 @@ def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     from analysis.command.progress import progress
     from analysis.exact_tables import solve_cells
     from analysis.payoffs import exact_table
-    from sim.errors import Fault, ScenarioError
 
     profiles, goal, welfare = _axes(request)
-    if goal.shape == "squared":
-        rule, remedy = "must be `absolute` with --exact", "drop --exact, or use the absolute goal"
-        fault = Fault(
-            None,
-            "game.goal.shape",
-            rule,
-            "got 'squared': the chain has no finite-period variance here",
-            remedy,
-        )
-        raise ScenarioError([fault], request.scenario.source.file)
     cells = [None] * profiles.cells
     with progress("game --exact", profiles.cells, "cells") as bar:
         for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
@@ -169,9 +171,39 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         put_text(finding["statement"] + ".")
     if "control" in document:
         show_control(document)
+    if "structure" in document:
+        put_text("", *document["structure"]["reads"], document["search"]["reads"] + ".")
     put_text("", ONE_NETWORK)
     if not analysis.is_exact:
         put_text("", POINT_ESTIMATE_WARNING)
+    put_caution()
+
+
+def _finish_search(request: Request, document: dict[str, Any]) -> None:
+    """Hands over what a search found, also one that Ctrl-C ended early."""
+    if request.as_json:
+        put_json(document)
+    else:
+        _show_search(document)
+    if document["interrupted"]:
+        raise Interrupted
+
+
+def _show_search(document: dict[str, Any]) -> None:
+    from analysis.findings import ONE_NETWORK
+
+    put_text(
+        document["scenario"] or "(no title)",
+        f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
+        document["search"]["reads"] + ".",
+        "",
+    )
+    _show_equilibria(document)
+    _show_outcomes(document)
+    for finding in document["findings"]:
+        put_text(finding["statement"] + ".")
+    put_text(f"The optimum is {document['optimum']['is']}.")
+    put_text("", *document["structure"]["reads"], "", ONE_NETWORK)
     put_caution()
 
 
