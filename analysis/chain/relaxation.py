@@ -43,17 +43,24 @@ class Attempt:
 class Progress:
     """The changes of one method, batch after batch, and the error that they let expect.
 
-    moved: the sum of the changes in a sweep, relative to the whole. pace: the factor by which it falls a sweep.
+    moved: the sum of the changes in a sweep, relative to the whole. paces: the factors by which it fell a sweep,
+    in this batch and the one before; slow errors may hide behind fast ones in one batch, hardly in two.
     """
 
-    moved: float = np.inf
-    pace: float = 1.0
+    moved: float = 1.0
+    paces: tuple[float, float] = (1.0, 1.0)
 
     def note(self, moved: float) -> None:
         """Takes in a batch's last sweep; at the floor of rounding the pace is no longer measured."""
-        if moved > FLOOR and np.isfinite(self.moved):
-            self.pace = (moved / self.moved) ** (1 / BATCH)
+        if self.moved > FLOOR:
+            pace = (max(moved, FLOOR) / self.moved) ** (1 / BATCH)
+            self.paces = (self.paces[1] if self.paces[1] < 1 else pace, pace)
         self.moved = moved
+
+    @property
+    def pace(self) -> float:
+        """The slower of the two."""
+        return max(self.paces)
 
     @property
     def error(self) -> float:
@@ -103,7 +110,7 @@ def over_relaxed(box: Box, reached: NDArray[np.bool_]) -> Attempt:
         if progress.error <= ERROR / 100 or not np.isfinite(moved) or moved <= FLOOR:
             break
         if batch == SETTLING:
-            weight = best_weight(progress.pace, weight)
+            weight = best_weight(progress.paces[1], weight)
     steady = _settle(box, probability, reached)
     return Attempt("over-relaxation", probability / probability.sum(), steady and progress.error <= ERROR)
 
@@ -157,4 +164,4 @@ def _sweeps(
             for unit in np.flatnonzero(box.sizes > 1):
                 relaxation.aggregate(probability, *box.transitions, unit)
         change, moved = relaxation.sweep(probability, reached, *box.transitions, weight)
-    return change, moved / probability.sum()
+    return change, moved / np.abs(probability).sum()

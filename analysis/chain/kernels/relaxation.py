@@ -54,8 +54,11 @@ def sweep(probability, reached, sizes, codes, births, leaving, weight):
                     into += probability[state - lower[unit]] * births[unit, number - apart[unit]]
                 if upper[unit] > 0:
                     into += probability[state + upper[unit]] * ((loads[unit] + 1) * leaving[unit])
+            out = total[number] + discharges + load * leaving[last]
+            if out == 0.0:  # nobody comes to an empty network
+                continue
             before = probability[state]
-            change = weight * (into / (total[number] + discharges + load * leaving[last]) - before)
+            change = weight * (into / out - before)
             probability[state] = before + change
             moved += abs(change)
             if abs(change) > worst * max(before, NEGLIGIBLE):
