@@ -24,6 +24,7 @@ MOST_SWEEPS = 4000
 MOST_UPDATES = 1e10  # states times sweeps
 FIRST_WEIGHT, GREATEST_WEIGHT = 1.5, 1.9
 SETTLING = 4  # batches at the first weight before a better one is chosen
+WILD = 0.1  # changes of this size after all those sweeps tell of too large a weight
 STIFF = 10.0  # the ratio of discharge rates above which aggregation is tried first
 ERROR = 1e-11  # of the distribution, the sum of absolute errors as estimated
 STEADY = 1e-12  # the change of any probability relative to itself, in a sweep
@@ -111,6 +112,8 @@ def over_relaxed(box: Box, reached: NDArray[np.bool_]) -> Attempt:
             break
         if batch == SETTLING:
             weight = best_weight(progress.paces[1], weight)
+        elif batch > 2 * SETTLING and moved > WILD:
+            weight = 1 + (weight - 1) / 2
     steady = _settle(box, probability, reached)
     return Attempt("over-relaxation", probability / probability.sum(), steady and progress.error <= ERROR)
 
@@ -124,9 +127,12 @@ def best_weight(pace: float, weight: float) -> float:
 
 
 def _settle(box: Box, probability: Numbers, reached: NDArray[np.bool_]) -> bool:
-    """Gauss-Seidel in place until every state is steady relative to itself; False where that does not come."""
+    """Gauss-Seidel in place until every state is steady relative to itself; False where that does not come.
+
+    Forwards and backwards in turn, since rare states follow the likely ones, on whatever side these are.
+    """
     for _ in _batches(box):
-        change, _ = _sweeps(box, probability, reached, 1.0)
+        change, _ = _sweeps(box, probability, reached, 1.0, both_ways=True)
         if change <= STEADY or not np.isfinite(change):
             return bool(change <= STEADY)
     return False
@@ -153,15 +159,23 @@ def _batches(box: Box) -> Iterator[int]:
 
 
 def _sweeps(
-    box: Box, probability: Numbers, reached: NDArray[np.bool_], weight: float, *, aggregate: bool = False
+    box: Box,
+    probability: Numbers,
+    reached: NDArray[np.bool_],
+    weight: float,
+    *,
+    aggregate: bool = False,
+    both_ways: bool = False,
 ) -> tuple[float, float]:
     """A batch of sweeps in place; the last one's greatest relative change, and its changes over the sum."""
     from analysis.chain.kernels import relaxation
 
     change = moved = np.inf
-    for _ in range(BATCH):
+    for turn in range(BATCH):
         if aggregate:
             for unit in np.flatnonzero(box.sizes > 1):
                 relaxation.aggregate(probability, *box.transitions, unit)
-        change, moved = relaxation.sweep(probability, reached, *box.transitions, weight)
+        change, moved = relaxation.sweep(
+            probability, reached, *box.transitions, weight, both_ways and turn % 2 == 0
+        )
     return change, moved / np.abs(probability).sum()

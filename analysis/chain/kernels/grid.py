@@ -23,6 +23,14 @@ def strides_of(sizes):
 
 
 @compiled
+def loads_at(state, strides, loads):
+    """The loads of a state, into `loads`."""
+    for unit in range(len(strides)):
+        loads[unit] = state // strides[unit]
+        state -= loads[unit] * strides[unit]
+
+
+@compiled
 def advance(loads, sizes):
     """The loads of the next state, in place."""
     for unit in range(len(sizes) - 1, -1, -1):

@@ -7,7 +7,7 @@ Koury, McAllister & Stewart (1984). From memory.
 import numpy as np
 
 from analysis.chain.kernels import compiled
-from analysis.chain.kernels.grid import NEGLIGIBLE, advance, combination, strides_of
+from analysis.chain.kernels.grid import NEGLIGIBLE, advance, combination, loads_at, strides_of
 
 
 @compiled
@@ -25,22 +25,26 @@ def neighbours(loads, sizes, codes, strides, lower, apart, upper):
 
 
 @compiled
-def sweep(probability, reached, sizes, codes, births, leaving, weight):
+def sweep(probability, reached, sizes, codes, births, leaving, weight, backward):
     """One sweep over all states, in place; `weight` 1 is Gauss-Seidel, above it over-relaxation.
 
+    backward: from the last state to the first.
     Returns the greatest change of a probability relative to itself, and the sum of all changes.
     """
     strides, last = strides_of(sizes), len(sizes) - 1
     loads, row_length, worst, moved = np.zeros(len(sizes), dtype=np.int64), sizes[last], 0.0, 0.0
     lower, apart, upper = np.zeros_like(sizes), np.zeros_like(sizes), np.zeros_like(sizes)
     total, doors = births.sum(axis=0), codes[last]
-    for start in range(0, len(probability), row_length):
+    rows = len(probability) // row_length
+    for turn in range(rows):
+        start = (rows - 1 - turn if backward else turn) * row_length
+        loads_at(start, strides, loads)
         neighbours(loads, sizes, codes, strides, lower, apart, upper)
-        loads[last] = 0
         row, discharges = combination(loads, codes) - doors[0], 0.0
         for unit in range(last):
             discharges += loads[unit] * leaving[unit]
-        for load in range(row_length):
+        for step in range(row_length):
+            load = row_length - 1 - step if backward else step
             state = start + load
             if not reached[state]:
                 continue
@@ -63,8 +67,6 @@ def sweep(probability, reached, sizes, codes, births, leaving, weight):
             moved += abs(change)
             if abs(change) > worst * max(before, NEGLIGIBLE):
                 worst = abs(change) / max(before, NEGLIGIBLE)
-        loads[last] = row_length - 1
-        advance(loads, sizes)
     return worst, moved
 
 
