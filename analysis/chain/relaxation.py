@@ -95,7 +95,7 @@ def _methods(box: Box) -> list[Callable[[Box, NDArray[np.bool_]], Attempt]]:
 
 def _demand_convergence(attempt: Attempt) -> None:
     if not attempt.converged:
-        raise RunError(f"not converged within {MOST_SWEEPS:,} sweeps")
+        raise RunError("not converged within its sweeps")
 
 
 def over_relaxed(box: Box, reached: NDArray[np.bool_]) -> Attempt:
@@ -132,9 +132,9 @@ def _settle(box: Box, probability: Numbers, reached: NDArray[np.bool_]) -> bool:
     Forwards and backwards in turn, since rare states follow the likely ones, on whatever side these are.
     """
     for _ in _batches(box):
-        change, _ = _sweeps(box, probability, reached, 1.0, both_ways=True)
-        if change <= STEADY or not np.isfinite(change):
-            return bool(change <= STEADY)
+        change, moved = _sweeps(box, probability, reached, 1.0, both_ways=True)
+        if change <= STEADY or not np.isfinite(moved):
+            return bool(change <= STEADY and np.isfinite(moved))
     return False
 
 

@@ -5,6 +5,7 @@ builds, which are themselves held against a second construction in `test_chain_r
 """
 
 import itertools
+from pathlib import Path
 
 import mpmath
 import numpy as np
@@ -12,10 +13,11 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from analysis.chain import OutOfScope, solve, solve_table, solved_together, table
+from analysis.chain import OutOfScope, kernels, solve, solve_table, solved_together, table
 from analysis.chain.limits import DEFAULT, Limits
 from analysis.chain.network_states import network_chain
 from analysis.exact_tables import solve_cells
+from sim.kernel_cache import digest_of
 from sim.scenario import Scenario
 
 RESORTS = ("turned_away", "home_bed", "any_bed")
@@ -282,3 +284,13 @@ def test_the_comparison_can_see_a_wrong_route(monkeypatch):
 
     monkeypatch.setattr(table, "door_table", hard)
     assert agree(scenario, every_policy(scenario)) > 1e-3
+
+
+def test_an_edit_in_any_kernel_gives_another_folder(tmp_path):
+    """No stale kernel runs on: the folder of the compiled ones is named by a digest of all their sources."""
+    sources = Path(kernels.__file__).parent
+    for source in sources.glob("*.py"):
+        (tmp_path / source.name).write_bytes(source.read_bytes())
+    assert digest_of(tmp_path) == digest_of(sources)
+    (tmp_path / "levels.py").write_text("# edited\n")
+    assert digest_of(tmp_path) != digest_of(sources)

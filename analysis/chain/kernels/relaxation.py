@@ -25,6 +25,46 @@ def neighbours(loads, sizes, codes, strides, lower, apart, upper):
 
 
 @compiled
+def relax(probability, state, flow, out, weight):
+    """Moves a state's probability towards its inflow over its rate out; the change, relative and absolute."""
+    if out == 0.0:  # nobody comes to an empty network
+        return 0.0, 0.0
+    before = probability[state]
+    change = weight * (flow / out - before)
+    probability[state] = before + change
+    return abs(change) / max(before, NEGLIGIBLE), abs(change)
+
+
+@compiled
+def sweep_row(probability, reached, start, row, around, rates, doors, births, total, weight, backward):
+    """One sweep over the states of a row; the greatest relative change, and the sum of all.
+
+    start: the row's first state. row: its other units' part of the combination's number. around: lower, apart,
+    upper as `neighbours` fills them. rates: of discharges with one patient more, by unit, (the last one's for a
+    single patient), then of all discharges of the other units.
+    """
+    (lower, apart, upper), last, length, worst, moved = around, len(rates) - 2, len(doors), 0.0, 0.0
+    for step in range(length):
+        load = length - 1 - step if backward else step
+        state, number, flow = start + load, row + doors[load], 0.0
+        if not reached[state]:
+            continue
+        if load > 0:
+            flow += probability[state - 1] * births[last, row + doors[load - 1]]
+        if load + 1 < length:
+            flow += probability[state + 1] * ((load + 1) * rates[last])
+        for unit in range(last):
+            if lower[unit] > 0:
+                flow += probability[state - lower[unit]] * births[unit, number - apart[unit]]
+            if upper[unit] > 0:
+                flow += probability[state + upper[unit]] * rates[unit]
+        out = total[number] + rates[last + 1] + load * rates[last]
+        relative, change = relax(probability, state, flow, out, weight)
+        worst, moved = max(worst, relative), moved + change
+    return worst, moved
+
+
+@compiled
 def sweep(probability, reached, sizes, codes, births, leaving, weight, backward):
     """One sweep over all states, in place; `weight` 1 is Gauss-Seidel, above it over-relaxation.
 
@@ -32,41 +72,21 @@ def sweep(probability, reached, sizes, codes, births, leaving, weight, backward)
     Returns the greatest change of a probability relative to itself, and the sum of all changes.
     """
     strides, last = strides_of(sizes), len(sizes) - 1
-    loads, row_length, worst, moved = np.zeros(len(sizes), dtype=np.int64), sizes[last], 0.0, 0.0
-    lower, apart, upper = np.zeros_like(sizes), np.zeros_like(sizes), np.zeros_like(sizes)
-    total, doors = births.sum(axis=0), codes[last]
-    rows = len(probability) // row_length
+    length, loads, rates = sizes[last], np.zeros_like(sizes), np.zeros(last + 2)
+    around = (np.zeros_like(sizes), np.zeros_like(sizes), np.zeros_like(sizes))
+    doors, total, worst, moved = codes[last, :length], births.sum(axis=0), 0.0, 0.0
+    rows = len(probability) // length
     for turn in range(rows):
-        start = (rows - 1 - turn if backward else turn) * row_length
+        start = (rows - 1 - turn if backward else turn) * length
         loads_at(start, strides, loads)
-        neighbours(loads, sizes, codes, strides, lower, apart, upper)
-        row, discharges = combination(loads, codes) - doors[0], 0.0
-        for unit in range(last):
-            discharges += loads[unit] * leaving[unit]
-        for step in range(row_length):
-            load = row_length - 1 - step if backward else step
-            state = start + load
-            if not reached[state]:
-                continue
-            number, into = row + doors[load], 0.0
-            if load > 0:
-                into += probability[state - 1] * births[last, row + doors[load - 1]]
-            if load + 1 < row_length:
-                into += probability[state + 1] * ((load + 1) * leaving[last])
-            for unit in range(last):
-                if lower[unit] > 0:
-                    into += probability[state - lower[unit]] * births[unit, number - apart[unit]]
-                if upper[unit] > 0:
-                    into += probability[state + upper[unit]] * ((loads[unit] + 1) * leaving[unit])
-            out = total[number] + discharges + load * leaving[last]
-            if out == 0.0:  # nobody comes to an empty network
-                continue
-            before = probability[state]
-            change = weight * (into / out - before)
-            probability[state] = before + change
-            moved += abs(change)
-            if abs(change) > worst * max(before, NEGLIGIBLE):
-                worst = abs(change) / max(before, NEGLIGIBLE)
+        neighbours(loads, sizes, codes, strides, *around)
+        rates[:-1] = (loads + 1) * leaving
+        rates[last + 1] = (loads * leaving).sum()
+        row = combination(loads, codes) - doors[0]
+        changes = sweep_row(
+            probability, reached, start, row, around, rates, doors, births, total, weight, backward
+        )
+        worst, moved = max(worst, changes[0]), moved + changes[1]
     return worst, moved
 
 
