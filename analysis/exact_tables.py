@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Iterator
 from typing import Any
 
@@ -11,6 +12,9 @@ from sim.scenario import Policy, Scenario
 from sim.workers import local_workers
 
 CELLS_PER_TASK = 8
+# Cells times states below which a table is done cell by cell (at most about half a second) before the kernels are
+# loaded. The choice looks at nothing else, so that a table is the same to the last bit on every run.
+WORTH_KERNELS = 20_000
 
 
 def solve_cells(
@@ -22,7 +26,8 @@ def solve_cells(
     is refused at once (OutOfScope). Raises RunError with the cell's number where a later one fails.
     """
     listed = list(policies)
-    together = solved_together(scenario, listed)
+    states = math.prod(unit.beds + 1 for unit in scenario.units)
+    together = solved_together(scenario, listed) if len(listed) * states >= WORTH_KERNELS else {}
     yield from ((cell, _units(scenario, result)) for cell, result in together.items())
     alone = [cell for cell in range(len(listed)) if cell not in together]
     if alone:

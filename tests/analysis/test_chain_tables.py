@@ -13,10 +13,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from analysis import exact_tables
 from analysis.chain import OutOfScope, kernels, solve, solve_table, solved_together, table
 from analysis.chain.limits import DEFAULT, Limits
 from analysis.chain.network_states import network_chain
-from analysis.exact_tables import solve_cells
 from sim.kernel_cache import digest_of
 from sim.scenario import Scenario
 
@@ -211,15 +211,33 @@ def test_different_stays_that_never_meet_are_solved_together():
     assert agree(scenario, every_policy(scenario)) < 1e-12
 
 
-def test_a_mixed_table_keeps_its_order():
+def test_a_mixed_table_keeps_its_order(monkeypatch):
     scenario = network()
     policies = every_policy(scenario)
     policies[3] = policies[3].with_rule("reopening_gap", {"A": 2})
     assert sorted(solved_together(scenario, policies)) == [cell for cell in range(20) if cell != 3]
     for policy, result in zip(policies, solve_table(scenario, policies), strict=True):
         assert farthest(result, solve(scenario, policy)) < 1e-12
-    cells = dict(solve_cells(scenario, policies))
+    monkeypatch.setattr(exact_tables, "WORTH_KERNELS", 0)
+    cells = dict(exact_tables.solve_cells(scenario, policies))
+    assert sorted(cells) == list(range(20))
     assert [cells[3][0], cells[3][1]] == [solve(scenario, policies[3]).units[name].to_dict() for name in "AB"]
+
+
+def test_only_a_table_of_some_size_is_worth_the_kernels(monkeypatch):
+    """20 cells of 20 states are solved alone, unless that is said to be worth it; the measures are the same."""
+    asked = []
+    right = exact_tables.solved_together
+    monkeypatch.setattr(exact_tables, "solved_together", lambda *given: asked.append(1) or right(*given))
+    small = network()
+    alone = dict(exact_tables.solve_cells(small, every_policy(small)))
+    assert asked == []
+    monkeypatch.setattr(exact_tables, "WORTH_KERNELS", 20 * 20)
+    together = dict(exact_tables.solve_cells(small, every_policy(small)))
+    assert asked == [1] and together.keys() == alone.keys()
+    for cell, units in together.items():
+        for one, other in zip(units, alone[cell], strict=True):
+            assert one["utilisation"] == pytest.approx(other["utilisation"], rel=1e-12)
 
 
 def test_a_policy_out_of_scope_is_refused():
