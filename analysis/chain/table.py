@@ -6,6 +6,7 @@ which threshold that was; so one climb and one descent, for each set of the othe
 
 from __future__ import annotations
 
+import math
 from collections import defaultdict
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, fields
@@ -15,13 +16,14 @@ import numpy as np
 
 from analysis.chain.certificate import is_certified
 from analysis.chain.doors import DoorTable, door_table, doors_by_load
-from analysis.chain.exact import solve
+from analysis.chain.exact import ELIMINATED, solve
 from analysis.chain.limits import DEFAULT, Limits
 from analysis.chain.measures import ExactResult
 from analysis.chain.occupancy_measures import Observed, results
 from analysis.chain.scope import refusals
 from sim.scenario import Policy, Scenario, UnitRules
 
+SWEEPS = 2_000  # multiply-adds that relaxing takes for each state
 _OTHER_RULES = attrgetter(*(one.name for one in fields(UnitRules) if one.name != "closure_threshold"))
 
 
@@ -113,16 +115,28 @@ def one_rate_each(scenario: Scenario, policy: Policy) -> list[float] | None:
 def _solved(
     scenario: Scenario, policies: Sequence[Policy], cells: Sequence[int], plan: Plan
 ) -> dict[int, ExactResult]:
+    lines = _lines(scenario, policies, cells, plan)
+    if not lines:
+        return {}
+    observed, order = _observed(scenario, policies, lines, plan)
+    kept = is_certified(observed).tolist()
+    found = results(scenario, [policies[cell] for cell in order], observed)
+    return {cell: result for cell, result, good in zip(order, found, kept, strict=True) if good}
+
+
+def _lines(
+    scenario: Scenario, policies: Sequence[Policy], cells: Sequence[int], plan: Plan
+) -> list[list[int]]:
+    """Cells with one threshold of the unit of the phases, line by line; none where each alone takes less work."""
     lines: dict[int, list[int]] = defaultdict(list)
     other = scenario.units[1 - plan.level]
     for cell in cells:
         thresholds = policies[cell].thresholds
         if all(thresholds[unit.name] <= unit.beds for unit in scenario.units):
             lines[thresholds[other.name]].append(cell)
-    observed, order = _observed(scenario, policies, list(lines.values()), plan)
-    kept = is_certified(observed).tolist()
-    found = results(scenario, [policies[cell] for cell in order], observed)
-    return {cell: result for cell, result, good in zip(order, found, kept, strict=True) if good}
+    states, phases = math.prod(unit.beds + 1 for unit in scenario.units), other.beds + 1
+    passages, sweeps = 2 * states * phases**2 * len(lines), SWEEPS * states * len(cells)
+    return [] if states > ELIMINATED and passages > sweeps else list(lines.values())
 
 
 def _observed(

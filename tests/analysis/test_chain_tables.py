@@ -205,6 +205,23 @@ def test_what_has_no_such_structure_is_left_to_be_solved_alone():
         assert farthest(solve_table(scenario, [policy])[0], solve(scenario, policy)) == 0.0
 
 
+def test_few_cells_of_a_large_network_are_left_to_relaxation():
+    """A line of passages costs more than a few relaxations; a whole line is worth it."""
+    scenario = network(beds=(48, 50), per_day=(15.0, 17.0))
+    line = [scenario.policy().with_thresholds({"A": 44, "B": k}) for k in range(20, 51)]
+    assert solved_together(scenario, line[-1:]) == {}
+    together = solved_together(scenario, line)
+    assert len(together) == 31
+    assert farthest(together[30], solve(scenario, line[-1])) < 1e-9
+
+
+def test_thresholds_beyond_the_beds_are_left_out():
+    scenario = network()
+    beyond = [scenario.policy().with_thresholds({"A": 4, "B": k}) for k in range(3)]
+    assert solved_together(scenario, beyond) == {}
+    assert sorted(solved_together(scenario, [*beyond, scenario.policy()])) == [3]
+
+
 def test_different_stays_that_never_meet_are_solved_together():
     """Where nobody is referred, each unit has one rate although the groups differ."""
     scenario = with_stays(1.0, 3.0, referral_order=[])
