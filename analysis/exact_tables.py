@@ -1,16 +1,20 @@
-"""Every cell of a table solved by the exact chain, here or in local worker processes."""
+"""Every cell of a table solved by the exact chain: together where it can be, else one by one, here or in workers."""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Iterator
 from typing import Any
 
-from analysis.chain import solve
+from analysis.chain import ExactResult, solve, solved_together
 from sim.errors import RunError
 from sim.scenario import Policy, Scenario
 from sim.workers import local_workers
 
 CELLS_PER_TASK = 8
+# Cells times states below which a table is done cell by cell (at most about half a second) before the kernels are
+# loaded. The choice looks at nothing else, so that a table is the same to the last bit on every run.
+WORTH_KERNELS = 20_000
 
 
 def solve_cells(
@@ -18,21 +22,28 @@ def solve_cells(
 ) -> Iterator[tuple[int, list[dict[str, Any]]]]:
     """Yields (cell, measures of each unit in scenario order) as cells are solved.
 
-    The first cell is solved here, so that a scenario out of scope is refused at once (OutOfScope). Raises
-    RunError with the cell's number where a later one fails.
+    Where not all cells are solved together, the first other one is solved here, so that a scenario out of scope
+    is refused at once (OutOfScope). Raises RunError with the cell's number where a later one fails.
     """
     listed = list(policies)
-    yield 0, solve_block(scenario, listed[:1])[0]
-    starts = range(1, len(listed), CELLS_PER_TASK)
-    tasks = ((first, (scenario, listed[first : first + CELLS_PER_TASK])) for first in starts)
+    states = math.prod(unit.beds + 1 for unit in scenario.units)
+    together = solved_together(scenario, listed) if len(listed) * states >= WORTH_KERNELS else {}
+    yield from ((cell, _units(scenario, result)) for cell, result in together.items())
+    alone = [cell for cell in range(len(listed)) if cell not in together]
+    if alone:
+        yield alone[0], solve_block(scenario, [listed[alone[0]]])[0]
+    blocks = (tuple(alone[at : at + CELLS_PER_TASK]) for at in range(1, len(alone), CELLS_PER_TASK))
+    tasks = ((cells, (scenario, [listed[cell] for cell in cells])) for cells in blocks)
     for reply in local_workers(workers or 1).run(solve_block, tasks):
         if reply.failure is not None:
-            raise RunError(f"cells from {reply.key}: {reply.failure.strip().splitlines()[-1]}")
-        for place, units in enumerate(reply.value):
-            yield reply.key + place, units
+            raise RunError(f"cells from {reply.key[0]}: {reply.failure.strip().splitlines()[-1]}")
+        yield from zip(reply.key, reply.value, strict=True)
 
 
 def solve_block(scenario: Scenario, policies: list[Policy]) -> list[list[dict[str, Any]]]:
-    """The units' measures under each policy."""
-    trees = (solve(scenario, policy).to_dict()["units"] for policy in policies)
-    return [[tree[name] for name in scenario.unit_names] for tree in trees]
+    """The units' measures under each policy, each solved alone."""
+    return [_units(scenario, solve(scenario, policy)) for policy in policies]
+
+
+def _units(scenario: Scenario, result: ExactResult) -> list[dict[str, Any]]:
+    return [result.units[name].to_dict() for name in scenario.unit_names]

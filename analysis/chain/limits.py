@@ -30,25 +30,29 @@ class ChainTooLarge(BrimlineError):  # noqa: N818 - the name says it all
 class Limits:
     """The largest chain that is solved.
 
-    states: states that can be reached. work: multiply-adds of the elimination. bytes: memory of its band.
+    states: states that can be reached, where they are eliminated. work: multiply-adds of the elimination.
+    bytes: memory of its band. relaxed: states that can be reached, where occupancies tell all and are relaxed.
     """
 
     states: int = 20_000
+    relaxed: int = 2_000_000
     work: float = 2e11
     bytes: int = 2**31
 
-    def check_bound(self, bound: int) -> None:
+    def check_bound(self, bound: int, *, relaxed: bool = False) -> None:
         """Refuses a hopeless chain by an upper bound of its states, before anything is built.
 
         A bound may exceed the states that can be reached, hence the fivefold allowance.
         """
-        if bound > 5 * self.states:
-            raise ChainTooLarge(bound, f"as many as {bound:,} states, the limit is {self.states:,}")
+        most = self.relaxed if relaxed else self.states
+        if bound > 5 * most:
+            raise ChainTooLarge(bound, f"as many as {bound:,} states, the limit is {most:,}")
 
-    def check_states(self, states: int) -> None:
+    def check_states(self, states: int, *, relaxed: bool = False) -> None:
         """Refuses too many states."""
-        if states > self.states:
-            raise ChainTooLarge(states, f"{states:,} states, the limit is {self.states:,}")
+        most = self.relaxed if relaxed else self.states
+        if states > most:
+            raise ChainTooLarge(states, f"{states:,} states, the limit is {most:,}")
 
     def check_band(self, states: int, *, width: int, work: float, size: int) -> None:
         """Refuses an elimination of that half bandwidth, work (multiply-adds) and size (bytes)."""

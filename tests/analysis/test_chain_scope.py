@@ -140,8 +140,9 @@ def many_units(number, beds=20):
 @pytest.mark.parametrize(
     ("network", "limits", "states", "words"),
     [
-        (many_units(40), Limits(), 10**15, "as many as 1,000,000,000,000,000 states, the limit is 20,000"),
-        (many_units(3, 30), Limits(), 31**3, "29,791 states, the limit is 20,000"),
+        (many_units(40), Limits(), 10**15, "as many as 1,000,000,000,000,000 states, the limit is 2,000,000"),
+        (many_units(3, 30), Limits(relaxed=20_000), 31**3, "29,791 states, the limit is 20,000"),
+        (many_units(2), Limits(states=400), 21**2, "441 states, the limit is 400"),
         (many_units(2), Limits(work=1e5), 21**2, "multiply-adds, the limit is 1.0e+05"),
         (many_units(2), Limits(bytes=2**14), 21**2, "0.0 GiB, the limit is 0.0 GiB"),
     ],

@@ -159,8 +159,8 @@ WALLS: dict[str, tuple[Callable[[Sources], Iterator[str]], tuple[str, str]]] = {
         forbidden(all_but("analysis.figures"), *DRAWING),
         ("analysis.command.game", "from matplotlib import pyplot"),
     ),
-    "numba stands in the compiled engine and the chain only": (
-        forbidden(all_but("sim.compiled", "analysis.chain"), "numba"),
+    "numba stands in the compiled engine and the chain, and where both keep their kernels": (
+        forbidden(all_but("sim.compiled", "sim.kernel_cache", "analysis.chain"), "numba"),
         ("sim.record", "from numba import njit"),
     ),
     "the chain reads the scenario, never lowering or an engine": (
