@@ -139,10 +139,14 @@ def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profil
     saved = float(turned_away[worst] - turned_away.ravel()[place])
     moved = float(transfers.ravel()[place] - transfers[worst])
     if saved <= DEFAULT_TOLERANCE:
-        return TurningWeight(None, "the worst equilibrium turns no more patients away than the best profile")
+        return TurningWeight(
+            None,
+            "the worst listed equilibrium turns no more patients away than the profile that turns fewest away",
+        )
     if moved <= 0:
         return TurningWeight(
             None,
-            "the best profile moves no more patients than the worst equilibrium, so it wins at any weight",
+            "the profile that turns fewest patients away moves no more of them than the worst listed equilibrium, "
+            "so it is better at any weight",
         )
     return TurningWeight(saved / moved)

@@ -18,6 +18,14 @@ class Estimate:
     high: float | None = None
     reason: str | None = None
 
+    def within(self, least: float, most: float) -> Estimate:
+        """The same with its interval cut to what the number can be."""
+        if self.low is None or self.high is None:
+            return self
+        return Estimate(
+            self.mean, min(max(self.low, least), most), max(min(self.high, most), least), self.reason
+        )
+
     def to_dict(self) -> dict[str, float | str | None]:
         """Plain values; the reason only where it is needed."""
         plain: dict[str, float | str | None] = {"mean": self.mean, "low": self.low, "high": self.high}

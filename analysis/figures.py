@@ -109,7 +109,12 @@ def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str)
         label="simulated",
     )
     ax.set_xticks(at, names, fontsize=8)
-    ax.set(title=_short(where), xlabel="occupied beds (rare levels pooled)", ylabel="share of time", ylim=(0, None))
+    ax.set(
+        title=_short(where),
+        xlabel="occupied beds (rare levels pooled)",
+        ylabel="share of time",
+        ylim=(0, None),
+    )
     ax.legend(fontsize=8)
     return ax
 

@@ -15,6 +15,9 @@ POINT_ESTIMATE_WARNING = (
     "hides true equilibria and shows false ones, above all where payoffs nearly tie. Read them as candidates, "
     "look at the upper end of each regret, and repeat with more replications before relying on any of them."
 )
+SELECTION_CAVEAT = (
+    ", for the profiles listed here only: that these may be the wrong ones is not in the interval"
+)
 ONE_NETWORK = (
     "The price of anarchy is the ratio of this one network under the stated goals, not a bound over a class of "
     "networks; 'best' means the best fixed thresholds, and a rule that looks at the whole network's state could do "
@@ -70,29 +73,38 @@ def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
         return
     ratio = cost.price_of_anarchy
     lost = cost.lost_per_year
-    what = "patients" if welfare.kind == "throughput" else "units of loss"
+    caveat = "" if game.is_exact else SELECTION_CAVEAT
     if ratio.mean is None:
         yield Finding(f"No price of anarchy: {ratio.reason}", None, "ratio", basis)
     else:
-        yield Finding(f"Price of anarchy {_words(ratio, 4)}", ratio, "ratio", basis)
+        yield Finding(f"Price of anarchy {_words(ratio, 4)}{caveat}", ratio, "ratio", basis)
         yield Finding(
-            f"Price of stability {_words(cost.price_of_stability, 4)}",
+            f"Price of stability {_words(cost.price_of_stability, 4)}{caveat}",
             cost.price_of_stability,
             "ratio",
             basis,
         )
-    yield Finding(
-        f"The worst listed equilibrium forgoes {_words(lost, 1)} {what} a year", lost, f"{what} a year", basis
-    )
+    if welfare.kind == "throughput":
+        said, unit = (
+            f"The worst listed equilibrium forgoes {_words(lost, 1)} patients a year",
+            "patients a year",
+        )
+    else:
+        unit = f"a year of ({welfare.reads.replace(' a day', '')})"
+        said = f"The worst listed equilibrium costs the network {_words(lost, 1)} more {unit}"
+    yield Finding(said + caveat, lost, unit, basis)
 
 
 def _turning(game: GameAnalysis, basis: str) -> Finding:
     turning = game.turning
+    where = "" if game.is_exact else " in the estimated table"
     if turning.weight is None:
-        return Finding(f"No transfer weight turns the verdict: {turning.reason}", None, "weight", basis)
+        said = f"No transfer weight turns the verdict{where}: {turning.reason}"
+        return Finding(said, None, "weight", basis)
     return Finding(
-        f"The verdict turns at a transfer weight of {turning.weight:.3f}: where one transfer counts for more than that "
-        "many patients turned away, the profile that turns fewest away is no better than the worst listed equilibrium",
+        f"The verdict turns{where} at a transfer weight of {turning.weight:.3f}: where one transfer counts for more "
+        "than that many patients turned away, the profile that turns fewest away is no better than the worst listed "
+        "equilibrium",
         Estimate(turning.weight, reason=None if game.is_exact else "a point estimate; no interval is worked out"),
         "patients turned away per transfer",
         basis,

@@ -6,6 +6,7 @@ and the number of arrivals may be random, so measures are ratios of two sums.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
@@ -25,6 +26,11 @@ class Measure:
     base: str
     reads: str
     by_home: bool = False
+
+    @property
+    def most(self) -> float:
+        """What it can be at most: 1 for a share, no bound for a rate, a mean or a utilisation of beds out of use."""
+        return 1.0 if self.name.endswith(("_fraction", "_share")) else math.inf
 
 
 UNIT_MEASURES = (

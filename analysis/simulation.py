@@ -49,14 +49,14 @@ def summarise(records: Sequence[Record], scenario: Scenario, *, confidence: floa
     whole = network_sums(sums)
     return Simulation(
         units={
-            unit.name: {m.name: estimate_measure(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
+            unit.name: {m.name: _shown(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
             for place, unit in enumerate(scenario.units)
         },
         occupancy={
             unit.name: _occupancy(sums["occupancy_days"][:, place, : unit.beds + 1], scenario, confidence)
             for place, unit in enumerate(scenario.units)
         },
-        network={m.name: estimate_measure(m, whole, confidence) for m in NETWORK_MEASURES},
+        network={m.name: _shown(m, whole, confidence) for m in NETWORK_MEASURES},
         replications=len(records),
         confidence=confidence,
     )
@@ -67,13 +67,19 @@ def of_unit(sums: Sums, place: int) -> Sums:
     return {name: values[:, place] for name, values in sums.items() if values.ndim == 2}
 
 
+def _shown(measure: Measure, sums: Sums, confidence: float) -> Estimate:
+    """A measure with its interval cut to what the measure can be."""
+    return estimate_measure(measure, sums, confidence).within(0.0, measure.most)
+
+
 def estimate_measure(measure: Measure, sums: Sums, confidence: float, *, comparisons: int = 1) -> Estimate:
     """A measure over replications, with Student's interval."""
     return ratio_estimate(sums[measure.total], sums[measure.base], confidence, comparisons=comparisons)
 
 
 def _occupancy(days: np.ndarray, scenario: Scenario, confidence: float) -> list[Estimate]:
-    return [mean_estimate(level / scenario.run.measured_days, confidence) for level in days.T]
+    levels = (mean_estimate(level / scenario.run.measured_days, confidence) for level in days.T)
+    return [estimate.within(0.0, 1.0) for estimate in levels]
 
 
 def per_replication_measures(runs: Sequence[Run], scenario: Scenario) -> list[dict[str, Any]]:

@@ -11,7 +11,7 @@ from __future__ import annotations
 import csv
 import hashlib
 import unicodedata
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, fields
 from functools import cached_property, lru_cache
 from pathlib import Path
@@ -133,6 +133,16 @@ def _draw_group(plan: IntakePlan, place: int, replication: int) -> tuple[np.ndar
         arrival, np.full(n, place, np.int64), np.full(n, group.home, np.int64),
         group.stay.quantile(stream(STAY)(n)), delay, stream(GATE)(n),
     )  # fmt: skip
+
+
+def write_staffing(staffing: Staffing, path: Path, units: Sequence[str]) -> None:
+    """Writes every change of staffed beds as CSV: time_days, unit, staffed_beds (from then on)."""
+    with path.open("w", newline="", encoding="utf-8") as file:
+        rows = csv.writer(file)
+        rows.writerow(["time_days", "unit", "staffed_beds"])
+        columns = (staffing.times, staffing.units, staffing.beds)
+        for time, unit, beds in zip(*(column.tolist() for column in columns), strict=True):
+            rows.writerow([time, units[unit], beds])
 
 
 def write_intake(intake: Intake, path: Path, *, groups: list[str], units: list[str]) -> None:

@@ -35,12 +35,15 @@ def folder_for(digest: str) -> Path:
     return Path(base or Path.home() / ".cache") / "brimline" / f"kernels-{digest}"
 
 
+PROBE_BYTES = 2**20  # about what the kernels take
+
+
 def is_writable(folder: Path) -> bool:
     """Whether files can be kept in `folder`, which is made if need be."""
     try:
         folder.mkdir(parents=True, exist_ok=True)
         probe = folder / f"probe-{os.getpid()}"
-        probe.touch()
+        probe.write_bytes(bytes(PROBE_BYTES))  # an empty file can be made on a full disk
         probe.unlink()
     except (OSError, RuntimeError):
         return False

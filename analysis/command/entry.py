@@ -7,7 +7,6 @@ fault; 130 interrupted.
 from __future__ import annotations
 
 import importlib
-import json
 import os
 import sys
 import traceback
@@ -15,6 +14,7 @@ from collections.abc import Sequence
 
 import click
 
+from sim import __version__
 from sim.errors import BrimlineError, Fault, ScenarioError
 
 DONE, FAILED, AT_FAULT, INTERRUPTED = 0, 1, 2, 130
@@ -63,7 +63,7 @@ class LazyCommands(click.Group):
 
 
 @click.command(cls=LazyCommands, epilog=CAUTION, context_settings={"help_option_names": ["-h", "--help"]})
-@click.version_option(package_name="brimline", prog_name="brimline")
+@click.version_option(__version__, prog_name="brimline")
 def brimline() -> None:
     """Closure rules in a network of critical-care units: simulate them, and find what selfish ones cost.
 
@@ -90,7 +90,7 @@ def run(arguments: list[str]) -> int:
     except CheckFailed:
         return FAILED
     except (KeyboardInterrupt, click.Abort):
-        say("interrupted; nothing was left half written")
+        say("interrupted")
         return INTERRUPTED
     except click.ClickException as error:
         return _usage_fault(error, as_json)
@@ -136,7 +136,9 @@ def _scenario_faults(error: ScenarioError, as_json: bool) -> int:
 
 
 def _put_faults(faults: Sequence[Fault]) -> None:
-    print(json.dumps({"faults": [vars(fault) for fault in faults]}, ensure_ascii=False))
+    from analysis.command.output import put_json
+
+    put_json({"faults": [vars(fault) for fault in faults]})
 
 
 def _failure(error: BrimlineError, as_json: bool) -> int:
@@ -148,5 +150,7 @@ def _failure(error: BrimlineError, as_json: bool) -> int:
     for reason in reasons:
         say(reason)
     if as_json:
-        print(json.dumps({"reasons": list(reasons)}, ensure_ascii=False))
+        from analysis.command.output import put_json
+
+        put_json({"reasons": list(reasons)})
     return AT_FAULT

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import functools
+import math
 import os
 import unicodedata
 from collections.abc import Callable, Mapping
@@ -24,7 +25,8 @@ LONGEST_THRESHOLD = 9  # digits
 class Request:
     """A scenario with every override of the command line applied, and how to run it.
 
-    confidence: as the command line gave it; the scenario's run table has the one in force.
+    confidence: as the command line gave it; the scenario's run table has the one in force. changes: what the
+    command line changed of the scenario, in words.
     """
 
     scenario: Any
@@ -34,6 +36,24 @@ class Request:
     engine: str | None
     out: Path | None
     as_json: bool
+    changes: tuple[str, ...] = ()
+
+    @property
+    def heading(self) -> dict[str, Any]:
+        """What every document begins with."""
+        return {"scenario": self.scenario.title, "changes": list(self.changes)}
+
+
+class FiniteRange(click.FloatRange):
+    """A number within bounds; neither NaN nor infinity."""
+
+    name = "number"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float:
+        number = click.FLOAT.convert(value, param, ctx)
+        if not math.isfinite(number):
+            self.fail(f"{value!r} is not a finite number", param, ctx)
+        return super().convert(number, param, ctx)
 
 
 def scenario_command(function: Callable[..., Any]) -> click.Command:
@@ -58,7 +78,7 @@ _OPTIONS = (
     click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of every draw."),
     click.option("--replications", type=click.IntRange(1, 1_000_000), help="Number of replications."),
     click.option(
-        "--confidence", type=click.FloatRange(0, 1, min_open=True, max_open=True), help="Of every interval."
+        "--confidence", type=FiniteRange(0, 1, min_open=True, max_open=True), help="Of every interval."
     ),
     click.option(
         "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
@@ -113,6 +133,7 @@ def _request(values: Mapping[str, Any]) -> Request:
         values["engine"],
         values["out"],
         values["as_json"],
+        _changes(values),
     )
 
 
@@ -200,6 +221,35 @@ def _per_unit(option: str, entries: tuple[str, ...], scenario: Any, faults: list
     return chosen
 
 
+def _changes(values: Mapping[str, Any]) -> tuple[str, ...]:
+    """What the command line changes of the scenario, in words."""
+    said = []
+    if values["policy"] is not None:
+        said.append(f"policy {values['policy']}")
+    said += [f"closure threshold {entry.replace('=', ' ')}" for entry in values["threshold"]]
+    said += [f"incoming threshold {entry.replace('=', ' ')}" for entry in values["incoming"]]
+    if values["demand"] is not None:
+        said.append(f"demand x {values['demand']:g}")
+    if values["target"] is not None:
+        said.append(f"target {values['target']:g} for every unit")
+    if values["exponential"]:
+        said.append("exponential counterpart (stays of the same means, no delay, constant demand)")
+    return tuple(said)
+
+
+def require_file_can_be_written(option: str, path: Path, request: Request) -> None:
+    """A fault where a file to be written is the scenario or its data, or stands where nothing can be written."""
+    source = Path(request.scenario.source.file)
+    own = [source, *(source.parent / name for name in request.scenario.source.data)]
+    rule, remedy = "", "choose another file"
+    if any(path.resolve() == one.resolve() for one in own):
+        rule = "must not be the scenario or one of its data files"
+    elif not path.parent.is_dir() or not os.access(path.parent, os.W_OK):
+        rule, remedy = "must be in a folder that can be written", "make the folder, or choose another"
+    if rule:
+        raise ScenarioError([Fault(None, option, rule, f"got {str(path)!r}", remedy)], str(source))
+
+
 def _writable(folder: Path | None, faults: list[Fault]) -> None:
     """Results must be writable before hours are spent on them."""
     if folder is None:
@@ -207,6 +257,7 @@ def _writable(folder: Path | None, faults: list[Fault]) -> None:
     above = folder
     while not above.exists() and above != above.parent:
         above = above.parent
-    if not above.is_dir() or not os.access(above, os.W_OK):
+    blocked = folder.is_symlink() and not folder.exists() or (folder / "earlier").is_file()
+    if blocked or not above.is_dir() or not os.access(above, os.W_OK):
         rule, remedy = "must be a folder that can be written", "choose another folder"
         faults.append(Fault(None, "--out", rule, f"got {str(folder)!r}", remedy))

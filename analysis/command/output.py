@@ -16,13 +16,21 @@ WRITTEN = ("result.json", "provenance.json", "table.csv", "control.csv", "payoff
 
 
 def put_json(document: Any) -> None:
-    """The one document on standard output."""
-    print(to_json(document))
+    """The one document on standard output; names in escapes where the output cannot take them as written."""
+    utf8 = (sys.stdout.encoding or "").lower().replace("-", "").startswith("utf")
+    print(to_json(document, ensure_ascii=not utf8))
 
 
-def to_json(document: Any) -> str:
-    """JSON with no NaN and no infinity, names as they are written."""
-    return json.dumps(document, ensure_ascii=False, allow_nan=False, indent=1)
+def to_json(document: Any, *, ensure_ascii: bool = False) -> str:
+    """JSON with no NaN and no infinity."""
+    return json.dumps(document, ensure_ascii=ensure_ascii, allow_nan=False, indent=1)
+
+
+def put_heading(document: dict[str, Any]) -> None:
+    """What was run: the scenario's title, and what the command line changed of it."""
+    put_text(document["scenario"] or "(no title)")
+    if document["changes"]:
+        put_text("Changed for this run: " + "; ".join(document["changes"]) + ".")
 
 
 def console() -> Any:
@@ -112,6 +120,8 @@ def prepare_folder(folder: Path) -> Path:
 
 
 def write_result(folder: Path, document: Any, provenance: dict[str, Any]) -> None:
-    """Writes `result.json` and `provenance.json`."""
+    """Writes `result.json` and `provenance.json`, each whole or not at all."""
     for name, content in (("result.json", document), ("provenance.json", provenance)):
-        (folder / name).write_text(to_json(content) + "\n", encoding="utf-8")
+        half = folder / f"{name}.part"
+        half.write_text(to_json(content) + "\n", encoding="utf-8")
+        half.replace(folder / name)

@@ -76,10 +76,13 @@ def progress(label: str, total: int, unit: str) -> Any:
     return (_Bar if sys.stderr.isatty() else _Lines)(label, total, unit)
 
 
-class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `for`
-    """The replies as they come; Ctrl-C ends them quietly, and `interrupted` tells that it did.
+_ENDING = (signal.SIGINT, signal.SIGTERM)
 
-    Inside the `with` block Ctrl-C can break only the wait for the next reply, never the handling of one, so
+
+class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `for`
+    """The replies as they come; Ctrl-C (or a polite request to end) ends them, and `interrupted` tells that it did.
+
+    Inside the `with` block a signal can break only the wait for the next reply, never the handling of one, so
     nothing that has arrived is lost.
     """
 
@@ -89,11 +92,12 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
         self.interrupted = False
 
     def __enter__(self) -> until_interrupted:
-        self._before = signal.signal(signal.SIGINT, self._on_interrupt)
+        self._before = {one: signal.signal(one, self._on_interrupt) for one in _ENDING}
         return self
 
     def __exit__(self, *_: object) -> None:
-        signal.signal(signal.SIGINT, self._before)
+        for one, handler in self._before.items():
+            signal.signal(one, handler)
 
     def __iter__(self) -> Iterator[Any]:
         return self

@@ -12,7 +12,7 @@ from analysis.command.progress import progress, until_interrupted
 from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
-from sim.replicate import Failure, Pace, pace_of, replicate
+from sim.replicate import Failure, Pace, Run, pace_of, replicate
 from sim.workers import Workers, available_cores, local_workers
 
 WORTH_PROCESSES_SECONDS = 3.0
@@ -123,16 +123,30 @@ def run_replications(request: Request, policies: Sequence[Any], *, label: str, t
                 failures.append(reply)
                 say(f"failed: {reply}")
             bar.advance(len(reply.cells) if isinstance(reply, Failure) else len(reply))
-    if replies.interrupted:
-        say("interrupted; what was computed is kept")
     return Ran(planned.engine, failures, replies.interrupted)
+
+
+def collect_runs(request: Request, *, label: str, least: int = 1) -> tuple[list[Run], Ran]:
+    """The finished runs of the request's policy by replication, at least so many, and how they were run."""
+    runs: list[Run] = []
+    ran = run_replications(
+        request,
+        [request.policy],
+        label=label,
+        take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
+    )
+    require(len(runs), ran.interrupted, least=least)
+    return sorted(runs, key=lambda run: run.replication), ran
 
 
 def require(done: int, interrupted: bool, *, least: int = 1) -> None:
     """A result needs at least so many finished replications; with fewer the command ends here."""
     if done >= least:
+        if interrupted:
+            say(f"interrupted; {done} whole replications are kept")
         return
     if interrupted:
+        say("interrupted before enough replications were finished; there is nothing to show")
         raise Interrupted
     raise RunError(f"{done} replications were finished, but at least {least} are needed to show anything")
 

@@ -8,16 +8,18 @@ from typing import Any
 import click
 
 from analysis.command.entry import say
-from analysis.command.options import Request, scenario_command
+from analysis.command.options import Request, require_file_can_be_written, scenario_command
 from analysis.command.output import (
     interval,
     prepare_folder,
     put_caution,
+    put_heading,
     put_json,
     put_table,
     put_text,
     write_result,
 )
+from sim.errors import Fault, ScenarioError
 
 
 @click.option(
@@ -35,23 +37,16 @@ def simulate(
 ) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
-    from analysis.command.running import finish, require, run_replications
+    from analysis.command.running import collect_runs, finish
     from analysis.simulation import per_replication_measures, summarise
     from sim.record import hash_records
     from sim.scenario.describe import advice
 
     begun = started()
+    _check_files(request, trace, intake_out)
     for said in advice(request.scenario):
         say(f"advice: {said}")
-    runs: list[Any] = []
-    ran = run_replications(
-        request,
-        [request.policy],
-        label="simulate",
-        take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
-    )
-    require(len(runs), ran.interrupted)
-    runs.sort(key=lambda run: run.replication)
+    runs, ran = collect_runs(request, label="simulate")
     result = summarise(
         [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
     )
@@ -63,18 +58,15 @@ def simulate(
     } | ran.to_dict()  # fmt: skip
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
-    if request.out is not None:
-        write_result(
-            prepare_folder(request.out),
-            document,
-            provenance(request, "simulate", begun, engine=ran.engine.name),
-        )
-    if trace is not None or intake_out is not None:  # perhaps into that very folder
-        _write_trace(request, ran.engine.name, replication, trace, intake_out)
     if request.as_json:
         put_json(document)
     else:
         _show(document, request)
+    if request.out is not None:
+        origin = provenance(request, "simulate", begun, engine=ran.engine.name)
+        write_result(prepare_folder(request.out), document, origin)
+    if trace is not None or intake_out is not None:  # perhaps into that very folder
+        _write_trace(request, ran.engine.name, replication, trace, intake_out)
     finish(ran)
 
 
@@ -82,17 +74,26 @@ command = scenario_command(simulate)
 
 
 def _heading(request: Request) -> dict[str, Any]:
-    return {
-        "scenario": request.scenario.title,
+    return request.heading | {
         "policy": request.policy.name,
         "thresholds": request.policy.thresholds,
     }
 
 
+def _check_files(request: Request, trace: Path | None, intake_out: Path | None) -> None:
+    """Faults of the files to be written, before anything runs."""
+    if trace is not None and intake_out is not None and trace.resolve() == intake_out.resolve():
+        rule, remedy = "must differ from --trace", "choose another file"
+        raise ScenarioError([Fault(None, "--intake-out", rule, f"got {str(intake_out)!r} twice", remedy)])
+    for option, path in (("--trace", trace), ("--intake-out", intake_out)):
+        if path is not None and (request.out is None or path.parent.resolve() != request.out.resolve()):
+            require_file_can_be_written(option, path, request)
+
+
 def _write_trace(
     request: Request, engine: str, replication: int, trace: Path | None, intake_out: Path | None
 ) -> None:
-    from sim.intake import write_intake
+    from sim.intake import write_intake, write_staffing
     from sim.replicate import trace_replication
 
     events, intake = trace_replication(request.scenario, request.policy, replication, engine=engine)
@@ -101,13 +102,17 @@ def _write_trace(
     if intake_out is not None:
         groups = [group.group for group in request.scenario.patients]
         write_intake(intake, intake_out, groups=groups, units=list(request.scenario.unit_names))
+        if intake.staffing is not None:
+            write_staffing(
+                intake.staffing, intake_out.with_suffix(".staffing.csv"), request.scenario.unit_names
+            )
 
 
 def _show(document: dict[str, Any], request: Request) -> None:
     from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 
+    put_heading(document)
     put_text(
-        document["scenario"] or "(no title)",
         f"Policy: {document['policy']}; closure thresholds "
         + ", ".join(f"{name} {k}" for name, k in document["thresholds"].items()),
         f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, "

@@ -234,7 +234,7 @@ def test_of_profiles_that_turn_equally_few_away_the_one_with_fewest_transfers_is
     [
         ([0.1, 0.4], [1.5, 0.3], None, "no equilibrium"),
         ([0.1, 0.1], [0.2, 0.9], (1,), "no more patients away"),
-        ([0.1, 0.4], [0.3, 0.3], (1,), "wins at any weight"),
+        ([0.1, 0.4], [0.3, 0.3], (1,), "better at any weight"),
     ],
 )
 def test_where_no_weight_turns_the_verdict_the_reason_is_given(turned_away, transfers, worst, reason):
