@@ -1,8 +1,19 @@
-"""The exact Markov chain of a network with exponential stays, built from the scenario and nothing else."""
+"""The exact Markov chain of a network with stays of exponential phases, built from the scenario and nothing else."""
 
 from analysis.chain.exact import chain_size, solve
+from analysis.chain.fitting import PhaseFit, with_phase_fits
 from analysis.chain.limits import ChainTooLarge, Limits
 from analysis.chain.measures import ExactResult
 from analysis.chain.scope import OutOfScope, refusals
 
-__all__ = ["ChainTooLarge", "ExactResult", "Limits", "OutOfScope", "chain_size", "refusals", "solve"]
+__all__ = [
+    "ChainTooLarge",
+    "ExactResult",
+    "Limits",
+    "OutOfScope",
+    "PhaseFit",
+    "chain_size",
+    "refusals",
+    "solve",
+    "with_phase_fits",
+]

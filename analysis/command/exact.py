@@ -6,15 +6,21 @@ from typing import Any
 
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.phase_fit import fitted, option, show_fits
 
 
-def exact(request: Request) -> None:
-    """Measures from the exact Markov chain, where the scenario is within its scope (--exponential brings it there)."""
+@option
+def exact(request: Request, phase_fit: int | None) -> None:
+    """Measures from the exact Markov chain, where the scenario is within its scope (--exponential brings it there).
+
+    With --phase-fit N they are exact for the fitted stays, and near for the scenario's own.
+    """
     from analysis.chain import solve
     from analysis.command.provenance import provenance, started
 
     begun = started()
-    document = solve(request.scenario, request.policy).to_dict()
+    request, told = fitted(request, phase_fit)
+    document = solve(request.scenario, request.policy).to_dict() | told
     if request.out is not None:
         write_result(
             prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain")
@@ -32,6 +38,7 @@ def _show(document: dict[str, Any]) -> None:
     from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 
     put_text(document["scenario"] or "(no title)", f"Exact Markov chain, {document['states']} states", "")
+    show_fits(document)
     units = document["units"]
     put_table(
         "By unit (rates marked h count the unit's own population, wherever treated)",

@@ -21,18 +21,21 @@ from analysis.command.output import (
     put_text,
     write_result,
 )
+from analysis.command.phase_fit import fitted, option, show_fits
 
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
 
 
+@option
 @click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
 @click.option("--tolerance", type=click.FloatRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
-def game(request: Request, exact: bool, tolerance: float) -> None:
+def game(request: Request, exact: bool, tolerance: float, phase_fit: int | None) -> None:
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
+    With --exact, --phase-fit N gives near-exact payoffs for stays that the chain cannot count.
     """
     from analysis.command.provenance import provenance, started
     from analysis.command.running import finish
@@ -40,13 +43,16 @@ def game(request: Request, exact: bool, tolerance: float) -> None:
     from analysis.games import analyse
 
     begun = started()
+    if phase_fit is not None and not exact:
+        raise click.UsageError("--phase-fit is for the exact chain; add --exact, or leave it out to simulate")
+    request, fits = fitted(request, phase_fit)
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
     analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
     document = {
         "scenario": request.scenario.title,
         "method": "exact" if exact else "simulated",
     } | game_document(analysis)
-    document |= told
+    document |= told | fits
     if request.out is not None:
         _write(
             request,
@@ -148,6 +154,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         document["scenario"] or "(no title)",
         f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
     )
+    show_fits(document)
     if not analysis.is_exact:
         put_text(
             f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."

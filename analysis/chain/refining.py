@@ -1,0 +1,105 @@
+"""Phases moved about so that the distribution function comes nearer, while three moments stay met.
+
+Every acyclic phase-type stay can be written as a Coxian one (Cumani, "On the canonical representation of
+homogeneous Markov processes modelling failure-time distributions", Microelectronics and Reliability 22, 1982,
+from memory). All phases but the last two are free; these two then take up the moments that are left. So the
+moments hold at every step of the search, which is for the least squares at quantiles, a phase more at a time.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+
+from analysis.chain.candidates import two_erlangs_in_a_row
+from analysis.chain.phases import Moments
+from sim import stays
+from sim.durations import Coxian, Duration
+
+QUANTILES = 64
+STEPS = 50  # of the search, for each number that is free
+LENGTHS, SHARES = (0.005, 0.02, 0.06, 0.15, 0.4, 1.0), (0.99, 0.9, 0.6, 0.3)  # a further phase to begin with
+IMPOSSIBLE = 1e3
+STIFFEST = 1e5  # the most that rates may differ by
+
+Front = tuple[
+    tuple[float, float], ...
+]  # of each phase: its mean over that of the stay, the share that goes on
+
+
+def refined(stay: Duration, target: Moments, most_phases: int) -> Iterator[Duration]:
+    """Coxian stays of 3, 4, ... `most_phases` phases with the moments `target`, each near `stay`.
+
+    None where no phase can be put before two others without losing a moment.
+    """
+    goal = _Goal(stay, target)
+    fronts: list[Front] = [()]
+    for _ in range(3, most_phases + 1):
+        fronts = [goal.moved(front) for front in _starts(fronts, goal)]
+        if not fronts:
+            return
+        yield min(goal.whole(min(fronts, key=goal)), key=goal.off)
+
+
+def _starts(fronts: Sequence[Front], goal: _Goal) -> Iterator[Front]:
+    """The best way to make any of the fronts a phase longer, for each share that goes on from the new phase."""
+    for share in SHARES:
+        longer = ((*front[:at], (mean, share), *front[at:])
+                  for front in fronts for mean in LENGTHS for at in {0, len(front)})  # fmt: skip
+        best = min(longer, key=goal)
+        if goal(best) < IMPOSSIBLE:
+            yield best
+
+
+class _Goal:
+    """What to make small: the squared distance at quantiles, averaged, at the best choice of the last phases."""
+
+    def __init__(self, stay: Duration, target: Moments) -> None:
+        self.target = target
+        self.shares = (np.arange(QUANTILES) + 0.5) / QUANTILES
+        self.times = stay.distribution().quantile(self.shares)
+
+    def __call__(self, front: Front) -> float:
+        return min(map(self.off, self.whole(front)), default=IMPOSSIBLE)
+
+    def off(self, other: Duration) -> float:
+        """The distance of one Coxian stay."""
+        reached = stays.Coxian(other.rates, other.goes_on).cdf(self.times)
+        return 100 * float(np.mean((reached - self.shares) ** 2))
+
+    def whole(self, front: Front) -> Iterator[Duration]:
+        """The front with every pair of last phases that gives the moments.
+
+        After a phase of mean m that a share s survives, E[X^n] has (E[X^n] - n m E[X^(n - 1)]) / s left.
+        """
+        first, second, third = self.target
+        for phase, share in front:
+            mean = phase * self.target.first
+            left = first - mean, second - 2 * mean * first, third - 3 * mean * second
+            first, second, third = (moment / share for moment in left)
+            if min(first, second, third) <= 0:
+                return
+        for pair in two_erlangs_in_a_row(first, second / first**2 - 1, third / first**3, 1, 1):
+            rates = tuple(1 / (mean * self.target.first) for mean, _ in front) + pair.rates
+            goes_on = tuple(share for _, share in front) + pair.goes_on
+            if max(rates) < STIFFEST * min(rates):
+                yield Coxian.model_construct(family="coxian", rates=rates, goes_on=goes_on)
+
+    def moved(self, front: Front) -> Front:
+        """The front after the search from it (Nelder & Mead, Computer Journal 7, 1965)."""
+        from scipy.optimize import minimize
+
+        start = np.array([(math.log(mean), math.log(share / (1 - share))) for mean, share in front]).ravel()
+        found = minimize(
+            lambda values: self(_front(values)), start, method="Nelder-Mead",
+            options={"maxfev": STEPS * len(start), "xatol": 1e-3, "fatol": 1e-7, "adaptive": True},
+        )  # fmt: skip
+        return _front(found.x)
+
+
+def _front(values: Sequence[float]) -> Front:
+    """Phases from logarithms of their means and log odds of their shares."""
+    shares = 1 / (1 + np.exp(-np.clip(values[1::2], -16, 16)))
+    return tuple(zip(np.exp(np.clip(values[::2], -16, 16)).tolist(), shares.tolist(), strict=True))
