@@ -9,15 +9,18 @@ the two bypassed with some probability, reaches all three moments that any acycl
 
 from __future__ import annotations
 
+import functools
 import math
 from collections.abc import Iterator
 
-from numpy.polynomial import Polynomial
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
 
 from analysis.chain.phases import Moments
 from sim.durations import Coxian, Duration, Erlang, ErlangPartInDays, Hyperexponential, MixtureInDays
 
 ROUNDING = 1e-8
+Coefficients = NDArray[np.float64]
 
 
 def candidates(target: Moments, most_phases: int) -> Iterator[Duration]:
@@ -26,9 +29,11 @@ def candidates(target: Moments, most_phases: int) -> Iterator[Duration]:
     square, cube = target.second / mean**2 - 1, target.third / mean**3
     yield Erlang.model_construct(family="erlang", mean=mean, stages=most_phases)
     yield from _two_moments(mean, square, most_phases)
+    if most_phases >= 2:
+        yield from two_phases_in_a_row(target)
     for first in range(1, most_phases):
         for second in range(1, most_phases - first + 1):
-            yield from two_erlangs_in_a_row(mean, square, cube, first, second)
+            yield from _two_erlangs_in_a_row(mean, square, cube, first, second)
     for stages in range(1, most_phases // 2 + 1):
         yield from _either_of_two_erlangs(mean, square, cube, stages)
 
@@ -55,7 +60,26 @@ def _row(early: float, first: int, share: float, late: float, second: int) -> Du
     return Coxian.model_construct(family="coxian", rates=rates, goes_on=goes_on)
 
 
-def two_erlangs_in_a_row(
+def two_phases_in_a_row(moments: Moments) -> Iterator[Duration]:
+    """The stays of two phases, the second after the first with some probability, of those three moments.
+
+    With f_n = E[X^n] / n! and phases of means a and b: f_2 = (a + b) f_1 - a b, f_3 = (a + b) f_2 - a b f_1.
+    """
+    first, second, third = moments.first, moments.second / 2, moments.third / 6
+    if abs(second - first**2) < ROUNDING * second:  # as of an exponential stay
+        return
+    total = (third - first * second) / (second - first**2)
+    product = total * first - second
+    gap = total**2 - 4 * product
+    if gap < 0 or total <= 0 or product <= 0:
+        return
+    long = (total + math.sqrt(gap)) / 2
+    for early, late in ((long, product / long), (product / long, long)):
+        if 0 < first - early <= late:
+            yield _row(early, 1, (first - early) / late, late, 1)
+
+
+def _two_erlangs_in_a_row(
     mean: float, square: float, cube: float, first: int, second: int
 ) -> Iterator[Duration]:
     """Every `_row` of those stages with the three moments given (square: of the cv; cube: E[X^3] / E[X]^3).
@@ -64,15 +88,33 @@ def two_erlangs_in_a_row(
     stage's mean x of the first; and a second part of probability p and k stages of mean y has moments
     p k y, p k (k + 1) y^2 and p k (k + 1) (k + 2) y^3, which determines x.
     """
-    x, k = Polynomial([0.0, 1.0]), second
-    once, variance, skew = 1 - first * x, square - first * x**2, cube - 3 * square - 1 - 2 * first * x**3
-    twice, thrice = variance + once**2, skew + 3 * once * variance + once**3
-    for root in ((k + 1) * thrice * once - (k + 2) * twice**2).roots():
+    k = second
+    once, variance, skew = (
+        [1.0, -first],
+        [square, 0.0, -first],
+        [cube - 3 * square - 1, 0.0, 0.0, -2.0 * first],
+    )
+    twice = _sum(variance, _product(once, once))
+    thrice = _sum(skew, 3 * _product(once, variance), _product(once, once, once))
+    equation = _sum((k + 1) * _product(thrice, once), -(k + 2) * _product(twice, twice))
+    for root in np.roots(equation[::-1]):
         early = float(root.real)
-        if abs(root.imag) < ROUNDING and 0 < early < 1 / first and twice(early) > 0:
-            left = once(early)
-            late = max(twice(early) / (left * (k + 1)), left / k)
+        left, spread = np.polyval(once[::-1], early), np.polyval(twice[::-1], early)
+        if abs(root.imag) < ROUNDING and early > 0 and left > 0 and spread > 0:
+            late = max(spread / (left * (k + 1)), left / k)
             yield _row(mean * early, first, left / (k * late), mean * late, k)
+
+
+def _sum(*polynomials: ArrayLike) -> Coefficients:
+    """Polynomials as coefficients from the constant up, added."""
+    total = np.zeros(max(map(np.size, polynomials)))
+    for polynomial in polynomials:
+        total[: np.size(polynomial)] += polynomial
+    return total
+
+
+def _product(*polynomials: ArrayLike) -> Coefficients:
+    return functools.reduce(np.convolve, polynomials)
 
 
 def _either_of_two_erlangs(mean: float, square: float, cube: float, stages: int) -> Iterator[Duration]:

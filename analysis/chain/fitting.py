@@ -24,10 +24,10 @@ from sim.durations import Duration
 from sim.scenario import Scenario
 
 MOST_PHASES = 20
-MOST_REFINED = 4  # phases of a search for the nearest distribution function; more take long and add little
+MOST_REFINED = 5  # phases of a search for the nearest distribution function; more take long and add little
 NEAR = 0.002  # a largest distance that no search is needed for
 MET = 1e-8  # relative; what differs by less is the same moment
-GRID = 2000  # points at which distribution functions are compared; so their distance is right to 1 / GRID
+ROUGH, GRID = 200, 2000  # points at which distribution functions are compared, to choose and to tell
 
 
 @dataclass(frozen=True)
@@ -103,8 +103,15 @@ def fit_stay(stay: Duration, most_phases: int) -> PhaseFit:
 
 
 def _best(stay: Duration, others: Sequence[Duration]) -> PhaseFit:
-    fits = [_compared(stay, other) for other in others]
-    return min(fits, key=lambda fit: (round(fit.largest_distance, 3), fit.phases))
+    """The one nearest in distribution, looked at roughly where there are several to choose from."""
+    return _compared(
+        stay, min(others, key=lambda other: (round(_largest_distance(stay, other, ROUGH), 3), _phases(other)))
+    )
+
+
+def _phases(stay: Duration) -> int:
+    book = PhaseBook()
+    return len(book.reached(book.starts(stay)))
 
 
 def nearest_in_moments(target: Moments, most_phases: int) -> list[Duration]:
@@ -173,19 +180,17 @@ def _shape(moments: Moments) -> Shape:
 
 
 def _compared(stay: Duration, other: Duration) -> PhaseFit:
-    book = PhaseBook()
-    phases = len(book.reached(book.starts(other)))
     target, fit = _shape(stay_moments(stay)), _shape(stay_moments(other))
-    return PhaseFit(other, phases, target, fit, _largest_distance(stay, other))
+    return PhaseFit(other, _phases(other), target, fit, _largest_distance(stay, other, GRID))
 
 
-def _largest_distance(stay: Duration, other: Duration) -> float:
-    """The largest distance of two distribution functions, the second one continuous.
+def _largest_distance(stay: Duration, other: Duration, points: int) -> float:
+    """The largest distance of two distribution functions, the second one continuous; right to 1 / points.
 
-    Looked for at and just below the quantiles of the first, which has all its steps there.
+    Looked for at and just below quantiles of the first, which has all its steps there.
     """
     first, second = stay.distribution(), other.distribution()
-    at = first.quantile((np.arange(GRID) + 0.5) / GRID)
+    at = first.quantile((np.arange(points) + 0.5) / points)
     reached = second.cdf(at)
     off = [first.cdf(at) - reached, first.cdf(np.nextafter(at, -np.inf)) - reached]
     return float(np.abs(off).max())
