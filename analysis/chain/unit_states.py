@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import itertools
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
+
+Counts = tuple[int, ...]  # patients by phase
+Change = Mapping[int, int]  # phase -> so many patients more
 
 COUNTED = 10**15  # no chain of so many states is ever built, so nobody counts further
 
@@ -72,13 +76,13 @@ def _ways(patients: int, phases: int) -> int:
 
 
 def _spread(patients: int, phases: int) -> Iterator[tuple[int, ...]]:
-    """Every way to have so many patients among so many phases."""
+    """Every way to have so many patients among so many phases: bars between them, in rising order."""
     if phases <= 1:
         yield (patients,) * phases
         return
-    for first in range(patients + 1):
-        for others in _spread(patients - first, phases - 1):
-            yield (first, *others)
+    places = patients + phases - 1
+    for bars in itertools.combinations(range(places), phases - 1):
+        yield tuple(after - before - 1 for before, after in itertools.pairwise((-1, *bars, places)))
 
 
 @dataclass(frozen=True)
@@ -110,12 +114,15 @@ def unit_states(space: UnitSpace) -> UnitStates:
     """The states of a unit, state 0 the empty one; the arrays are shared and must not be written to."""
     states = [(counts, gates) for load, gates in space.levels() for counts in _spread(load, space.phases)]
     place = {state: index for index, state in enumerate(states)}
-
-    def table(changes: list[dict[int, int]]) -> NDArray[np.int64]:
-        rows = [[place.get(_changed(space, *state, change), -1) for change in changes] for state in states]
-        return np.array(rows, dtype=np.int64).reshape(len(states), len(changes))
-
     counts = np.array([counts for counts, _ in states], dtype=np.int64).reshape(len(states), space.phases)
+
+    def table(changes: list[Change]) -> NDArray[np.int64]:
+        found = np.full((len(states), len(changes)), -1, dtype=np.int64)
+        for column, change in enumerate(changes):
+            for row in np.flatnonzero(_possible(counts, change, space.most)):
+                found[row, column] = place.get(_changed(space, *states[row], change), -1)
+        return found
+
     return UnitStates(
         load=counts.sum(axis=1),
         counts=counts,
@@ -127,9 +134,13 @@ def unit_states(space: UnitSpace) -> UnitStates:
     )
 
 
-def _changed(
-    space: UnitSpace, counts: tuple[int, ...], gates: Gates, change: dict[int, int]
-) -> tuple[tuple[int, ...], Gates]:
+def _possible(counts: NDArray[np.int64], change: Change, most: int) -> NDArray[np.bool_]:
+    """Where no phase is left with fewer than no patients, nor the unit with too many, shape (states,)."""
+    room = counts.sum(axis=1) + sum(change.values()) <= most
+    return np.all([room, *(counts[:, phase] + more >= 0 for phase, more in change.items())], axis=0)
+
+
+def _changed(space: UnitSpace, counts: Counts, gates: Gates, change: Change) -> tuple[Counts, Gates]:
     """Counts and gates after so many more patients of some phases; a step leaves the gates as they are."""
     changed = list(counts)
     for phase, more in change.items():
