@@ -149,12 +149,11 @@ def _third(stay: Duration, square: float) -> float:
             order = _weibull_order(stay)
             return math.exp(math.lgamma(1 + 3 / order) - 3 * math.lgamma(1 + 1 / order))
         case "empirical":
-            known = stay.distribution()
-            mean = known.mean()
-            return (
-                math.fsum((value / mean) ** 3 for value in known.values) / len(known.values) if mean else 0.0
-            )
-    return 1.0  # constant
+            values, mean = stay.distribution().values, stay.distribution().mean()
+            return math.fsum((value / mean) ** 3 for value in values) / len(values) if mean else 0.0
+        case "constant":
+            return 1.0
+    raise NotImplementedError(f"the third moment of a stay of family {stay.family!r} is not known here")
 
 
 def _weibull_order(stay: Duration) -> float:

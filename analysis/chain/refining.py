@@ -25,9 +25,7 @@ JUMPS = 16  # of which more than are counted come within one tick with a chance 
 IMPOSSIBLE = 1e3
 STIFFEST = 1e5  # the most that rates may differ by
 
-Front = tuple[
-    tuple[float, float], ...
-]  # of each phase: its mean over that of the stay, the share that goes on
+Front = tuple[tuple[float, float], ...]  # of each phase: mean over that of the stay, share that goes on
 
 
 def refined(stay: Duration, target: Moments, most_phases: int) -> Iterator[Duration]:
@@ -60,7 +58,7 @@ class _Goal:
     def __init__(self, stay: Duration, target: Moments) -> None:
         known = stay.distribution()
         first, last = np.maximum(known.quantile([0.005, 0.999]), 1e-3 * target.first)
-        self.target, self.octaves = target, math.ceil(math.log2(last / first))
+        self.target, self.octaves = target, max(math.ceil(math.log2(last / first)), 1)
         parts = math.ceil(POINTS / self.octaves)
         self.base = first * 2.0 ** (np.arange(parts) / parts)
         reached = known.cdf(self.base * 2.0 ** np.arange(self.octaves)[:, None])

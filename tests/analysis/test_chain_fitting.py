@@ -17,7 +17,7 @@ from analysis.chain import OutOfScope, chain_size, refusals, solve, with_phase_f
 from analysis.chain.fitting import MOST_PHASES, fit_stay, nearest_in_moments, stay_moments
 from analysis.chain.phases import Moments
 from analysis.verification import verify
-from sim.durations import Stay
+from sim.durations import FAMILIES, Mixture, Stay
 from sim.replicate import replicate
 from sim.scenario import Scenario, read_scenario
 from tests.analysis.conftest import written
@@ -87,6 +87,11 @@ def test_moments_of_recorded_and_of_constant_stays(tmp_path):
     fit = fit_stay(recorded, 6)
     assert stay_moments(fit.stay) == pytest.approx(expected, rel=1e-8)
     assert fit.target.skewness == pytest.approx(fit.fit.skewness, rel=1e-7)
+
+
+def test_every_family_has_its_moments_here():
+    covered = {target.family for target in TARGETS} | {"exponential", "constant", "empirical"}
+    assert covered == {family.__name__.lower() for family in (*FAMILIES, Mixture)}
 
 
 # ---- fits ----
