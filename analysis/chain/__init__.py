@@ -1,6 +1,7 @@
-"""The exact Markov chain of a network with exponential stays, built from the scenario and nothing else."""
+"""The exact Markov chain of a network with stays of exponential phases, built from the scenario and nothing else."""
 
 from analysis.chain.exact import chain_size, solve
+from analysis.chain.fitting import PhaseFit, with_phase_fits
 from analysis.chain.limits import ChainTooLarge, Limits
 from analysis.chain.measures import ExactResult
 from analysis.chain.scope import OutOfScope, refusals
@@ -11,9 +12,11 @@ __all__ = [
     "ExactResult",
     "Limits",
     "OutOfScope",
+    "PhaseFit",
     "chain_size",
     "refusals",
     "solve",
     "solve_table",
     "solved_together",
+    "with_phase_fits",
 ]

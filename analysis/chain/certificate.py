@@ -22,8 +22,8 @@ def certify(chain: NetworkChain, probability: Numbers) -> None:
     """Raises RunError unless `probability`, shape (states,), solves the chain.
 
     It must be a distribution; the flow into each state must equal that out of it, relative to itself, by the
-    transitions and not by what the elimination made of them; and in each unit the admissions a day of each
-    discharge rate must be the mean number of such patients times the rate (Little's law).
+    transitions and not by what the elimination made of them; and in each unit the patients a day who begin a
+    phase of their stay must be the mean number of patients in it times the rate at which it ends (Little's law).
     """
     if not (probability >= 0).all():
         raise RunError("the chain's answer holds an undefined probability; please report this scenario")
@@ -31,7 +31,7 @@ def certify(chain: NetworkChain, probability: Numbers) -> None:
     _equal("the flows into and out of a state differ", *_state_flows(chain.moves, probability))
     for view in chain.units:
         complaint = f"admissions and discharges of {view.layout.name} differ"
-        _equal(complaint, *_unit_flows(view, chain, probability))
+        _equal(complaint, *_phase_flows(view, chain, probability))
 
 
 def _state_flows(moves: Transitions, probability: Numbers) -> tuple[Numbers, Numbers]:
@@ -41,14 +41,16 @@ def _state_flows(moves: Transitions, probability: Numbers) -> tuple[Numbers, Num
     return into, np.bincount(moves.origin, weights=flow, minlength=moves.states)
 
 
-def _unit_flows(view: UnitView, chain: NetworkChain, probability: Numbers) -> tuple[Numbers, Numbers]:
-    """Admissions and discharges a day by discharge rate, (rates,) each."""
-    admitted = np.zeros(len(view.layout.discharge_rates))
+def _phase_flows(view: UnitView, chain: NetworkChain, probability: Numbers) -> tuple[Numbers, Numbers]:
+    """Patients a day who begin a phase, by admission or after another, and who end it, (phases,) each."""
+    ended = (probability @ view.own.counts[view.place]) * np.array(view.layout.phase_rates)
+    begun = np.zeros(len(ended))
     for home, per_day in view.layout.arrivals.items():
         share = chain.homes[home].admitted[view.layout.name]
-        admitted += np.array(per_day) * (share @ probability)
-    patients = probability @ view.own.counts[view.place]
-    return admitted, patients * np.array(view.layout.discharge_rates)
+        begun += np.array(per_day) * (share @ probability)
+    for (phase, after), share in view.layout.onward.items():
+        begun[after] += share * ended[phase]
+    return begun, ended
 
 
 def is_certified(observed: Observed) -> NDArray[np.bool_]:

@@ -19,7 +19,7 @@ ELIMINATED = 2_000  # states up to which the elimination is quick enough where r
 
 
 def solve(scenario: Scenario, policy: Policy, *, limits: Limits = DEFAULT) -> ExactResult:
-    """The exact long-run measures of a network whose stays are all exponential.
+    """The exact long-run measures of a network whose stays are all made of exponential phases.
 
     scenario: the network. policy: the rules that it is run by. limits: the largest chain to attempt.
     Returns the measures, certified by the chain's own balance equations. Chains of occupancies alone are

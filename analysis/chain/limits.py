@@ -7,8 +7,8 @@ from dataclasses import dataclass
 from sim.errors import BrimlineError
 
 REMEDY = (
-    "take fewer units or beds, lower thresholds, or groups that share one mean stay (each further mean in a "
-    "unit multiplies its states), or simulate"
+    "take fewer units or beds, lower thresholds, or groups that share one mean stay (each further mean, "
+    "or phase of a stay, in a unit multiplies its states), or simulate"
 )
 
 

@@ -90,9 +90,9 @@ def _homes(scenario: Scenario, policy: Policy, views: Sequence[UnitView]) -> Hom
 
 
 def _moves(views: Sequence[UnitView], strides: Sequence[int], homes: Homes) -> Moves:
-    """Every admission and discharge, from any state whether reached or not."""
+    """Every admission, discharge and step to a next phase, from any state whether reached or not."""
     none = np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64), np.empty(0)
-    parts = (none, *_admissions(views, strides, homes), *_discharges(views, strides))
+    parts = (none, *_admissions(views, strides, homes), *_discharges(views, strides), *_steps(views, strides))
     origin, target, rate = map(np.concatenate, zip(*parts, strict=True))
     return origin, target, rate
 
@@ -102,19 +102,31 @@ def _admissions(views: Sequence[UnitView], strides: Sequence[int], homes: Homes)
         for home, per_day in view.layout.arrivals.items():
             share = homes[home].admitted[view.layout.name]
             origin = np.flatnonzero(share)
-            for rate, arrivals in enumerate(per_day):
+            for phase, arrivals in enumerate(per_day):
                 if arrivals > 0:
-                    target = _target(view, stride, origin, view.own.after_admission[:, rate])
+                    target = _target(view, stride, origin, view.own.after_admission[:, phase])
                     yield origin, target, arrivals * share[origin]
 
 
 def _discharges(views: Sequence[UnitView], strides: Sequence[int]) -> Iterator[Moves]:
     for view, stride in zip(views, strides, strict=True):
-        for rate, per_day in enumerate(view.layout.discharge_rates):
-            patients = view.own.counts[view.place, rate]
-            origin = np.flatnonzero(patients)
-            target = _target(view, stride, origin, view.own.after_discharge[:, rate])
-            yield origin, target, per_day * patients[origin]
+        for phase, per_day in enumerate(view.layout.discharge_rates):
+            if per_day > 0:
+                yield _ended(view, stride, phase, per_day, view.own.after_discharge[:, phase])
+
+
+def _steps(views: Sequence[UnitView], strides: Sequence[int]) -> Iterator[Moves]:
+    for view, stride in zip(views, strides, strict=True):
+        for place, (phase, after) in enumerate(view.layout.space.steps):
+            per_day = view.layout.phase_rates[phase] * view.layout.onward[phase, after]
+            yield _ended(view, stride, phase, per_day, view.own.after_step[:, place])
+
+
+def _ended(view: UnitView, stride: int, phase: int, per_day: float, after: Places) -> Moves:
+    """The moves of patients who leave a phase in one way, each `per_day`. after: as for `_target`."""
+    patients = view.own.counts[view.place, phase]
+    origin = np.flatnonzero(patients)
+    return origin, _target(view, stride, origin, after), per_day * patients[origin]
 
 
 def _target(view: UnitView, stride: int, origin: Places, after: Places) -> Places:

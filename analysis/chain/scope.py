@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
 
+from analysis.chain.phases import is_phase_type
 from sim.errors import BrimlineError
 from sim.rules import RULES
 from sim.scenario import Policy, Scenario
@@ -32,26 +33,15 @@ def refusals(scenario: Scenario, policy: Policy) -> tuple[str, ...]:
 
 def _stays(scenario: Scenario) -> Iterator[str]:
     for group in scenario.patients:
-        if not _is_exponential(group.stay):
-            yield f"patients.{group.group}.stay: the stay must be exponential, got {_described(group.stay)}"
+        if not is_phase_type(group.stay):
+            rule = f"the stay must be exponential or of exponential phases, got {_described(group.stay)}"
+            yield f"patients.{group.group}.stay: {rule}; {_remedy(group.mean_stay_days)}"
 
 
-def _is_exponential(stay) -> bool:
-    """Whether the family, at these numbers, is the exponential one under another name."""
-    match stay.family:
-        case "exponential":
-            return True
-        case "erlang":
-            return stay.stages == 1
-        case "gamma" | "weibull" | "hyperexponential":
-            return stay.cv == 1
-        case "coxian":
-            return len(stay.rates) == 1 or stay.goes_on[0] == 0
-        case "mixture":
-            parts = [part for part in stay.parts if part.weight > 0]
-            means = {part.distribution().mean() for part in parts}
-            return len(means) == 1 and all(map(_is_exponential, parts))
-    return False
+def _remedy(mean_stay_days: float) -> str:
+    if mean_stay_days == 0:
+        return "leave the group out: it never needs a bed"
+    return "give --phase-fit N for at most N phases in its place, or --exponential, or simulate"
 
 
 def _described(stay) -> str:

@@ -9,6 +9,7 @@ import click
 
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.phase_fit import fitted, option, show_fits
 
 OWN_RULES = "file"
 LONGEST_DAYS, MOST_TIMES = 36_500, 400
@@ -45,10 +46,18 @@ def _days(context: click.Context, option: click.Parameter, text: str | None) -> 
     "--demand-before", metavar="X", type=click.FloatRange(0, 1_000, min_open=True),
     help="Start from the long run with every arrival rate of the file times X.",
 )  # fmt: skip
+@option
 def exact(
-    request: Request, after_days: list[float] | None, policy_before: str | None, demand_before: float | None
+    request: Request,
+    after_days: list[float] | None,
+    policy_before: str | None,
+    demand_before: float | None,
+    phase_fit: int | None,
 ) -> None:
-    """Measures from the exact Markov chain, where the scenario is within its scope (--exponential brings it there)."""
+    """Measures from the exact Markov chain, where the scenario is within its scope (--exponential brings it there).
+
+    With --phase-fit N they are exact for the fitted stays, and near for the scenario's own.
+    """
     from analysis.chain import solve
     from analysis.chain.transient import transient
     from analysis.command.provenance import provenance, started
@@ -58,11 +67,13 @@ def exact(
         raise click.UsageError(
             "--policy-before and --demand-before say where --after-days starts; give that too"
         )
+    request, told = fitted(request, phase_fit)
     if after_days is None:
         document = solve(request.scenario, request.policy).to_dict()
     else:
         before = _before(request, policy_before, demand_before)
         document = transient(request.scenario, request.policy, after_days, before=before).to_dict()
+    document |= told
     if request.out is not None:
         write_result(
             prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain")
@@ -108,6 +119,7 @@ def _show(document: dict[str, Any]) -> None:
     from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 
     put_text(document["scenario"] or "(no title)", f"Exact Markov chain, {document['states']} states", "")
+    show_fits(document)
     units = document["units"]
     put_table(
         "By unit (rates marked h count the unit's own population, wherever treated)",

@@ -9,7 +9,7 @@ import click
 
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.entry import Interrupted, say
-from analysis.command.options import Request, scenario_command
+from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
     interval,
@@ -22,21 +22,27 @@ from analysis.command.output import (
     put_text,
     write_result,
 )
+from analysis.command.phase_fit import fitted, option, show_fits
 
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
+MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
+@option
 @click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
-@click.option("--tolerance", type=click.FloatRange(0), default=1e-9, show_default=True,
+@click.option("--tolerance", type=FiniteRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
-def game(request: Request, exact: bool, tolerance: float, control: bool, search: str | None) -> None:
+def game(
+    request: Request, exact: bool, tolerance: float, control: bool, search: str | None, phase_fit: int | None
+) -> None:
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
+    With --exact, --phase-fit N gives near-exact payoffs for stays that the chain cannot count.
     """
     from analysis.command import game_search
     from analysis.command.provenance import provenance, started
@@ -44,40 +50,38 @@ def game(request: Request, exact: bool, tolerance: float, control: bool, search:
     from analysis.game_document import game_document
     from analysis.games import analyse
 
+    begun = started()
     if search is not None and not exact:
         raise click.BadOptionUsage("--search", "--search is for --exact only")
     if control and search == game_search.BEST_REPLY:
         raise click.BadOptionUsage("--search", "--control is compared with a full table, not with a search")
+    if phase_fit is not None and not exact:
+        raise click.UsageError("--phase-fit is for the exact chain; add --exact, or leave it out to simulate")
+    if any(change.startswith("closure threshold") for change in request.changes):
+        say("in a game the closure thresholds are the units' to choose: --threshold has no effect")
+    request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
         _finish_search(request, game_search.searched(request, choice, tolerance))
         return
-    begun = started()
     best = best_rule(request, exact) if control else None
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
     analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
-    document = {
-        "scenario": request.scenario.title,
-        "method": "exact" if exact else "simulated",
-    } | game_document(analysis)
-    document |= told
+    document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
+    document |= told | fits
     if best is not None:
         document["control"] = beside(best, analysis)
     if choice is not None:
         document |= game_search.structure_of_table(analysis, choice)
-    if request.out is not None:
-        _write(
-            request,
-            analysis,
-            document,
-            provenance(request, "game", begun, engine="exact chain" if ran is None else ran.engine.name),
-        )
-        if best is not None:
-            write_rule(best, request.out)
     if request.as_json:
         put_json(document)
     else:
         _show(analysis, document)
+    if request.out is not None:
+        engine = "exact chain" if ran is None else ran.engine.name
+        _write(request, analysis, document, provenance(request, "game", begun, engine=engine))
+        if best is not None:
+            write_rule(best, request.out)
     if ran is not None:
         finish(ran)
 
@@ -96,6 +100,10 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
         rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
         remedy = "list fewer thresholds for some units"
         raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
+    if len(profiles.players) > MOST_PLAYERS:
+        rule, got = f"a game may have at most {MOST_PLAYERS} units", f"got {len(profiles.players)}"
+        remedy = "describe the part of the region that matters"
+        raise ScenarioError([Fault(None, "units", rule, got, remedy)], request.scenario.source.file)
     return profiles, goal, welfare_of(request.scenario)
 
 
@@ -157,6 +165,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         document["scenario"] or "(no title)",
         f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
     )
+    show_fits(document)
     if not analysis.is_exact:
         put_text(
             f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."

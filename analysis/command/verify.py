@@ -9,16 +9,21 @@ import click
 from analysis.command.entry import CheckFailed
 from analysis.command.options import Request, scenario_command
 from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.phase_fit import fitted, option, show_fits
 
 LEAST_REPLICATIONS = 5
 
 
+@option
 @click.option(
     "--false-alarm-rate", type=click.FloatRange(0, 0.5, min_open=True), default=None,
     help="Chance that a correct simulator is refused [default: 0.01, or 1 - --confidence where that is given].",
 )  # fmt: skip
-def verify(request: Request, false_alarm_rate: float | None) -> None:
-    """Hold the simulation against the exact chain, measure by measure; status 1 if they disagree."""
+def verify(request: Request, false_alarm_rate: float | None, phase_fit: int | None) -> None:
+    """Hold the simulation against the exact chain, measure by measure; status 1 if they disagree.
+
+    With --phase-fit N both have the fitted stays, so that a difference is the program's and not the fit's.
+    """
     from analysis.chain import solve
     from analysis.command.provenance import provenance, started
     from analysis.command.running import finish, require, run_replications
@@ -27,6 +32,7 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
     from sim.errors import Fault, ScenarioError
 
     begun = started()
+    request, told = fitted(request, phase_fit)
     if request.scenario.run.replications < LEAST_REPLICATIONS:
         rule, got = (
             f"must be at least {LEAST_REPLICATIONS} to verify",
@@ -51,7 +57,7 @@ def verify(request: Request, false_alarm_rate: float | None) -> None:
     result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)
     document = {"scenario": request.scenario.title, "thresholds": request.policy.thresholds} | result.to_dict() | {
         "states": exact.states, "seed": request.scenario.run.seed,
-    } | ran.to_dict()  # fmt: skip
+    } | ran.to_dict() | told  # fmt: skip
     if request.out is not None:
         from analysis.figures import save_verification
 
@@ -72,6 +78,7 @@ command = scenario_command(verify)
 
 def _show(document: dict[str, Any]) -> None:
     put_text(document["scenario"] or "(no title)", "")
+    show_fits(document)
     put_table(
         f"Simulation ({document['replications']} replications) against the exact chain ({document['states']} states)",
         ("where", "measure", "exact", "simulated", "low", "high", "z", "verdict"),

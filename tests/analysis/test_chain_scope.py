@@ -10,6 +10,7 @@ from sim.errors import BrimlineError
 from sim.scenario import Scenario
 
 EXPONENTIAL = {"family": "exponential", "mean_days": 1.0}
+MUST_BE = "the stay must be exponential or of exponential phases"
 RESORTS = ("turned_away", "home_bed", "any_bed")
 
 
@@ -57,18 +58,15 @@ OTHER_NAMES_OF_THE_EXPONENTIAL = [
 OTHER_STAYS = [
     ({"family": "constant", "mean_days": 2.0}, "constant"),
     ({"family": "constant", "mean_days": 0.0}, "constant"),
-    ({"family": "erlang", "mean_days": 2.0, "stages": 2}, "erlang (stages 2)"),
     ({"family": "gamma", "mean_days": 2.0, "cv": 0.5}, "gamma (cv 0.5)"),
     ({"family": "weibull", "mean_days": 2.0, "cv": 1.5}, "weibull (cv 1.5)"),
     ({"family": "lognormal", "mean_days": 2.0, "cv": 1.0}, "lognormal (cv 1)"),
-    ({"family": "hyperexponential", "mean_days": 2.0, "cv": 1.4}, "hyperexponential (cv 1.4)"),
-    ({"family": "coxian", "rates_per_day": [0.5, 7.0], "goes_on": [0.1]}, "coxian (2 phases)"),
     (
         {
             "family": "mixture",
             "parts": [
                 {"family": "exponential", "mean_days": 2.0, "weight": 0.1},
-                {"family": "exponential", "mean_days": 3.0, "weight": 0.2},
+                {"family": "constant", "mean_days": 3.0, "weight": 0.2},
             ],
         },
         "mixture (2 parts)",
@@ -88,7 +86,10 @@ def test_other_names_of_the_exponential_are_in_scope(stay):
 def test_other_stays_are_refused(stay, described):
     network = scenario(patients=[group("A", 1.0, stay)])
     (reason,) = refusals(network, network.policy())
-    assert reason.startswith(f"patients.A patients.stay: the stay must be exponential, got {described}")
+    assert reason.startswith(f"patients.A patients.stay: {MUST_BE}, got {described}; ")
+    needs_a_bed = stay.get("mean_days") != 0.0
+    assert ("--phase-fit N" in reason and "--exponential" in reason) is needs_a_bed
+    assert ("leave the group out" in reason) is not needs_a_bed
 
 
 def test_every_reason_at_once():
@@ -104,7 +105,8 @@ def test_every_reason_at_once():
     with pytest.raises(OutOfScope) as caught:
         solve(network, network.policy())
     assert caught.value.reasons == (
-        "patients.A patients.stay: the stay must be exponential, got lognormal (cv 1.4)",
+        f"patients.A patients.stay: {MUST_BE}, got lognormal (cv 1.4); "
+        "give --phase-fit N for at most N phases in its place, or --exponential, or simulate",
         "patients.A patients.hour_of_day: arrivals must come at a constant rate, got weights from 1 to 3",
         "patients.B patients.day_of_week: arrivals must come at a constant rate, got weights from 0.5 to 1",
         "diversion.delay: transfers must take no time, got exponential with a mean of 2.5 hours",
