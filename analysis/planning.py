@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from analysis.chain import ChainTooLarge, Limits, refusals
+from analysis.chain.phases import PhaseBook
 from analysis.chain.variance import TimeAverage, asymptotic_variances
 from analysis.confidence import critical_value
 from sim.errors import RunError
@@ -62,6 +63,14 @@ class Precision:
         return {**vars(self), "basis": "exponential counterpart", "units": units}
 
 
+def _is_memoryless(scenario: Scenario, policy: Policy) -> bool:
+    """Whether the scenario is its own exponential counterpart: within the chain's scope, every stay of one phase."""
+    if refusals(scenario, policy):
+        return False
+    book = PhaseBook()
+    return all(len(list(book.reached(book.starts(group.stay)))) == 1 for group in scenario.patients)
+
+
 def expected_precision(scenario: Scenario, policy: Policy, *, half_width: float | None = None) -> Precision:
     """The intervals that the scenario's own replications, measured days and confidence will give.
 
@@ -69,7 +78,7 @@ def expected_precision(scenario: Scenario, policy: Policy, *, half_width: float 
     replications needed. The variance of a run's average is the asymptotic one over the measured days, which holds
     for runs of many mean stays.
     """
-    counterpart, memoryless = scenario.exponential(), not refusals(scenario, policy)
+    counterpart, memoryless = scenario.exponential(), _is_memoryless(scenario, policy)
     if reasons := refusals(counterpart, policy):
         return Precision({}, half_width, memoryless, reason="; ".join(reasons))
     try:

@@ -21,6 +21,7 @@ class ChainTooLarge(BrimlineError):  # noqa: N818 - the name says it all
     def __init__(self, states: int, excess: str) -> None:
         self.states, self.excess = states, excess
         super().__init__(f"the exact chain is too large: {excess}; {REMEDY}")
+        self.reasons = (str(self),)  # a refusal, as of a scenario out of scope
 
     def __reduce__(self):  # exceptions with more than one argument do not unpickle by themselves
         return type(self), (self.states, self.excess)

@@ -17,6 +17,7 @@ from analysis.chain.gth import Transitions
 from analysis.chain.layout import UnitLayout, layout, state_bound
 from analysis.chain.limits import Limits
 from analysis.chain.network_states import NetworkChain, UnitView
+from analysis.chain.scope import OutOfScope
 from analysis.chain.settled import Settled
 from analysis.chain.unit_states import Gates, UnitSpace, unit_states
 from sim.scenario import Policy, Scenario
@@ -53,7 +54,7 @@ class StartedSpace(UnitSpace):
     never bring these about: a gate that was closed stays so until its unit is empty enough.
     """
 
-    started: tuple[tuple[int, Gates], ...]
+    started: tuple[tuple[int, Gates], ...] = ()
 
     def levels(self) -> list[tuple[int, Gates]]:
         """Each load with each position of the gates that it can have, least load first."""
@@ -68,19 +69,36 @@ class StartedSpace(UnitSpace):
 
 def _holding(unit: UnitLayout, before: UnitView) -> UnitLayout:
     """The unit with room in its states for the patients and the gates that it had before."""
-    rates = tuple(sorted({*unit.discharge_rates, *before.layout.discharge_rates}))
-    per_day = {
-        home: dict(zip(unit.discharge_rates, each, strict=True)) for home, each in unit.arrivals.items()
-    }
-    arrivals = {home: tuple(each.get(rate, 0.0) for rate in rates) for home, each in per_day.items()}
-    space = replace(unit.space, most=max(unit.space.most, before.layout.space.most), rates=len(rates))
+    rates, arrivals = _phases_of_both(unit, before.layout)
+    space = replace(unit.space, most=max(unit.space.most, before.layout.space.most), phases=len(rates))
     started = dict.fromkeys(zip(before.own.load.tolist(), _gates_now(before, space), strict=True))
     return replace(
         unit,
-        discharge_rates=rates,
+        phase_rates=rates,
         arrivals=arrivals,
         space=StartedSpace(**vars(space), started=tuple(started)),
     )
+
+
+def _phases_of_both(
+    unit: UnitLayout, before: UnitLayout
+) -> tuple[tuple[float, ...], Mapping[str, tuple[float, ...]]]:
+    """The rates of every phase that a unit's patients are in or were in before, and its arrivals by them.
+
+    Raises OutOfScope where the two differ and stays have phases that lead on: such phases are not matched.
+    """
+    if (unit.phase_rates, unit.onward) == (before.phase_rates, before.onward):
+        return unit.phase_rates, unit.arrivals
+    if unit.onward or before.onward:
+        raise OutOfScope(
+            [
+                f"units.{unit.name}: patients in other phases than before could be treated there, and phases that "
+                "lead on are not matched; start from the empty network, or give exponential stays (--exponential)"
+            ]
+        )
+    rates = tuple(sorted({*unit.phase_rates, *before.phase_rates}))
+    per_day = {home: dict(zip(unit.phase_rates, each, strict=True)) for home, each in unit.arrivals.items()}
+    return rates, {home: tuple(each.get(rate, 0.0) for rate in rates) for home, each in per_day.items()}
 
 
 def _gates(view: UnitView) -> Iterator[Gates]:
@@ -121,8 +139,9 @@ def _carried(source: Settled, whole: NetworkChain) -> Numbers:
 def _places(view: UnitView, target: UnitView) -> Places:
     """The state of the target that each of a unit's own states becomes, (own states,)."""
     known = _numbered(target)
-    columns = [target.layout.discharge_rates.index(rate) for rate in view.layout.discharge_rates]
-    counts = np.zeros((view.own.size, len(target.layout.discharge_rates)), dtype=np.int64)
+    mine, theirs = view.layout.phase_rates, target.layout.phase_rates
+    columns = list(range(len(mine))) if mine == theirs else [theirs.index(rate) for rate in mine]
+    counts = np.zeros((view.own.size, len(theirs)), dtype=np.int64)
     counts[:, columns] = view.own.counts
     gates = _gates_now(view, target.layout.space)
     return np.array([known[tuple(row), now] for row, now in zip(counts.tolist(), gates, strict=True)])

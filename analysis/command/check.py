@@ -26,7 +26,7 @@ from analysis.command.progress import duration
 )  # fmt: skip
 def check(request: Request, half_width: float | None) -> None:
     """Read the scenario back as tables before anything runs: offered load, stays, rules, size, time, advice."""
-    from analysis.chain import chain_size, refusals
+    from analysis.chain import Limits, chain_size, refusals
     from analysis.command.provenance import provenance
     from analysis.command.running import expected
     from analysis.planning import expected_precision
@@ -36,10 +36,12 @@ def check(request: Request, half_width: float | None) -> None:
     document = describe(scenario, policy)
     document["expected"] = expected(request, document["game"]["cells"])
     reasons = list(refusals(scenario, policy))
+    states = chain_size(scenario, policy)
     document["exact_chain"] = {
         "in_scope": not reasons,
         "reasons": reasons,
-        "states": chain_size(scenario, policy),
+        "states": states,
+        "too_large": states is not None and states > Limits().relaxed,
     }
     document["precision"] = expected_precision(scenario, policy, half_width=half_width).to_dict()
     document["faults"] = []
@@ -117,6 +119,25 @@ def _show_patients(patients: dict[str, Any]) -> None:
     )
 
 
+def _goal(goal: dict[str, Any]) -> str:
+    if goal["shape"] == "absolute":
+        return "mean utilisation at the target"
+    return f"utilisation of each {goal['judged_over_days']:g} days at the target (squared distance)"
+
+
+def _welfare(welfare: dict[str, Any]) -> str:
+    if welfare["kind"] == "throughput":
+        return "patients treated"
+    return f"patients turned away + {welfare['transfer_weight']:g} x transfers (a loss)"
+
+
+def _span(thresholds: list[int]) -> str:
+    first, last = thresholds[0], thresholds[-1]
+    if thresholds == list(range(first, last + 1)) and last > first:
+        return f"{first} to {last}"
+    return ", ".join(map(str, thresholds))
+
+
 def _game_takes(expected: dict[str, Any]) -> str:
     if expected["game_seconds"] is None:
         return expected["reason"][0].upper() + expected["reason"][1:] + "."
@@ -135,12 +156,19 @@ def _show_rest(document: dict[str, Any]) -> None:
     game, expected = document["game"], document["expected"]
     put_text("Rules in force:", *(f"  {name}: {reads}." for name, reads in document["rules"].items()), "")
     put_text(
+        f"Goal: {_goal(game['goal'])}. Welfare: {_welfare(game['welfare'])}. Closure thresholds to choose from: "
+        + "; ".join(f"{name} {_span(mine)}" for name, mine in game["strategies"].items())
+        + ".",
         f"Game: {count(game['cells'])} cells, {count(game['runs'])} runs. {_game_takes(expected)}",
         f"One policy (`simulate`): about {duration(expected['simulate_seconds'])}.",
     )
     chain = document["exact_chain"]
-    if chain["in_scope"]:
-        put_text(f"The exact chain covers this scenario, with at most {chain['states']} states.")
+    if chain["in_scope"] and not chain["too_large"]:
+        put_text(f"The exact chain covers this scenario, with at most {chain['states']:,} states.")
+    elif chain["in_scope"]:
+        put_text(
+            f"The exact chain models this scenario, but is too large: up to 10^{len(str(chain['states']))} states."
+        )
     else:
         put_text("The exact chain does not cover this scenario: " + "; ".join(chain["reasons"]) + ".")
     _show_precision(document["precision"], document["run"])

@@ -14,7 +14,8 @@ from collections.abc import Sequence
 
 import click
 
-from sim import __version__
+import sim
+from analysis.command.caution import CAUTION
 from sim.errors import BrimlineError, Fault, ScenarioError
 
 DONE, FAILED, AT_FAULT, INTERRUPTED = 0, 1, 2, 130
@@ -25,10 +26,6 @@ COMMANDS = {
     "verify": "Hold the simulation against the exact chain, measure by measure.",
     "game": "Payoff table, equilibria, optimum and price of anarchy.",
 }
-CAUTION = (
-    "For planning only, not for decisions on a patient or a live bed. Results depend on the data and the "
-    "assumptions of the scenario; local protocols and licensed clinicians decide."
-)
 
 
 class Interrupted(Exception):
@@ -63,7 +60,7 @@ class LazyCommands(click.Group):
 
 
 @click.command(cls=LazyCommands, epilog=CAUTION, context_settings={"help_option_names": ["-h", "--help"]})
-@click.version_option(__version__, prog_name="brimline")
+@click.version_option(sim.__version__, prog_name="brimline")
 def brimline() -> None:
     """Closure rules in a network of critical-care units: simulate them, and find what selfish ones cost.
 

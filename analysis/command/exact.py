@@ -7,8 +7,16 @@ from typing import Any
 
 import click
 
-from analysis.command.options import Request, scenario_command
-from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.options import FiniteRange, Request, scenario_command
+from analysis.command.output import (
+    prepare_folder,
+    put_caution,
+    put_heading,
+    put_json,
+    put_table,
+    put_text,
+    write_result,
+)
 from analysis.command.phase_fit import fitted, option, show_fits
 
 OWN_RULES = "file"
@@ -43,7 +51,7 @@ def _days(context: click.Context, option: click.Parameter, text: str | None) -> 
     help=f"Start from the long run under this policy ({OWN_RULES}: the file's own rules).",
 )  # fmt: skip
 @click.option(
-    "--demand-before", metavar="X", type=click.FloatRange(0, 1_000, min_open=True),
+    "--demand-before", metavar="X", type=FiniteRange(0, 1_000, min_open=True),
     help="Start from the long run with every arrival rate of the file times X.",
 )  # fmt: skip
 @option
@@ -73,17 +81,16 @@ def exact(
     else:
         before = _before(request, policy_before, demand_before)
         document = transient(request.scenario, request.policy, after_days, before=before).to_dict()
-    document |= told
-    if request.out is not None:
-        write_result(
-            prepare_folder(request.out), document, provenance(request, "exact", begun, engine="exact chain")
-        )
+    document |= request.heading | told
     if request.as_json:
         put_json(document)
     elif after_days is None:
         _show(document)
     else:
         _show_days(document)
+    if request.out is not None:
+        origin = provenance(request, "exact", begun, engine="exact chain")
+        write_result(prepare_folder(request.out), document, origin)
 
 
 command = scenario_command(exact)
@@ -118,7 +125,8 @@ def _policy(scenario: Any, name: str) -> Any:
 def _show(document: dict[str, Any]) -> None:
     from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 
-    put_text(document["scenario"] or "(no title)", f"Exact Markov chain, {document['states']} states", "")
+    put_heading(document)
+    put_text(f"Exact Markov chain, {document['states']} states", "")
     show_fits(document)
     units = document["units"]
     put_table(
@@ -140,8 +148,8 @@ def _show(document: dict[str, Any]) -> None:
 def _show_days(document: dict[str, Any]) -> None:
     from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 
+    put_heading(document)
     put_text(
-        document["scenario"] or "(no title)",
         f"Exact Markov chain, {document['states']} states, by uniformisation in {document['steps']} steps",
         _start(document["start"]),
         "",

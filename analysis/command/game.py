@@ -17,6 +17,7 @@ from analysis.command.output import (
     prepare_folder,
     put_caution,
     put_grid,
+    put_heading,
     put_json,
     put_table,
     put_text,
@@ -161,10 +162,8 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
 def _show(analysis: Any, document: dict[str, Any]) -> None:
     from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING
 
-    put_text(
-        document["scenario"] or "(no title)",
-        f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
-    )
+    put_heading(document)
+    put_text(f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
     show_fits(document)
     if not analysis.is_exact:
         put_text(
@@ -201,8 +200,8 @@ def _finish_search(request: Request, document: dict[str, Any]) -> None:
 def _show_search(document: dict[str, Any]) -> None:
     from analysis.findings import ONE_NETWORK
 
+    put_heading(document)
     put_text(
-        document["scenario"] or "(no title)",
         f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
         document["search"]["reads"] + ".",
         "",
@@ -246,7 +245,8 @@ def _show_payoffs(analysis: Any, player: int) -> None:
 def _show_equilibria(document: dict[str, Any]) -> None:
     players, listed = document["players"], document["equilibria"][:MOST_LISTED]
     put_table(
-        "Equilibria (closure thresholds; regret: the most a unit gains by deviating alone)",
+        "Equilibria (closure thresholds; regret, in the goal's unit: the most a unit gains by deviating alone; "
+        "welfare a day)",
         ("verdict", *players, *(f"regret {player}" for player in players), "welfare"),
         [
             (one["verdict"], *(one["thresholds"][p] for p in players), *(_regret(one["regret"][p]) for p in players),

@@ -119,7 +119,7 @@ def searched(request: Request, choice: Choice, tolerance: float) -> dict[str, An
         tolerance=tolerance,
         on_solved=_Told(profiles.cells),
     )
-    document = {"scenario": request.scenario.title, "method": "exact", "engine": "exact chain"}
+    document = request.heading | {"method": "exact", "engine": "exact chain"}
     document |= search_document(found) | {"search": asdict(choice)}
     if request.out is not None:
         folder = prepare_folder(request.out)

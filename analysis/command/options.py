@@ -13,7 +13,7 @@ from typing import Any
 
 import click
 
-from analysis.command.entry import CAUTION
+from analysis.command.caution import CAUTION
 from sim.errors import Fault, ScenarioError
 
 ENGINES = ("compiled", "reference")

@@ -9,7 +9,7 @@ from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import Any
 
-from analysis.command.entry import CAUTION
+from analysis.command.caution import CAUTION
 
 PLAIN_WIDTH = 132
 WRITTEN = ("result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*")

@@ -126,6 +126,8 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
 
 def duration(seconds: float) -> str:
     """A length of time as a person says it."""
+    if seconds < 1:
+        return "less than a second"
     if seconds < 90:
         return f"{seconds:.0f} s"
     if seconds < 5400:

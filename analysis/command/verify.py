@@ -6,9 +6,17 @@ from typing import Any
 
 import click
 
-from analysis.command.entry import CheckFailed
-from analysis.command.options import Request, scenario_command
-from analysis.command.output import prepare_folder, put_caution, put_json, put_table, put_text, write_result
+from analysis.command.entry import CheckFailed, say
+from analysis.command.options import FiniteRange, Request, scenario_command
+from analysis.command.output import (
+    prepare_folder,
+    put_caution,
+    put_heading,
+    put_json,
+    put_table,
+    put_text,
+    write_result,
+)
 from analysis.command.phase_fit import fitted, option, show_fits
 
 LEAST_REPLICATIONS = 5
@@ -16,7 +24,7 @@ LEAST_REPLICATIONS = 5
 
 @option
 @click.option(
-    "--false-alarm-rate", type=click.FloatRange(0, 0.5, min_open=True), default=None,
+    "--false-alarm-rate", type=FiniteRange(0, 0.5, min_open=True), default=None,
     help="Chance that a correct simulator is refused [default: 0.01, or 1 - --confidence where that is given].",
 )  # fmt: skip
 def verify(request: Request, false_alarm_rate: float | None, phase_fit: int | None) -> None:
@@ -26,10 +34,11 @@ def verify(request: Request, false_alarm_rate: float | None, phase_fit: int | No
     """
     from analysis.chain import solve
     from analysis.command.provenance import provenance, started
-    from analysis.command.running import finish, require, run_replications
+    from analysis.command.running import collect_runs, finish
     from analysis.verification import FALSE_ALARM_RATE
     from analysis.verification import verify as compare
     from sim.errors import Fault, ScenarioError
+    from sim.scenario.describe import advice
 
     begun = started()
     request, told = fitted(request, phase_fit)
@@ -38,36 +47,32 @@ def verify(request: Request, false_alarm_rate: float | None, phase_fit: int | No
             f"must be at least {LEAST_REPLICATIONS} to verify",
             f"got {request.scenario.run.replications}",
         )
-        raise ScenarioError(
-            [Fault(None, "replications", rule, got, "raise it, for example --replications 30")]
-        )
+        remedy = "raise it, for example --replications 30"
+        raise ScenarioError([Fault(None, "run.replications", rule, got, remedy)])
+    too_short = [said for said in advice(request.scenario) if "warm_up" in said]
+    for said in too_short:
+        say(f"advice: {said}")
     exact = solve(request.scenario, request.policy)
-    runs: list[Any] = []
-    ran = run_replications(
-        request,
-        [request.policy],
-        label="verify",
-        take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
-    )
-    require(len(runs), ran.interrupted, least=LEAST_REPLICATIONS)
-    runs.sort(key=lambda run: run.replication)
+    runs, ran = collect_runs(request, label="verify", least=LEAST_REPLICATIONS)
     rate = false_alarm_rate or (
         1 - request.confidence if request.confidence is not None else FALSE_ALARM_RATE
     )
     result = compare([run.record for run in runs], exact, request.scenario, false_alarm_rate=rate)
-    document = {"scenario": request.scenario.title, "thresholds": request.policy.thresholds} | result.to_dict() | {
+    document = request.heading | {"thresholds": request.policy.thresholds} | result.to_dict() | {
         "states": exact.states, "seed": request.scenario.run.seed,
     } | ran.to_dict() | told  # fmt: skip
+    if request.as_json:
+        put_json(document)
+    else:
+        _show(document)
     if request.out is not None:
         from analysis.figures import save_verification
 
         folder = prepare_folder(request.out)
         write_result(folder, document, provenance(request, "verify", begun, engine=ran.engine.name))
         save_verification(document, folder)
-    if request.as_json:
-        put_json(document)
-    else:
-        _show(document)
+    if too_short and not result.agrees:
+        say("the run starts from an empty network: lengthen the warm-up before blaming the program")
     finish(ran)
     if not result.agrees:
         raise CheckFailed
@@ -77,7 +82,8 @@ command = scenario_command(verify)
 
 
 def _show(document: dict[str, Any]) -> None:
-    put_text(document["scenario"] or "(no title)", "")
+    put_heading(document)
+    put_text("")
     show_fits(document)
     put_table(
         f"Simulation ({document['replications']} replications) against the exact chain ({document['states']} states)",

@@ -232,7 +232,16 @@ def test_exact_after_days_gives_each_day_and_the_long_run(call, two):
     status, document = call("exact", two, "--after-days", "0,2.5,400")
     long_run = call("exact", two)[1]
     assert status == 0
-    assert list(document) == ["scenario", "thresholds", "start", "days", "long_run", "states", "steps"]
+    assert list(document) == [
+        "scenario",
+        "thresholds",
+        "start",
+        "days",
+        "long_run",
+        "states",
+        "steps",
+        "changes",
+    ]
     assert document["start"] == {
         "network": "empty",
         "policy": None,
