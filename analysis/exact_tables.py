@@ -4,17 +4,26 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Iterator
+from pathlib import Path
 from typing import Any
 
-from analysis.chain import ExactResult, solve, solved_together
+from analysis.chain import ExactResult, can_be_solved_together, kernels, solve, solved_together
 from sim.errors import RunError
+from sim.kernel_cache import are_kept
 from sim.scenario import Policy, Scenario
 from sim.workers import local_workers
 
 CELLS_PER_TASK = 8
-# Cells times states below which a table is done cell by cell (at most about half a second) before the kernels are
-# loaded. The choice looks at nothing else, so that a table is the same to the last bit on every run.
-WORTH_KERNELS = 20_000
+# Cells times states below which a table is done cell by cell (a few seconds at most) and no kernel is loaded. The
+# choice looks at nothing else, so that a table is the same to the last bit on every run.
+WORTH_KERNELS = 100_000
+
+
+def must_compile(scenario: Scenario, policy: Policy, cells: int) -> bool:
+    """Whether a table of so many cells will have kernels compiled first, which takes some seconds."""
+    states = math.prod(unit.beds + 1 for unit in scenario.units)
+    large = cells * states >= WORTH_KERNELS and can_be_solved_together(scenario, policy)
+    return large and not are_kept(Path(kernels.__file__).parent)
 
 
 def solve_cells(

@@ -50,6 +50,12 @@ def is_writable(folder: Path) -> bool:
     return True
 
 
+def are_kept(sources: Path) -> bool:
+    """Whether an earlier run has left compiled kernels of the folder `sources`."""
+    folder = folder_for(digest_of(sources))
+    return is_writable(folder) and any(folder.rglob("*.nbi"))
+
+
 def compile_into(folder: Path | None, function: Kernel) -> Any:
     """numba's compilation of a kernel, without the interpreter's lock; kept in `folder` unless that is None."""
     import numba

@@ -5,7 +5,7 @@ from analysis.chain.fitting import PhaseFit, with_phase_fits
 from analysis.chain.limits import ChainTooLarge, Limits
 from analysis.chain.measures import ExactResult
 from analysis.chain.scope import OutOfScope, refusals
-from analysis.chain.table import solve_table, solved_together
+from analysis.chain.table import can_be_solved_together, solve_table, solved_together
 
 __all__ = [
     "ChainTooLarge",
@@ -13,6 +13,7 @@ __all__ = [
     "Limits",
     "OutOfScope",
     "PhaseFit",
+    "can_be_solved_together",
     "chain_size",
     "refusals",
     "solve",

@@ -59,6 +59,11 @@ def solved_together(
     return found
 
 
+def can_be_solved_together(scenario: Scenario, policy: Policy, *, limits: Limits = DEFAULT) -> bool:
+    """Whether tables of closure thresholds around this policy have the structure that `solved_together` uses."""
+    return len(scenario.units) == 2 and _plan(scenario, policy, limits) is not None
+
+
 def _alike(policies: Iterable[Policy]) -> list[list[int]]:
     """Places of the policies whose rules are the same but for the closure thresholds."""
     groups: dict[tuple, list[int]] = defaultdict(list)

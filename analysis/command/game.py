@@ -134,10 +134,12 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     from analysis.command.progress import progress
-    from analysis.exact_tables import solve_cells
+    from analysis.exact_tables import must_compile, solve_cells
     from analysis.payoffs import exact_table
 
     profiles, goal, welfare = _axes(request)
+    if must_compile(request.scenario, request.policy, profiles.cells):
+        say("compiling the exact chain's kernels, once on this machine (some seconds)")
     cells = [None] * profiles.cells
     with progress("game --exact", profiles.cells, "cells") as bar:
         for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):

@@ -34,7 +34,7 @@ class Choice:
 
 def choose(request: Request, wanted: str | None) -> Choice:
     """The choice for a scenario, `wanted` where that is given; ScenarioError where the goal is not `absolute`."""
-    from analysis.chain import chain_size
+    from analysis.chain import can_be_solved_together, chain_size
     from analysis.payoffs import MOST_CELLS, profiles_of
 
     _require_absolute(request)
@@ -53,6 +53,9 @@ def choose(request: Request, wanted: str | None) -> Choice:
         return Choice(
             TABLE, "cost", profiles.cells, states, None, f"{_named(TABLE)}, for it is small: {size}"
         )
+    if can_be_solved_together(request.scenario, request.policy):
+        reads = f"{_named(TABLE)}, for its cells are solved together: {size}"
+        return Choice(TABLE, "cost", profiles.cells, states, None, reads)
     seconds = _seconds_per_cell(request, profiles)
     table_seconds = seconds * profiles.cells / (request.workers or 1)
     method = TABLE if table_seconds <= TABLE_SECONDS else BEST_REPLY
