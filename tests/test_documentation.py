@@ -5,12 +5,12 @@ from __future__ import annotations
 import re
 import shlex
 import subprocess
-import tomllib
 from pathlib import Path
 
 import pytest
 
 from analysis.command.entry import COMMANDS, run
+from sim.scenario import parse_scenario
 
 ROOT = Path(__file__).resolve().parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -59,8 +59,12 @@ def test_ci_runs_the_readmes_test_command():
 
 
 def test_the_toml_shown_is_legal():
-    for block in re.findall(r"```toml\n(.*?)```", README, flags=re.S):
-        tomllib.loads(block)
+    blocks = re.findall(r"```toml\n(.*?)```", README, flags=re.S)
+    assert blocks
+    demo = (ROOT / "scenarios" / "exponential.toml").read_text(encoding="utf-8")
+    first_unit, rest = demo.split("[[units]]", 2)[1], demo.split("[[units]]", 2)
+    for block in blocks:  # keys of the first unit of a demo network
+        parse_scenario(f"{rest[0]}[[units]]{first_unit}{block}\n[[units]]{rest[2]}")
 
 
 def test_the_rooms_that_developers_are_told_of_exist():

@@ -176,6 +176,8 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         for player in (0, 1):
             _show_payoffs(analysis, player)
     _show_equilibria(document)
+    if len(document["players"]) != 2:
+        _show_payoffs_at(analysis, document)
     _show_outcomes(document)
     for finding in document["findings"]:
         put_text(finding["statement"] + ".")
@@ -242,6 +244,29 @@ def _show_payoffs(analysis: Any, player: int) -> None:
             ["", *(str(strategies[1][column]) for column in columns)],
             [[str(k), *(cell(row, column) for column in columns)] for row, k in enumerate(strategies[0])],
         )
+
+
+def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
+    """Payoffs and best responses at the listed equilibria and the optimum, where no grid can show them all."""
+    from analysis.equilibria import regrets
+
+    table, players = analysis.table, document["players"]
+    scale, scale_reads = table.goal.display_scale
+    best = regrets(table.payoffs, table.goal.sense) <= analysis.tolerance
+    listed = [one.profile for one in analysis.equilibria[:MOST_LISTED]]
+    rows = [("equilibrium", profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
+
+    def cell(player: int, profile: tuple[int, ...]) -> str:
+        own = table.profiles.strategies[player][profile[player]]
+        paid = number(float(table.payoffs[(player, *profile)]) * scale, 1)
+        return f"{own}: {paid}" + ("*" if best[(player, *profile)] else "")
+
+    put_table(
+        f"Threshold and payoff in {scale_reads} (* best response to the others); all {count(table.profiles.cells)} "
+        "cells are in --json and --out",
+        ("profile", *players),
+        [(name, *(cell(player, profile) for player in range(len(players)))) for name, profile in rows],
+    )
 
 
 def _show_equilibria(document: dict[str, Any]) -> None:

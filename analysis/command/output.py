@@ -41,17 +41,45 @@ def console() -> Any:
 
 
 def put_table(title: str, columns: Sequence[str], rows: Iterable[Sequence[Any]]) -> None:
-    """One table; the first column is a name, the others are numbers or short words."""
+    """One table; the first column is a name, the others are numbers or short words.
+
+    Where it is too wide, columns go on in further blocks, each with the first column again.
+    """
+    texts = [[cell if isinstance(cell, str) else number(cell) for cell in row] for row in rows]
+    screen = console()
+    for place, block in enumerate(_blocks(columns, texts, screen.width)):
+        picked = [[line[column] for column in block] for line in (columns, *texts)]
+        put_text(title if place == 0 else f"{title} (continued)")
+        screen.print(_table(*picked))
+
+
+def _blocks(columns: Sequence[str], rows: Sequence[Sequence[str]], width: int) -> list[list[int]]:
+    """Columns that fit side by side, the first one in every block; a column's heading may take several lines."""
+    needs = [
+        max(max((len(word) for word in column.split()), default=0), *(len(row[place]) for row in rows), 0)
+        for place, column in enumerate(columns)
+    ]
+    blocks, used = [[0]], needs[0]
+    for place in range(1, len(columns)):
+        if used + needs[place] + 3 > width and len(blocks[-1]) > 1:
+            blocks.append([0])
+            used = needs[0]
+        blocks[-1].append(place)
+        used += needs[place] + 3
+    return blocks
+
+
+def _table(columns: Sequence[str], *rows: Sequence[str]) -> Any:
     from rich import box
     from rich.table import Table
     from rich.text import Text
 
-    table = Table(title=Text(title), title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     for place, column in enumerate(columns):
         table.add_column(Text(column), justify="left" if place == 0 else "right", overflow="fold")
     for row in rows:
-        table.add_row(*(Text(cell if isinstance(cell, str) else number(cell)) for cell in row))
-    console().print(table)
+        table.add_row(*map(Text, row))
+    return table
 
 
 def put_grid(title: str, header: Sequence[str], rows: Sequence[Sequence[str]]) -> None:

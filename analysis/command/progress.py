@@ -39,9 +39,11 @@ class _Lines:
         now = time.monotonic()
         if now - self._last >= SECONDS_BETWEEN_LINES:
             self._last = now
+            early = self._done < 0.01 * self._total  # one reply tells little of the rest
             left = (now - self._started) / self._done * (self._total - self._done)
+            when = "time left not known yet" if early else f"about {duration(left)} left"
             done = f"{self._done} of {self._total} {self._unit}, {100 * self._done // self._total} %"
-            print(f"{self._label}: {done}, about {duration(left)} left", file=sys.stderr, flush=True)
+            print(f"{self._label}: {done}, {when}", file=sys.stderr, flush=True)
 
 
 class _Bar:
