@@ -98,8 +98,8 @@ class TableSums:
 class Outcomes:
     """What happens in every cell, means a day or shares: what stands beside each ratio.
 
-    turned_away, diverted_out, admitted, arrived: (cells, units); closed_free: share of time closed with a
-    free bed, (cells, units).
+    All (cells, units). turned_away, diverted_out, arrived by home, admitted by treating unit: a day. closed_free:
+    share of time closed with a free bed. utilisation: of staffed bed-time.
     """
 
     turned_away: np.ndarray

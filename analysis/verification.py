@@ -30,7 +30,7 @@ LEAST_VISITS = 20
 class Comparison:
     """One measure: its exact value, its simulated mean with simultaneous limits, and z = (mean - exact) / se.
 
-    z is None, with a reason, where the measure was not tested, has no spread, or cannot be other than 0.
+    z is None, with a reason, where the measure was not tested, or where it has no spread and is not the exact value.
     """
 
     where: str

@@ -298,7 +298,8 @@ def _value(value: Any) -> str:
 def _show_outcomes(document: dict[str, Any]) -> None:
     """Refusals, transfers and closed-with-a-free-bed time at the optimum and at the extreme equilibria, by home."""
     put_table(
-        "What comes with it (a day; by home population for turned away and moved, by unit for closed time)",
+        "What comes with it (turned away, moved: patients a day by home; closed with a free bed: share of time; "
+        f"treated: patients a day{'' if document.get('method') == 'exact' else '; means, without intervals'})",
         (
             "profile",
             "home or unit",

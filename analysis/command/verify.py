@@ -87,11 +87,11 @@ def _show(document: dict[str, Any]) -> None:
     show_fits(document)
     put_table(
         f"Simulation ({document['replications']} replications) against the exact chain ({document['states']} states)",
-        ("where", "measure", "exact", "simulated", "low", "high", "z", "verdict"),
+        ("where", "measure", "exact", "simulated", "limits from", "to", "z", "verdict"),
         [
             (
                 one["where"],
-                one["measure"],
+                _reads(one["measure"]),
                 one["exact"],
                 one["mean"],
                 one["low"],
@@ -115,6 +115,14 @@ def _show(document: dict[str, Any]) -> None:
         "This verifies the program against the model; it says nothing of how well the model fits a real network.",
     )
     put_caution()
+
+
+def _reads(measure: str) -> str:
+    """The measure in words; occupancy levels are named as they are."""
+    from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
+
+    known = {one.name: one.reads for one in (*NETWORK_MEASURES, *UNIT_MEASURES)}
+    return known.get(measure, measure)
 
 
 def _verdict(one: dict[str, Any]) -> str:

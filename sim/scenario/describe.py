@@ -102,7 +102,11 @@ def mean_stay_days(scenario: Scenario) -> float:
 
 def advice(scenario: Scenario) -> list[str]:
     """What an analyst should know before running this scenario; empty where nothing is amiss."""
-    return [said for rule in (_warm_up, _whole_weeks, _targets, _one_replication) for said in rule(scenario)]
+    return [
+        said
+        for rule in (_warm_up, _whole_weeks, _whole_periods, _targets, _one_replication)
+        for said in rule(scenario)
+    ]
 
 
 def _warm_up(scenario: Scenario) -> list[str]:
@@ -126,6 +130,17 @@ def _whole_weeks(scenario: Scenario) -> list[str]:
         "more than others"
         for key, days in lengths.items()
         if days % 7
+    ]
+
+
+def _whole_periods(scenario: Scenario) -> list[str]:
+    goal, days = scenario.game.goal, scenario.run.measured_days
+    left = days - goal.judged_over_days * int(days / goal.judged_over_days + 1e-9)
+    if goal.shape != "squared" or left < 1e-6:
+        return []
+    return [
+        f"the last {left:g} of {days:g} measured days make no whole period of {goal.judged_over_days:g} days and are "
+        "not judged by the squared goal"
     ]
 
 
