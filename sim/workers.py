@@ -9,9 +9,11 @@ from __future__ import annotations
 
 import os
 import signal
+import threading
 import traceback
 import warnings
 from collections.abc import Callable, Hashable, Iterable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any, Protocol
 
@@ -95,7 +97,8 @@ class LocalProcesses:
         from joblib import Parallel, delayed
 
         pool = Parallel(n_jobs=self.count, backend="loky", batch_size=1, return_as="generator_unordered")
-        replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in tasks)
+        with _interrupts_ignored():  # or they would tell of it in tracebacks while they import
+            replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in tasks)
         finished = False
         try:
             for reply in replies:  # noqa: UP028 - `yield from` would close joblib's generator with a warning
@@ -107,6 +110,19 @@ class LocalProcesses:
                     warnings.simplefilter("ignore")  # joblib's, that tasks were cancelled
                     replies.close()
                 stop_processes()
+
+
+@contextmanager
+def _interrupts_ignored() -> Iterator[None]:
+    """Ctrl-C is ignored for the moment in which processes start, and by those processes for good."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = signal.signal(signal.SIGINT, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, before)
 
 
 def stop_processes() -> None:
