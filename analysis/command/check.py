@@ -17,7 +17,7 @@ from analysis.command.output import (
     put_text,
     write_result,
 )
-from analysis.command.progress import duration
+from analysis.command.progress import about
 
 
 @click.option(
@@ -142,7 +142,7 @@ def _game_takes(expected: dict[str, Any]) -> str:
     if expected["game_seconds"] is None:
         return expected["reason"][0].upper() + expected["reason"][1:] + "."
     return (
-        f"Expected: about {duration(expected['game_seconds'])} and {expected['game_bytes'] / 1e6:.0f} MB on "
+        f"Expected: {about(expected['game_seconds'])} and {expected['game_bytes'] / 1e6:.0f} MB on "
         f"{expected['workers']} worker(s) with the {expected['engine']} engine."
     )
 
@@ -160,7 +160,7 @@ def _show_rest(document: dict[str, Any]) -> None:
         + "; ".join(f"{name} {_span(mine)}" for name, mine in game["strategies"].items())
         + ".",
         f"Game: {count(game['cells'])} cells, {count(game['runs'])} runs. {_game_takes(expected)}",
-        f"One policy (`simulate`): about {duration(expected['simulate_seconds'])}.",
+        f"One policy (`simulate`): {about(expected['simulate_seconds'])}.",
     )
     chain = document["exact_chain"]
     if chain["in_scope"] and not chain["too_large"]:

@@ -9,7 +9,7 @@ from typing import Any
 
 from analysis.command.options import Request
 from analysis.command.output import count, prepare_folder, write_result
-from analysis.command.progress import SECONDS_BETWEEN_LINES, duration
+from analysis.command.progress import SECONDS_BETWEEN_LINES, about, duration
 
 TABLE, BEST_REPLY = "table", "best_reply"
 QUICK = 1_000_000  # states in all the cells of a table that needs no timing
@@ -60,7 +60,7 @@ def choose(request: Request, wanted: str | None) -> Choice:
     table_seconds = seconds * profiles.cells / (request.workers or 1)
     method = TABLE if table_seconds <= TABLE_SECONDS else BEST_REPLY
     reads = (
-        f"{_named(method)}: {size} take about {duration(table_seconds)}, the limit of a table is "
+        f"{_named(method)}: {size} take {about(table_seconds)}, the limit of a table is "
         f"{duration(TABLE_SECONDS)} (--search overrides)"
     )
     return Choice(method, "cost", profiles.cells, states, float(f"{seconds:.1g}"), reads)

@@ -41,7 +41,7 @@ class _Lines:
             self._last = now
             early = self._done < 0.01 * self._total  # one reply tells little of the rest
             left = (now - self._started) / self._done * (self._total - self._done)
-            when = "time left not known yet" if early else f"about {duration(left)} left"
+            when = "time left not known yet" if early else f"{about(left)} left"
             done = f"{self._done} of {self._total} {self._unit}, {100 * self._done // self._total} %"
             print(f"{self._label}: {done}, {when}", file=sys.stderr, flush=True)
 
@@ -126,10 +126,13 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
         raise StopIteration
 
 
+def about(seconds: float) -> str:
+    """An estimated length of time."""
+    return "less than a second" if seconds < 1 else f"about {duration(seconds)}"
+
+
 def duration(seconds: float) -> str:
     """A length of time as a person says it."""
-    if seconds < 1:
-        return "less than a second"
     if seconds < 90:
         return f"{seconds:.0f} s"
     if seconds < 5400:
