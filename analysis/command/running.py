@@ -2,17 +2,23 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any
 
 from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import Request
 from analysis.command.progress import progress, until_interrupted
+from analysis.command.provenance import provenance
 from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
-from sim.replicate import Failure, Pace, Run, pace_of, replicate
+from sim.provenance import fingerprint, now
+from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
+from sim.resuming import Job
+from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
 
 WORTH_PROCESSES_SECONDS = 3.0
@@ -77,11 +83,16 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
 
 @dataclass(frozen=True)
 class Ran:
-    """How replications were run, and what went wrong."""
+    """How replications were run, and what went wrong.
+
+    computed, reused: runs done now, and runs that a store had; None where there is no store.
+    """
 
     engine: engines.Choice
     failures: list[Failure]
     interrupted: bool
+    computed: int | None = None
+    reused: int | None = None
 
     def to_dict(self) -> dict[str, Any]:
         """What a result says of it."""
@@ -99,26 +110,86 @@ class Ran:
             "engine_choice": self.engine.reason,
             "failed": failed,
             "interrupted": self.interrupted,
-        }
+        } | ({} if self.reused is None else {"computed": self.computed, "reused": self.reused})
 
 
-def run_replications(request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
-    """Runs every replication of the request under every policy and hands each reply to `take`."""
-    scenario = request.scenario
-    count, cells = scenario.run.replications, len(policies)
+def run_replications(
+    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False
+) -> Ran:
+    """Runs every replication of the request under every policy and hands each reply to `take`.
+
+    keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
+    """
+    if not keep or request.out is None:
+        return _run(request, policies, [_whole(request, policies)], label=label, take=take)
+    with Store(request.out, write=True) as store:
+        return _run_beside(store, request, policies, label=label, take=take)
+
+
+def _whole(request: Request, policies: Sequence[Any]) -> Share:
+    return Share(tuple(range(len(policies))), range(request.scenario.run.replications))
+
+
+def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
+    """Takes what the store has, then runs and keeps what is missing."""
+    job = Job(
+        store, request.scenario, policies, request.scenario.run.replications,
+        fingerprint=json.dumps(fingerprint(), sort_keys=True),
+    )  # fmt: skip
+    if job.restarted:
+        say(
+            f"{len(job.restarted)} replications were begun on a machine with other bits and are run again whole"
+        )
+    for runs in job.kept_runs():
+        take(runs)
+    if job.reused:
+        say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
+    computed = 0
+
+    def keep_and_take(reply: list[Run] | Failure, engine: str) -> None:
+        nonlocal computed
+        job.keep(reply, engine)
+        computed += len(reply) if isinstance(reply, list) else 0
+        take(reply)
+
+    def begin(engine: str) -> None:
+        job.begin(provenance(request, label, engine=engine) | {"cwd": str(Path.cwd())})
+
+    ran = _run(request, policies, job.shares(), label=label, take=keep_and_take, begin=begin)
+    job.end(now().isoformat(timespec="seconds"))
+    return replace(ran, computed=computed, reused=job.reused)
+
+
+def _run(
+    request: Request,
+    policies: Sequence[Any],
+    shares: Sequence[Share],
+    *,
+    label: str,
+    take: Any,
+    begin: Any = None,
+) -> Ran:
+    """Runs the shares; `take` gets each reply, and with `begin` (told the engine's name first) the engine too."""
+    scenario, runs = request.scenario, sum(len(share.cells) * len(share.replications) for share in shares)
+    count = max(1, sum(len(share.replications) for share in shares))
+    cells = -(-runs // count)
     planned = effort(request, count, cells)
+    engine = planned.engine.name
+    if begin is not None:
+        begin(engine)
     rules = [lower_policy(scenario, policy) for policy in policies]
-    engines.load(planned.engine.name).warm(lower_network(scenario), rules, plan_intake(scenario))
+    if runs:
+        engines.load(engine).warm(lower_network(scenario), rules, plan_intake(scenario))
     replies = until_interrupted(
-        replicate(
-            scenario, policies, range(count), engine=planned.engine.name, workers=planned.workers,
-            task_size=planned.pace.task_size(count, cells, planned.count),
+        replicate_shares(
+            scenario, policies, shares, engine=engine, workers=planned.workers,
+            task_size=planned.pace.task_size(count, max(1, cells), planned.count),
         )
     )  # fmt: skip
     failures = []
-    with replies, progress(label, count * cells, "runs") as bar:
+    with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
-            take(reply)
+            take(reply) if begin is None else take(reply, engine)
             if isinstance(reply, Failure):
                 failures.append(reply)
                 say(f"failed: {reply}")
@@ -126,7 +197,9 @@ def run_replications(request: Request, policies: Sequence[Any], *, label: str, t
     return Ran(planned.engine, failures, replies.interrupted)
 
 
-def collect_runs(request: Request, *, label: str, least: int = 1) -> tuple[list[Run], Ran]:
+def collect_runs(
+    request: Request, *, label: str, least: int = 1, keep: bool = False
+) -> tuple[list[Run], Ran]:
     """The finished runs of the request's policy by replication, at least so many, and how they were run."""
     runs: list[Run] = []
     ran = run_replications(
@@ -134,6 +207,7 @@ def collect_runs(request: Request, *, label: str, least: int = 1) -> tuple[list[
         [request.policy],
         label=label,
         take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
+        keep=keep,
     )
     require(len(runs), ran.interrupted, least=least)
     return sorted(runs, key=lambda run: run.replication), ran
