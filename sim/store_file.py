@@ -99,7 +99,7 @@ def _require_sound(connection: sqlite3.Connection, file: Path) -> None:
         raise StoreError(f"{file} is not a store of brimline; it was left as it is: choose another folder")
     (verdict,) = connection.execute("PRAGMA quick_check(1)").fetchone()
     if verdict != "ok":
-        raise StoreError(_damaged(file, verdict))
+        raise StoreError(_damaged(file, " ".join(verdict.split())))
 
 
 def _damaged(file: Path, why: str) -> str:
@@ -160,9 +160,12 @@ class WriterLock:
             holder = _holder(opened.read())
             opened.close()
             raise StoreError(f"{folder} is being written by {holder}: wait for it, or choose another folder")
-        opened.truncate(0)
-        opened.write(json.dumps(_myself()))
-        opened.flush()
+        try:
+            opened.truncate(0)
+            opened.write(json.dumps(_myself()))
+            opened.flush()
+        except OSError as error:
+            raise StoreError(f"{path} cannot be written: {error.strerror}") from error
         self._file = opened
 
     def release(self) -> None:

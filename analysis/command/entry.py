@@ -65,7 +65,8 @@ class LazyCommands(click.Group):
 def brimline() -> None:
     """Closure rules in a network of critical-care units: simulate them, and find what selfish ones cost.
 
-    Commands read a SCENARIO, a TOML file; `results` reads what they left in a folder. Start with `brimline check SCENARIO`.
+    Commands read a SCENARIO, a TOML file; `results` reads what they left in a folder. Start with `brimline
+    check SCENARIO`.
     """
 
 
