@@ -17,6 +17,7 @@ class Job:
 
     fingerprint: of this machine, as text. A replication that is there for every policy is reused whoever ran it;
     one begun under another fingerprint is run again whole (`restarted`); of any other only missing cells are run.
+    computed: the number of runs kept since.
     """
 
     def __init__(
@@ -32,6 +33,7 @@ class Job:
         self.scenario = scenario_hash(lower_network(scenario), plan_intake(scenario))
         self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
         self._command: int | None = None
+        self.computed = 0
         held = store.held(self.scenario)
         self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
         self.restarted = tuple(
@@ -100,6 +102,7 @@ class Job:
             for run in reply
         ]  # fmt: skip
         self._store.put(rows, command=self._command)
+        self.computed += len(rows)
 
     def end(self, at: str) -> None:
         """Notes in the store that the job has ended, be it interrupted, at that time."""

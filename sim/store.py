@@ -10,6 +10,7 @@ from __future__ import annotations
 import hashlib
 import json
 import sqlite3
+import sys
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -20,10 +21,13 @@ from sim.store_file import FILE, STEPS, WriterLock, connect_to_read, connect_to_
 from sim.store_rows import COUNTS, DAYS, Key, Row, by_unit, pack, unpack
 
 UNIT_COLUMNS = COUNTS + DAYS
+# In this order the indices give key order, with nothing to sort.
 _KEYED = """
-    FROM runs JOIN scenarios ON scenarios.id = runs.scenario JOIN cells ON cells.id = runs.cell
-    JOIN replications ON replications.scenario = runs.scenario AND replications.replication = runs.replication
-    JOIN fingerprints ON fingerprints.id = replications.fingerprint
+    FROM scenarios CROSS JOIN cells
+    CROSS JOIN runs ON runs.scenario = scenarios.id AND runs.cell = cells.id
+    CROSS JOIN replications
+        ON replications.scenario = runs.scenario AND replications.replication = runs.replication
+    CROSS JOIN fingerprints ON fingerprints.id = replications.fingerprint
 """
 _ROW = "scenarios.hash, cells.hash, runs.replication, arrays, intake_hash, engine, text, seconds, record_hash"
 _IN_ORDER = "ORDER BY scenarios.hash, cells.hash, runs.replication"
@@ -129,8 +133,9 @@ class Store:
             address,
         ).fetchone()
         if kept is not None and kept[0] != row.fingerprint:
-            db.execute(f"DELETE FROM units WHERE run IN (SELECT id FROM runs {where})", address)
-            db.execute(f"DELETE FROM runs {where}", address)
+            runs = f"{where} AND cell IN (SELECT id FROM cells)"  # for the index's sake
+            db.execute(f"DELETE FROM units WHERE run IN (SELECT id FROM runs {runs})", address)
+            db.execute(f"DELETE FROM runs {runs}", address)
             db.execute(f"DELETE FROM replications {where}", address)
             kept = None
         if kept is None:
@@ -224,7 +229,7 @@ class Store:
         for replication, fingerprint, cell in self._ask(
             f"SELECT {columns} {_KEYED} WHERE scenarios.hash = ?", (scenario,)
         ):
-            found.setdefault(replication, (fingerprint, set()))[1].add(cell)
+            found.setdefault(replication, (fingerprint, set()))[1].add(sys.intern(cell))
         return found
 
     def sample(self, count: int) -> list[Key]:

@@ -36,7 +36,7 @@ STEPS = (
         id INTEGER PRIMARY KEY, scenario INTEGER NOT NULL REFERENCES scenarios,
         cell INTEGER NOT NULL REFERENCES cells, replication INTEGER NOT NULL, engine TEXT NOT NULL,
         seconds REAL NOT NULL, record_hash TEXT NOT NULL, arrays BLOB NOT NULL,
-        UNIQUE (scenario, replication, cell));
+        UNIQUE (scenario, cell, replication));
     CREATE TABLE units (
         run INTEGER NOT NULL REFERENCES runs, unit INTEGER NOT NULL,
         arrived INTEGER NOT NULL, admitted INTEGER NOT NULL, diverted_out INTEGER NOT NULL,
@@ -48,7 +48,7 @@ STEPS = (
     CREATE TABLE failures (
         scenario INTEGER NOT NULL REFERENCES scenarios, cell INTEGER NOT NULL REFERENCES cells,
         replication INTEGER NOT NULL, traceback TEXT NOT NULL,
-        PRIMARY KEY (scenario, replication, cell)) WITHOUT ROWID;
+        PRIMARY KEY (scenario, cell, replication)) WITHOUT ROWID;
     CREATE TABLE commands (
         id INTEGER PRIMARY KEY, scenario INTEGER NOT NULL REFERENCES scenarios, provenance TEXT NOT NULL,
         asked INTEGER NOT NULL, reused INTEGER NOT NULL, computed INTEGER NOT NULL DEFAULT 0,

@@ -121,13 +121,10 @@ def run_replications(
     keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
     """
     if not keep or request.out is None:
-        return _run(request, policies, [_whole(request, policies)], label=label, take=take)
+        whole = [Share(tuple(range(len(policies))), range(request.scenario.run.replications))]
+        return _run(request, policies, whole, _effort(request, whole), label=label, take=take)
     with Store(request.out, write=True) as store:
         return _run_beside(store, request, policies, label=label, take=take)
-
-
-def _whole(request: Request, policies: Sequence[Any]) -> Share:
-    return Share(tuple(range(len(policies))), range(request.scenario.run.replications))
 
 
 def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
@@ -137,59 +134,62 @@ def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, labe
         fingerprint=json.dumps(fingerprint(), sort_keys=True),
     )  # fmt: skip
     if job.restarted:
-        say(
-            f"{len(job.restarted)} replications were begun on a machine with other bits and are run again whole"
-        )
+        said = "replications were begun on a machine with other bits and are run again whole"
+        say(f"{len(job.restarted)} {said}")
     for runs in job.kept_runs():
         take(runs)
     if job.reused:
         say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
-    computed = 0
+    shares = job.shares()
+    planned = _effort(request, shares)
+    engine = planned.engine.name
+    job.begin(provenance(request, label, engine=engine) | {"cwd": str(Path.cwd())})
 
-    def keep_and_take(reply: list[Run] | Failure, engine: str) -> None:
-        nonlocal computed
+    def keep_then_take(reply: list[Run] | Failure) -> None:
         job.keep(reply, engine)
-        computed += len(reply) if isinstance(reply, list) else 0
         take(reply)
 
-    def begin(engine: str) -> None:
-        job.begin(provenance(request, label, engine=engine) | {"cwd": str(Path.cwd())})
-
-    ran = _run(request, policies, job.shares(), label=label, take=keep_and_take, begin=begin)
+    ran = _run(request, policies, shares, planned, label=label, take=keep_then_take)
     job.end(now().isoformat(timespec="seconds"))
-    return replace(ran, computed=computed, reused=job.reused)
+    return replace(ran, computed=job.computed, reused=job.reused)
+
+
+def _size(shares: Sequence[Share]) -> tuple[int, int]:
+    """Replications, and policies of each on average, at least one."""
+    replications = sum(len(share.replications) for share in shares)
+    runs = sum(len(share.replications) * len(share.cells) for share in shares)
+    return max(1, replications), max(1, -(-runs // max(1, replications)))
+
+
+def _effort(request: Request, shares: Sequence[Share]) -> Effort:
+    return effort(request, *_size(shares))
 
 
 def _run(
     request: Request,
     policies: Sequence[Any],
     shares: Sequence[Share],
+    planned: Effort,
     *,
     label: str,
     take: Any,
-    begin: Any = None,
 ) -> Ran:
-    """Runs the shares; `take` gets each reply, and with `begin` (told the engine's name first) the engine too."""
-    scenario, runs = request.scenario, sum(len(share.cells) * len(share.replications) for share in shares)
-    count = max(1, sum(len(share.replications) for share in shares))
-    cells = -(-runs // count)
-    planned = effort(request, count, cells)
-    engine = planned.engine.name
-    if begin is not None:
-        begin(engine)
+    """Runs the shares and hands each reply to `take`."""
+    scenario, engine = request.scenario, planned.engine.name
     rules = [lower_policy(scenario, policy) for policy in policies]
-    if runs:
+    if shares:
         engines.load(engine).warm(lower_network(scenario), rules, plan_intake(scenario))
     replies = until_interrupted(
         replicate_shares(
             scenario, policies, shares, engine=engine, workers=planned.workers,
-            task_size=planned.pace.task_size(count, max(1, cells), planned.count),
+            task_size=planned.pace.task_size(*_size(shares), planned.count),
         )
     )  # fmt: skip
     failures = []
+    runs = sum(len(share.replications) * len(share.cells) for share in shares)
     with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
-            take(reply) if begin is None else take(reply, engine)
+            take(reply)
             if isinstance(reply, Failure):
                 failures.append(reply)
                 say(f"failed: {reply}")

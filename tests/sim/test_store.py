@@ -362,7 +362,7 @@ CREATE TABLE fingerprints (id INTEGER PRIMARY KEY, text TEXT NOT NULL UNIQUE);
 CREATE TABLE replications (scenario INTEGER, replication INTEGER, fingerprint INTEGER, intake_hash TEXT,
     PRIMARY KEY (scenario, replication)) WITHOUT ROWID;
 CREATE TABLE runs (id INTEGER PRIMARY KEY, scenario INTEGER, cell INTEGER, replication INTEGER, engine TEXT,
-    seconds REAL, record_hash TEXT, arrays BLOB, UNIQUE (scenario, replication, cell));
+    seconds REAL, record_hash TEXT, arrays BLOB, UNIQUE (scenario, cell, replication));
 CREATE TABLE units (run INTEGER, unit INTEGER, arrived INTEGER, admitted INTEGER, diverted_out INTEGER,
     diverted_in INTEGER, turned_away INTEGER, occupied_days REAL, full_days REAL, closed_days REAL,
     closed_free_days REAL, incoming_closed_days REAL, PRIMARY KEY (run, unit)) WITHOUT ROWID;
