@@ -23,7 +23,7 @@ PARQUET_BATCH = 50_000
 
 @click.group(epilog=CAUTION)
 def command() -> None:
-    """What runs with --out have left in their folders; nothing here changes it."""
+    """What runs with --out have left in their folders (nothing here changes it)."""
 
 
 FOLDER = click.argument("folder", type=click.Path(path_type=Path, exists=True, file_okay=False))

@@ -1,15 +1,12 @@
-"""The store: exact bits, keys, one writer, older layouts, damaged files, and replications of one machine only."""
+"""The store: exact bits, keys, one writer, and replications of one machine only."""
 
 from __future__ import annotations
 
 import json
-import os
 import signal
-import sqlite3
 import subprocess
 import sys
 import tempfile
-from contextlib import closing
 from dataclasses import replace
 from pathlib import Path
 
@@ -25,8 +22,9 @@ from sim.replicate import Failure, Run, replicate, replicate_shares
 from sim.resuming import Job
 from sim.scenario import parse_scenario
 from sim.store import Store
-from sim.store_file import FILE, STEPS
-from sim.store_rows import Key, Row, by_unit, cell_hash, pack, scenario_hash, unpack
+from sim.store_file import FILE
+from sim.store_rows import Key, by_unit, cell_hash, pack, scenario_hash, unpack
+from tests.sim.stored import filled, record_of, row
 
 ROOT = Path(__file__).resolve().parents[2]
 TEXT = """
@@ -49,30 +47,6 @@ stay = { family = "exponential", mean_days = 3.0 }
 """
 SCENARIO = parse_scenario(TEXT)
 POLICIES = [SCENARIO.policy().with_thresholds({"Ashgill": k, "Norbeck": k}) for k in (1, 2, 3)]
-
-
-def record_of(seed: float, units: int = 2, staffed: bool = False) -> Record:
-    """A record that no engine made, of awkward numbers."""
-    days = np.array([[[seed, 0.1, -0.0], [5e-324, 1 / 3, 1e300]]])[:, :units]
-    counts = np.arange(units)
-    return Record(
-        days, np.full((units, 8), seed / 7), counts, counts + 1, np.eye(units, dtype=np.int64)[::-1],
-        np.ones((units, units), np.int64), counts, counts, days * 2 if staffed else None,
-    )  # fmt: skip
-
-
-def row(scenario="s", cell="c", replication=0, *, seed=1.0, intake=None, machine="here") -> Row:
-    intake = f"intake {replication}" if intake is None else intake
-    return Row(Key(scenario, cell, replication), record_of(seed), intake, "reference", machine)
-
-
-def filled(folder: Path, rows, *, command=None) -> str:
-    """Puts the rows, one commit each; gives the table's hash."""
-    with Store(folder, write=True) as store:
-        for one in rows:
-            store.describe(one.key.scenario, ["A", "B"], {one.key.cell: [1, 2]})
-            store.put([one], command=command)
-        return store.table_hash()
 
 
 # ---- bits ----
@@ -298,113 +272,6 @@ def test_a_full_disk_is_told_and_loses_nothing_that_was_committed(tmp_path):
         with pytest.raises(StoreError, match="full.*what was committed before is kept"):
             store.put([row(replication=number) for number in range(1, 200)])
     assert filled(tmp_path, []) == hashed
-
-
-# ---- damaged, foreign and older files ----
-
-
-def cut(file: Path) -> None:
-    os.truncate(file, file.stat().st_size - 5000)
-
-
-def scribble(file: Path) -> None:
-    content = bytearray(file.read_bytes())
-    content[4096:] = bytes(byte ^ 0x5A for byte in content[4096:])
-    file.write_bytes(content)
-
-
-DAMAGE = {
-    "emptied": lambda file: file.write_bytes(b""),
-    "cut": cut,
-    "scribbled over": scribble,
-    "no database": lambda file: file.write_text("{}"),
-}
-
-
-@pytest.mark.parametrize("write", [False, True])
-@pytest.mark.parametrize("harm", DAMAGE)
-def test_a_damaged_file_is_refused_in_plain_words_and_left_as_it_is(tmp_path, harm, write):
-    filled(tmp_path, [row(replication=number) for number in range(20)])
-    DAMAGE[harm](tmp_path / FILE)
-    left = (tmp_path / FILE).read_bytes()
-    for _ in range(2):  # the lock of a refused writer is let go
-        with pytest.raises(StoreError, match="is damaged .* left as it is"):
-            Store(tmp_path, write=write)
-    assert (tmp_path / FILE).read_bytes() == left
-
-
-def test_a_row_whose_bits_have_changed_is_refused(tmp_path):
-    filled(tmp_path, [row()])
-    with closing(sqlite3.connect(tmp_path / FILE)) as db, db:
-        (blob,) = db.execute("SELECT arrays FROM runs").fetchone()
-        db.execute("UPDATE runs SET arrays = ?", (blob[:-1] + bytes([blob[-1] ^ 1]),))
-    with Store(tmp_path) as store, pytest.raises(StoreError, match="damaged"):
-        store.get(row().key)
-
-
-def test_another_programs_database_is_refused(tmp_path):
-    with closing(sqlite3.connect(tmp_path / FILE)) as db, db:
-        db.execute("CREATE TABLE guests (name)")
-    with pytest.raises(StoreError, match="not a store"):
-        Store(tmp_path, write=True)
-
-
-def test_no_store_is_told(tmp_path):
-    with pytest.raises(StoreError, match="holds no results"):
-        Store(tmp_path)
-
-
-OLDER = """
-PRAGMA application_id = 1112689996;
-CREATE TABLE scenarios (id INTEGER PRIMARY KEY, hash TEXT NOT NULL UNIQUE, units TEXT NOT NULL);
-CREATE TABLE cells (id INTEGER PRIMARY KEY, hash TEXT NOT NULL UNIQUE, thresholds TEXT NOT NULL);
-CREATE TABLE fingerprints (id INTEGER PRIMARY KEY, text TEXT NOT NULL UNIQUE);
-CREATE TABLE replications (scenario INTEGER, replication INTEGER, fingerprint INTEGER, intake_hash TEXT,
-    PRIMARY KEY (scenario, replication)) WITHOUT ROWID;
-CREATE TABLE runs (id INTEGER PRIMARY KEY, scenario INTEGER, cell INTEGER, replication INTEGER, engine TEXT,
-    seconds REAL, record_hash TEXT, arrays BLOB, UNIQUE (scenario, cell, replication));
-CREATE TABLE units (run INTEGER, unit INTEGER, arrived INTEGER, admitted INTEGER, diverted_out INTEGER,
-    diverted_in INTEGER, turned_away INTEGER, occupied_days REAL, full_days REAL, closed_days REAL,
-    closed_free_days REAL, incoming_closed_days REAL, PRIMARY KEY (run, unit)) WITHOUT ROWID;
-INSERT INTO scenarios VALUES (1, 's', '["A", "B"]');
-INSERT INTO cells VALUES (1, 'c', '[1, 2]');
-INSERT INTO fingerprints VALUES (1, 'here');
-INSERT INTO replications VALUES (1, 0, 1, 'intake 0');
-PRAGMA user_version = 1;
-"""
-
-
-@pytest.mark.parametrize("write", [False, True])
-def test_a_file_of_an_older_layout_is_brought_up_and_keeps_its_rows(tmp_path, write):
-    """The file is written here, as layout 1 was: without failures and commands."""
-    record = record_of(1.0)
-    with closing(sqlite3.connect(tmp_path / FILE)) as db, db:
-        db.executescript(OLDER)
-        db.execute(
-            "INSERT INTO runs VALUES (1, 1, 1, 0, 'reference', 0.5, ?, ?)", (record.hash, pack(record))
-        )
-        db.executemany(
-            "INSERT INTO units VALUES (1, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
-            [(unit, *numbers) for unit, numbers in enumerate(by_unit(record))],
-        )
-    with Store(tmp_path, write=write) as store:
-        assert store.get(row().key).record.hash == record.hash
-        assert store.commands() == [] and store.failures() == []
-    (tmp_path / "new").mkdir()
-    assert filled(tmp_path, []) == filled(tmp_path / "new", [row()])
-    with closing(sqlite3.connect(tmp_path / FILE)) as db:
-        assert db.execute("PRAGMA user_version").fetchone() == (len(STEPS),)
-        left = {name for (name,) in db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
-    assert {"failures", "commands"} <= left
-
-
-def test_a_file_of_a_newer_layout_is_left_alone(tmp_path):
-    filled(tmp_path, [row()])
-    with closing(sqlite3.connect(tmp_path / FILE)) as db, db:
-        db.execute("PRAGMA user_version = 99")
-    for write in (False, True):
-        with pytest.raises(StoreError, match="newer brimline"):
-            Store(tmp_path, write=write)
 
 
 def test_unit_rows_name_what_they_count(tmp_path):
