@@ -6,7 +6,7 @@ import itertools
 import time
 import traceback
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from sim import engines
 from sim.errors import RunError
@@ -24,12 +24,13 @@ TASKS_PER_WORKER = 4
 
 @dataclass(frozen=True)
 class Run:
-    """One finished run: its address, its record, and the hash of the intake it met."""
+    """One finished run: its address, its record, the hash of the intake it met, and the seconds it took."""
 
     replication: int
     cell: int
     record: Record
     intake_hash: str
+    seconds: float = field(default=0.0, compare=False)
 
 
 @dataclass(frozen=True)
@@ -56,6 +57,14 @@ class TaskSize:
     cells: int | None = None
 
 
+@dataclass(frozen=True)
+class Share:
+    """Replications that are to run under the same policies: `cells` are places among the policies."""
+
+    cells: tuple[int, ...]
+    replications: Iterable[int]
+
+
 def replicate(
     scenario: Scenario,
     policies: Sequence[Policy],
@@ -71,21 +80,34 @@ def replicate(
     policies. Yields the runs of one replication's block of policies at a time as they finish, in any order;
     the numbers depend neither on the workers nor on the tasks' size.
     """
+    whole = Share(tuple(range(len(policies))), replications)
+    return replicate_shares(scenario, policies, [whole], engine=engine, workers=workers, task_size=task_size)
+
+
+def replicate_shares(
+    scenario: Scenario,
+    policies: Sequence[Policy],
+    shares: Iterable[Share],
+    *,
+    engine: str = DEFAULT_ENGINE,
+    workers: Workers | None = None,
+    task_size: TaskSize | None = None,
+) -> Iterator[list[Run] | Failure]:
+    """As `replicate`, but each replication under the policies of its share only."""
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
     size = task_size or TaskSize()
-    block = size.cells or len(rules)
     tasks = (
-        ((batch, first), (network, plan, batch, first, rules[first : first + block], engine))
-        for batch in _batches(replications, size.replications)
-        for first in range(0, len(rules), block)
+        ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
+        for share in shares
+        for batch in _batches(share.replications, size.replications)
+        for cells in _batches(share.cells, size.cells or len(rules))
     )
     for reply in (workers or ThisProcess()).run(run_batch, tasks):
         if reply.failure is None:
             yield from reply.value
         else:
-            batch, first = reply.key
-            cells = tuple(range(first, min(first + block, len(rules))))
+            batch, cells = reply.key
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
 
 
@@ -100,42 +122,53 @@ def run_batch(
     network: Network,
     plan: IntakePlan,
     replications: Sequence[int],
-    first: int,
+    cells: Sequence[int],
     rules: Sequence[Rules],
     engine: str,
 ) -> list[list[Run] | Failure]:
-    """Consecutive cells of several replications; `first` is the number of the first cell.
+    """Some cells of several replications: their numbers, and the rules of each.
 
     A run that fails costs only itself.
     """
     replies: list[list[Run] | Failure] = []
     for replication in replications:
         try:
-            replies.append(_run_cells(network, plan, replication, first, rules, engine))
+            replies.append(_run_cells(network, plan, replication, cells, rules, engine))
         except Exception:
-            replies += _run_each(network, plan, replication, first, rules, engine)
+            replies += _run_each(network, plan, replication, cells, rules, engine)
     return replies
 
 
 def _run_cells(
-    network: Network, plan: IntakePlan, replication: int, first: int, rules: Sequence[Rules], engine: str
+    network: Network,
+    plan: IntakePlan,
+    replication: int,
+    cells: Sequence[int],
+    rules: Sequence[Rules],
+    engine: str,
 ) -> list[Run]:
+    started = time.perf_counter()
     intake = draw_intake(plan, replication)
     records = engines.load(engine).run_table(network, rules, intake)
+    seconds = (time.perf_counter() - started) / len(rules)
     return [
-        Run(replication, first + place, _sound(record, network), intake.hash)
-        for place, record in enumerate(records)
+        Run(replication, cell, _sound(record, network), intake.hash, seconds)
+        for cell, record in zip(cells, records, strict=True)
     ]
 
 
 def _run_each(
-    network: Network, plan: IntakePlan, replication: int, first: int, rules: Sequence[Rules], engine: str
+    network: Network,
+    plan: IntakePlan,
+    replication: int,
+    cells: Sequence[int],
+    rules: Sequence[Rules],
+    engine: str,
 ) -> Iterator[list[Run] | Failure]:
     """The cells one by one, so that only those at fault are lost."""
-    for place in range(len(rules)):
-        cell = first + place
+    for cell, own in zip(cells, rules, strict=True):
         try:
-            yield _run_cells(network, plan, replication, cell, rules[place : place + 1], engine)
+            yield _run_cells(network, plan, replication, [cell], [own], engine)
         except Exception:
             yield Failure(plan.seed, replication, (cell,), traceback.format_exc())
 

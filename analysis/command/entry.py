@@ -25,6 +25,7 @@ COMMANDS = {
     "exact": "The same measures from the exact Markov chain.",
     "verify": "Hold the simulation against the exact chain, measure by measure.",
     "game": "Payoff table, equilibria, optimum and price of anarchy.",
+    "results": "What runs with --out have left: list, show, export, verify, repeat.",
 }
 
 
@@ -64,7 +65,8 @@ class LazyCommands(click.Group):
 def brimline() -> None:
     """Closure rules in a network of critical-care units: simulate them, and find what selfish ones cost.
 
-    Every command reads a SCENARIO, a TOML file. Start with `brimline check SCENARIO`.
+    Commands read a SCENARIO, a TOML file; `results` reads what they left in a folder. Start with `brimline
+    check SCENARIO`.
     """
 
 
@@ -80,7 +82,7 @@ def run(arguments: list[str]) -> int:
     """Runs the command line; returns the exit status."""
     as_json = "--json" in arguments
     try:
-        status = brimline.main(arguments, prog_name="brimline", standalone_mode=False)
+        status = brimline.main(arguments, prog_name="brimline", standalone_mode=False, obj=tuple(arguments))
         return status if isinstance(status, int) else DONE
     except Interrupted:
         return INTERRUPTED

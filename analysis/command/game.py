@@ -121,7 +121,7 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
     run = request.scenario.run
     sums = TableSums(request.scenario, profiles.cells, run.replications)
     policies = list(profiles.policies(request.policy))
-    ran = run_replications(request, policies, label="game", take=sums.add)
+    ran = run_replications(request, policies, label="game", take=sums.add, keep=True)
     require(len(sums.complete), ran.interrupted)
     table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]

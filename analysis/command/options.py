@@ -62,7 +62,7 @@ def scenario_command(function: Callable[..., Any]) -> click.Command:
     @functools.wraps(function)
     def read_then_run(**values: Any) -> Any:
         own = {name: value for name, value in values.items() if name not in _COMMON}
-        return function(_request({name: values[name] for name in _COMMON}), **own)
+        return function(request_of(values), **own)
 
     decorated: Callable[..., Any] = read_then_run
     for option in reversed(_OPTIONS):
@@ -106,7 +106,8 @@ _COMMON = (
 )  # fmt: skip
 
 
-def _request(values: Mapping[str, Any]) -> Request:
+def request_of(values: Mapping[str, Any]) -> Request:
+    """The request that the values of the common options make; ScenarioError with every fault."""
     from sim.scenario import read_scenario
 
     scenario = read_scenario(values["scenario"])

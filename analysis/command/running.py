@@ -2,17 +2,23 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any
 
 from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import Request
 from analysis.command.progress import progress, until_interrupted
+from analysis.command.provenance import provenance
 from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
-from sim.replicate import Failure, Pace, Run, pace_of, replicate
+from sim.provenance import fingerprint, now
+from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
+from sim.resuming import Job
+from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
 
 WORTH_PROCESSES_SECONDS = 3.0
@@ -77,11 +83,16 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
 
 @dataclass(frozen=True)
 class Ran:
-    """How replications were run, and what went wrong."""
+    """How replications were run, and what went wrong.
+
+    computed, reused: runs done now, and runs that a store had; None where there is no store.
+    """
 
     engine: engines.Choice
     failures: list[Failure]
     interrupted: bool
+    computed: int | None = None
+    reused: int | None = None
 
     def to_dict(self) -> dict[str, Any]:
         """What a result says of it."""
@@ -99,24 +110,84 @@ class Ran:
             "engine_choice": self.engine.reason,
             "failed": failed,
             "interrupted": self.interrupted,
-        }
+        } | ({} if self.reused is None else {"computed": self.computed, "reused": self.reused})
 
 
-def run_replications(request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
-    """Runs every replication of the request under every policy and hands each reply to `take`."""
-    scenario = request.scenario
-    count, cells = scenario.run.replications, len(policies)
-    planned = effort(request, count, cells)
+def run_replications(
+    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False
+) -> Ran:
+    """Runs every replication of the request under every policy and hands each reply to `take`.
+
+    keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
+    """
+    if not keep or request.out is None:
+        whole = [Share(tuple(range(len(policies))), range(request.scenario.run.replications))]
+        return _run(request, policies, whole, _effort(request, whole), label=label, take=take)
+    with Store(request.out, write=True) as store:
+        return _run_beside(store, request, policies, label=label, take=take)
+
+
+def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
+    """Takes what the store has, then runs and keeps what is missing."""
+    job = Job(
+        store, request.scenario, policies, request.scenario.run.replications,
+        fingerprint=json.dumps(fingerprint(), sort_keys=True),
+    )  # fmt: skip
+    if job.restarted:
+        said = "replications were begun on a machine with other bits and are run again whole"
+        say(f"{len(job.restarted)} {said}")
+    for runs in job.kept_runs():
+        take(runs)
+    if job.reused:
+        say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
+    shares = job.shares()
+    planned = _effort(request, shares)
+    engine = planned.engine.name
+    job.begin(provenance(request, label, engine=engine) | {"cwd": str(Path.cwd())})
+
+    def keep_then_take(reply: list[Run] | Failure) -> None:
+        job.keep(reply, engine)
+        take(reply)
+
+    ran = _run(request, policies, shares, planned, label=label, take=keep_then_take)
+    job.end(now().isoformat(timespec="seconds"))
+    return replace(ran, computed=job.computed, reused=job.reused)
+
+
+def _size(shares: Sequence[Share]) -> tuple[int, int]:
+    """Replications, and policies of each on average, at least one."""
+    replications = sum(len(share.replications) for share in shares)
+    runs = sum(len(share.replications) * len(share.cells) for share in shares)
+    return max(1, replications), max(1, -(-runs // max(1, replications)))
+
+
+def _effort(request: Request, shares: Sequence[Share]) -> Effort:
+    return effort(request, *_size(shares))
+
+
+def _run(
+    request: Request,
+    policies: Sequence[Any],
+    shares: Sequence[Share],
+    planned: Effort,
+    *,
+    label: str,
+    take: Any,
+) -> Ran:
+    """Runs the shares and hands each reply to `take`."""
+    scenario, engine = request.scenario, planned.engine.name
     rules = [lower_policy(scenario, policy) for policy in policies]
-    engines.load(planned.engine.name).warm(lower_network(scenario), rules, plan_intake(scenario))
+    if shares:
+        engines.load(engine).warm(lower_network(scenario), rules, plan_intake(scenario))
     replies = until_interrupted(
-        replicate(
-            scenario, policies, range(count), engine=planned.engine.name, workers=planned.workers,
-            task_size=planned.pace.task_size(count, cells, planned.count),
+        replicate_shares(
+            scenario, policies, shares, engine=engine, workers=planned.workers,
+            task_size=planned.pace.task_size(*_size(shares), planned.count),
         )
     )  # fmt: skip
     failures = []
-    with replies, progress(label, count * cells, "runs") as bar:
+    runs = sum(len(share.replications) * len(share.cells) for share in shares)
+    with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
             take(reply)
             if isinstance(reply, Failure):
@@ -126,7 +197,9 @@ def run_replications(request: Request, policies: Sequence[Any], *, label: str, t
     return Ran(planned.engine, failures, replies.interrupted)
 
 
-def collect_runs(request: Request, *, label: str, least: int = 1) -> tuple[list[Run], Ran]:
+def collect_runs(
+    request: Request, *, label: str, least: int = 1, keep: bool = False
+) -> tuple[list[Run], Ran]:
     """The finished runs of the request's policy by replication, at least so many, and how they were run."""
     runs: list[Run] = []
     ran = run_replications(
@@ -134,6 +207,7 @@ def collect_runs(request: Request, *, label: str, least: int = 1) -> tuple[list[
         [request.policy],
         label=label,
         take=lambda reply: runs.extend(reply if isinstance(reply, list) else []),
+        keep=keep,
     )
     require(len(runs), ran.interrupted, least=least)
     return sorted(runs, key=lambda run: run.replication), ran

@@ -46,7 +46,7 @@ def simulate(
     _check_files(request, trace, intake_out)
     for said in advice(request.scenario):
         say(f"advice: {said}")
-    runs, ran = collect_runs(request, label="simulate")
+    runs, ran = collect_runs(request, label="simulate", keep=True)
     result = summarise(
         [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
     )

@@ -225,6 +225,9 @@ def test_findings_say_the_numbers_of_the_document(call, two, how):
 # ---- what is written ----
 
 
+STORE = {"runs.sqlite", "runs.lock"}
+
+
 def files_in(folder):
     return {path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()}
 
@@ -256,7 +259,7 @@ def test_a_second_run_keeps_the_earlier_result_and_leaves_other_files_alone(call
     assert files_in(folder) == written | {"notes.txt"}
     second = call("exact", two, "--out", folder)[1]
     third = call("simulate", two, "--out", folder)[1]
-    now = {"result.json", "provenance.json", "notes.txt"}
+    now = {"result.json", "provenance.json", "notes.txt"} | STORE
     assert files_in(folder) == now | {f"earlier/1/{name}" for name in written} | {
         f"earlier/2/{name}" for name in ("result.json", "provenance.json")
     }
@@ -267,7 +270,7 @@ def test_a_second_run_keeps_the_earlier_result_and_leaves_other_files_alone(call
 def test_three_units_have_a_table_but_no_pictures(call, three, tmp_path):
     folder = tmp_path / "out"
     call("game", three, "--replications", 2, "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"}
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | STORE
     header = (folder / "table.csv").read_text(encoding="utf-8").splitlines()[0].split(",")
     assert {"threshold C", "payoff C", "payoff C low", "payoff C high", "regret C", "welfare"} <= set(header)
 

@@ -136,7 +136,7 @@ class Sabotage:
 
 @pytest.mark.parametrize("count", [1, 2])
 def test_a_failing_task_is_reported_with_its_address_and_the_rest_is_kept(plain, count):
-    workers = Sabotage(local_workers(count), address=((1,), 2))
+    workers = Sabotage(local_workers(count), address=((1,), (2, 3)))
     replies = list(replicate(SCENARIO, POLICIES * 2, range(3), workers=workers, task_size=TaskSize(cells=2)))
     failures = [reply for reply in replies if isinstance(reply, Failure)]
     assert [(one.seed, one.replication, one.cells) for one in failures] == [(5, 1, (2,)), (5, 1, (3,))]

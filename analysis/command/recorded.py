@@ -1,0 +1,110 @@
+"""Commands that a store recorded, made again from their provenance: their requests, their jobs, and their rows."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import chdir
+from dataclasses import dataclass
+from typing import Any
+
+from analysis.command.entry import brimline
+from analysis.command.options import Request, request_of
+from sim.errors import BrimlineError, StoreError
+from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy, plan_intake
+from sim.replicate import Failure, run_batch
+from sim.store import Store
+from sim.store_rows import Key, Row, cell_hash, scenario_hash
+
+
+def arguments_of(origin: Mapping[str, Any]) -> list[str]:
+    """The command line that a provenance names, without the program's name."""
+    return list(origin["command"][1:])
+
+
+def request_again(origin: Mapping[str, Any]) -> tuple[str, Request]:
+    """A recorded command's name and request; StoreError where its scenario or data are not what they were."""
+    name, *arguments = arguments_of(origin)
+    command = brimline.get_command(None, name)  # type: ignore[arg-type]
+    try:
+        with chdir(origin["cwd"]):
+            request = request_of(command.make_context(name, arguments).params)
+    except (BrimlineError, OSError) as error:
+        raise StoreError(f"the recorded command cannot be run again: {error}") from error
+    source, then = request.scenario.source, origin["scenario"]
+    if (
+        hashlib.sha256(source.text.encode()).hexdigest() != then["sha256"]
+        or source.data != then["data_sha256"]
+    ):
+        raise StoreError(
+            f"{then['file']} or its data have changed since; its text then is in `results show --json`"
+        )
+    return name, request
+
+
+def policies_of(name: str, request: Request) -> Sequence[Any]:
+    """The policies that a command runs."""
+    from analysis.payoffs import profiles_of
+
+    if name == "game":
+        return list(profiles_of(request.scenario).policies(request.policy))
+    return [request.policy]
+
+
+@dataclass(frozen=True)
+class Recipe:
+    """What runs of one scenario hash are made of; rules by cell hash."""
+
+    network: Network
+    plan: IntakePlan
+    rules: dict[str, Rules]
+
+
+def recipes(store: Store) -> tuple[dict[str, Recipe], list[str]]:
+    """Scenario hash -> recipe, from every recorded command, and why others cannot be made again."""
+    found: dict[str, Recipe] = {}
+    reasons: dict[str, None] = {}
+    for origin in _distinct(store):
+        try:
+            name, request = request_again(origin)
+        except StoreError as error:
+            reasons[str(error)] = None
+            continue
+        network, plan = lower_network(request.scenario), plan_intake(request.scenario)
+        recipe = found.setdefault(scenario_hash(network, plan), Recipe(network, plan, {}))
+        for policy in policies_of(name, request):
+            rules = lower_policy(request.scenario, policy)
+            recipe.rules[cell_hash(rules)] = rules
+    return found, list(reasons)
+
+
+def _distinct(store: Store) -> Iterator[Mapping[str, Any]]:
+    """The provenances of different command lines or scenario texts."""
+    seen = set()
+    for command in store.commands():
+        origin = command["provenance"]
+        mark = (*origin["command"], origin["cwd"], origin["scenario"]["sha256"])
+        if mark not in seen:
+            seen.add(mark)
+            yield origin
+
+
+def differs(store: Store, key: Key, recipe: Recipe) -> str | None:
+    """In words, how a row differs from the same run made again; None where every bit agrees."""
+    try:
+        row = store.get(key)
+    except StoreError as error:
+        return str(error)
+    assert row is not None
+    [again] = run_batch(
+        recipe.network, recipe.plan, [key.replication], [0], [recipe.rules[key.cell]], row.engine
+    )
+    if isinstance(again, Failure):
+        return f"cannot be run again: {again}"
+    return _difference(row, again[0])
+
+
+def _difference(row: Row, again: Any) -> str | None:
+    if again.intake_hash != row.intake_hash:
+        return "other patients"
+    return None if again.record.hash == row.record.hash else "another record"

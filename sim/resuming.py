@@ -1,0 +1,110 @@
+"""A job beside a store: what it asks for and is there already, what is missing, and the keeping of what arrives."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from typing import Any
+
+from sim.lowering import lower_network, lower_policy, plan_intake
+from sim.replicate import Failure, Run, Share
+from sim.scenario import Policy, Scenario
+from sim.store import Store
+from sim.store_rows import Key, Row, cell_hash, scenario_hash
+
+
+class Job:
+    """Policies times replications of a scenario, held against what a store has of them.
+
+    fingerprint: of this machine, as text. A replication that is there for every policy is reused whoever ran it;
+    one begun under another fingerprint is run again whole (`restarted`); of any other only missing cells are run.
+    computed: the number of runs kept since.
+    """
+
+    def __init__(
+        self,
+        store: Store,
+        scenario: Scenario,
+        policies: Sequence[Policy],
+        replications: int,
+        *,
+        fingerprint: str,
+    ) -> None:
+        self._store, self._fingerprint = store, fingerprint
+        self.scenario = scenario_hash(lower_network(scenario), plan_intake(scenario))
+        self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
+        self._command: int | None = None
+        self.computed = 0
+        held = store.held(self.scenario)
+        self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
+        self.restarted = tuple(
+            one for one, missing in self._missing.items()
+            if missing and one in held and held[one][0] != fingerprint
+        )  # fmt: skip
+        names = scenario.unit_names
+        closes = [[policy.units[name].closure_threshold for name in names] for policy in policies]
+        store.describe(self.scenario, names, dict(zip(self._cells, closes, strict=True)))
+
+    def _cells_missing(self, replication: int, held: Mapping[int, tuple[str, set[str]]]) -> tuple[int, ...]:
+        fingerprint, there = held.get(replication, (self._fingerprint, set()))
+        missing = tuple(place for place, cell in enumerate(self._cells) if cell not in there)
+        return tuple(range(len(self._cells))) if missing and fingerprint != self._fingerprint else missing
+
+    @property
+    def asked(self) -> int:
+        """The number of runs that the job asks for."""
+        return len(self._cells) * len(self._missing)
+
+    @property
+    def missing(self) -> int:
+        """The number of runs to be computed."""
+        return sum(map(len, self._missing.values()))
+
+    @property
+    def reused(self) -> int:
+        """The number of runs that are there already."""
+        return self.asked - self.missing
+
+    def shares(self) -> list[Share]:
+        """The missing runs: the replications that lack the same cells together."""
+        lacking: dict[tuple[int, ...], list[int]] = {}
+        for replication, cells in self._missing.items():
+            if cells:
+                lacking.setdefault(cells, []).append(replication)
+        return [Share(cells, tuple(replications)) for cells, replications in lacking.items()]
+
+    def kept_runs(self) -> Iterator[list[Run]]:
+        """The runs that are there, a replication at a time."""
+        for replication, missing in self._missing.items():
+            runs = [
+                self._kept(replication, cell) for cell in sorted(set(range(len(self._cells))) - {*missing})
+            ]
+            if runs:
+                yield runs
+
+    def _kept(self, replication: int, cell: int) -> Run:
+        row = self._store.get(Key(self.scenario, self._cells[cell], replication))
+        assert row is not None, "only the one writer drops rows"
+        return Run(replication, cell, row.record, row.intake_hash)
+
+    def begin(self, provenance: Mapping[str, Any]) -> None:
+        """Notes in the store that the job starts."""
+        self._command = self._store.begin(self.scenario, provenance, asked=self.asked, reused=self.reused)
+
+    def keep(self, reply: list[Run] | Failure, engine: str) -> None:
+        """Keeps what a task yielded; it is safe when this returns."""
+        if isinstance(reply, Failure):
+            keys = [Key(self.scenario, self._cells[cell], reply.replication) for cell in reply.cells]
+            self._store.fail(keys, reply.traceback, command=self._command)
+            return
+        rows = [
+            Row(Key(self.scenario, self._cells[run.cell], run.replication), run.record, run.intake_hash,
+                engine, self._fingerprint, run.seconds)
+            for run in reply
+        ]  # fmt: skip
+        self._store.put(rows, command=self._command)
+        self.computed += len(rows)
+
+    def end(self, at: str) -> None:
+        """Notes in the store that the job has ended, be it interrupted, at that time."""
+        if self._command is not None:
+            self._store.end(self._command, at)
