@@ -153,7 +153,7 @@ def _third(stay: Duration, square: float) -> float:
             return math.fsum((value / mean) ** 3 for value in values) / len(values) if mean else 0.0
         case "constant":
             return 1.0
-    raise NotImplementedError(f"the third moment of a stay of family {stay.family!r} is not known here")
+    raise TypeError(f"the third moment of a stay of family {stay.family!r} is not known here")
 
 
 def _weibull_order(stay: Duration) -> float:
