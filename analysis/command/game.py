@@ -63,7 +63,7 @@ def game(
     request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
-        _finish_search(request, game_search.searched(request, choice, tolerance))
+        _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
     table, ran, told = _exact_table(request) if exact else _simulated_table(request)
@@ -205,6 +205,7 @@ def _show_search(document: dict[str, Any]) -> None:
     from analysis.findings import ONE_NETWORK
 
     put_heading(document)
+    show_fits(document)
     put_text(
         f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.",
         document["search"]["reads"] + ".",

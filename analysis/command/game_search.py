@@ -105,8 +105,8 @@ def structure_of_table(analysis: Any, choice: Choice) -> dict[str, Any]:
     }
 
 
-def searched(request: Request, choice: Choice, tolerance: float) -> dict[str, Any]:
-    """Searches, writes what `--out` asks for, and returns the document."""
+def searched(request: Request, choice: Choice, tolerance: float, *, told: dict[str, Any]) -> dict[str, Any]:
+    """Searches, writes what `--out` asks for, and returns the document; `told` is what it says besides."""
     from analysis.command.provenance import provenance, started
     from analysis.goals import goal_of, welfare_of
     from analysis.payoffs import profiles_of
@@ -123,7 +123,7 @@ def searched(request: Request, choice: Choice, tolerance: float) -> dict[str, An
         on_solved=_Told(profiles.cells),
     )
     document = request.heading | {"method": "exact", "engine": "exact chain"}
-    document |= search_document(found) | {"search": asdict(choice)}
+    document |= search_document(found) | {"search": asdict(choice)} | told
     if request.out is not None:
         folder = prepare_folder(request.out)
         write_result(folder, document, provenance(request, "game", begun, engine="exact chain"))

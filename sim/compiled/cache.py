@@ -7,7 +7,7 @@ from functools import cache
 from pathlib import Path
 from typing import Any
 
-from sim.kernel_cache import compile_into, digest_of, folder_for, is_writable
+from sim.kernel_cache import are_kept, compile_into, digest_of, folder_for, is_writable
 
 
 @cache
@@ -34,4 +34,4 @@ def compiled(function: Callable[..., Any]) -> Any:
 
 def is_kept() -> bool:
     """Whether an earlier run has left compiled kernels."""
-    return folder_is_writable() and any(cache_folder().rglob("*.nbi"))
+    return are_kept(Path(__file__).parent)

@@ -66,6 +66,21 @@ def test_the_choice_can_be_overridden_and_finds_the_same_ends(call, wide):
     assert set(map(str, equilibria(search))) <= set(map(str, equilibria(table)))
 
 
+def test_a_search_tells_of_fitted_stays_as_a_table_does(call, show, wide):
+    with open(wide, encoding="utf-8") as file:
+        text = file.read()
+    assert 'family = "exponential", mean_days = 2.0' in text
+    gamma = text.replace(
+        'family = "exponential", mean_days = 2.0', 'family = "gamma", mean_days = 2.0, cv = 1.3', 1
+    )
+    with open(wide, "w", encoding="utf-8") as file:
+        file.write(gamma)
+    options = ("game", wide, "--exact", "--phase-fit", 2)
+    searched, whole = (call(*options, "--search", search)[1] for search in ("best_reply", "table"))
+    assert len(whole["phase_fit"]) == 1 and searched["phase_fit"] == whole["phase_fit"]
+    assert "largest distance" in show(*options, "--search", "best_reply")[1]
+
+
 @pytest.mark.parametrize("how", [["--search", "table"], ["--search", "best_reply", "--replications", "2"]])
 def test_search_is_for_the_exact_chain_only(call, two, how):
     status, document = call("game", two, *how)
