@@ -5,8 +5,8 @@ from __future__ import annotations
 import itertools
 import time
 import traceback
-from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Hashable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field, replace
 
 from sim import engines
 from sim.errors import RunError
@@ -15,7 +15,7 @@ from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy
 from sim.record import Record
 from sim.scenario import Policy, Scenario
 from sim.trace import Trace
-from sim.workers import ThisProcess, Workers
+from sim.workers import Binding, Reply, Task, ThisProcess, Workers
 
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
@@ -24,13 +24,17 @@ TASKS_PER_WORKER = 4
 
 @dataclass(frozen=True)
 class Run:
-    """One finished run: its address, its record, the hash of the intake it met, and the seconds it took."""
+    """One finished run: its address, its record, the hash of the intake it met, and the seconds it took.
+
+    fingerprint: of the machine that ran it, as text, where that may be another one.
+    """
 
     replication: int
     cell: int
     record: Record
     intake_hash: str
     seconds: float = field(default=0.0, compare=False)
+    fingerprint: str | None = field(default=None, compare=False)
 
 
 @dataclass(frozen=True)
@@ -59,10 +63,14 @@ class TaskSize:
 
 @dataclass(frozen=True)
 class Share:
-    """Replications that are to run under the same policies: `cells` are places among the policies."""
+    """Replications that are to run under the same policies: `cells` are places among the policies.
+
+    fingerprint: of the machines that may run them, where others have run a part already.
+    """
 
     cells: tuple[int, ...]
     replications: Iterable[int]
+    fingerprint: str | None = None
 
 
 def replicate(
@@ -97,18 +105,48 @@ def replicate_shares(
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
     size = task_size or TaskSize()
-    tasks = (
-        ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
-        for share in shares
-        for batch in _batches(share.replications, size.replications)
-        for cells in _batches(share.cells, size.cells or len(rules))
+    bound: dict[tuple[int, ...], Binding] = {}
+    replies = _run_on(
+        workers or ThisProcess(), _tasks(network, plan, rules, shares, size, engine, bound), bound
     )
-    for reply in (workers or ThisProcess()).run(run_batch, tasks):
+    for reply in replies:
         if reply.failure is None:
-            yield from reply.value
+            yield from (_stamped(one, reply.fingerprint) for one in reply.value)
         else:
             batch, cells = reply.key
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
+
+
+def _tasks(
+    network: Network,
+    plan: IntakePlan,
+    rules: Sequence[Rules],
+    shares: Iterable[Share],
+    size: TaskSize,
+    engine: str,
+    bound: dict[tuple[int, ...], Binding],
+) -> Iterator[Task]:
+    """Blocks of cells of batches of replications; notes in `bound` what must come from machines of the same bits."""
+    for share in shares:
+        blocks = list(_batches(share.cells, size.cells or len(rules)))
+        for batch in _batches(share.replications, size.replications):
+            if len(blocks) > 1 or share.fingerprint:
+                bound[batch] = Binding(batch, len(blocks), share.fingerprint)
+            for cells in blocks:
+                yield (batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine)
+
+
+def _run_on(workers: Workers, tasks: Iterable[Task], bound: Mapping[Hashable, Binding]) -> Iterator[Reply]:
+    """The replies; workers that may differ in bits are told what belongs together."""
+    if not getattr(workers, "binds", False):
+        return workers.run(run_batch, tasks)
+    return workers.run(run_batch, tasks, binding=lambda key: bound.get(key[0]) or Binding(key))  # type: ignore[call-arg]
+
+
+def _stamped(reply: list[Run] | Failure, fingerprint: str | None) -> list[Run] | Failure:
+    if fingerprint is None or isinstance(reply, Failure):
+        return reply
+    return [replace(run, fingerprint=fingerprint) for run in reply]
 
 
 def _batches(numbers: Iterable[int], size: int) -> Iterator[tuple[int, ...]]:

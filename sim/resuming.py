@@ -15,8 +15,9 @@ from sim.store_rows import Key, Row, cell_hash, scenario_hash
 class Job:
     """Policies times replications of a scenario, held against what a store has of them.
 
-    fingerprint: of this machine, as text. A replication that is there for every policy is reused whoever ran it;
-    one begun under another fingerprint is run again whole (`restarted`); of any other only missing cells are run.
+    fingerprint: of this machine, as text; a run may name another machine's. A replication that is there for every
+    policy is reused whoever ran it; one begun under another fingerprint is run again whole (`restarted`); of any other
+    only missing cells are run.
     computed: the number of runs kept since.
     """
 
@@ -35,6 +36,7 @@ class Job:
         self._command: int | None = None
         self.computed = 0
         held = store.held(self.scenario)
+        self._begun = {one for one, (by, _) in held.items() if by == fingerprint}
         self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
         self.restarted = tuple(
             one for one, missing in self._missing.items()
@@ -65,12 +67,13 @@ class Job:
         return self.asked - self.missing
 
     def shares(self) -> list[Share]:
-        """The missing runs: the replications that lack the same cells together."""
-        lacking: dict[tuple[int, ...], list[int]] = {}
+        """The missing runs: the replications that lack the same cells together; what was begun here says so."""
+        lacking: dict[tuple[tuple[int, ...], str | None], list[int]] = {}
         for replication, cells in self._missing.items():
             if cells:
-                lacking.setdefault(cells, []).append(replication)
-        return [Share(cells, tuple(replications)) for cells, replications in lacking.items()]
+                bits = self._fingerprint if replication in self._begun else None
+                lacking.setdefault((cells, bits), []).append(replication)
+        return [Share(cells, tuple(some), bits) for (cells, bits), some in lacking.items()]
 
     def kept_runs(self) -> Iterator[list[Run]]:
         """The runs that are there, a replication at a time."""
@@ -98,7 +101,7 @@ class Job:
             return
         rows = [
             Row(Key(self.scenario, self._cells[run.cell], run.replication), run.record, run.intake_hash,
-                engine, self._fingerprint, run.seconds)
+                engine, run.fingerprint or self._fingerprint, run.seconds)
             for run in reply
         ]  # fmt: skip
         self._store.put(rows, command=self._command)

@@ -1,8 +1,8 @@
 """Where tasks run: in this process or in local worker processes, behind one small interface.
 
 A pool takes a function and addressed tasks and yields replies as they finish, in any order. A task that
-raises costs only itself: its reply carries the traceback. Other machines will stand behind the same
-interface.
+raises costs only itself: its reply carries the traceback. Other machines stand behind the same interface
+(`sim.cluster`).
 """
 
 from __future__ import annotations
@@ -15,19 +15,35 @@ import warnings
 from collections.abc import Callable, Hashable, Iterable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 
 @dataclass(frozen=True)
 class Reply:
-    """What became of one task. `value` where it succeeded, else `failure`, the traceback as text."""
+    """What became of one task. `value` where it succeeded, else `failure`, the traceback as text.
+
+    fingerprint: of the machine that ran it, as text, where it may be another one.
+    """
 
     key: Hashable
     value: Any = None
     failure: str | None = None
+    fingerprint: str | None = None
 
 
 Task = tuple[Hashable, tuple]
+
+
+class Binding(NamedTuple):
+    """What a task belongs to.
+
+    group: its tasks must all come from one kind of bits. size: how many they are. bits: which ones, where that is
+    settled.
+    """
+
+    group: Hashable
+    size: int = 1
+    bits: str | None = None
 
 
 class Workers(Protocol):

@@ -26,7 +26,7 @@ class Request:
     """A scenario with every override of the command line applied, and how to run it.
 
     confidence: as the command line gave it; the scenario's run table has the one in force. changes: what the
-    command line changed of the scenario, in words.
+    command line changed of the scenario, in words. cluster: the full address of a scheduler.
     """
 
     scenario: Any
@@ -37,6 +37,7 @@ class Request:
     out: Path | None
     as_json: bool
     changes: tuple[str, ...] = ()
+    cluster: str | None = None
 
     @property
     def heading(self) -> dict[str, Any]:
@@ -84,6 +85,11 @@ _OPTIONS = (
         "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
     ),
     click.option(
+        "--cluster",
+        metavar="ADDRESS",
+        help="Run on the machines of a cluster; see `brimline cluster --help`.",
+    ),
+    click.option(
         "--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."
     ),
     click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the results."),
@@ -101,8 +107,8 @@ _OPTIONS = (
     ),
 )
 _COMMON = (
-    "scenario", "as_json", "seed", "replications", "confidence", "workers", "engine", "out", "threshold", "incoming",
-    "demand", "target", "policy", "exponential",
+    "scenario", "as_json", "seed", "replications", "confidence", "workers", "cluster", "engine", "out", "threshold",
+    "incoming", "demand", "target", "policy", "exponential",
 )  # fmt: skip
 
 
@@ -124,6 +130,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
         "incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults)
     )
     _writable(values["out"], faults)
+    cluster = _cluster(values, faults)
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
     return Request(
@@ -135,7 +142,22 @@ def request_of(values: Mapping[str, Any]) -> Request:
         values["out"],
         values["as_json"],
         _changes(values),
+        cluster,
     )
+
+
+def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
+    """The full address of the scheduler; the cluster's packages are looked for only where one is given."""
+    if values.get("cluster") is None:
+        return None
+    from sim.machines.keys import full_address, require_packages
+
+    try:
+        require_packages("--cluster")
+        return full_address(values["cluster"])
+    except ScenarioError as error:
+        faults.extend(error.faults)
+        return None
 
 
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
