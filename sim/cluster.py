@@ -182,7 +182,11 @@ class Cluster:
         del machine.threads[address]
         if not machine.threads:
             self.notice(f"{machine.name} is gone; its tasks go to others")
-        return [] if desk is None else desk.leave(address)
+        if desk is None:
+            return []
+        for number in desk.orders_of(address):
+            self._link.forget(number)
+        return desk.leave(address)
 
     def _welcome(self, said: line.Said, desk: Desk | None) -> None:
         worker = self._asked.get(said.address)

@@ -152,6 +152,9 @@ def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
         return None
     from sim.machines.keys import full_address, require_packages
 
+    if values["workers"] is not None:
+        rule, remedy = "must not stand beside --cluster", "give it to `brimline cluster join` on each machine"
+        faults.append(Fault(None, "--workers", rule, f"got {values['workers']}", remedy))
     try:
         require_packages("--cluster")
         return full_address(values["cluster"])

@@ -258,6 +258,11 @@ class Desk:
         work = self._orders.get(number)
         return None if work is None else work.copies[number][0].address
 
+    def orders_of(self, address: str) -> list[int]:
+        """The orders under way at a worker."""
+        seat = self._seats.get(address)
+        return [] if seat is None else list(seat.orders)
+
     def key_of(self, number: int) -> Hashable:
         """The key of an order that is wanted."""
         return self._orders[number].task[0]

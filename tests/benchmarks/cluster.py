@@ -39,7 +39,9 @@ def sizes() -> tuple[int, int]:
     """Bytes of a whole replication of the demo's game, as a task and as its answer."""
     scenario = read_scenario(ROOT / "scenarios" / "two-units.toml")
     policy = scenario.policy()
-    rules = [lower_policy(scenario, policy.with_thresholds({"Norbeck": 1 + place % 18})) for place in range(CELLS)]
+    rules = [
+        lower_policy(scenario, policy.with_thresholds({"Norbeck": 1 + place % 18})) for place in range(CELLS)
+    ]
     arguments = (lower_network(scenario), plan_intake(scenario), [0], list(range(CELLS)), rules, "compiled")
     return len(pickle.dumps(arguments)), len(pickle.dumps(run_batch(*arguments)))
 
@@ -120,16 +122,23 @@ def main() -> None:
         for name, size in (("empty", (0, 0)), ("demo's bytes", (load, answer))):
             found = [overheads(site, *size) for _ in range(TRIES)]
             cost = {part: median(one[part] for one in found) for part in found[0]}
-            print(f"a task, {name}: " + ", ".join(f"{part} {1e3 * each:.2f} ms" for part, each in cost.items()))
+            print(
+                f"a task, {name}: " + ", ".join(f"{part} {1e3 * each:.2f} ms" for part, each in cost.items())
+            )
             _reckon(max(cost["client"], cost["scheduler"]), cost["clock"])
 
 
 def _reckon(each: float, delay: float) -> None:
-    print("  on paper, efficiency by workers and task length (the narrowest of client and scheduler serves one by one)")
+    print(
+        "  on paper, efficiency by workers and task length (the narrowest of client and scheduler serves one by one)"
+    )
     lengths = (0.1, 1.0, 10.0)
     for workers in (2, 10, 100, 1000):
         row = [on_paper(workers, length, each, delay) for length in lengths]
-        print(f"  {workers:5d}  " + "  ".join(f"{length:g} s {one:.2f}" for length, one in zip(lengths, row, strict=True)))
+        print(
+            f"  {workers:5d}  "
+            + "  ".join(f"{length:g} s {one:.2f}" for length, one in zip(lengths, row, strict=True))
+        )
     limits = ", ".join(f"{length:g} s: {length / each:,.0f}" for length in lengths)
     print(f"  workers that it can keep busy with tasks of {limits}")
 
