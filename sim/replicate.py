@@ -20,6 +20,7 @@ from sim.workers import Binding, Reply, Task, ThisProcess, Workers
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
 TASKS_PER_WORKER = 4
+RECENT_BATCHES = 8  # whose share is remembered: a task is asked about when it is taken, or looked at ahead
 
 
 @dataclass(frozen=True)
@@ -105,7 +106,7 @@ def replicate_shares(
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
     size = task_size or TaskSize()
-    bound: dict[tuple[int, ...], Binding] = {}
+    bound: dict[tuple[int, ...], Share] = {}
     replies = _run_on(
         workers or ThisProcess(), _tasks(network, plan, rules, shares, size, engine, bound), bound
     )
@@ -124,23 +125,30 @@ def _tasks(
     shares: Iterable[Share],
     size: TaskSize,
     engine: str,
-    bound: dict[tuple[int, ...], Binding],
+    bound: dict[tuple[int, ...], Share],
 ) -> Iterator[Task]:
-    """Blocks of cells of batches of replications; notes in `bound` what must come from machines of the same bits."""
+    """Blocks of cells of batches of replications; notes in `bound` which share a batch is of."""
     for share in shares:
-        blocks = list(_batches(share.cells, size.cells or len(rules)))
         for batch in _batches(share.replications, size.replications):
-            if len(blocks) > 1 or share.fingerprint:
-                bound[batch] = Binding(batch, len(blocks), share.fingerprint)
-            for cells in blocks:
+            bound[batch] = share
+            while len(bound) > RECENT_BATCHES:
+                del bound[next(iter(bound))]
+            for cells in _batches(share.cells, size.cells or len(rules)):
                 yield (batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine)
 
 
-def _run_on(workers: Workers, tasks: Iterable[Task], bound: Mapping[Hashable, Binding]) -> Iterator[Reply]:
-    """The replies; workers that may differ in bits are told what belongs together."""
+def _run_on(
+    workers: Workers, tasks: Iterable[Task], bound: Mapping[tuple[int, ...], Share]
+) -> Iterator[Reply]:
+    """The replies; workers that may differ in bits are told that a replication's cells belong together."""
     if not getattr(workers, "binds", False):
         return workers.run(run_batch, tasks)
-    return workers.run(run_batch, tasks, binding=lambda key: bound.get(key[0]) or Binding(key))  # type: ignore[call-arg]
+
+    def binding(key: Hashable) -> Binding:
+        batch, cells = key  # type: ignore[misc]
+        return Binding(batch, len(cells), len(bound[batch].cells), bound[batch].fingerprint)
+
+    return workers.run(run_batch, tasks, binding=binding)  # type: ignore[call-arg]
 
 
 def _stamped(reply: list[Run] | Failure, fingerprint: str | None) -> list[Run] | Failure:

@@ -35,13 +35,14 @@ Task = tuple[Hashable, tuple]
 
 
 class Binding(NamedTuple):
-    """What a task belongs to.
+    """What a task belongs to, where workers may differ in bits.
 
-    group: its tasks must all come from one kind of bits. size: how many they are. bits: which ones, where that is
-    settled.
+    group: its tasks must all come from one kind of bits. weight, size: how much of the group the task is, and how much
+    there is in all. bits: which ones, where that is settled.
     """
 
     group: Hashable
+    weight: int = 1
     size: int = 1
     bits: str | None = None
 

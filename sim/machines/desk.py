@@ -35,16 +35,20 @@ class Order(NamedTuple):
 
 @dataclass(eq=False)
 class _Group:
+    key: Hashable
     bits: str | None
+    alone: bool  # of one task only
     size: int
     works: set[_Work] = field(default_factory=set)  # those whose answers have not been handed on
     held: list[Reply] = field(default_factory=list)
+    weight: int = 0  # of what is held, or has been handed on
 
 
 @dataclass(eq=False)
 class _Work:
     task: Task
     group: _Group
+    weight: int
     copies: dict[int, tuple[_Seat, float]] = field(default_factory=dict)
     done: bool = False
     lost: int = 0
@@ -212,12 +216,13 @@ class Desk:
 
     def _entered(self, task: Task) -> _Work:
         binding = self._binding(task[0])
+        alone = binding.weight >= binding.size
         group = self._groups.get(binding.group)
         if group is None:
-            group = _Group(binding.bits, binding.size)
-            if binding.size > 1:
+            group = _Group(binding.group, binding.bits, alone, binding.size)
+            if not alone:
                 self._groups[binding.group] = group
-        work = _Work(task, group)
+        work = _Work(task, group, binding.weight)
         group.works.add(work)
         self._open += 1
         return work
@@ -244,7 +249,7 @@ class Desk:
 
     def _give(self, work: _Work, seat: _Seat) -> Order:
         number = next(self._numbers)
-        if work.group.bits is None and work.group.size > 1:
+        if work.group.bits is None and not work.group.alone:
             work.group.bits = seat.bits
         work.copies[number] = (seat, self._clock())
         seat.orders.add(number)
@@ -290,10 +295,14 @@ class Desk:
         for number in list(work.copies):
             self._take_back(number, work).alone = False
         group = work.group
-        if group.size == 1 or group.bits == self._own:
+        group.weight += work.weight
+        if group.weight >= group.size:
+            self._groups.pop(group.key, None)
+        if group.alone or group.bits == self._own:
             return self._released(group, [work], [reply])
         group.held.append(reply)
-        if len(group.held) < group.size:
+        cut_short = self._ahead is None and len(group.held) == len(group.works)  # by whoever gave the tasks
+        if group.weight < group.size and not cut_short:
             return []
         held, group.held = group.held, []
         return self._released(group, list(group.works), held)
@@ -333,6 +342,7 @@ class Desk:
         self._waiting[group.bits] = deque(work for work in waiting if work.group is not group)
         group.bits = None
         group.held.clear()
+        group.weight = 0
         self.requeued += len(group.works)
         for work in group.works:
             work.done = False

@@ -11,7 +11,7 @@ import heapq
 import pickle
 import tempfile
 import time
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from statistics import median
 from typing import Any
@@ -24,15 +24,10 @@ from sim.replicate import run_batch
 from sim.scenario import read_scenario
 from sim.workers import LocalProcesses, Reply, Workers
 from tests.cluster.site import ROOT, Site
+from tests.cluster.tasks import nap
 
 CELLS = 216  # of the demo's game
 TRIES = 3
-
-
-def nap(seconds: float, load: bytes, answer: int) -> bytes:
-    """A task of so many seconds with so much to carry there and back."""
-    time.sleep(seconds)
-    return bytes(answer)
 
 
 def sizes() -> tuple[int, int]:
@@ -53,15 +48,21 @@ def seconds_for(workers: Workers, tasks: Iterable[tuple[int, tuple]]) -> float:
     return time.perf_counter() - started
 
 
-def efficiency(workers: Workers, length: float, load: int, answer: int) -> float:
+def efficiency(workers_of: Callable[[], Workers], length: float, load: int, answer: int) -> float:
     """The share of two workers' time that went into tasks; processes are up before, median of a few tries."""
-    count = 2 * max(8, min(200, int(2.0 / length)))
+    count = 2 * max(8, min(100, int(2.0 / length)))
     work = [(number, (length, bytes(load), answer)) for number in range(count)]
-    seconds_for(workers, [(number, (0.0, b"", 0)) for number in range(4)])
-    return median(count * length / 2 / seconds_for(workers, work) for _ in range(TRIES))
+    return median(count * length / 2 / seconds_for(workers_of(), work) for _ in range(TRIES))
 
 
-def overheads(site: Site, load: int, answer: int, count: int = 600) -> dict[str, float]:
+def local() -> Workers:
+    """Two processes that are up."""
+    workers = LocalProcesses(2)
+    seconds_for(workers, [(number, (0.0, b"", 0)) for number in range(8)])
+    return workers
+
+
+def overheads(site: Site, load: int, answer: int, count: int = 400) -> dict[str, float]:
     """Seconds a task, of tasks that do nothing: by the clock, and of CPU in the client and in the scheduler."""
     scheduler = psutil.Process(site.processes["scheduler"].pid)
     cluster = site.ready("bench")
@@ -116,9 +117,11 @@ def main() -> None:
         site.join("bench", 2)
         print("efficiency of two workers, by task length:  local   cluster   cluster, demo's bytes")
         for length in (0.01, 0.1, 1.0):
-            local = efficiency(LocalProcesses(2), length, 0, 0)
-            there = [efficiency(site.ready("bench"), length, *size) for size in ((0, 0), (load, answer))]
-            print(f"  {length:5.2f} s  {local:6.3f}   {there[0]:6.3f}   {there[1]:6.3f}")
+            here = efficiency(local, length, 0, 0)
+            there = [
+                efficiency(lambda: site.ready("bench"), length, *size) for size in ((0, 0), (load, answer))
+            ]
+            print(f"  {length:5.2f} s  {here:6.3f}   {there[0]:6.3f}   {there[1]:6.3f}")
         for name, size in (("empty", (0, 0)), ("demo's bytes", (load, answer))):
             found = [overheads(site, *size) for _ in range(TRIES)]
             cost = {part: median(one[part] for one in found) for part in found[0]}

@@ -123,7 +123,7 @@ class Site:
         return cluster
 
 
-def wait_for(ready: Callable[[], bool], what: str, seconds: float = 60.0) -> None:
+def wait_for(ready: Callable[[], bool], what: str, seconds: float = 240.0) -> None:
     """Until `ready`; far more time than any machine needs, so that nothing here judges speed."""
     until = time.monotonic() + seconds
     while not ready():

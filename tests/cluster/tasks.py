@@ -34,3 +34,9 @@ def note_and_sleep(folder: str, number: int, seconds: float) -> int:
     Path(folder, f"{number}-{os.getpid()}-{time.monotonic_ns()}").touch()
     time.sleep(seconds)
     return number
+
+
+def nap(seconds: float, load: bytes, answer: int) -> bytes:
+    """A task of so many seconds with so much to carry there and back."""
+    time.sleep(seconds)
+    return bytes(answer)

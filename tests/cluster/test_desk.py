@@ -34,7 +34,7 @@ def desk_of(count, workers=(("a", OWN),), *, threads=1, binding=None, clock=None
 
 def blocks(size, bits=None):
     """A binding: `size` consecutive tasks are the blocks of one replication."""
-    return lambda key: Binding(key // size, size, bits)
+    return lambda key: Binding(key // size, 1, size, bits)
 
 
 def answer(desk, order):
@@ -145,6 +145,14 @@ def test_other_bits_are_answered_only_as_whole_replications_own_ones_at_once():
     assert sorted(reply.key for reply in answer(desk, third)) == [0, 1, 2] and desk.finished
     desk = desk_of(3, [("a", OWN)], binding=blocks(3))
     assert len(answer(desk, next(desk.orders()))) == 1
+
+
+def test_a_replication_that_is_cut_short_is_answered_as_far_as_it_was_asked_for():
+    desk = desk_of(5, [("b", OTHER)], binding=blocks(3))
+    done = []
+    while not desk.finished:
+        done += [reply.key for order in list(desk.orders()) for reply in answer(desk, order)]
+    assert sorted(done) == [0, 1, 2, 3, 4]
 
 
 def test_a_replication_whose_bits_are_gone_begins_again_whole():
