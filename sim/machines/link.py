@@ -10,6 +10,7 @@ import contextlib
 import logging
 import pickle
 import queue
+import re
 import uuid
 from collections.abc import Callable
 from pathlib import Path
@@ -179,5 +180,5 @@ def _unreachable(address: str, error: Exception) -> str:
         why = (
             "is `brimline cluster host` running there, is the address right, does a firewall block the port?"
         )
-    lines = said.strip().splitlines()
+    lines = re.sub(r"^in <[^>]*>: ", "", said.strip()).splitlines()
     return f"no scheduler answers at {address} ({lines[-1] if lines else type(error).__name__}); {why}"
