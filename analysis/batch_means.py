@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -56,7 +56,11 @@ def lag1_correlation(means: np.ndarray) -> float | None:
     """Correlation of neighbours in a series, (batches,), about its one mean; None where nothing varies."""
     centred = np.asarray(means, float) - np.mean(means)
     spread = float(centred @ centred)
-    return None if spread <= 1e-24 * max(1.0, float(np.abs(means).max())) else float(centred[1:] @ centred[:-1]) / spread
+    return (
+        None
+        if spread <= 1e-24 * max(1.0, float(np.abs(means).max()))
+        else float(centred[1:] @ centred[:-1]) / spread
+    )
 
 
 def batch_grid(scenario: Scenario) -> Grid | None:
@@ -70,12 +74,15 @@ def batch_grid(scenario: Scenario) -> Grid | None:
 
 
 def batch_document(path: Path, scenario: Scenario, grid: Grid) -> dict[str, Any]:
-    """Batch means of one run: `units` -> mean occupied beds and patients, `network` -> patients, `batch_days`, `doubtful`.
+    """Batch means of one run: `units` (mean occupied beds, patients a day), `network`, `batch_days`, `doubtful`.
 
-    path: holds the grid of `batch_grid` under the name GRID. Rates are per day.
+    path: holds the grid of `batch_grid` under the name GRID. Intervals end at 0, for nothing here can be less.
     """
     confidence, found = scenario.run.confidence, path.grids[GRID]
-    rates = {"admissions_per_day": found.admitted / grid.days, "turned_away_per_day": found.turned_away / grid.days}
+    rates = {
+        "admissions_per_day": found.admitted / grid.days,
+        "turned_away_per_day": found.turned_away / grid.days,
+    }
     units = {
         name: {"mean_occupied": batch_means(found.occupied[place], confidence)}
         | {measure: batch_means(values[place], confidence) for measure, values in rates.items()}
@@ -96,10 +103,13 @@ def batch_document(path: Path, scenario: Scenario, grid: Grid) -> dict[str, Any]
 
 
 def _plain(measures: Mapping[str, BatchMeans]) -> dict[str, Any]:
-    return {name: one.to_dict() for name, one in measures.items()}
+    cut = {name: replace(one, estimate=one.estimate.within(0.0, math.inf)) for name, one in measures.items()}
+    return {name: one.to_dict() for name, one in cut.items()}
 
 
 def too_short(scenario: Scenario) -> str:
     """Why there are no batch means."""
     least = math.ceil(FEWEST * BATCH_STAYS * mean_stay_days(scenario))
-    return f"batch means need {FEWEST} batches of {BATCH_STAYS} mean stays: run.measured_days of {least} or more"
+    return (
+        f"batch means need {FEWEST} batches of {BATCH_STAYS} mean stays: run.measured_days of {least} or more"
+    )

@@ -18,12 +18,21 @@ DAYS = ("Mon", "Tue", "Wed", "Thu", "Fri", "Sat", "Sun")
 def warm_up_path(advice: Mapping[str, Any], ax: Axes, *, unit: str, beds: int) -> Axes:
     """One unit's average occupancy from an empty network on, with the present and the advised warm-up."""
     path, width = np.array(advice["path"][unit]), advice["observation_days"]
-    ax.stairs(path, width * np.arange(len(path) + 1), baseline=None, color="0.35", linewidth=1.2, label="average of the runs")
+    ax.stairs(
+        path,
+        width * np.arange(len(path) + 1),
+        baseline=None,
+        color="0.35",
+        linewidth=1.2,
+        label="average of the runs",
+    )
     ax.axhline(beds, color="0.7", linewidth=1, linestyle=":", label="beds")
     ax.axvline(advice["present_days"], color="0.5", linewidth=2, linestyle="--",
                label=f"present warm-up ({advice['present_days']:g} days)")  # fmt: skip
     if advice["days"] is not None:
-        ax.axvline(advice["days"], color="black", linewidth=2, label=f"advised warm-up ({advice['days']:g} days)")
+        ax.axvline(
+            advice["days"], color="black", linewidth=2, label=f"advised warm-up ({advice['days']:g} days)"
+        )
     if advice["cut_days"].get(unit) is not None:
         cut = advice["cut_days"][unit]
         ax.plot([cut], [0], marker="^", color="black", markersize=9, clip_on=False, linestyle="none",
@@ -50,7 +59,12 @@ def week_of_unit(
     ax.set_xticks(6 * np.arange(29), minor=True)
     ax.tick_params(axis="x", which="major", length=0)
     room = 0.06 * max(high.max() - low.min(), 0.1)
-    ax.set(title=short_name(unit), ylabel="occupied beds", xlim=(0, 168), ylim=(low.min() - room, high.max() + room))
+    ax.set(
+        title=short_name(unit),
+        ylabel="occupied beds",
+        xlim=(0, 168),
+        ylim=(low.min() - room, high.max() + room),
+    )
     return ax
 
 

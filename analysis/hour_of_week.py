@@ -115,8 +115,13 @@ def _largest_resampled(values: np.ndarray, rng: np.random.Generator, draws: int)
         return np.zeros(draws)
     scores = (values[:, moving] - parts.mean[moving]) / parts.error[moving]
     shares = rng.multinomial(n, np.full(n, 1 / n), size=draws) / n
-    mean = shares @ scores
-    variance = (shares @ np.square(scores) - np.square(mean)) / (n - 1)
+    mean = _product(shares, scores)
+    variance = (_product(shares, np.square(scores)) - np.square(mean)) / (n - 1)
     error = np.sqrt(np.where(variance > 1e-12, variance, 0.0))
     t = np.divide(np.abs(mean), error, out=np.full_like(mean, np.inf), where=error > 0)
     return t.max(axis=1)
+
+
+def _product(left: np.ndarray, right: np.ndarray) -> np.ndarray:
+    """A matrix product summed in one order, so that its bits do not depend on how many threads share it."""
+    return np.einsum("dr,rp->dp", left, right)

@@ -54,7 +54,7 @@ class Aim:
 
 
 def places_of(name: str, scenario: Scenario) -> tuple[tuple[str, str], ...]:
-    """What a name stands for: `UNIT=MEASURE` that unit's, a bare measure the network's or, if it has none, every unit's.
+    """What a name stands for: `UNIT=MEASURE` is that unit's, a bare measure the network's, else every unit's.
 
     KeyError with the unknown measure or unit.
     """

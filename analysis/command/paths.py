@@ -51,7 +51,9 @@ def path_document(
     paths, interrupted = _trace(request, replications[:MOST_TRACED], grids) if grids else ([], False)
     if grids and not paths:
         return {"paths_missing": "interrupted, or failed, before any replication was traced"}, interrupted
-    return _documents(request.scenario, paths, grids, warm_up) | _no_batches(request, replications), interrupted
+    return _documents(request.scenario, paths, grids, warm_up) | _no_batches(
+        request, replications
+    ), interrupted
 
 
 def _grids(scenario: Any, warm_up: bool, week: bool, *, single: bool) -> dict[str, Any]:
@@ -105,7 +107,12 @@ def _trace(request: Request, replications: list[int], grids: dict[str, Any]) -> 
         left = (time.perf_counter() - started) * (len(replications) - 1)
         count = request.workers or (available_cores() if left > WORTH_PROCESSES_SECONDS else 1)
         yield from measure_paths(
-            request.scenario, request.policy, replications[1:], grids, engine=engine, workers=local_workers(count)
+            request.scenario,
+            request.policy,
+            replications[1:],
+            grids,
+            engine=engine,
+            workers=local_workers(count),
         )
 
     paths, found = [], until_interrupted(replies())
@@ -126,7 +133,9 @@ def tell(document: dict[str, Any]) -> None:
     if (notice := document.get("warm_up_advice", {}).get("notice")) is not None:
         say(f"advice: {notice}")
     for doubtful in document.get("batch_means", {}).get("doubtful", []):
-        say(f"batch means of {doubtful} depend on each other: the interval is too narrow; run longer, or more often")
+        say(
+            f"batch means of {doubtful} depend on each other: the interval is too narrow; run longer, or more often"
+        )
 
 
 def show_paths(document: dict[str, Any]) -> None:
@@ -141,7 +150,8 @@ def show_paths(document: dict[str, Any]) -> None:
 
 def _show_warm_up(advice: dict[str, Any]) -> None:
     cuts = "; ".join(
-        f"{name} {'not settled' if cut is None else f'{cut:g} days'}" for name, cut in advice["cut_days"].items()
+        f"{name} {'not settled' if cut is None else f'{cut:g} days'}"
+        for name, cut in advice["cut_days"].items()
     )
     put_text(
         f"Warm-up: {advice['present_days']:g} days in the scenario; "

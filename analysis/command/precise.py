@@ -58,7 +58,9 @@ def _most(faults: list[Fault], least: int) -> int:
     context = click.get_current_context(silent=True)
     given = None if context is None else context.params.get("replications")
     if given is not None and given < least:
-        rule = f"must be at least {least} with --precision: the spread of fewer replications stops it too soon"
+        rule = (
+            f"must be at least {least} with --precision: the spread of fewer replications stops it too soon"
+        )
         faults.append(Fault(None, "--replications", rule, f"got {given}", "raise it, or leave it out"))
     return MOST_REPLICATIONS if given is None else given
 
@@ -109,7 +111,11 @@ def collect_until_precise(request: Request, aim: Aim, *, label: str) -> tuple[li
     while size is not None:
         asked = replace(request, scenario=request.scenario.with_run(replications=size))
         try:
-            rounds.add(run_replications(asked, [request.policy], label=label, take=rounds.take, keep=True, first=done))
+            rounds.add(
+                run_replications(
+                    asked, [request.policy], label=label, take=rounds.take, keep=True, first=done
+                )
+            )
         except KeyboardInterrupt:  # between two rounds
             if rounds.ran is None:
                 raise
@@ -119,7 +125,11 @@ def collect_until_precise(request: Request, aim: Aim, *, label: str) -> tuple[li
         done, size = size, None if rounds.ran.interrupted else next_size(size, found, aim)
         if size is not None:
             say(f"{done} replications; {_widest(found)}; going on to {size}")
-    return _in_order(rounds.runs), rounds.ran, precision_document(found, aim, interrupted=rounds.ran.interrupted)
+    return (
+        _in_order(rounds.runs),
+        rounds.ran,
+        precision_document(found, aim, interrupted=rounds.ran.interrupted),
+    )
 
 
 def _in_order(runs: dict[int, Run]) -> list[Run]:

@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from analysis.batch_means import batch_document, batch_grid, batch_means, lag1_correlation
 from analysis.batch_means import GRID as BATCHES
+from analysis.batch_means import batch_document, batch_grid, batch_means, lag1_correlation
 from analysis.paths import measure_paths
 from tests.analysis.builders import memoryless
 
@@ -15,7 +15,9 @@ from tests.analysis.builders import memoryless
 def test_by_hand():
     found = batch_means(np.array([1.0, 3.0, 2.0, 4.0, 5.0]), 0.9)
     half = stats.t.isf(0.05, 4) * np.sqrt(2.5 / 5)
-    assert (found.estimate.low, found.estimate.mean, found.estimate.high) == pytest.approx((3 - half, 3, 3 + half))
+    assert (found.estimate.low, found.estimate.mean, found.estimate.high) == pytest.approx(
+        (3 - half, 3, 3 + half)
+    )
     assert found.batches == 5
     assert found.lag1_correlation == pytest.approx((-2 * 0 + 0 * -1 + -1 * 1 + 1 * 2) / 10)
 
@@ -43,7 +45,14 @@ def delays(customers, runs, seed):
 
 # Coverage of nominal 90 % intervals of the steady mean delay 3.2: from 4,000 runs of another program's simulation (s.e.
 # .007); Law and Kelton's table, as remembered, says .690 .598 .490 and .798 .803 .753 from 400 runs.
-COVERAGE = {(320, 5): 0.661, (320, 10): 0.580, (320, 20): 0.478, (2560, 5): 0.828, (2560, 10): 0.807, (2560, 20): 0.773}
+COVERAGE = {
+    (320, 5): 0.661,
+    (320, 10): 0.580,
+    (320, 20): 0.478,
+    (2560, 5): 0.828,
+    (2560, 10): 0.807,
+    (2560, 20): 0.773,
+}
 RUNS = 1500
 
 
@@ -92,6 +101,8 @@ def test_a_run_of_the_program_is_measured_whole():
     assert found["batches"] == 25 and found["batch_days"] == pytest.approx(16.0)
     assert unit["admissions_per_day"]["mean"] == pytest.approx(path.grids[BATCHES].admitted.sum() / 400)
     assert found["network"]["throughput_per_day"] == unit["admissions_per_day"]
+    rare = found["units"]["A"]["turned_away_per_day"]
+    assert 0 <= rare["low"] <= rare["mean"]
     assert unit["mean_occupied"]["low"] < unit["mean_occupied"]["mean"] < unit["mean_occupied"]["high"]
     # Erlang loss, 3 beds and 2 offered: blocking 4/19 (textbook), so 2 x 15/19 = 1.579 occupied.
     assert unit["mean_occupied"]["mean"] == pytest.approx(2 * 15 / 19, abs=0.25)

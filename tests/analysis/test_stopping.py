@@ -133,7 +133,9 @@ def test_a_bare_name_is_the_networks_or_every_units():
     assert places_of("B=b=turned_away_per_day", TWO) == (("B=b", "turned_away_per_day"),)
 
 
-@pytest.mark.parametrize(("name", "unknown"), [("occupation", "occupation"), ("C=utilisation", "C"), ("A=x", "x")])
+@pytest.mark.parametrize(
+    ("name", "unknown"), [("occupation", "occupation"), ("C=utilisation", "C"), ("A=x", "x")]
+)
 def test_an_unknown_name_is_named(name, unknown):
     with pytest.raises(KeyError) as caught:
         places_of(name, TWO)
