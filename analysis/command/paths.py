@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +17,15 @@ from sim.errors import Fault, ScenarioError
 MOST_TRACED = 200  # replications: their bands are narrow, and traces take time
 TRACED_BY = "reference"  # an event costs as much in either engine once it is told, and this one loads at once
 DAYS = ("Monday", "Tuesday", "Wednesday", "Thursday", "Friday", "Saturday", "Sunday")
+
+
+@dataclass
+class Traced:
+    """The paths as far as they came, what failed, and whether Ctrl-C ended it."""
+
+    paths: list[Any] = field(default_factory=list)
+    failures: list[Any] = field(default_factory=list)
+    interrupted: bool = False
 
 
 def path_options(function: Any) -> Any:
@@ -40,20 +50,19 @@ def check_path_options(request: Request, hour_of_week: bool) -> None:
 
 def path_document(
     request: Request, replications: list[int], *, warm_up: bool, week: bool
-) -> tuple[dict[str, Any], bool]:
-    """What the options ask for, of these replications traced again, and whether Ctrl-C ended it.
+) -> tuple[dict[str, Any], Traced]:
+    """What the options ask for, of these replications traced again, and how that went.
 
     One replication alone gets batch means. The document is empty where nothing is asked for.
     """
     grids = _grids(request.scenario, warm_up, week, single=len(replications) == 1)
     if not grids and not warm_up:
-        return _no_batches(request, replications), False
-    paths, interrupted = _trace(request, replications[:MOST_TRACED], grids) if grids else ([], False)
-    if grids and not paths:
-        return {"paths_missing": "interrupted, or failed, before any replication was traced"}, interrupted
-    return _documents(request.scenario, paths, grids, warm_up) | _no_batches(
-        request, replications
-    ), interrupted
+        return _no_batches(request, replications), Traced()
+    traced = _trace(request, replications[:MOST_TRACED], grids) if grids else Traced()
+    if grids and not traced.paths:
+        return {"paths_missing": "interrupted, or failed, before any replication was traced"}, traced
+    document = _documents(request.scenario, traced.paths, grids, warm_up)
+    return document | _no_batches(request, replications), traced
 
 
 def _grids(scenario: Any, warm_up: bool, week: bool, *, single: bool) -> dict[str, Any]:
@@ -92,7 +101,7 @@ def _documents(scenario: Any, paths: list[Any], grids: dict[str, Any], warm_up: 
     return document
 
 
-def _trace(request: Request, replications: list[int], grids: dict[str, Any]) -> tuple[list[Any], bool]:
+def _trace(request: Request, replications: list[int], grids: dict[str, Any]) -> Traced:
     """The paths as far as they came; the first one here, to see what the others will take."""
     engine = request.engine or TRACED_BY
     from analysis.command.progress import progress, until_interrupted
@@ -115,21 +124,25 @@ def _trace(request: Request, replications: list[int], grids: dict[str, Any]) -> 
             workers=local_workers(count),
         )
 
-    paths, found = [], until_interrupted(replies())
+    traced, found = Traced(), until_interrupted(replies())
     with found, progress("paths", len(replications), "replications") as bar:
         for reply in found:
             if isinstance(reply, Failure):
                 say(f"failed: {reply}")
+                traced.failures.append(reply)
             else:
-                paths.append(reply)
+                traced.paths.append(reply)
             bar.advance()
-    if found.interrupted and paths:
-        say(f"interrupted; {len(paths)} traced replications are kept")
-    return paths, found.interrupted
+    traced.interrupted = found.interrupted
+    if found.interrupted and traced.paths:
+        say(f"interrupted; {len(traced.paths)} traced replications are kept")
+    return traced
 
 
 def tell(document: dict[str, Any]) -> None:
     """Notices on standard error."""
+    if "paths_missing" in document:
+        say(f"nothing is known of the runs over time: {document['paths_missing']}")
     if (notice := document.get("warm_up_advice", {}).get("notice")) is not None:
         say(f"advice: {notice}")
     for doubtful in document.get("batch_means", {}).get("doubtful", []):

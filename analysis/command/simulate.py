@@ -108,12 +108,12 @@ def _add_paths(
     """Adds what is asked of the runs over time; gives how all was run. An interrupted run is not traced."""
     if ran.interrupted:
         return ran
-    traced, interrupted = path_document(
-        request, [run.replication for run in runs], warm_up=warm_up, week=week
-    )
-    document |= traced | {"interrupted": interrupted}
+    replications = [run.replication for run in runs]
+    found, traced = path_document(request, replications, warm_up=warm_up, week=week)
+    ran = replace(ran, interrupted=traced.interrupted, failures=[*ran.failures, *traced.failures])
+    document |= found | ran.to_dict()
     tell(document)
-    return replace(ran, interrupted=interrupted)
+    return ran
 
 
 def _heading(request: Request) -> dict[str, Any]:

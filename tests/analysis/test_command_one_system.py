@@ -8,7 +8,7 @@ import signal
 import pytest
 
 from analysis.command import precise
-from analysis.command.entry import AT_FAULT, DONE, INTERRUPTED
+from analysis.command.entry import AT_FAULT, DONE, FAILED, INTERRUPTED
 from analysis.command.running import run_replications
 
 LONG = ("--replications", 3)
@@ -189,6 +189,45 @@ def test_workers_and_engines_change_no_week(call, two):
         for how in ([], ["--workers", 2], ["--engine", "compiled"])
     )
     assert one == two_workers == compiled
+
+
+def tracing(monkeypatch, then):
+    """Puts `then(scenario, policy, replication)` before every tracing of a replication."""
+    from analysis import paths
+
+    trace = paths.trace_replication
+
+    def traced(scenario, policy, replication, **how):
+        then(replication)
+        return trace(scenario, policy, replication, **how)
+
+    monkeypatch.setattr("analysis.paths.trace_replication", traced)
+
+
+def test_an_interrupt_while_tracing_keeps_what_was_traced(call, two, monkeypatch):
+    tracing(monkeypatch, lambda replication: replication == 2 and signal.raise_signal(signal.SIGINT))
+    status, document = call("simulate", two, "--replications", 4, "--hour-of-week")
+    assert status == INTERRUPTED and document["interrupted"]
+    assert document["replications"] == 4 and document["hour_of_week_basis"]["replications"] == 2
+
+
+def test_an_interrupt_before_anything_was_traced_says_so(call, show, two, monkeypatch):
+    tracing(monkeypatch, lambda replication: signal.raise_signal(signal.SIGINT))
+    status, document = call("simulate", two, *LONG, "--hour-of-week", "--warm-up-advice")
+    assert status == INTERRUPTED and document["replications"] == 3
+    assert "before any replication was traced" in document["paths_missing"] and "hour_of_week" not in document
+
+
+def test_a_replication_that_cannot_be_traced_is_told_and_left_out(call, two, monkeypatch):
+    def fail(replication):
+        if replication == 1:
+            raise RuntimeError("planted")
+
+    tracing(monkeypatch, fail)
+    status, document = call("simulate", two, *LONG, "--hour-of-week")
+    assert status == FAILED
+    assert [(one["replication"], "planted" in one["traceback"]) for one in document["failed"]] == [(1, True)]
+    assert document["hour_of_week_basis"]["replications"] == 2 and document["replications"] == 3
 
 
 # ---- a single run ----
