@@ -132,6 +132,7 @@ def _rejected(cuts: Mapping[str, float | None]) -> str | None:
     if not units:
         return None
     return (
-        f"the best cut lies in the second half of the run for {', '.join(units)}: the run is too short for its start "
-        "to be told from the rest, or the unit never settles (an outage on known days?); raise run.measured_days"
+        f"the best cut lies in the second half of the run for {', '.join(units)}: runs are too short or too few for "
+        "their start to be told from the rest, or the unit never settles (an outage on known days?); raise "
+        "run.measured_days or --replications"
     )
