@@ -8,8 +8,10 @@ replications left out), the cell a hash of the lowered rules.
 from __future__ import annotations
 
 import hashlib
+import itertools
 import json
 import struct
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields, is_dataclass
 from typing import Any
 
@@ -20,6 +22,10 @@ from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
 
 # Raised by whoever changes the draws, the lowering or an engine so that a record differs: old rows then never match.
 RECORDS = 1
+# Raised by whoever changes the exact chain so that its measures differ.
+EXACT = 1
+
+Measures = dict[str, float | list[float] | None]
 
 COUNTS = ("arrived", "admitted", "diverted_out", "diverted_in", "turned_away")
 DAYS = ("occupied_days", "full_days", "closed_days", "closed_free_days", "incoming_closed_days")
@@ -53,6 +59,11 @@ class Row:
 def scenario_hash(network: Network, plan: IntakePlan) -> str:
     """The scenario's part of a key."""
     return _digest(("records", RECORDS, network, plan))
+
+
+def exact_hash(network: Network, plan: IntakePlan) -> str:
+    """The scenario's part of the key of an exact cell."""
+    return _digest(("exact", EXACT, network, plan))
 
 
 def cell_hash(rules: Rules) -> str:
@@ -112,6 +123,40 @@ def unpack(blob: bytes) -> Record:
         return Record(**arrays)
     except (struct.error, TypeError, UnicodeDecodeError) as error:
         raise ValueError(f"no record: {error}") from error
+
+
+def pack_measures(units: Sequence[Measures]) -> bytes:
+    """Exact measures by unit as bytes: the length of a JSON list, that list, and float64 values.
+
+    The list has for each unit its (name, how many) in order: -1 is one number, -2 none.
+    """
+    head = [[[name, _how_many(value)] for name, value in unit.items()] for unit in units]
+    values = [value for unit in units for value in unit.values() if value is not None]
+    numbers = np.concatenate([np.zeros(0), *(np.atleast_1d(np.asarray(value, float)) for value in values)])
+    text = json.dumps(head).encode()
+    return struct.pack("<I", len(text)) + text + numbers.astype("<f8").tobytes()
+
+
+def _how_many(value: float | list[float] | None) -> int:
+    if value is None:
+        return -2
+    return len(value) if isinstance(value, list) else -1
+
+
+def unpack_measures(blob: bytes) -> list[Measures]:
+    """The measures of `pack_measures`, bit for bit."""
+    (length,) = struct.unpack_from("<I", blob)
+    numbers = iter(np.frombuffer(blob, "<f8", offset=4 + length).tolist())
+    units: list[Measures] = []
+    for unit in json.loads(blob[4 : 4 + length]):
+        units.append({name: _taken(numbers, many) for name, many in unit})
+    return units
+
+
+def _taken(numbers: Iterator[float], many: int) -> float | list[float] | None:
+    if many < 0:
+        return None if many == -2 else next(numbers)
+    return list(itertools.islice(numbers, many))
 
 
 def by_unit(record: Record) -> list[tuple[float, ...]]:

@@ -7,6 +7,7 @@ interface.
 
 from __future__ import annotations
 
+import atexit
 import os
 import signal
 import sys
@@ -249,6 +250,7 @@ class _Process:
 
 
 _resting: list[_Process] = []  # processes without a task, kept for the next run
+atexit.register(_resting.clear)  # loky has ended them by then
 
 
 def _hired() -> _Process:

@@ -138,7 +138,9 @@ def test_tasks_are_sized_anew_where_the_pace_proves_another(plain, seconds, size
     """In the end a task takes 0.5 to 2 s, or is as large or as small as it may be."""
     workers = Timed(seconds)
     runs = [
-        run for reply in replicate(SCENARIO, POLICIES, range(60), workers=workers, task_size=size) for run in reply
+        run
+        for reply in replicate(SCENARIO, POLICIES, range(60), workers=workers, task_size=size)
+        for run in reply
     ]
     assert len({(run.replication, run.cell) for run in runs}) == len(runs) == 60 * len(POLICIES)
     assert all(plain[run.replication, run.cell][0] == run.record.hash for run in runs if run.replication < 4)

@@ -99,7 +99,9 @@ def busy(seconds: float) -> bool:
     return True
 
 
-@pytest.mark.skipif(not Path("/proc/self/stat").exists(), reason="only here the system tells of a process's work")
+@pytest.mark.skipif(
+    not Path("/proc/self/stat").exists(), reason="only here the system tells of a process's work"
+)
 def test_a_long_task_that_computes_is_left_alone():
     found = list(LocalProcesses(2, patience=0.5).run(busy, [(0, (3.0,)), (1, (0.01,))]))
     assert all(reply.value for reply in found)
@@ -142,7 +144,9 @@ def test_a_worker_has_one_thread_for_linear_algebra(monkeypatch):
         text=True, check=True,
     )  # fmt: skip
     if int(several.stdout) == 0:
-        pytest.skip("with four threads allowed there is one: the count of threads shows nothing on this machine")
+        pytest.skip(
+            "with four threads allowed there is one: the count of threads shows nothing on this machine"
+        )
 
 
 def test_a_task_that_cannot_be_sent_fails_alone():
@@ -164,7 +168,9 @@ for reply in LocalProcesses(2).run(pid, [(n, (0.2 if n < 2 else 600.0,)) for n i
 
 @POSIX
 def test_workers_end_with_a_parent_that_is_killed():
-    with subprocess.Popen([sys.executable, "-c", ORPHANS], cwd=ROOT, stdout=subprocess.PIPE, text=True) as parent:
+    with subprocess.Popen(
+        [sys.executable, "-c", ORPHANS], cwd=ROOT, stdout=subprocess.PIPE, text=True
+    ) as parent:
         workers = {int(parent.stdout.readline()) for _ in range(2)}
         parent.kill()
     until = time.monotonic() + 30
