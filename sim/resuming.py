@@ -34,8 +34,11 @@ class Job:
         self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
         self._command: int | None = None
         self.computed = 0
-        held = store.held(self.scenario)
-        self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
+        whole = store.whole(self.scenario, self._cells)
+        held = store.held(self.scenario, but=whole)
+        self._missing = {
+            one: () if one in whole else self._cells_missing(one, held) for one in range(replications)
+        }
         self.restarted = tuple(
             one for one, missing in self._missing.items()
             if missing and one in held and held[one][0] != fingerprint
@@ -73,16 +76,13 @@ class Job:
     def kept_runs(self) -> Iterator[list[Run]]:
         """The runs that are there, a replication at a time."""
         for replication, missing in self._missing.items():
-            runs = [
-                self._kept(replication, cell) for cell in sorted(set(range(len(self._cells))) - {*missing})
-            ]
-            if runs:
-                yield runs
+            kept = sorted(set(range(len(self._cells))) - {*missing})
+            if kept:
+                rows = self._store.of_replication(self.scenario, replication)
+                yield [self._kept(rows[self._cells[cell]], cell) for cell in kept]
 
-    def _kept(self, replication: int, cell: int) -> Run:
-        row = self._store.get(Key(self.scenario, self._cells[cell], replication))
-        assert row is not None, "only the one writer drops rows"
-        return Run(replication, cell, row.record, row.intake_hash)
+    def _kept(self, row: Row, cell: int) -> Run:
+        return Run(row.key.replication, cell, row.record, row.intake_hash)
 
     def begin(self, provenance: Mapping[str, Any]) -> None:
         """Notes in the store that the job starts."""

@@ -11,7 +11,7 @@ import hashlib
 import json
 import sqlite3
 import sys
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -281,15 +281,32 @@ class Store:
         )
         return [Key(*one) for one in found]
 
-    def held(self, scenario: str) -> dict[int, tuple[str, set[str]]]:
-        """What is here of a scenario: replication -> the fingerprint and the cells."""
+    def whole(self, scenario: str, cells: Sequence[str]) -> set[int]:
+        """The replications of a scenario that are here for every one of those cells."""
+        wanted = sorted(set(cells))
+        asked = (
+            "SELECT replication FROM runs WHERE scenario = (SELECT id FROM scenarios WHERE hash = ?)"
+            " AND cell IN (SELECT id FROM cells WHERE hash IN (SELECT value FROM json_each(?)))"
+            " GROUP BY replication HAVING count(*) = ?"
+        )
+        return {one for (one,) in self._ask(asked, (scenario, json.dumps(wanted), len(wanted)))}
+
+    def held(self, scenario: str, but: Iterable[int] = ()) -> dict[int, tuple[str, set[str]]]:
+        """What is here of a scenario, but for some replications: replication -> the fingerprint and the cells."""
         found: dict[int, tuple[str, set[str]]] = {}
-        columns = "runs.replication, text, cells.hash"
-        for replication, fingerprint, cell in self._ask(
-            f"SELECT {columns} {_KEYED} WHERE scenarios.hash = ?", (scenario,)
-        ):
+        asked = (
+            f"SELECT runs.replication, text, cells.hash {_KEYED} WHERE scenarios.hash = ?"
+            " AND runs.replication NOT IN (SELECT value FROM json_each(?))"
+        )
+        for replication, fingerprint, cell in self._ask(asked, (scenario, json.dumps(list(but)))):
             found.setdefault(replication, (fingerprint, set()))[1].add(sys.intern(cell))
         return found
+
+    def of_replication(self, scenario: str, replication: int) -> dict[str, Row]:
+        """Every run of a replication by cell hash; StoreError where bytes do not have their hash."""
+        where = "WHERE scenarios.hash = ? AND runs.replication = ?"
+        found = self._ask(f"SELECT {_ROW} {_KEYED} {where}", (scenario, replication))
+        return {row.key.cell: row for row in map(self._row, found)}
 
     def sample(self, count: int) -> list[Key]:
         """So many keys at random."""

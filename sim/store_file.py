@@ -117,6 +117,8 @@ def connect_to_write(file: Path) -> sqlite3.Connection:
     if not file.exists():
         _make(file)
     connect_to_read(file).close()
+    if not os.access(file, os.W_OK):  # SQLite would tell at the first row only
+        raise StoreError(f"{file} cannot be written: make it writable, or choose another folder")
     try:
         connection = sqlite3.connect(file, timeout=30, isolation_level=None)
         connection.execute("PRAGMA journal_mode = WAL")

@@ -10,9 +10,11 @@ from __future__ import annotations
 import hashlib
 import itertools
 import json
+import math
 import struct
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields, is_dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -114,15 +116,21 @@ def unpack(blob: bytes) -> Record:
     try:
         (length,) = struct.unpack_from("<I", blob)
         place, arrays = 4 + length, {}
-        for name, kind, shape in json.loads(blob[4:place]):
-            array = np.frombuffer(blob, np.dtype(kind), int(np.prod(shape)), place).reshape(shape)
-            arrays[name] = array.astype(array.dtype.newbyteorder("="))
+        for name, kind, shape, count in _layout(blob[4:place]):
+            array = np.frombuffer(blob, kind, count, place).reshape(shape)
+            arrays[name] = array.astype(kind.newbyteorder("="))
             place += array.nbytes
         if place != len(blob):
             raise ValueError(f"{len(blob) - place} bytes too many")
         return Record(**arrays)
     except (struct.error, TypeError, UnicodeDecodeError) as error:
         raise ValueError(f"no record: {error}") from error
+
+
+@lru_cache
+def _layout(head: bytes) -> list[tuple[str, np.dtype, list[int], int]]:
+    """The arrays of a record, as its list says: name, type, shape and number of values."""
+    return [(name, np.dtype(kind), shape, math.prod(shape)) for name, kind, shape in json.loads(head)]
 
 
 def pack_measures(units: Sequence[Measures]) -> bytes:
