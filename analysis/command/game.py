@@ -133,19 +133,16 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.command.progress import progress
-    from analysis.exact_tables import must_compile, solve_cells
+    from analysis.command.exact_cells import solved
+    from analysis.exact_tables import must_compile
     from analysis.payoffs import exact_table
 
     profiles, goal, welfare = _axes(request)
     if must_compile(request.scenario, request.policy, profiles.cells):
         say("compiling the exact chain's kernels, once on this machine (some seconds)")
-    cells = [None] * profiles.cells
-    with progress("game --exact", profiles.cells, "cells") as bar:
-        for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
-            cells[cell] = units
-            bar.advance()
-    return exact_table(profiles, goal, welfare, cells), None, {"engine": "exact chain", "interrupted": False}
+    cells, kept = solved(request, list(profiles.policies(request.policy)))
+    told = {"engine": "exact chain", "interrupted": False} | kept
+    return exact_table(profiles, goal, welfare, cells), None, told
 
 
 def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:
