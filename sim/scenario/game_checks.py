@@ -44,7 +44,7 @@ def _player_name(
         return
     if name == RESERVED_NAME:
         rule = "is a reserved word (it stands for all units together)"
-        draft.fault(path, rule, shown(name), "choose another name")
+        draft.fault(path, rule, f"got {shown(name)}", "choose another name")
     elif name in seen:
         draft.fault(
             path, "must not be the name of an earlier player too", f"got {shown(name)} again", "rename one"
@@ -56,7 +56,7 @@ def _player_name(
 
 
 def _goals(draft: Draft) -> None:
-    """Goals are those of units or players; periods are judged alike; a squared goal has no tie-breaker."""
+    """Goals are those of units or players."""
     players = [draft.read(*row, "name") for row in draft.below("game", "players")]
     known = {*draft.beds, *(name for name in players if name)}
     for path in draft.below("game", "goals"):
@@ -104,7 +104,7 @@ def _closure_of(draft: Draft, unit: str) -> int | None:
 
 
 def _periods(draft: Draft) -> None:
-    """Periods of squared goals lie within the measured days and are of one length; no tie-breaker goes with them."""
+    """Periods of squared goals lie within the measured days and are of one length."""
     squared = [
         path
         for path in (("game", "goal"), *draft.below("game", "goals"))

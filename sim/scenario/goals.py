@@ -173,9 +173,7 @@ class _Weights(Table):
     @model_validator(mode="after")
     def _some(self):
         if not self.given:
-            raise breach(
-                "must weigh at least one measure", "got none", "add for example `target_distance = 1`"
-            )
+            raise breach("must weigh at least one measure", "none", "add for example `target_distance = 1`")
         return self
 
     @property
