@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -23,6 +24,7 @@ matplotlib.rcParams["text.parse_math"] = False  # a $ in a unit's name is a $
 FORMATS = ("png", "svg")
 LONGEST_LABEL = 32
 LONGEST_AXIS = 60
+LEAST_WIDTH = 6.0  # inches: the legend has two entries
 
 
 def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
@@ -54,16 +56,21 @@ def _axis(game: GameAnalysis, player: int) -> str:
     """What runs along a player's axis."""
     profiles = game.table.profiles
     beds = " (beds)" if profiles.is_plain else ""
-    return _short(profiles.reads(player), LONGEST_AXIS) + beds
+    return _folded(profiles.reads(player)) + beds
 
 
-def _short(name: str, longest: int = LONGEST_LABEL) -> str:
-    """A text as far as a figure has room for it."""
-    return name if len(name) <= longest else name[: longest - 1] + "…"
+def _short(name: str) -> str:
+    """A unit's name as far as a figure has room for it."""
+    return name if len(name) <= LONGEST_LABEL else name[: LONGEST_LABEL - 1] + "…"
 
 
 def _scale(game: GameAnalysis, player: int) -> str:
-    return f"{_short(game.table.goal.reads_of(player), LONGEST_AXIS)} ({game.table.goal.sense})"
+    return _folded(f"{game.table.goal.reads_of(player)} ({game.table.goal.sense})")
+
+
+def _folded(text: str) -> str:
+    """A text in lines that an axis has room for."""
+    return "\n".join(textwrap.wrap(text, LONGEST_AXIS, max_lines=3, placeholder="…"))
 
 
 def _mark(ax: Axes, cells: np.ndarray, marker: str, face: str, edge: str, label: str, size: float) -> None:
@@ -132,7 +139,9 @@ def save_payoffs(game: GameAnalysis, folder: Path) -> list[Path]:
     written = []
     rows, columns = game.table.profiles.shape
     for player in range(2):
-        figure, ax = plt.subplots(figsize=(2.6 + 0.36 * min(columns, 40), 2.4 + 0.32 * min(rows, 40)))
+        figure, ax = plt.subplots(
+            figsize=(max(LEAST_WIDTH, 2.6 + 0.36 * min(columns, 40)), 2.4 + 0.32 * min(rows, 40))
+        )
         payoff_heat_map(game, ax, player=player)
         written += _save(figure, folder, f"payoffs-{player + 1}")
     return written
