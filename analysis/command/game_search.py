@@ -82,7 +82,8 @@ def _require_exact_means(request: Request) -> None:
         return
     rule, remedy = "must not be `squared` with --exact", "drop --exact, or use another goal"
     got = "got 'squared': the chain has no finite-period variance here"
-    fault = Fault(None, "game.goal.shape", rule, got, remedy)
+    of_all = getattr(request.scenario.game.goal, "shape", None) == "squared"
+    fault = Fault(None, "game.goal.shape" if of_all else "game.goals", rule, got, remedy)
     raise ScenarioError([fault], request.scenario.source.file)
 
 
