@@ -54,7 +54,7 @@ def policies_of(name: str, request: Request) -> Sequence[Any]:
     from analysis.payoffs import profiles_of
 
     if name == "game":
-        return list(profiles_of(request.scenario).policies(request.policy))
+        return list(profiles_of(request.scenario, request.policy).policies(request.policy))
     return [request.policy]
 
 
