@@ -44,20 +44,38 @@ class Controls:
         design = np.column_stack([np.ones(len(self.values)), self.values])
         return np.linalg.pinv(design)[0]
 
-    def adjust(self, values: np.ndarray) -> np.ndarray:
+    def adjust(self, values: np.ndarray, own: np.ndarray | None = None) -> np.ndarray:
         """Values (replications, ...) whose plain mean is the adjusted mean and whose plain error is the proper one.
 
         Their usual standard error, sd / sqrt(replications), holds the inflation for estimated coefficients; it has
-        `degrees` degrees of freedom. What the controls determine wholly gets its exact mean, without an error.
+        `degrees` degrees of freedom, one less with `own`: a further control for each value, less its known mean, of
+        the same shape. What the controls determine wholly gets its exact mean, without an error.
         """
         flat = np.asarray(values, float).reshape(len(values), -1)
-        mean = np.where(np.ptp(flat, axis=0) > 0, self.weights @ flat, flat[0])
-        residual = flat - self._basis @ (self._basis.T @ flat)
+        mean, residual = self._fit(flat)
+        factor, degrees = np.square(self.weights).sum(), self.degrees
+        if own is not None:
+            known, rest = self._fit(np.asarray(own, float).reshape(flat.shape))
+            size = np.square(rest).sum(axis=0)
+            slope = np.divide((rest * residual).sum(axis=0), size, out=np.zeros(len(size)), where=size > 0)
+            mean, residual = mean - slope * known, residual - slope * rest
+            factor = factor + np.divide(known**2, size, out=np.zeros(len(size)), where=size > 0)
+            degrees -= 1
         spread = np.square(flat - flat.mean(axis=0)).sum(axis=0)
         residual[:, np.square(residual).sum(axis=0) <= ROUNDING * np.maximum(spread, mean**2)] = 0
         n = len(flat)
-        scale = np.sqrt(n * (n - 1) * np.square(self.weights).sum() / self.degrees)
+        scale = np.sqrt(n * (n - 1) * factor / degrees)
         return (mean + scale * residual).reshape(np.shape(values))
+
+    def _fit(self, flat: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Intercepts and residuals of columns; a constant column is its own mean."""
+        mean = np.where(np.ptp(flat, axis=0) > 0, self.weights @ flat, flat[0])
+        return mean, flat - self._basis @ (self._basis.T @ flat)
+
+
+def no_controls(replications: int) -> Controls:
+    """No control at all: adjusting is then averaging."""
+    return Controls((), np.empty((replications, 0)))
 
 
 def offered_controls(scenario: Scenario, replications: Sequence[int]) -> Controls | None:
@@ -66,15 +84,6 @@ def offered_controls(scenario: Scenario, replications: Sequence[int]) -> Control
     replications: their numbers, in the order of the values to be adjusted.
     """
     names, columns = _candidates(scenario, replications)
-    kept = _independent(columns)
-    found = Controls(tuple(names[place] for place in kept), columns[:, kept])
-    return found if kept and found.degrees >= LEAST_DEGREES else None
-
-
-def joined(controls: Controls | None, name: str, values: np.ndarray) -> Controls | None:
-    """The controls with one more, `values` (replications,) less its known mean; None where too few degrees are left."""
-    names = (*(controls.names if controls else ()), name)
-    columns = np.column_stack([*(controls.values.T if controls else ()), values])
     kept = _independent(columns)
     found = Controls(tuple(names[place] for place in kept), columns[:, kept])
     return found if kept and found.degrees >= LEAST_DEGREES else None

@@ -10,7 +10,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from analysis.confidence import critical_value
-from analysis.controls import Controls
+from analysis.controls import Controls, no_controls
+from analysis.counterpart import TableCounterpart
 from analysis.goals import TargetGoal, Welfare
 from analysis.measures import unit_sums
 from sim.replicate import Failure, Run
@@ -93,7 +94,11 @@ class TableSums:
 
     def sums(self) -> dict[str, np.ndarray]:
         """The sums over complete replications only, so that every contrast is paired."""
-        return {name: array[self.complete] for name, array in self._arrays.items()}
+        return self.sums_of(self.complete)
+
+    def sums_of(self, replications: Sequence[int]) -> dict[str, np.ndarray]:
+        """The sums of these replications, in that order."""
+        return {name: array[replications] for name, array in self._arrays.items()}
 
 
 @dataclass(frozen=True)
@@ -137,6 +142,7 @@ class PayoffTable:
     signed_replicates: np.ndarray | None = None
     raw_replicates: np.ndarray | None = None
     controls: Controls | None = None
+    beside_counterpart: bool = False
     measured_days: float = 365.0
 
     @property
@@ -149,7 +155,8 @@ class PayoffTable:
         """Degrees of freedom of every error; 0 where the table is exact."""
         if self.replicates is None:
             return 0
-        return len(self.replicates) - 1 if self.controls is None else self.controls.degrees
+        left = len(self.replicates) - 1 if self.controls is None else self.controls.degrees
+        return left - self.beside_counterpart
 
     @property
     def replications(self) -> int | None:
@@ -174,21 +181,32 @@ def simulated_table(
     confidence: float,
     *,
     controls: Controls | None = None,
+    counterpart: TableCounterpart | None = None,
 ) -> PayoffTable:
     """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication.
 
-    controls: of the same replications; payoffs, welfare and outcomes are then the adjusted ones.
+    controls, counterpart: of the same replications; payoffs, welfare and outcomes are then the adjusted ones
+    (outcomes by `controls` alone).
     """
     point, pseudo = goal.estimate(sums)
     low, high = goal.interval(sums, confidence)
     signed = goal.signed(sums)
     raw = pseudo if signed is None else signed
     a_day = {name: sums[name] / sums["days"] for name in _RATES}
-    worth = welfare.value(*(a_day[name].sum(axis=-1) for name in ("admitted", "turned_away", "diverted_out")))
+
+    def worth_of(sums: Mapping[str, np.ndarray]) -> np.ndarray:
+        rates = ("admitted", "turned_away", "diverted_out")
+        return welfare.value(*((sums[name] / sums["days"]).sum(axis=-1) for name in rates))
+
+    worth = worth_of(sums)
+    if counterpart is not None and controls is None:
+        controls = no_controls(len(raw))
     if controls is not None:
-        pseudo, worth = controls.adjust(pseudo), controls.adjust(worth)
-        signed = None if signed is None else controls.adjust(signed)
-        point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, controls)
+        own, own_worth = (None, None) if counterpart is None else counterpart.known(goal.signed, worth_of)
+        pseudo, worth = controls.adjust(pseudo), controls.adjust(worth, own_worth)
+        signed = None if signed is None else controls.adjust(signed, own)
+        degrees = controls.degrees - (counterpart is not None)
+        point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, degrees)
         if signed is not None:
             point, low, high = _folded(point, low, high)
     shape = profiles.shape
@@ -204,16 +222,17 @@ def simulated_table(
         signed_replicates=None if signed is None else _by_player(signed, shape),
         raw_replicates=_by_player(raw, shape),
         controls=controls,
+        beside_counterpart=counterpart is not None,
         measured_days=float(sums["days"].flat[0]),
     )  # fmt: skip
 
 
 def _adjusted_payoffs(
-    values: np.ndarray, raw: np.ndarray, confidence: float, controls: Controls
+    values: np.ndarray, raw: np.ndarray, confidence: float, degrees: int
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Means and interval ends of adjusted values; what is never negative in a replication is not so in the mean."""
     mean, error = values.mean(axis=0), values.std(axis=0, ddof=1) / np.sqrt(len(values))
-    half = critical_value(confidence, controls.degrees) * error
+    half = critical_value(confidence, degrees) * error
     least = np.where((raw >= 0).all(axis=0), 0.0, -np.inf)
     return np.maximum(mean, least), np.maximum(mean - half, least), mean + half
 

@@ -28,10 +28,9 @@ def controls_sentence(document: dict[str, Any]) -> Iterator[str]:
     if told and told["used"]:
         won = sorted(_numbers(told["variance_ratio"]))
         said = f"from {won[0]:.1f} to {won[-1]:.1f} times" if won else "not known how much"
-        yield (
-            f"Control variates ({len(told['names'])}: arrivals and offered work, with known means) made variances "
-            f"smaller, {said}."
-        )
+        kinds = [f"{len(told['names'])}: arrivals and offered work"] if told["names"] else []
+        kinds += ["the exponential counterpart"] if document.get("counterpart", {}).get("used") else []
+        yield f"Control variates ({', '.join(kinds)}, with known means) made variances smaller, {said}."
 
 
 def _numbers(tree: Any) -> Iterable[float]:

@@ -3,13 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import Any
 
 import click
 
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
-from analysis.command.entry import Interrupted, say
+from analysis.command.counterpart import (
+    counterpart_option,
+    counterpart_scenario,
+    run_counterpart_table,
+    show_counterpart,
+)
+from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
@@ -40,12 +47,13 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
               help="Simulated: regret within which an equilibrium is confirmed, in the goal's unit [default: the gain "
                    "that takes a manager 10 years of own data to notice].")  # fmt: skip
 @controls_option
+@counterpart_option
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
 def game(
-    request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, control: bool,
-    search: str | None, phase_fit: int | None,
+    request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, counterpart: bool,
+    control: bool, search: str | None, phase_fit: int | None,
 ) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
@@ -65,6 +73,10 @@ def game(
         raise click.BadOptionUsage(
             "--epsilon", "--epsilon is for simulated games; with --exact use --tolerance"
         )
+    if exact and counterpart:
+        raise click.BadOptionUsage(
+            "--counterpart", "--counterpart is for simulated games; --exact needs none"
+        )
     if control and search == game_search.BEST_REPLY:
         raise click.BadOptionUsage("--search", "--control is compared with a full table, not with a search")
     if phase_fit is not None and not exact:
@@ -77,7 +89,7 @@ def game(
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
-    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls)
+    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
     run = request.scenario.run
     analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
@@ -97,6 +109,8 @@ def game(
             write_rule(best, request.out)
     if ran is not None:
         finish(ran)
+    if not document.get("counterpart", {"agrees": True})["agrees"]:
+        raise CheckFailed
 
 
 command = scenario_command(game)
@@ -120,7 +134,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
     return profiles, goal, welfare_of(request.scenario)
 
 
-def _simulated_table(request: Request, controls: bool) -> tuple[Any, Any, dict[str, Any]]:
+def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums, simulated_table
@@ -130,35 +144,49 @@ def _simulated_table(request: Request, controls: bool) -> tuple[Any, Any, dict[s
     profiles, goal, welfare = _axes(request)
     for said in advice(request.scenario):
         say(f"advice: {said}")
+    beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
+    exact = None if beside is None else _exact_cells(beside, profiles)
     run = request.scenario.run
     sums = TableSums(request.scenario, profiles.cells, run.replications)
     policies = list(profiles.policies(request.policy))
     ran = run_replications(request, policies, label="game", take=sums.add, keep=True)
     require(len(sums.complete), ran.interrupted)
     known = controls_of(request, sums.complete, controls)
-    table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence, controls=known)
+    also, checked = None, {}
+    if beside is not None:
+        also, checked = run_counterpart_table(beside, profiles, sums, exact, known)
+    table = simulated_table(
+        profiles, goal, welfare, sums.sums(), run.confidence, controls=known, counterpart=also
+    )
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
     told = {
         "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
         "record_hash": hash_records(hashes),
-    } | ran.to_dict()  # fmt: skip
+    } | ran.to_dict() | checked  # fmt: skip
     return table, ran, told
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.command.progress import progress
-    from analysis.exact_tables import must_compile, solve_cells
     from analysis.payoffs import exact_table
 
     profiles, goal, welfare = _axes(request)
+    cells = _exact_cells(request, profiles)
+    return exact_table(profiles, goal, welfare, cells), None, {"engine": "exact chain", "interrupted": False}
+
+
+def _exact_cells(request: Request, profiles: Any) -> list[Any]:
+    """The units' exact measures of every cell."""
+    from analysis.command.progress import progress
+    from analysis.exact_tables import must_compile, solve_cells
+
     if must_compile(request.scenario, request.policy, profiles.cells):
         say("compiling the exact chain's kernels, once on this machine (some seconds)")
     cells = [None] * profiles.cells
-    with progress("game --exact", profiles.cells, "cells") as bar:
+    with progress("exact table", profiles.cells, "cells") as bar:
         for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
             cells[cell] = units
             bar.advance()
-    return exact_table(profiles, goal, welfare, cells), None, {"engine": "exact chain", "interrupted": False}
+    return cells
 
 
 def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:
@@ -185,6 +213,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
             f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
         )
         put_text(*controls_sentence(document))
+        show_counterpart(document)
     put_text("")
     if len(document["players"]) == 2:
         for player in (0, 1):

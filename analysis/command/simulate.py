@@ -8,7 +8,14 @@ from typing import Any
 import click
 
 from analysis.command.controls import controls_of, controls_option, controls_sentence
-from analysis.command.entry import say
+from analysis.command.counterpart import (
+    counterpart_document,
+    counterpart_option,
+    exact_counterpart,
+    run_counterpart,
+    show_counterpart,
+)
+from analysis.command.entry import CheckFailed, say
 from analysis.command.options import Request, require_file_can_be_written, scenario_command
 from analysis.command.output import (
     interval,
@@ -34,6 +41,7 @@ from sim.errors import Fault, ScenarioError
 )
 @click.option("--per-replication", is_flag=True, help="Raw measures and hashes of each replication.")
 @controls_option
+@counterpart_option
 def simulate(
     request: Request,
     trace: Path | None,
@@ -41,6 +49,7 @@ def simulate(
     replication: int,
     per_replication: bool,
     controls: bool,
+    counterpart: bool,
 ) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
@@ -54,21 +63,27 @@ def simulate(
     _check_files(request, trace, intake_out)
     for said in advice(request.scenario):
         say(f"advice: {said}")
+    beside = exact_counterpart(request) if counterpart else None
     runs, ran = collect_runs(request, label="simulate", keep=True)
-    known = controls_of(request, [run.replication for run in runs], controls)
+    replications = [run.replication for run in runs]
+    known = controls_of(request, replications, controls)
+    also, checked = (None, None) if beside is None else run_counterpart(beside, request, replications)
     result = summarise(
         [run.record for run in runs],
         request.scenario,
         confidence=request.scenario.run.confidence,
         controls=known,
+        counterpart=also,
     )
     document = _heading(request) | result.to_dict() | {
         "replications": result.replications,
         "confidence": result.confidence,
         "seed": request.scenario.run.seed,
         "record_hash": hash_records([run.record.hash for run in runs]),
-        "controls": controls_document(known, result.variance_ratio),
+        "controls": controls_document(result.controls, result.variance_ratio),
     } | ran.to_dict()  # fmt: skip
+    if checked is not None:
+        document["counterpart"] = counterpart_document(checked, used=also is not None)
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
     if request.as_json:
@@ -81,6 +96,8 @@ def simulate(
     if trace is not None or intake_out is not None:  # perhaps into that very folder
         _write_trace(request, ran.engine.name, replication, trace, intake_out)
     finish(ran)
+    if checked is not None and not checked.agrees:
+        raise CheckFailed
 
 
 command = scenario_command(simulate)
@@ -133,6 +150,7 @@ def _show(document: dict[str, Any], request: Request) -> None:
         *controls_sentence(document),
         "",
     )
+    show_counterpart(document)
     units = document["units"]
     put_table(
         "By unit (rates marked h count the unit's own population, wherever treated)",
