@@ -1,56 +1,22 @@
-"""The table of a game: every profile of thresholds, run or solved, with payoffs and welfare in scenario order."""
+"""The table of a game: every profile, run or solved, with payoffs and welfare in scenario order."""
 
 from __future__ import annotations
 
-import itertools
-import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from analysis.goals import TargetGoal, Welfare
+from analysis.confidence import critical_value
+from analysis.controls import Controls, no_controls
+from analysis.counterpart import TableCounterpart
+from analysis.goals import Goal, Welfare
 from analysis.measures import unit_sums
+from analysis.profiles import MOST_CELLS, Profiles, profiles_of
 from sim.replicate import Failure, Run
-from sim.scenario import Policy, Scenario
+from sim.scenario import Scenario
 
-MOST_CELLS = 200_000
-
-
-@dataclass(frozen=True)
-class Profiles:
-    """The axes of a table: players and their strategies, in scenario order. Cells are numbered in C order."""
-
-    players: tuple[str, ...]
-    strategies: tuple[tuple[int, ...], ...]
-
-    @property
-    def shape(self) -> tuple[int, ...]:
-        """Number of strategies of each player."""
-        return tuple(len(mine) for mine in self.strategies)
-
-    @property
-    def cells(self) -> int:
-        """Number of profiles."""
-        return math.prod(self.shape)
-
-    def thresholds(self, profile: Sequence[int]) -> dict[str, int]:
-        """Player -> closure threshold, for a profile of strategy numbers."""
-        return {
-            player: mine[place]
-            for player, mine, place in zip(self.players, self.strategies, profile, strict=True)
-        }
-
-    def policies(self, base: Policy) -> Iterator[Policy]:
-        """The policy of every cell: `base` with the cell's closure thresholds."""
-        for thresholds in itertools.product(*self.strategies):
-            yield base.with_thresholds(dict(zip(self.players, thresholds, strict=True)))
-
-
-def profiles_of(scenario: Scenario) -> Profiles:
-    """The axes that the scenario's game names."""
-    strategies = scenario.strategies()
-    return Profiles(tuple(strategies), tuple(strategies.values()))
+__all__ = ["MOST_CELLS", "Outcomes", "PayoffTable", "Profiles", "TableSums", "exact_table", "profiles_of"]
 
 
 class TableSums:
@@ -91,7 +57,11 @@ class TableSums:
 
     def sums(self) -> dict[str, np.ndarray]:
         """The sums over complete replications only, so that every contrast is paired."""
-        return {name: array[self.complete] for name, array in self._arrays.items()}
+        return self.sums_of(self.complete)
+
+    def sums_of(self, replications: Sequence[int]) -> dict[str, np.ndarray]:
+        """The sums of these replications, in that order."""
+        return {name: array[replications] for name, array in self._arrays.items()}
 
 
 @dataclass(frozen=True)
@@ -114,13 +84,16 @@ class Outcomes:
 class PayoffTable:
     """A labelled payoff table.
 
-    payoffs: (units, *shape). replicates: pseudo-values (replications, units, *shape), None where exact.
+    payoffs: (players, *shape). replicates: pseudo-values (replications, players, *shape), None where exact.
     low, high: pointwise interval ends of the payoffs, None where exact. welfare: (*shape), a day;
-    welfare_replicates: (replications, *shape) or None. outcomes: by cell.
+    welfare_replicates: (replications, *shape) or None. outcomes: by cell. All replicates are after control variates,
+    where there are any (`controls`), such that their plain mean and error hold with `degrees` degrees of freedom.
+    signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
+    raw_replicates: these, or else the replicates, before control variates. measured_days: of each replication.
     """
 
     profiles: Profiles
-    goal: TargetGoal
+    goal: Goal
     welfare_goal: Welfare
     payoffs: np.ndarray
     welfare: np.ndarray
@@ -129,6 +102,24 @@ class PayoffTable:
     low: np.ndarray | None = None
     high: np.ndarray | None = None
     welfare_replicates: np.ndarray | None = None
+    signed_replicates: np.ndarray | None = None
+    raw_replicates: np.ndarray | None = None
+    controls: Controls | None = None
+    beside_counterpart: bool = False
+    measured_days: float = 365.0
+
+    @property
+    def unadjusted(self) -> np.ndarray | None:
+        """Replicates before control variates: signed where the goal has that form."""
+        return self.replicates if self.raw_replicates is None else self.raw_replicates
+
+    @property
+    def degrees(self) -> int:
+        """Degrees of freedom of every error; 0 where the table is exact."""
+        if self.replicates is None:
+            return 0
+        left = len(self.replicates) - 1 if self.controls is None else self.controls.degrees
+        return left - self.beside_counterpart
 
     @property
     def replications(self) -> int | None:
@@ -136,7 +127,7 @@ class PayoffTable:
         return None if self.replicates is None else len(self.replicates)
 
     def by_player(self, cells: np.ndarray) -> np.ndarray:
-        """(..., cells, units) laid out as (..., units, *shape)."""
+        """(..., cells, players) laid out as (..., players, *shape)."""
         return _by_player(cells, self.profiles.shape)
 
 
@@ -146,29 +137,90 @@ def _by_player(cells: np.ndarray, shape: tuple[int, ...]) -> np.ndarray:
 
 
 def simulated_table(
-    profiles: Profiles, goal: TargetGoal, welfare: Welfare, sums: Mapping[str, np.ndarray], confidence: float
+    profiles: Profiles,
+    goal: Goal,
+    welfare: Welfare,
+    sums: Mapping[str, np.ndarray],
+    confidence: float,
+    *,
+    controls: Controls | None = None,
+    counterpart: TableCounterpart | None = None,
 ) -> PayoffTable:
-    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication."""
+    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication.
+
+    controls, counterpart: of the same replications; payoffs, welfare and outcomes are then the adjusted ones
+    (outcomes by `controls` alone).
+    """
     point, pseudo = goal.estimate(sums)
     low, high = goal.interval(sums, confidence)
+    signed = goal.signed(sums)
+    raw = pseudo if signed is None else signed
     a_day = {name: sums[name] / sums["days"] for name in _RATES}
-    worth = welfare.value(*(a_day[name].sum(axis=-1) for name in ("admitted", "turned_away", "diverted_out")))
-    outcomes = Outcomes(
-        **{name: rate.mean(axis=0) for name, rate in a_day.items() if name != "closed_free_days"},
-        closed_free=a_day["closed_free_days"].mean(axis=0),
-        utilisation=sums["occupied_days"].mean(axis=0) / np.maximum(sums["bed_days"].mean(axis=0), 1e-300),
-    )
+
+    def worth_of(sums: Mapping[str, np.ndarray]) -> np.ndarray:
+        rates = ("admitted", "turned_away", "diverted_out")
+        return welfare.value(*((sums[name] / sums["days"]).sum(axis=-1) for name in rates))
+
+    worth = worth_of(sums)
+    if counterpart is not None and controls is None:
+        controls = no_controls(len(raw))
+    if controls is not None:
+        own, own_worth = (None, None) if counterpart is None else counterpart.known(goal.signed, worth_of)
+        pseudo, worth = controls.adjust(pseudo), controls.adjust(worth, own_worth)
+        signed = None if signed is None else controls.adjust(signed, own)
+        degrees = controls.degrees - (counterpart is not None)
+        point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, degrees)
+        if signed is not None:
+            point, low, high = _folded(point, low, high)
     shape = profiles.shape
     return PayoffTable(
         profiles, goal, welfare,
         payoffs=_by_player(point, shape),
         welfare=worth.mean(axis=0).reshape(shape),
-        outcomes=outcomes,
+        outcomes=_outcomes(a_day, sums, controls),
         replicates=_by_player(pseudo, shape),
         low=_by_player(low, shape),
         high=_by_player(high, shape),
         welfare_replicates=worth.reshape(len(worth), *shape),
+        signed_replicates=None if signed is None else _by_player(signed, shape),
+        raw_replicates=_by_player(raw, shape),
+        controls=controls,
+        beside_counterpart=counterpart is not None,
+        measured_days=float(sums["days"].flat[0]),
     )  # fmt: skip
+
+
+def _adjusted_payoffs(
+    values: np.ndarray, raw: np.ndarray, confidence: float, degrees: int
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Means and interval ends of adjusted values; what is never negative in a replication is not so in the mean."""
+    mean, error = values.mean(axis=0), values.std(axis=0, ddof=1) / np.sqrt(len(values))
+    half = critical_value(confidence, degrees) * error
+    least = np.where((raw >= 0).all(axis=0), 0.0, -np.inf)
+    return np.maximum(mean, least), np.maximum(mean - half, least), mean + half
+
+
+def _folded(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """A distance and its interval from a signed one's."""
+    nearest = np.where((low <= 0) & (high >= 0), 0.0, np.minimum(np.abs(low), np.abs(high)))
+    return np.abs(mean), nearest, np.maximum(np.abs(low), np.abs(high))
+
+
+def _outcomes(
+    a_day: Mapping[str, np.ndarray], sums: Mapping[str, np.ndarray], controls: Controls | None
+) -> Outcomes:
+    """Means by cell, adjusted where there are controls, and never below 0."""
+
+    def mean(values: np.ndarray) -> np.ndarray:
+        if controls is None:
+            return values.mean(axis=0)
+        return np.maximum(np.tensordot(controls.weights, values, axes=1), 0.0)
+
+    return Outcomes(
+        **{name: mean(rate) for name, rate in a_day.items() if name != "closed_free_days"},
+        closed_free=mean(a_day["closed_free_days"]),
+        utilisation=mean(sums["occupied_days"]) / np.maximum(mean(sums["bed_days"]), 1e-300),
+    )
 
 
 _RATES = ("admitted", "turned_away", "diverted_out", "arrived", "closed_free_days")
@@ -194,8 +246,15 @@ def exact_outcomes(units: Sequence[Sequence[Mapping[str, float]]]) -> Outcomes:
     )
 
 
+def measure_arrays(
+    units: Sequence[Sequence[Mapping[str, float]]], names: Sequence[str]
+) -> dict[str, np.ndarray]:
+    """Exact measures, `units[cell][unit]` by name, as arrays (cells, units)."""
+    return {name: np.array([[unit[name] for unit in cell] for cell in units]) for name in names}
+
+
 def exact_table(
-    profiles: Profiles, goal: TargetGoal, welfare: Welfare, units: Sequence[Sequence[Mapping[str, float]]]
+    profiles: Profiles, goal: Goal, welfare: Welfare, units: Sequence[Sequence[Mapping[str, float]]]
 ) -> PayoffTable:
     """The table from exact measures: `units[cell][unit]` maps measure names to values."""
 
@@ -203,7 +262,7 @@ def exact_table(
     worth = welfare.value(
         *(rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out))
     )
-    payoffs = goal.exact(outcomes.utilisation)
+    payoffs = goal.exact(measure_arrays(units, goal.exact_measures))
     return PayoffTable(
         profiles, goal, welfare, _by_player(payoffs, profiles.shape), worth.reshape(profiles.shape), outcomes
     )

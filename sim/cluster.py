@@ -220,10 +220,12 @@ class Cluster:
             return []
         if worker in self._workers:
             self._workers[worker][0].note(time.monotonic())
-        key, status, value, its_bits = pickle.loads(payload)
+        key, status, value, its_bits, seconds = pickle.loads(payload)
         if status == "done":
-            return desk.answer(number, Reply(key, value, fingerprint=its_bits))
-        return desk.answer(number, Reply(desk.key_of(number), failure=value, fingerprint=its_bits))
+            reply = Reply(key, value, seconds=seconds, fingerprint=its_bits)
+        else:  # the key may be what could not be read
+            reply = Reply(desk.key_of(number), failure=value, seconds=seconds, fingerprint=its_bits)
+        return desk.answer(number, reply)
 
     def look(self) -> list[dict[str, Any]]:
         """Who is there, by machine: `workers`, `may_help` and the `reason` why not, `same_bits`."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import itertools
 import time
 import traceback
-from collections.abc import Hashable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Hashable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 
 from sim import engines
@@ -19,8 +19,8 @@ from sim.workers import Binding, Reply, Task, ThisProcess, Workers
 
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
+LEAST_TASK_SECONDS, MOST_TASK_SECONDS = 0.5, 2.0  # beyond them tasks are sized anew
 TASKS_PER_WORKER = 4
-RECENT_BATCHES = 8  # whose share is remembered: a task is asked about when it is taken, or looked at ahead
 
 
 @dataclass(frozen=True)
@@ -56,10 +56,27 @@ class Failure:
 
 @dataclass(frozen=True)
 class TaskSize:
-    """How many replications, and how many policies of each, make a task."""
+    """How many replications, and how many policies of each (None: all), make a task.
+
+    most: replications that a task may grow to where tasks prove quick; None where the size is fixed.
+    """
 
     replications: int = 1
     cells: int | None = None
+    most: int | None = None
+
+    def after(self, seconds: float, cells: int) -> TaskSize:
+        """The size for the next tasks, when a full one of some of so many cells took so long (0: not known)."""
+        if self.most is None or seconds <= 0 or LEAST_TASK_SECONDS <= seconds <= MOST_TASK_SECONDS:
+            return self
+        now = min(self.cells or cells, cells)
+        if seconds > MOST_TASK_SECONDS:
+            if self.replications > 1:
+                return replace(self, replications=self.replications // 2)
+            return replace(self, cells=max(1, now // 2))
+        if now < cells:
+            return replace(self, cells=min(cells, 2 * now))
+        return replace(self, replications=max(self.replications, min(self.most, 2 * self.replications)))
 
 
 @dataclass(frozen=True)
@@ -105,12 +122,13 @@ def replicate_shares(
     """As `replicate`, but each replication under the policies of its share only."""
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
-    size = task_size or TaskSize()
-    bound: dict[tuple[int, ...], Share] = {}
-    replies = _run_on(
-        workers or ThisProcess(), _tasks(network, plan, rules, shares, size, engine, bound), bound
+    cut = _Cut(shares, task_size or TaskSize())
+    tasks = (
+        ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
+        for batch, cells in cut
     )
-    for reply in replies:
+    for reply in _run_on(workers or ThisProcess(), tasks, cut):
+        cut.learn(reply)
         if reply.failure is None:
             yield from (_stamped(one, reply.fingerprint) for one in reply.value)
         else:
@@ -118,37 +136,11 @@ def replicate_shares(
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
 
 
-def _tasks(
-    network: Network,
-    plan: IntakePlan,
-    rules: Sequence[Rules],
-    shares: Iterable[Share],
-    size: TaskSize,
-    engine: str,
-    bound: dict[tuple[int, ...], Share],
-) -> Iterator[Task]:
-    """Blocks of cells of batches of replications; notes in `bound` which share a batch is of."""
-    for share in shares:
-        for batch in _batches(share.replications, size.replications):
-            bound[batch] = share
-            while len(bound) > RECENT_BATCHES:
-                del bound[next(iter(bound))]
-            for cells in _batches(share.cells, size.cells or len(rules)):
-                yield (batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine)
-
-
-def _run_on(
-    workers: Workers, tasks: Iterable[Task], bound: Mapping[tuple[int, ...], Share]
-) -> Iterator[Reply]:
+def _run_on(workers: Workers, tasks: Iterable[Task], cut: _Cut) -> Iterator[Reply]:
     """The replies; workers that may differ in bits are told that a replication's cells belong together."""
-    if not getattr(workers, "binds", False):
-        return workers.run(run_batch, tasks)
-
-    def binding(key: Hashable) -> Binding:
-        batch, cells = key  # type: ignore[misc]
-        return Binding(batch, len(cells), len(bound[batch].cells), bound[batch].fingerprint)
-
-    return workers.run(run_batch, tasks, binding=binding)  # type: ignore[call-arg]
+    if getattr(workers, "binds", False):
+        return workers.run(run_batch, tasks, binding=cut.binding)  # type: ignore[call-arg]
+    return workers.run(run_batch, tasks)
 
 
 def _stamped(reply: list[Run] | Failure, fingerprint: str | None) -> list[Run] | Failure:
@@ -157,11 +149,35 @@ def _stamped(reply: list[Run] | Failure, fingerprint: str | None) -> list[Run] |
     return [replace(run, fingerprint=fingerprint) for run in reply]
 
 
-def _batches(numbers: Iterable[int], size: int) -> Iterator[tuple[int, ...]]:
-    """The numbers in tuples of `size`, the last one perhaps shorter."""
-    numbers = iter(numbers)
-    while batch := tuple(itertools.islice(numbers, size)):
-        yield batch
+class _Cut:
+    """Shares cut into tasks, (replications, cells) each, as they are asked for; the size follows the pace."""
+
+    def __init__(self, shares: Iterable[Share], size: TaskSize) -> None:
+        self._shares, self._size = shares, size
+        self._of: dict[Hashable, tuple[TaskSize, Share]] = {}
+
+    def __iter__(self) -> Iterator[tuple[tuple[int, ...], tuple[int, ...]]]:
+        for share in self._shares:
+            replications = iter(share.replications)
+            while batch := tuple(itertools.islice(replications, self._size.replications)):
+                first = 0
+                while cells := share.cells[first : first + (self._size.cells or len(share.cells))]:
+                    self._of[batch, cells] = self._size, share
+                    first += len(cells)
+                    yield batch, cells
+
+    def binding(self, key: Hashable) -> Binding:
+        """What a task that is under way belongs to: all cells of a replication must come from the same bits."""
+        (batch, cells), (_, share) = key, self._of[key]  # type: ignore[misc]
+        return Binding(batch, len(cells), len(share.cells), share.fingerprint)
+
+    def learn(self, reply: Reply) -> None:
+        """Sizes the next tasks by a reply to a full one of the present size."""
+        (batch, cells), (size, share) = reply.key, self._of.pop(reply.key)
+        of = len(share.cells)
+        full = len(batch) == size.replications and len(cells) == min(size.cells or of, of)
+        if size == self._size and (full or reply.seconds > MOST_TASK_SECONDS):
+            self._size = size.after(reply.seconds, of)
 
 
 def run_batch(
@@ -249,11 +265,11 @@ class Pace:
     def task_size(self, replications: int, cells: int, workers: int) -> TaskSize:
         """Tasks of about a second, and enough of them for every worker."""
         block = max(1, min(cells, int(SECONDS_PER_TASK / max(self.running, 1e-9))))
+        fair = max(1, -(-replications // (TASKS_PER_WORKER * workers)))
         if block < cells:
-            return TaskSize(1, block)
+            return TaskSize(1, block, fair)
         in_a_second = int(SECONDS_PER_TASK / max(self.seconds(1, cells), 1e-9))
-        fair = -(-replications // (TASKS_PER_WORKER * workers))
-        return TaskSize(max(1, min(in_a_second, fair)), cells)
+        return TaskSize(max(1, min(in_a_second, fair)), cells, fair)
 
 
 def pace_of(scenario: Scenario, policy: Policy, *, engine: str = DEFAULT_ENGINE) -> Pace:

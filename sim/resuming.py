@@ -9,7 +9,7 @@ from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.replicate import Failure, Run, Share
 from sim.scenario import Policy, Scenario
 from sim.store import Store
-from sim.store_rows import Key, Row, cell_hash, scenario_hash
+from sim.store_rows import Key, Measures, Row, cell_hash, exact_hash, scenario_hash
 
 
 class Job:
@@ -35,16 +35,17 @@ class Job:
         self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
         self._command: int | None = None
         self.computed = 0
-        held = store.held(self.scenario)
+        whole = store.whole(self.scenario, self._cells)
+        held = store.held(self.scenario, but=whole)
         self._begun = {one for one, (by, _) in held.items() if by == fingerprint}
-        self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
+        self._missing = {
+            one: () if one in whole else self._cells_missing(one, held) for one in range(replications)
+        }
         self.restarted = tuple(
             one for one, missing in self._missing.items()
             if missing and one in held and held[one][0] != fingerprint
         )  # fmt: skip
-        names = scenario.unit_names
-        closes = [[policy.units[name].closure_threshold for name in names] for policy in policies]
-        store.describe(self.scenario, names, dict(zip(self._cells, closes, strict=True)))
+        _describe(store, scenario, self.scenario, policies, self._cells)
 
     def _cells_missing(self, replication: int, held: Mapping[int, tuple[str, set[str]]]) -> tuple[int, ...]:
         fingerprint, there = held.get(replication, (self._fingerprint, set()))
@@ -78,16 +79,13 @@ class Job:
     def kept_runs(self) -> Iterator[list[Run]]:
         """The runs that are there, a replication at a time."""
         for replication, missing in self._missing.items():
-            runs = [
-                self._kept(replication, cell) for cell in sorted(set(range(len(self._cells))) - {*missing})
-            ]
-            if runs:
-                yield runs
+            kept = sorted(set(range(len(self._cells))) - {*missing})
+            if kept:
+                rows = self._store.of_replication(self.scenario, replication)
+                yield [self._kept(rows[self._cells[cell]], cell) for cell in kept]
 
-    def _kept(self, replication: int, cell: int) -> Run:
-        row = self._store.get(Key(self.scenario, self._cells[cell], replication))
-        assert row is not None, "only the one writer drops rows"
-        return Run(replication, cell, row.record, row.intake_hash)
+    def _kept(self, row: Row, cell: int) -> Run:
+        return Run(row.key.replication, cell, row.record, row.intake_hash)
 
     def begin(self, provenance: Mapping[str, Any]) -> None:
         """Notes in the store that the job starts."""
@@ -111,3 +109,50 @@ class Job:
         """Notes in the store that the job has ended, be it interrupted, at that time."""
         if self._command is not None:
             self._store.end(self._command, at)
+
+
+class ExactJob:
+    """Exact cells of a scenario, held against what a store has of them from this machine.
+
+    kept: place among the policies -> measures by unit, of those that are there. computed: cells kept since.
+    """
+
+    def __init__(
+        self, store: Store, scenario: Scenario, policies: Sequence[Policy], *, fingerprint: str
+    ) -> None:
+        self._store, self._fingerprint = store, fingerprint
+        self.scenario = exact_hash(lower_network(scenario), plan_intake(scenario))
+        self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
+        self._command: int | None = None
+        self.computed = 0
+        there = dict(store.exact(self.scenario, fingerprint))
+        self.kept: dict[int, list[Measures]] = {
+            place: there[cell] for place, cell in enumerate(self._cells) if cell in there
+        }
+        _describe(store, scenario, self.scenario, policies, self._cells)
+
+    def begin(self, provenance: Mapping[str, Any]) -> None:
+        """Notes in the store that the job starts."""
+        asked, reused = len(self._cells), len(self.kept)
+        self._command = self._store.begin(self.scenario, provenance, asked=asked, reused=reused)
+
+    def keep(self, place: int, units: Sequence[Measures]) -> None:
+        """Keeps a cell that was solved; it is safe when this returns."""
+        if place not in self.kept:
+            self._store.put_exact(
+                self.scenario, self._cells[place], units, self._fingerprint, command=self._command
+            )
+            self.computed += 1
+
+    def end(self, at: str) -> None:
+        """Notes in the store that the job has ended, be it interrupted, at that time."""
+        if self._command is not None:
+            self._store.end(self._command, at)
+
+
+def _describe(
+    store: Store, scenario: Scenario, hashed: str, policies: Sequence[Policy], cells: Sequence[str]
+) -> None:
+    names = scenario.unit_names
+    closes = [[policy.units[name].closure_threshold for name in names] for policy in policies]
+    store.describe(hashed, names, dict(zip(cells, closes, strict=True)))

@@ -6,6 +6,7 @@ import hashlib
 import json
 import pickle
 import platform
+import time
 import traceback
 from collections.abc import Mapping
 from functools import cache
@@ -62,14 +63,15 @@ def differences(there: Mapping[str, str], here: Mapping[str, str]) -> str:
 
 
 def answer(payload: bytes) -> bytes:
-    """Runs a pickled (key, function, arguments): a pickled (key, status, value, bits), whatever goes wrong.
+    """Runs a pickled (key, function, arguments): a pickled (key, status, value, bits, seconds), whatever goes wrong.
 
     status: `done`, and the value; or `failed`, and the traceback. Nothing is left for dask to see: an exception that
     it could not carry would be lost on the way.
     """
-    key = None
+    key, started = None, time.perf_counter()
     try:
         key, function, arguments = pickle.loads(payload)
-        return pickle.dumps((key, "done", function(*arguments), bits()))
+        value = function(*arguments)
+        return pickle.dumps((key, "done", value, bits(), time.perf_counter() - started))
     except BaseException:  # SystemExit too: the thread is dask's
-        return pickle.dumps((key, "failed", traceback.format_exc(), bits()))
+        return pickle.dumps((key, "failed", traceback.format_exc(), bits(), time.perf_counter() - started))
