@@ -243,7 +243,8 @@ class Desk:
     def _find_late(self) -> list[tuple[float, _Work]]:
         usual = self._seconds / max(1, self._answers)
         late = self._clock() - max(LATE_SECONDS, 2 * usual)
-        works = {work for work in self._orders.values() if not work.lost and len(work.copies) < MOST_COPIES}
+        late_ones = dict.fromkeys(self._orders.values())  # in the order in which they were sent
+        works = [work for work in late_ones if not work.lost and len(work.copies) < MOST_COPIES]
         asked = [(max(at for _, at in work.copies.values()), work) for work in works]
         return sorted(((at, work) for at, work in asked if at < late), key=lambda one: one[0])
 
