@@ -9,11 +9,17 @@ from typing import Any
 from analysis.anarchy import NO_EQUILIBRIUM
 from analysis.confidence import Estimate
 from analysis.games import ESTIMATED, GameAnalysis
+from analysis.sets_document import sets_sentences
 
 POINT_ESTIMATE_WARNING = (
     "These are the equilibria of an ESTIMATED table. The point estimate of a game is often wrong: sampling error "
-    "hides true equilibria and shows false ones, above all where payoffs nearly tie. Read them as candidates, "
-    "look at the upper end of each regret, and repeat with more replications before relying on any of them."
+    "hides true equilibria and shows false ones, above all where payoffs nearly tie. One replication cannot tell: "
+    "repeat with more before relying on any of them."
+)
+SETS_NOTE = (
+    "A profile listed as possible is one that the replications cannot exclude, and need not be an equilibrium. A "
+    "confirmed one has, with the stated confidence, no gain from deviating above epsilon. Best responses "
+    "and payoffs in the table are point estimates. More replications shorten the list."
 )
 SELECTION_CAVEAT = (
     ", for the profiles listed here only: that these may be the wrong ones is not in the interval"
@@ -49,6 +55,11 @@ def findings_of(game: GameAnalysis) -> list[Finding]:
 
 def _findings(game: GameAnalysis) -> Iterator[Finding]:
     basis = _basis(game)
+    if game.sets is not None:
+        yield from (Finding(said, None, "profiles", basis) for said in sets_sentences(game))
+        yield from _prices(game, basis)
+        yield _turning(game, basis)
+        return
     count = len(game.equilibria)
     verdict = "in the estimated table " if not game.is_exact else ""
     noun = "equilibrium" if count == 1 else "equilibria"
@@ -61,9 +72,8 @@ def _findings(game: GameAnalysis) -> Iterator[Finding]:
 def _basis(game: GameAnalysis) -> str:
     if game.is_exact:
         return "exact Markov chain"
-    return (
-        f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals, {ESTIMATED}"
-    )
+    said = f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals"
+    return said + (f", {ESTIMATED}" if game.sets is None else "")
 
 
 def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:

@@ -62,6 +62,16 @@ class TargetGoal:
         others = _utilisation(occupied.sum(axis=0) - occupied, staffed.sum(axis=0) - staffed)
         return point, jackknife(point, np.abs(others - self.targets))
 
+    def signed(self, sums: Mapping[str, np.ndarray]) -> np.ndarray | None:
+        """Utilisation less target by replication, (replications, cells, units), where the payoff is |E U - T|.
+
+        Where staffed bed-time varies the ratio of means is linearised (delta method). None for the squared goal.
+        """
+        if self.shape == "squared":
+            return None
+        occupied, staffed = sums["occupied_days"], sums["bed_days"]
+        return _linearised(occupied, staffed) - self.targets
+
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, units) each, at pointwise confidence."""
         if self.shape == "squared":
@@ -90,9 +100,14 @@ def _ratio_interval(
     occupied: np.ndarray, staffed: np.ndarray, confidence: float
 ) -> tuple[np.ndarray, np.ndarray]:
     """Student's interval for a ratio of means over replications, by the delta method."""
+    return _t_interval(_linearised(occupied, staffed), confidence)
+
+
+def _linearised(occupied: np.ndarray, staffed: np.ndarray) -> np.ndarray:
+    """Values by replication whose mean is the ratio of means, and whose spread is its error (delta method)."""
     ratio = _utilisation(occupied.sum(axis=0), staffed.sum(axis=0))
     base = np.maximum(staffed.mean(axis=0), np.finfo(float).tiny)
-    return _t_interval(ratio + (occupied - ratio * staffed) / base, confidence)
+    return ratio + (occupied - ratio * staffed) / base
 
 
 def _t_interval(values: np.ndarray, confidence: float) -> tuple[np.ndarray, np.ndarray]:

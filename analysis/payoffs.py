@@ -9,6 +9,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from analysis.confidence import critical_value
+from analysis.controls import Controls
 from analysis.goals import TargetGoal, Welfare
 from analysis.measures import unit_sums
 from sim.replicate import Failure, Run
@@ -116,7 +118,10 @@ class PayoffTable:
 
     payoffs: (units, *shape). replicates: pseudo-values (replications, units, *shape), None where exact.
     low, high: pointwise interval ends of the payoffs, None where exact. welfare: (*shape), a day;
-    welfare_replicates: (replications, *shape) or None. outcomes: by cell.
+    welfare_replicates: (replications, *shape) or None. outcomes: by cell. All replicates are after control variates,
+    where there are any (`controls`), such that their plain mean and error hold with `degrees` degrees of freedom.
+    signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
+    raw_replicates: these, or else the replicates, before control variates. measured_days: of each replication.
     """
 
     profiles: Profiles
@@ -129,6 +134,22 @@ class PayoffTable:
     low: np.ndarray | None = None
     high: np.ndarray | None = None
     welfare_replicates: np.ndarray | None = None
+    signed_replicates: np.ndarray | None = None
+    raw_replicates: np.ndarray | None = None
+    controls: Controls | None = None
+    measured_days: float = 365.0
+
+    @property
+    def unadjusted(self) -> np.ndarray | None:
+        """Replicates before control variates: signed where the goal has that form."""
+        return self.replicates if self.raw_replicates is None else self.raw_replicates
+
+    @property
+    def degrees(self) -> int:
+        """Degrees of freedom of every error; 0 where the table is exact."""
+        if self.replicates is None:
+            return 0
+        return len(self.replicates) - 1 if self.controls is None else self.controls.degrees
 
     @property
     def replications(self) -> int | None:
@@ -146,29 +167,78 @@ def _by_player(cells: np.ndarray, shape: tuple[int, ...]) -> np.ndarray:
 
 
 def simulated_table(
-    profiles: Profiles, goal: TargetGoal, welfare: Welfare, sums: Mapping[str, np.ndarray], confidence: float
+    profiles: Profiles,
+    goal: TargetGoal,
+    welfare: Welfare,
+    sums: Mapping[str, np.ndarray],
+    confidence: float,
+    *,
+    controls: Controls | None = None,
 ) -> PayoffTable:
-    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication."""
+    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication.
+
+    controls: of the same replications; payoffs, welfare and outcomes are then the adjusted ones.
+    """
     point, pseudo = goal.estimate(sums)
     low, high = goal.interval(sums, confidence)
+    signed = goal.signed(sums)
+    raw = pseudo if signed is None else signed
     a_day = {name: sums[name] / sums["days"] for name in _RATES}
     worth = welfare.value(*(a_day[name].sum(axis=-1) for name in ("admitted", "turned_away", "diverted_out")))
-    outcomes = Outcomes(
-        **{name: rate.mean(axis=0) for name, rate in a_day.items() if name != "closed_free_days"},
-        closed_free=a_day["closed_free_days"].mean(axis=0),
-        utilisation=sums["occupied_days"].mean(axis=0) / np.maximum(sums["bed_days"].mean(axis=0), 1e-300),
-    )
+    if controls is not None:
+        pseudo, worth = controls.adjust(pseudo), controls.adjust(worth)
+        signed = None if signed is None else controls.adjust(signed)
+        point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, controls)
+        if signed is not None:
+            point, low, high = _folded(point, low, high)
     shape = profiles.shape
     return PayoffTable(
         profiles, goal, welfare,
         payoffs=_by_player(point, shape),
         welfare=worth.mean(axis=0).reshape(shape),
-        outcomes=outcomes,
+        outcomes=_outcomes(a_day, sums, controls),
         replicates=_by_player(pseudo, shape),
         low=_by_player(low, shape),
         high=_by_player(high, shape),
         welfare_replicates=worth.reshape(len(worth), *shape),
+        signed_replicates=None if signed is None else _by_player(signed, shape),
+        raw_replicates=_by_player(raw, shape),
+        controls=controls,
+        measured_days=float(sums["days"].flat[0]),
     )  # fmt: skip
+
+
+def _adjusted_payoffs(
+    values: np.ndarray, raw: np.ndarray, confidence: float, controls: Controls
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Means and interval ends of adjusted values; what is never negative in a replication is not so in the mean."""
+    mean, error = values.mean(axis=0), values.std(axis=0, ddof=1) / np.sqrt(len(values))
+    half = critical_value(confidence, controls.degrees) * error
+    least = np.where((raw >= 0).all(axis=0), 0.0, -np.inf)
+    return np.maximum(mean, least), np.maximum(mean - half, least), mean + half
+
+
+def _folded(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """A distance and its interval from a signed one's."""
+    nearest = np.where((low <= 0) & (high >= 0), 0.0, np.minimum(np.abs(low), np.abs(high)))
+    return np.abs(mean), nearest, np.maximum(np.abs(low), np.abs(high))
+
+
+def _outcomes(
+    a_day: Mapping[str, np.ndarray], sums: Mapping[str, np.ndarray], controls: Controls | None
+) -> Outcomes:
+    """Means by cell, adjusted where there are controls, and never below 0."""
+
+    def mean(values: np.ndarray) -> np.ndarray:
+        if controls is None:
+            return values.mean(axis=0)
+        return np.maximum(np.tensordot(controls.weights, values, axes=1), 0.0)
+
+    return Outcomes(
+        **{name: mean(rate) for name, rate in a_day.items() if name != "closed_free_days"},
+        closed_free=mean(a_day["closed_free_days"]),
+        utilisation=mean(sums["occupied_days"]) / np.maximum(mean(sums["bed_days"]), 1e-300),
+    )
 
 
 _RATES = ("admitted", "turned_away", "diverted_out", "arrived", "closed_free_days")

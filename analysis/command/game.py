@@ -8,6 +8,7 @@ from typing import Any
 import click
 
 from analysis.command.central import beside, best_rule, show_control, write_rule
+from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.entry import Interrupted, say
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
@@ -34,12 +35,17 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
 @click.option("--tolerance", type=FiniteRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
+@click.option("--epsilon", type=FiniteRange(0), metavar="X",
+              help="Simulated: regret within which an equilibrium is confirmed, in the goal's unit [default: the gain "
+                   "that takes a manager 10 years of own data to notice].")  # fmt: skip
+@controls_option
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
 def game(
-    request: Request, exact: bool, tolerance: float, control: bool, search: str | None, phase_fit: int | None
-) -> None:
+    request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, control: bool,
+    search: str | None, phase_fit: int | None,
+) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
@@ -54,6 +60,10 @@ def game(
     begun = started()
     if search is not None and not exact:
         raise click.BadOptionUsage("--search", "--search is for --exact only")
+    if exact and epsilon is not None:
+        raise click.BadOptionUsage(
+            "--epsilon", "--epsilon is for simulated games; with --exact use --tolerance"
+        )
     if control and search == game_search.BEST_REPLY:
         raise click.BadOptionUsage("--search", "--control is compared with a full table, not with a search")
     if phase_fit is not None and not exact:
@@ -66,8 +76,9 @@ def game(
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
-    table, ran, told = _exact_table(request) if exact else _simulated_table(request)
-    analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
+    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls)
+    run = request.scenario.run
+    analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
     if best is not None:
@@ -108,7 +119,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
     return profiles, goal, welfare_of(request.scenario)
 
 
-def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
+def _simulated_table(request: Request, controls: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums, simulated_table
@@ -123,7 +134,8 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
     policies = list(profiles.policies(request.policy))
     ran = run_replications(request, policies, label="game", take=sums.add, keep=True)
     require(len(sums.complete), ran.interrupted)
-    table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
+    known = controls_of(request, sums.complete, controls)
+    table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence, controls=known)
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
     told = {
         "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
@@ -162,7 +174,7 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
 
 
 def _show(analysis: Any, document: dict[str, Any]) -> None:
-    from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING
+    from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING, SETS_NOTE
 
     put_heading(document)
     put_text(f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
@@ -171,6 +183,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         put_text(
             f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
         )
+        put_text(*controls_sentence(document))
     put_text("")
     if len(document["players"]) == 2:
         for player in (0, 1):
@@ -187,7 +200,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         put_text("", *document["structure"]["reads"], document["search"]["reads"] + ".")
     put_text("", ONE_NETWORK)
     if not analysis.is_exact:
-        put_text("", POINT_ESTIMATE_WARNING)
+        put_text("", POINT_ESTIMATE_WARNING if analysis.sets is None else SETS_NOTE)
     put_caution()
 
 
@@ -275,15 +288,27 @@ def _show_equilibria(document: dict[str, Any]) -> None:
     put_table(
         "Equilibria (closure thresholds; regret, in the goal's unit: the most a unit gains by deviating alone; "
         "welfare a day)",
-        ("verdict", *players, *(f"regret {player}" for player in players), "welfare"),
+        ("verdict", *players, *(f"regret {player}" for player in players), *_years_heading(listed), "welfare"),
         [
             (one["verdict"], *(one["thresholds"][p] for p in players), *(_regret(one["regret"][p]) for p in players),
-             _value(one["welfare"]))
+             *_soonest(one), _value(one["welfare"]))
             for one in listed
         ],
     )  # fmt: skip
     if len(document["equilibria"]) > MOST_LISTED:
         put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+
+
+def _years_heading(listed: list[dict[str, Any]]) -> list[str]:
+    return ["years before a gain shows"] if any("years_to_notice" in one for one in listed) else []
+
+
+def _soonest(one: dict[str, Any]) -> list[str]:
+    """The fewest years of own data after which any unit could notice a gain, from the regrets' upper ends."""
+    if "years_to_notice" not in one:
+        return []
+    soon = [years["low"] for years in one["years_to_notice"].values() if years["low"] is not None]
+    return [f"at least {number(min(soon), 1)}" if soon else "never"]
 
 
 def _regret(value: Any) -> str:

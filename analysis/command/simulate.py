@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.entry import say
 from analysis.command.options import Request, require_file_can_be_written, scenario_command
 from analysis.command.output import (
@@ -32,12 +33,19 @@ from sim.errors import Fault, ScenarioError
     "--replication", type=click.IntRange(0, 999_999), default=0, show_default=True, help="Which one to trace."
 )
 @click.option("--per-replication", is_flag=True, help="Raw measures and hashes of each replication.")
+@controls_option
 def simulate(
-    request: Request, trace: Path | None, intake_out: Path | None, replication: int, per_replication: bool
+    request: Request,
+    trace: Path | None,
+    intake_out: Path | None,
+    replication: int,
+    per_replication: bool,
+    controls: bool,
 ) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
     from analysis.command.running import collect_runs, finish
+    from analysis.controls import controls_document
     from analysis.simulation import per_replication_measures, summarise
     from sim.record import hash_records
     from sim.scenario.describe import advice
@@ -47,14 +55,19 @@ def simulate(
     for said in advice(request.scenario):
         say(f"advice: {said}")
     runs, ran = collect_runs(request, label="simulate", keep=True)
+    known = controls_of(request, [run.replication for run in runs], controls)
     result = summarise(
-        [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
+        [run.record for run in runs],
+        request.scenario,
+        confidence=request.scenario.run.confidence,
+        controls=known,
     )
     document = _heading(request) | result.to_dict() | {
         "replications": result.replications,
         "confidence": result.confidence,
         "seed": request.scenario.run.seed,
         "record_hash": hash_records([run.record.hash for run in runs]),
+        "controls": controls_document(known, result.variance_ratio),
     } | ran.to_dict()  # fmt: skip
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
@@ -117,6 +130,7 @@ def _show(document: dict[str, Any], request: Request) -> None:
         + ", ".join(f"{name} {k}" for name, k in document["thresholds"].items()),
         f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, "
         f"seed {document['seed']}, engine {document['engine']}",
+        *controls_sentence(document),
         "",
     )
     units = document["units"]

@@ -43,8 +43,9 @@ def check_replies(document):
 
 
 def check_equilibria(document):
-    """Everybody replies best there, and there only."""
+    """Everybody replies best there, and there only: in the table as it stands, where that is estimated."""
     listed = [one["thresholds"] for one in document["equilibria"]]
+    listed = document.get("estimated_equilibria", listed)
     every = product(*(document["strategies"][name] for name in document["players"]))
     for profile in (dict(zip(document["players"], ks, strict=True)) for ks in every):
         stable = all(
@@ -106,13 +107,43 @@ def test_the_simulated_game_has_intervals(call, two):
     numbers += [document[name] for name in ("price_of_anarchy", "price_of_stability", "lost_per_year")]
     numbers += [document["optimum"]["welfare"]]
     for one in document["equilibria"]:
-        assert one["verdict"] == "estimated"
+        assert one["verdict"] in ("possible", "confirmed")
         numbers += [one["welfare"], *one["regret"].values()]
     assert document["equilibria"]
     assert all(set(number) == {"mean", "low", "high"} for number in numbers)
     assert all(number["low"] <= number["mean"] <= number["high"] for number in numbers)
     check_replies(document)
     check_equilibria(document)
+
+
+def test_what_is_undecided_is_what_is_possible_and_not_confirmed(call, two):
+    status, document = call("game", two, "--replications", 20, "--epsilon", 0.02)
+    assert status == 0 and document["epsilon"] == {"value": 0.02, "origin": "asked for"}
+    verdicts = [one["verdict"] for one in document["equilibria"]]
+    assert document["possible"] == len(verdicts) and document["confirmed"] == verdicts.count("confirmed")
+    undecided = [one["thresholds"] for one in document["equilibria"] if one["verdict"] == "possible"]
+    assert [one["thresholds"] for one in document["undecided"]] == undecided
+    for one in (*document["undecided"], *document["equilibria"]):
+        assert set(one["regret"]) == set(one["years_to_notice"]) == {"A", "B=b"}
+    assert document["controls"]["used"] and document["controls"]["degrees"] == 15
+    tight = call("game", two, "--replications", 20, "--epsilon", 0)[1]
+    assert tight["confirmed"] == 0 and len(tight["undecided"]) == tight["possible"] == document["possible"]
+    wide = call("game", two, "--replications", 20, "--epsilon", 1)[1]
+    assert wide["undecided"] == [] and {one["verdict"] for one in wide["equilibria"]} == {"confirmed"}
+
+
+def test_the_default_epsilon_takes_a_manager_ten_years(call, two):
+    document = call("game", two, "--replications", 20)[1]
+    assert "10 years" in document["epsilon"]["origin"] and document["epsilon"]["value"] > 0
+
+
+def test_controls_can_be_switched_off_and_are_off_where_replications_are_few(call, two):
+    assert call("game", two, "--replications", 20, "--no-controls")[1]["controls"] == {"used": False}
+    assert call("game", two, "--replications", 9)[1]["controls"] == {"used": False}
+
+
+def test_epsilon_is_for_simulation(call, two):
+    assert call("game", two, "--exact", "--epsilon", 0.1)[0] == 2
 
 
 def test_worker_processes_and_order_of_replies_change_nothing(call, two):
