@@ -21,7 +21,7 @@ means, Fieller 1954, "Some problems in interval estimation"; bootstrap, Efron 19
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -98,7 +98,7 @@ def absolute_worth(replicates: np.ndarray, sense: Sense, *, degrees: int | None 
 def log_worth(
     replicates: np.ndarray, sense: Sense, alpha: float, *, degrees: int | None = None
 ) -> Worth | None:
-    """The logarithm of welfare, by the delta method; None where, at level alpha over all cells, a mean may be 0 or less."""
+    """The logarithm of welfare, by the delta method; None where a mean may be 0 or less (level alpha over all cells)."""
     flat = np.asarray(replicates, float).reshape(len(replicates), -1)
     df = len(flat) - 1 if degrees is None else degrees
     mean, error = flat.mean(axis=0), flat.std(axis=0, ddof=1) / np.sqrt(len(flat))
@@ -129,20 +129,21 @@ def projected(
     worth = run_throughout(worth)
     if len(bases) * worth.values.size > MOST_NUMBERS:
         return None
-    high = max(worth.against(base).upper(_t(alpha / 4, worth)) for base in bases)
+    high = max(worth.against(base).upper(at_level(alpha / 4, worth)) for base in bases)
     return _least(worth, bases, alpha / 4, rng, draws), high
 
 
-def _t(level: float, worth: Worth) -> float:
+def at_level(level: float, worth: Worth) -> float:
+    """One comparison's one-sided critical value."""
     return float(t_quantile(1 - level, worth.degrees))
 
 
 def _least(worth: Worth, bases: np.ndarray, level: float, rng: np.random.Generator, draws: int) -> float:
     """The smallest lower bound of any base; only those that can be it have their max-t critical value worked out."""
     others = max(1, len(worth.mean) - 1)
-    if any(worth.against(base).lower(_t(level, worth)) == 0 for base in bases):
+    if any(worth.against(base).lower(at_level(level, worth)) == 0 for base in bases):
         return 0.0  # no critical value is smaller than one comparison's
-    cautious = _t(level / others, worth)
+    cautious = at_level(level / others, worth)
     bounds = np.array([worth.against(base).lower(cautious) for base in bases])
     least = np.inf
     for place in np.argsort(bounds, kind="stable"):
@@ -195,7 +196,7 @@ def epsilon_price(
     worth = run_throughout(worth)
     critical = _all_pairs(worth, alpha / 4, rng)
     low = max(worth.against(base).lower(critical) for base in bases)
-    above = _t(alpha / 4 / len(worth.mean), worth)
+    above = at_level(alpha / 4 / len(worth.mean), worth)
     high = min(worth.against(base).upper(above) for base in bases)
     return EpsilonPrice(epsilon, count, float(np.exp(low)), float(np.exp(high)))
 
@@ -203,7 +204,7 @@ def epsilon_price(
 def _all_pairs(worth: Worth, level: float, rng: np.random.Generator) -> float:
     cells = len(worth.mean)
     pairs = cells * (cells - 1) // 2
-    cautious = _t(level / max(1, 2 * pairs), worth)
+    cautious = at_level(level / max(1, 2 * pairs), worth)
     if not pairs or pairs * len(worth.values) > MOST_PAIRS:
         return cautious
     one, other = np.triu_indices(cells, 1)
@@ -284,7 +285,10 @@ def difference_band(
     return _banded(point, worth, possible, alpha, rng, lambda a_day: DAYS_A_YEAR * a_day)
 
 
-def _banded(point: Estimate, worth: Worth, possible: np.ndarray, alpha: float, rng, scale) -> Estimate:
+def _banded(
+    point: Estimate, worth: Worth, possible: np.ndarray, alpha: float, rng: np.random.Generator,
+    scale: Callable[[float], float],
+) -> Estimate:  # fmt: skip
     if not np.any(possible):
         return Estimate(point.mean, reason=NONE_POSSIBLE)
     if len(worth.values) < 2:
@@ -296,101 +300,3 @@ def _banded(point: Estimate, worth: Worth, possible: np.ndarray, alpha: float, r
     if point.mean is None:
         return Estimate(None, low, high, point.reason)
     return Estimate(point.mean, min(low, point.mean), max(high, point.mean))
-
-
-# ---- the weight of a transfer ----
-
-
-@dataclass(frozen=True)
-class AtWeight:
-    """The price where a transfer counts as `weight` patients turned away, and the loss a year at the worst equilibrium
-    over the least loss."""
-
-    weight: float
-    price_of_anarchy: Estimate
-    lost_per_year: Estimate
-
-
-def weight_interval(
-    turned_away: np.ndarray,
-    transfers: np.ndarray,
-    possible: np.ndarray,
-    alpha: float,
-    rng: np.random.Generator,
-    *,
-    degrees: int | None = None,
-) -> tuple[float, float | None]:
-    """The interval of the weight at which the verdict turns, at level alpha, of which `possible` has spent a half.
-
-    Both arrays: a day by replication, (replications, *shape). The weight solves a - w b = 0, a what the worst
-    equilibrium turns away beyond the profile that turns fewest away, b what the latter moves beyond the former.
-    Fieller's set at alpha/4 for every possible equilibrium and every profile that may turn fewest away (a max-t set at
-    alpha/4), joined. The high end is None where the data set none.
-    """
-    away = absolute_worth(turned_away, "cost", degrees=degrees)
-    moved = np.asarray(transfers, float).reshape(len(away.values), -1)
-    known = ~np.isnan(away.values).any(axis=0)
-    fewest = np.flatnonzero(known)[fewest_set(run_throughout(away), alpha / 4, rng)]
-    critical = float(t_quantile(1 - alpha / 8, away.degrees))
-    low, high = np.inf, 0.0
-    for base in np.flatnonzero(np.asarray(possible, bool).ravel() & known):
-        others = fewest[fewest != base]
-        a = away.values[:, others] - away.values[:, [base]]  # of minus the patients turned away
-        b = moved[:, others] - moved[:, [base]]
-        least, most = _fieller(a, b, critical)
-        low, high = min(low, least), max(high, most)
-    if not np.isfinite(low):
-        return 0.0, None
-    return float(low), None if np.isinf(high) else float(high)
-
-
-def fewest_set(worth: Worth, level: float, rng: np.random.Generator, *, draws: int = DRAWS) -> np.ndarray:
-    """The profiles that may be the best: numbers; the best is among them with probability 1 - level.
-
-    A profile stays unless another is better by more than its own max-t critical value.
-    """
-    cells = len(worth.mean)
-    sure, cautious = _t(level, worth), _t(level / max(1, cells - 1), worth)
-    kept = []
-    for base in range(cells):
-        gap = worth.against(base)
-        critical = sure
-        if gap.lower(sure) > 0 and gap.lower(cautious) == 0 and gap.scores.size <= MOST_DRAWN:
-            critical = critical_max_t(
-                gap.scores, level, rng, two_sided=False, draws=draws, degrees=worth.degrees
-            )
-        elif gap.lower(sure) > 0:
-            critical = cautious
-        if gap.lower(critical) == 0:
-            kept.append(base)
-    return np.array(kept)
-
-
-def _fieller(a: np.ndarray, b: np.ndarray, critical: float) -> tuple[float, float]:
-    """The hull, from 0 on, of all w at which some pair's mean a - w b is within its error: (least, most).
-
-    a, b: (replications, pairs). Infinity and 0 where there is none.
-    """
-    if not a.shape[1]:
-        return np.inf, 0.0
-    n = len(a)
-    centred = a - a.mean(axis=0), b - b.mean(axis=0)
-    scale = critical**2 / (n * (n - 1))
-    aa, ab, bb = ((one * other).sum(axis=0) * scale for one, other in _pairs_of(centred))
-    mean_a, mean_b = a.mean(axis=0), b.mean(axis=0)
-    lead, middle, free = mean_b**2 - bb, mean_a * mean_b - ab, mean_a**2 - aa
-    root = np.sqrt(np.maximum(middle**2 - lead * free, 0))
-    real = middle**2 - lead * free >= 0
-    with np.errstate(divide="ignore", invalid="ignore"):
-        roots = np.stack([(middle - root) / lead, (middle + root) / lead])
-    roots = np.where(real & np.isfinite(roots) & (roots >= 0), roots, np.nan)
-    least = np.where(free <= 0, 0.0, np.fmin(*roots))
-    most = np.where(lead <= 0, np.inf, np.fmax(*roots))
-    empty = np.isnan(least) | np.isnan(most)
-    least, most = np.where(empty, np.inf, least), np.where(empty, 0.0, most)
-    return float(least.min()), float(most.max())
-
-
-def _pairs_of(centred: tuple[np.ndarray, np.ndarray]) -> Iterator[tuple[np.ndarray, np.ndarray]]:
-    a, b = centred
-    yield from ((a, a), (a, b), (b, b))

@@ -10,6 +10,7 @@ import click
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.entry import Interrupted, say
+from analysis.command.game_beyond import beyond_options, look_beyond, show_beyond, write_pictures
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
@@ -42,9 +43,10 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
+@beyond_options
 def game(
     request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, control: bool,
-    search: str | None, phase_fit: int | None,
+    search: str | None, phase_fit: int | None, **wanted: Any,
 ) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
@@ -81,6 +83,7 @@ def game(
     analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
+    found = look_beyond(request, analysis, document, **wanted)
     if best is not None:
         document["control"] = beside(best, analysis)
     if choice is not None:
@@ -88,10 +91,11 @@ def game(
     if request.as_json:
         put_json(document)
     else:
-        _show(analysis, document)
+        _show(analysis, document, found)
     if request.out is not None:
         engine = "exact chain" if ran is None else ran.engine.name
         _write(request, analysis, document, provenance(request, "game", begun, engine=engine))
+        write_pictures(request.out, found)
         if best is not None:
             write_rule(best, request.out)
     if ran is not None:
@@ -173,7 +177,7 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
         say("payoff pictures are drawn for two players only; the table is in table.csv")
 
 
-def _show(analysis: Any, document: dict[str, Any]) -> None:
+def _show(analysis: Any, document: dict[str, Any], found: Any) -> None:
     from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING, SETS_NOTE
 
     put_heading(document)
@@ -194,6 +198,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
     _show_outcomes(document)
     for finding in document["findings"]:
         put_text(finding["statement"] + ".")
+    show_beyond(document, found)
     if "control" in document:
         show_control(document)
     if "structure" in document:
@@ -284,7 +289,8 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
 
 
 def _show_equilibria(document: dict[str, Any]) -> None:
-    players, listed = document["players"], document["equilibria"][:MOST_LISTED]
+    players, pure = document["players"], [one for one in document["equilibria"] if one["kind"] == "pure"]
+    listed = pure[:MOST_LISTED]
     put_table(
         "Equilibria (closure thresholds; regret, in the goal's unit: the most a unit gains by deviating alone; "
         "welfare a day)",
@@ -295,8 +301,8 @@ def _show_equilibria(document: dict[str, Any]) -> None:
             for one in listed
         ],
     )  # fmt: skip
-    if len(document["equilibria"]) > MOST_LISTED:
-        put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+    if len(pure) > MOST_LISTED:
+        put_text(f"... and {len(pure) - MOST_LISTED} more (all are in --json and --out).")
 
 
 def _years_heading(listed: list[dict[str, Any]]) -> list[str]:
@@ -343,7 +349,8 @@ def _show_outcomes(document: dict[str, Any]) -> None:
 def _named_outcomes(document: dict[str, Any]) -> Iterator[tuple[str, dict[str, Any]]]:
     ties = len(document["optimum"]["thresholds"])
     yield "optimum" + (f" (1 of {ties} ties)" if ties > 1 else ""), document["optimum"]["outcome"]
-    by_thresholds = {tuple(one["thresholds"].items()): one["outcome"] for one in document["equilibria"]}
+    pure = [one for one in document["equilibria"] if one["kind"] == "pure"]
+    by_thresholds = {tuple(one["thresholds"].items()): one["outcome"] for one in pure}
     extremes = {name: document[f"{name}_equilibrium"] for name in ("worst", "best")}
     if extremes["worst"] is None:
         return
