@@ -1,4 +1,4 @@
-"""What a game's table says beyond its pure equilibria: mixed and correlated ones, dynamics, and possible best replies."""
+"""What a game's table says beyond its pure equilibria: mixed and correlated ones, dynamics, possible best replies."""
 
 from __future__ import annotations
 
@@ -14,11 +14,11 @@ from analysis.contrasts import evidence_of
 from analysis.correlated import Correlated, CorrelatedBounds, correlated_bounds
 from analysis.dynamics import CYCLE, EQUILIBRIUM, RULES, TABLES, Path, Reached, nearest_start, reached_shares
 from analysis.equilibria import Mix, Profile, expected, regrets
-from analysis.games import EXACT, ESTIMATED, GameAnalysis
+from analysis.games import ESTIMATED, EXACT, GameAnalysis
 from analysis.mixed import READS, MixedEquilibrium, MixedSearch, mixed_equilibria
+from analysis.price_bands import resampling_weights
 from analysis.prices import PriceStudy, exact_study, resampled_costs, simulated_study
 from analysis.prices_document import study_document
-from analysis.price_bands import resampling_weights
 from analysis.reply_bands import NO_THEOREM, ReplyBands, exact_bands, first_fall, reply_bands
 
 MOST_HELD = 20_000_000  # numbers of all resampled tables together
@@ -332,12 +332,12 @@ def _dynamics_sentences(found: Beyond) -> Iterator[str]:
     yield f"From {_said(found.game, found.start)} ({WARNING_OF_TIME}):"
     for name, path in found.paths.items():
         if path.ends == EQUILIBRIUM:
-            end = f"reach {_said(found.game, path.last)} after {path.rounds} rounds"
+            end = f"{_said(found.game, path.last)} after {path.rounds} rounds"
         elif path.ends == CYCLE:
-            end = f"go round {len(path.cycle)} profiles for ever"
+            end = f"round {len(path.cycle)} profiles for ever"
         else:
-            end = f"do not settle in {path.rounds} rounds"
-        yield f"  {path.rule} {end}" + _resampled(found, name) + "."
+            end = f"not settled in {path.rounds} rounds"
+        yield f"  {path.rule}: {end}" + _resampled(found, name) + "."
 
 
 def _resampled(found: Beyond, name: str) -> str:
@@ -361,8 +361,8 @@ def _bands_sentences(game: GameAnalysis, bands: ReplyBands) -> Iterator[str]:
     for name, fall in falls.items():
         if fall is not None:
             yield (
-                f"Best replies of {name} fall somewhere: at least {fall['at_least']} against {_pairs(fall['from'])}, at "
-                f"most {fall['at_most']} against {_pairs(fall['to'])}."
+                f"Best replies of {name} fall somewhere: at least {fall['at_least']} against {_pairs(fall['from'])}, "
+                f"at most {fall['at_most']} against {_pairs(fall['to'])}."
             )
     if not any(falls.values()):
         yield "Nothing in the replications refutes that best replies never fall as the others' thresholds rise."

@@ -6,6 +6,7 @@ from pathlib import Path
 
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.ticker import MaxNLocator
 
 from analysis.beyond_pure import Beyond
 from analysis.figures import plt, save, short
@@ -51,12 +52,14 @@ def replies(found: Beyond, ax: Axes) -> Axes:
             label=f"{label} of {names[1]}")  # fmt: skip
     met = np.array([one.profile for one in game.equilibria]).reshape(-1, 2)
     said = "equilibrium" if game.is_exact else "possible equilibrium"
-    ax.scatter(across[met[:, 0]], up[met[:, 1]], marker="D", s=90, facecolors="none", edgecolors="black", linewidths=1.5,
-               label=said, zorder=4)  # fmt: skip
+    ax.scatter(across[met[:, 0]], up[met[:, 1]], marker="D", s=90, facecolors="none", edgecolors="black",
+               linewidths=1.5, label=said, zorder=4)  # fmt: skip
     ax.set(
         title="Best replies cross at equilibria",
         xlabel=f"closure threshold of {names[0]} (beds)", ylabel=f"closure threshold of {names[1]} (beds)",
     )  # fmt: skip
+    for axis in (ax.xaxis, ax.yaxis):
+        axis.set_major_locator(MaxNLocator(integer=True))
     ax.grid(color="0.9")
     ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
     return ax

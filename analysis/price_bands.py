@@ -98,7 +98,7 @@ def absolute_worth(replicates: np.ndarray, sense: Sense, *, degrees: int | None 
 def log_worth(
     replicates: np.ndarray, sense: Sense, alpha: float, *, degrees: int | None = None
 ) -> Worth | None:
-    """The logarithm of welfare, by the delta method; None where a mean may be 0 or less (level alpha over all cells)."""
+    """The logarithm of welfare, by the delta method; None where, at level alpha, a mean may be 0 or less."""
     flat = np.asarray(replicates, float).reshape(len(replicates), -1)
     df = len(flat) - 1 if degrees is None else degrees
     mean, error = flat.mean(axis=0), flat.std(axis=0, ddof=1) / np.sqrt(len(flat))

@@ -82,7 +82,7 @@ def projected_turning(
     """The weight at which the verdict turns in the estimated table, with an interval over all possible equilibria."""
     worst = cost_of_selfishness(table.welfare, table.welfare_goal.sense, found).worst
     turning = turning_weight(*_network(table), worst)
-    if not possible.any():
+    if not possible.any() or table.turned_away_replicates is None:
         return turning
     ends = weight_interval(
         table.turned_away_replicates, table.transfers_replicates, possible, alpha, np.random.default_rng([seed, 3]),

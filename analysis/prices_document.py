@@ -52,8 +52,8 @@ def projected_sentences(
     if sets is not None and not (sets.confirmed.mask & sets.possible.mask).any():
         yield (
             (
-                "None of the possible profiles is confirmed, so the game may have no pure equilibrium, and then these prices "
-                "do not exist"
+                "None of the possible profiles is confirmed, so the game may have no pure equilibrium, and then these "
+                "prices do not exist"
             ),
             None,
             "profiles",
@@ -136,6 +136,6 @@ def study_sentences(study: PriceStudy) -> Iterator[str]:
     if boot is not None and boot.price_of_anarchy.low is not None:
         price = boot.price_of_anarchy
         yield (
-            f"Bootstrap of the price of anarchy: {price.low:.4f} to {price.high:.4f} (approximate: narrower, and covers "
-            "less often than it says)."
+            f"Bootstrap of the price of anarchy: {price.low:.4f} to {price.high:.4f} (approximate: narrower, and "
+            "covers less often than it says)."
         )

@@ -16,9 +16,9 @@ from analysis.simultaneous import DRAWS, multipliers, to_student
 
 NO_THEOREM = (
     "Rising replies are promised by single crossing only where each unit's utilisation rises strictly in its own "
-    "threshold and never in the others'; on a plateau below the target the least reply may fall, above it the greatest, "
-    "and searches from both ends may then miss equilibria. For players with several units, or two parameters, no theorem "
-    "is at hand."
+    "threshold and never in the others'; on a plateau below the target the least reply may fall, above it the "
+    "greatest, and searches from both ends may then miss equilibria. For players with several units, or two "
+    "parameters, no theorem is at hand."
 )
 
 
@@ -71,8 +71,10 @@ def exact_bands(best: np.ndarray) -> ReplyBands:
 
 @dataclass(frozen=True)
 class Fall:
-    """Where replies provably fall: at least `before` against `lower`, at most `after` against `upper` (strategy numbers;
-    lower and upper are the others' strategies, lower nowhere above upper)."""
+    """Where replies provably fall: at least `before` against `lower`, at most `after` against `upper`.
+
+    All strategy numbers; lower and upper are the others', lower nowhere above upper.
+    """
 
     player: int
     lower: tuple[int, ...]

@@ -10,7 +10,13 @@ import click
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.entry import Interrupted, say
-from analysis.command.game_beyond import beyond_options, look_beyond, show_beyond, write_pictures
+from analysis.command.game_beyond import (
+    beyond_options,
+    look_beyond,
+    require_a_table,
+    show_beyond,
+    write_pictures,
+)
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
@@ -75,6 +81,7 @@ def game(
     request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
+        require_a_table(wanted)
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None

@@ -32,6 +32,15 @@ def beyond_options(function: Callable[..., Any]) -> Callable[..., Any]:
     return function
 
 
+def require_a_table(wanted: dict[str, Any]) -> None:
+    """Refuses what a best-reply search cannot give."""
+    asked = [f"--{name}" for name, value in wanted.items() if value]
+    if asked:
+        raise click.UsageError(
+            f"{', '.join(asked)} needs the whole table: add --search table, or list fewer thresholds"
+        )
+
+
 def look_beyond(request: Request, analysis: Any, document: dict[str, Any], **wanted: Any) -> Any:
     """Works it out and adds it to the document."""
     from analysis.beyond_pure import Wanted, beyond, beyond_document, with_mixed
