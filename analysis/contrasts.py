@@ -18,7 +18,7 @@ from scipy.special import stdtr
 from analysis.confidence import t_quantile
 from analysis.equilibria import as_costs
 from analysis.payoffs import PayoffTable
-from analysis.simultaneous import Studentised, studentise
+from analysis.simultaneous import Studentised, flip_scores, studentise
 
 LEAST_DIFFERENCES = 10  # non-zero ones, below which two profiles count as tied
 PLAIN = 6.0  # a t beyond which a sign is taken as known
@@ -152,7 +152,7 @@ class Block:
         )
 
     def largest_null(self, rows: np.ndarray) -> np.ndarray:
-        """The largest null statistic of the pairs in use for each row of multipliers, (draws,).
+        """The largest null statistic of the pairs in use for each row of signs, (draws,), as sums of flipped scores.
 
         For distances with a plain sign of D only S can err, and on one side; else both may, on either side.
         """
@@ -164,7 +164,7 @@ class Block:
         if not known.all():
             open_ = ~known
             for part in (self.D, self.S):
-                null = rows @ part.scores[:, open_]
+                null = rows @ flip_scores(part)[:, open_]
                 np.maximum(most, null.max(axis=1), out=most)
                 np.maximum(most, -null.min(axis=1), out=most)
         return most
@@ -174,10 +174,10 @@ class Block:
     ) -> np.ndarray:
         """The largest of sign x null where the first is judged, and of its reverse where the second is."""
         one, other = self.use[0] & among, self.use[1] & among
-        most = np.full(len(rows), -np.inf)
+        most, scores = np.full(len(rows), -np.inf), flip_scores(part)
         for used, side in ((one, sign), (other, -sign)):
             if used.any():
-                np.maximum(most, (rows @ (part.scores[:, used] * side[used])).max(axis=1), out=most)
+                np.maximum(most, (rows @ (scores[:, used] * side[used])).max(axis=1), out=most)
         return most
 
     def gains(self, direction: int) -> tuple[np.ndarray, np.ndarray]:

@@ -32,14 +32,9 @@ def projected_sentences(
     if price.low is None or price.high is None:
         yield f"No interval of the price of anarchy: {price.reason}", None, "ratio"
     else:
-        yield (
-            (
-                f"The price of anarchy lies between {price.low:.4f} and {price.high:.4f}, {OVER_ALL}"
-                f"{_estimated(price, 4)}; the price of stability too{_estimated(kindest, 4)}"
-            ),
-            price,
-            "ratio",
-        )
+        said = f"The price of anarchy lies between {price.low:.4f} and {price.high:.4f}, {OVER_ALL}"
+        yield said + _estimated(price, 4), price, "ratio"
+        yield f"The price of stability lies between the same two{_estimated(kindest, 4)}", kindest, "ratio"
     if lost.low is not None and lost.high is not None:
         unit = _unit(welfare)
         yield (

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from analysis.contrasts import Evidence, blocks, masks_of
-from analysis.simultaneous import DRAWS, multipliers, to_student
+from analysis.simultaneous import DRAWS, flip_to_student, sign_flips
 
 NO_THEOREM = (
     "Rising replies are promised by single crossing only where each unit's utilisation rises strictly in its own "
@@ -50,13 +50,14 @@ def reply_bands(
 ) -> ReplyBands:
     """The sets at the given level. best: the point estimate's best replies, bool (players, *shape)."""
     masks = masks_of(evidence, None, None)
-    rows = multipliers(rng, draws, len(evidence.values))
+    rows = sign_flips(rng, draws, len(evidence.values))
     most = np.full(draws, -np.inf)
     for block in blocks(evidence, masks, draws=draws):
         np.maximum(most, block.largest_null(rows), out=most)
     beaten = np.zeros((len(best), evidence.cells), bool)
     if not np.isneginf(most).all():
-        critical = to_student(np.quantile(most, 1 - level, method="higher"), evidence.degrees)
+        beyond = float(np.quantile(most, 1 - level, method="higher"))
+        critical = flip_to_student(beyond, len(evidence.values), evidence.degrees)
         for block in blocks(evidence, masks):
             against = block.statistics() > critical
             for direction, cells in block.judged:

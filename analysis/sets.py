@@ -3,6 +3,8 @@
 *Possible*: a step-down by the largest t (Romano and Wolf 2005, "Stepwise multiple testing as formalized data
 snooping", applied to equilibrium as moment inequalities, compare Romano, Shaikh and Wolf 2014, "A practical two-step
 method for testing moment inequalities"; both from memory). With the stated confidence it holds every pure equilibrium.
+The joint null flips the signs of whole replications: normal multipliers, even with Student's tail, covered .88 to .91
+at ten replications where every profile of a table is an equilibrium, sign flips .93 to .95.
 *Confirmed*: Holm 1979, "A simple sequentially rejective multiple test procedure" (from memory), over profiles, each by
 intersection-union over deviations. With the stated confidence every member has a regret of at most epsilon.
 """
@@ -15,7 +17,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from analysis.contrasts import Evidence, Masks, blocks, masks_of
-from analysis.simultaneous import DRAWS, multipliers, to_student
+from analysis.simultaneous import DRAWS, flip_to_student, sign_flips
+
+LEAST_BEYOND = 10  # draws expected beyond a critical value
 
 
 @dataclass(frozen=True)
@@ -43,14 +47,15 @@ def possible(
     *,
     alive: np.ndarray | None = None,
     dropped: np.ndarray | None = None,
-    draws: int = DRAWS,
+    draws: int | None = None,
 ) -> PossibleSet:
     """The profiles among `alive` that may be pure equilibria; all that are, with probability 1 - level.
 
     level: chance that an equilibrium is missing. alive: bool (*shape), default all. dropped: bool (players, *shape),
-    cells no longer needed as that player's deviation (values there may be missing). At least 2 replications.
+    cells no longer needed as that player's deviation (values there may be missing).
+    draws: of the joint null (default: 1000, or more for a level below .01). At least 2 replications.
     """
-    rows = multipliers(rng, draws, len(evidence.values))
+    rows = sign_flips(rng, draws or max(DRAWS, math.ceil(LEAST_BEYOND / level)), len(evidence.values))
     masks = masks_of(evidence, alive, dropped)
     statistic, critical, steps = strongest(evidence, masks), math.inf, 0
     while masks.alive.any():
@@ -81,7 +86,8 @@ def _critical(evidence: Evidence, masks: Masks, rows: np.ndarray, level: float) 
         np.maximum(most, block.largest_null(rows), out=most)
     if np.isneginf(most).all():
         return math.inf
-    return float(to_student(np.quantile(most, 1 - level, method="higher"), evidence.degrees))
+    beyond = float(np.quantile(most, 1 - level, method="higher"))
+    return flip_to_student(beyond, len(evidence.values), evidence.degrees)
 
 
 @dataclass(frozen=True)

@@ -35,6 +35,7 @@ from analysis.command.phase_fit import fitted, option, show_fits
 
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
+LONG_YEARS = 100  # of watching, beyond which the number says nothing more
 MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
@@ -321,7 +322,9 @@ def _soonest(one: dict[str, Any]) -> list[str]:
     if "years_to_notice" not in one:
         return []
     soon = [years["low"] for years in one["years_to_notice"].values() if years["low"] is not None]
-    return [f"at least {number(min(soon), 1)}" if soon else "never"]
+    if not soon:
+        return ["never"]
+    return [f"at least {min(soon):.0f}" if min(soon) < LONG_YEARS else f"more than {LONG_YEARS}"]
 
 
 def _regret(value: Any) -> str:
