@@ -144,8 +144,7 @@ def _network(table: PayoffTable) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _with_interval(turning: TurningWeight, low: float, high: float | None) -> TurningWeight:
-    reasons = [turning.reason, NO_HIGH_END if high is None else None]
-    reason = "; ".join(one for one in reasons if one) or None
+    reason = turning.reason or (NO_HIGH_END if high is None else None)
     weight = turning.weight
     if weight is not None:
         low, high = min(low, weight), None if high is None else max(high, weight)
