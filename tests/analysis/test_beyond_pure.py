@@ -39,7 +39,7 @@ def without_pure():
     profiles = Profiles(("Low", "High"), ((1, 2), (1, 2, 3, 4)))
     policy = scenario.policy()
     cells = []
-    for thresholds in product(*profiles.strategies):
+    for thresholds in product((1, 2), (1, 2, 3, 4)):
         here = policy.with_thresholds(dict(zip(profiles.players, thresholds, strict=True)))
         found = solve(scenario, here).units
         cells.append([found[name].to_dict() for name in profiles.players])

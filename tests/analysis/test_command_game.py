@@ -272,7 +272,8 @@ PICTURES = CURVE | {
 def test_results_are_written_to_a_folder(call, two, tmp_path):
     folder = tmp_path / "out"
     _, document = call("game", two, "--exact", "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | PICTURES
+    store = {"runs.sqlite", "runs.lock"}
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | store | PICTURES
     kept = json.loads((folder / "result.json").read_text(encoding="utf-8"), parse_constant=no_constants)
     assert kept == document
     origin = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))

@@ -156,7 +156,7 @@ def test_the_profile_nearest_to_the_present_rules_is_found_player_by_player_the_
 
 
 def test_the_present_rules_of_several_units_count_together():
-    profiles, base = axes({"B": {"closure": [1, 2, 3], "incoming": [0, 2]}}, TRUST)
+    profiles, base = axes({"B": {"closure": {"values": [1, 2, 3]}, "incoming": {"values": [0, 2]}}}, TRUST)
     now = nearest_profile(profiles, base.with_thresholds({"A": 1, "C": 2}))
     assert profiles.policy(base, now).thresholds == {"A": 1, "B": 2, "C": 2}
     assert profiles.policy(base, now).units["B"].incoming == 2
