@@ -15,7 +15,7 @@ from sim.wording import as_written, in_words, nearest, shown
 
 __all__ = ["Collector", "nearest", "shown", "step"]
 
-_NAMED_ROWS = {"units": "name", "patients": "group", "policies": "name"}
+_NAMED_ROWS = {"units": "name", "patients": "group", "policies": "name", "parts": "name"}
 _TAGS = ("family", "kind")
 _UNIONS = ("stay", "delay", "welfare")
 
