@@ -103,6 +103,14 @@ class Job:
         assert row is not None, "only the one writer drops rows"
         return Run(replication, place, row.record, row.intake_hash)
 
+    def kept_engine(self) -> str | None:
+        """The engine of a run that is there; None where there is none."""
+        for replication, missing in self._missing.items():
+            for cell in self._every - missing:
+                row = self._store.get(Key(self.scenario, self._cells[cell], replication))
+                return None if row is None else row.engine
+        return None
+
     def begin(self, provenance: Mapping[str, Any]) -> None:
         """Notes in the store that the job starts."""
         self._command = self._store.begin(self.scenario, provenance, asked=self.asked, reused=self.reused)
