@@ -17,6 +17,7 @@ from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import ENGINES, request_of, require_folder
 from analysis.command.output import put_caution, put_json, put_table, put_text
 from analysis.command.progress import about
+from sim.errors import BrimlineError
 
 WHY = {
     "time": "the time is over",
@@ -199,7 +200,13 @@ def _run(store: Any, state: Any, efforts: dict[int, Any]) -> None:
             state.settle(current.mark, count, failure)
             screen.show(state.document)
 
-        ended = run_rounds(_rounds(state, efforts), take=take, deadline=state.deadline)
+        try:
+            ended = run_rounds(_rounds(state, efforts), take=take, deadline=state.deadline)
+        except BrimlineError as error:  # the store fails it, or the engine
+            state.close("failed", str(error))
+            state.log(f"failed: {error}")
+            state.end()
+            raise
         _close(state, ended.why)
         _write_documents(state, screen)
         store.end(number, now().isoformat(timespec="seconds"))

@@ -6,6 +6,7 @@ import os
 import platform
 import time
 from collections.abc import Iterator
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -44,18 +45,19 @@ class State:
     # ---- what happens ----
 
     def log(self, text: str) -> None:
-        """One line with the time."""
-        with (self.folder / LOG).open("a", encoding="utf-8") as opened:
+        """One line with the time; where the log cannot be written, the runs that can be kept matter more."""
+        with suppress(OSError), (self.folder / LOG).open("a", encoding="utf-8") as opened:
             opened.write(f"{now().isoformat(timespec='seconds')} {text}\n")
 
     def start_work(self, workers: int) -> None:
         """The first round is about to begin."""
         self.workers = workers
-        self.save()
 
     def enter(self, replications: int, piece: Piece) -> None:
         """A round of a part begins."""
-        self._at = (replications, piece)
+        first, self._at = self._at is None, (replications, piece)
+        if first:
+            self.save()
         self.log(f"{piece.part.name}: up to {min(replications, piece.replications)} replications")
 
     def settle(self, stock: Stock, runs: int, failure: Failure | None) -> None:
@@ -83,8 +85,9 @@ class State:
         """The snapshot, whole or not at all; seldom enough to cost little."""
         began = time.monotonic()
         half = self.folder / f"{SNAPSHOT}.part"
-        half.write_text(to_json(self.document()) + "\n", encoding="utf-8")
-        half.replace(self.folder / SNAPSHOT)
+        with suppress(OSError):  # as in `log`
+            half.write_text(to_json(self.document()) + "\n", encoding="utf-8")
+            half.replace(self.folder / SNAPSHOT)
         cost = time.monotonic() - began
         self._next = time.monotonic() + max(SECONDS_BETWEEN_SNAPSHOTS, cost / SHARE_OF_TIME)
 

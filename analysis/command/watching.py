@@ -9,7 +9,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from analysis.command.batch_state import LOG, SNAPSHOT
+from analysis.command.batch_state import LOG, SHARE_OF_TIME, SNAPSHOT
 from analysis.command.entry import say
 from analysis.command.output import put_json
 from analysis.command.progress import about
@@ -27,7 +27,7 @@ class Screen:
 
     def __init__(self) -> None:
         self._live: Any = None
-        self._last = float("-inf")
+        self._next = float("-inf")
 
     def __enter__(self) -> Screen:
         if sys.stderr.isatty():
@@ -44,15 +44,16 @@ class Screen:
 
     def show(self, document: Callable[[], dict[str, Any]], *, at_once: bool = False) -> None:
         """The snapshot, where it is time for another one."""
-        now = time.monotonic()
-        pause = SECONDS_BETWEEN_LINES if self._live is None else SECONDS_BETWEEN_LOOKS
-        if now - self._last < pause and not at_once:
+        began = time.monotonic()
+        if began < self._next and not at_once:
             return
-        self._last = now
         if self._live is None:
             print(line(document()), file=sys.stderr, flush=True)
         else:
             self._live.update(picture(document()), refresh=True)
+        pause = SECONDS_BETWEEN_LINES if self._live is None else SECONDS_BETWEEN_LOOKS
+        now = time.monotonic()
+        self._next = now + max(pause, (now - began) / SHARE_OF_TIME)
 
 
 def line(document: dict[str, Any]) -> str:
