@@ -27,13 +27,14 @@ scenarios = ["{file}"]
 demand = [0.9, 1.1]
 targets = [0.65, 0.7]
 exponential = [false, true]
-replications = 20
+replications = 6
 analyses = ["simulate", "game"]
 """
 CLIENT = """
-import sim.replicate, analysis.figures
+import sys, types
+import sim.replicate
 sim.replicate.SECONDS_PER_TASK = 0.02  # many small tasks, so that there are many moments to be killed at
-analysis.figures.save_payoffs = lambda *_: None
+sys.modules["analysis.figures"] = types.SimpleNamespace(save_payoffs=lambda *_: None)
 from analysis.command.entry import main
 main()
 """
@@ -74,7 +75,7 @@ def kill_at(moment: int, plan: Path, folder: Path) -> int:
     """Starts the batch, kills it when so many runs are there, and gives how many there are; -1 where it was faster."""
     running = batch(plan, folder)
     while rows_in(folder) < moment and running.poll() is None:
-        time.sleep(0.01)
+        time.sleep(0.05)
     if running.poll() is not None:
         return -1
     os.killpg(running.pid, signal.SIGKILL)
@@ -90,9 +91,8 @@ def main(moments: int = 20) -> int:
         assert batch(plan, whole).wait() == 0
         rows, digest = told(whole)
         for number in range(moments):
-            print(
-                f"{number + 1}: killed with {kill_at(rows * number // moments, plan, killed)} of {rows} runs kept"
-            )
+            kept = kill_at(rows * number // moments, plan, killed)
+            print(f"{number + 1}: killed with {kept} of {rows} runs kept", flush=True)
         assert batch(plan, killed).wait() == 0
         agrees = told(killed) == (rows, digest) and results(killed) == results(whole) != {}
     print(f"{rows} runs, table hash {digest[:16]}...: {'the same' if agrees else 'DIFFERENT'}")

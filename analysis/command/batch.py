@@ -81,9 +81,8 @@ def command(
         _show(document)
     if state.why == "interrupted":
         raise Interrupted
-    if state.failures or any(
-        part.get("result", "") is None and part["reached"] for part in document["parts"]
-    ):
+    without = (part["reached"] and part["result"] is None for part in document["parts"])
+    if state.failures or (any(without) and not estimate):
         raise CheckFailed
 
 
@@ -296,7 +295,7 @@ def _show(document: dict[str, Any]) -> None:
     )  # fmt: skip
     reasons: dict[str, list[str]] = {}
     for part in document["parts"]:
-        if part.get("reason"):
+        if part["result"] is None:
             reasons.setdefault(part["reason"], []).append(part["name"])
     for reason, names in reasons.items():
         put_text(f"No result yet for {names[0] if len(names) == 1 else f'{len(names)} parts'}: {reason}.")

@@ -19,6 +19,7 @@ from sim.replicate import Failure
 SNAPSHOT, LOG = "batch.json", "batch.log"
 SECONDS_BETWEEN_SNAPSHOTS = 2.0
 SHARE_OF_TIME = 0.02  # that snapshots may take
+NOT_WRITTEN = {"result": None, "reason": "results are written when the batch ends"}
 
 
 class State:
@@ -115,7 +116,7 @@ class State:
             "now": None if self._at is None else {
                 "part": self._at[1].part.name, "replications": min(self._at[0], self._at[1].replications)
             },
-            "parts": list(self._parts(moment)),
+            "results_written": len(self.results), "parts": list(self._parts(moment)),
         }  # fmt: skip
 
     def _seconds_left(self, work: float, moment: float) -> float | None:
@@ -130,7 +131,7 @@ class State:
                 "replications": piece.replications, "reached": piece.reached, "complete": missing == 0,
                 "missing": missing,
                 "seconds_left": self._seconds_left(piece.stock.seconds(missing), moment),
-            } | self.results.get(part.name, {})  # fmt: skip
+            } | self.results.get(part.name, NOT_WRITTEN)  # fmt: skip
 
 
 def _told(moment: Any) -> str | None:

@@ -76,8 +76,7 @@ def _done(document: dict[str, Any]) -> str:
 
 
 def _written(document: dict[str, Any]) -> str:
-    written = sum("result" in part for part in document["parts"])
-    return f"results written for {written} of {len(document['parts'])} parts"
+    return f"results written for {document['results_written']} of {len(document['parts'])} parts"
 
 
 def _pace(document: dict[str, Any]) -> str:
