@@ -19,12 +19,6 @@ from analysis.command.output import put_caution, put_json, put_table, put_text
 from analysis.command.progress import about
 from sim.errors import BrimlineError
 
-WHY = {
-    "time": "the time is over",
-    "budget": "the budget of runs is used",
-    "interrupted": "it was interrupted",
-}
-
 
 @click.command(epilog=CAUTION)
 @click.argument("plan", type=click.Path(path_type=Path))
@@ -72,7 +66,10 @@ def command(
         state = _opened(store, batch, deadline, plan, title)
         efforts = _efforts(batch, state)
         _tell_estimate(state)
-        if not estimate:
+        if estimate:
+            state.close("planned", None)
+            state.log("ended: an estimate only")
+        else:
             _run(store, state, efforts)
         document = state.document()
     if as_json:
@@ -228,14 +225,17 @@ def _begin(store: Any, state: Any, efforts: dict[int, Any]) -> int:
     """Notes the batch in the store as one command with its parts."""
     from sim.provenance import now, provenance
 
+    of_file: dict[str, dict[str, Any]] = {}
     parts = []
     for piece in state.batch.pieces:
-        effort = efforts.get(id(piece.stock))
+        scenario, effort = piece.request.scenario, efforts.get(id(piece.stock))
         engine = piece.job.kept_engine() if effort is None else effort.engine.name
+        if scenario.source.file not in of_file:
+            base = provenance(scenario, command=[], engine=engine, started=now())
+            of_file[scenario.source.file] = base | {"cwd": str(Path.cwd())}
         line = ["brimline", *piece.part.arguments]
-        parts.append(provenance(piece.request.scenario, command=line, engine=engine, started=now()))
-    cwd = {"cwd": str(Path.cwd())}
-    origin = parts[0] | cwd | {"command": state.document()["command"], "parts": [one | cwd for one in parts]}
+        parts.append(of_file[scenario.source.file] | {"command": line, "engine": engine})
+    origin = parts[0] | {"command": state.document()["command"], "parts": parts}
     number = store.begin(state.batch.stocks[0].job.scenario, origin, asked=state.asked, reused=state.reused)
     for stock in state.batch.stocks:
         stock.job.join(number)
@@ -244,6 +244,8 @@ def _begin(store: Any, state: Any, efforts: dict[int, Any]) -> int:
 
 def _close(state: Any, why: str | None) -> None:
     """Says how running ended, and what the clock did meanwhile."""
+    from analysis.command.batch_state import WHY
+
     missing = state.document()["runs"]["missing"]
     if missing == 0:
         state.close("writing", None)
@@ -275,10 +277,10 @@ def _write_documents(state: Any, screen: Any) -> None:
             state.results[name] = told
             state.save()
             screen.show(state.document)
-            if told["result"] is None:
-                state.log(f"{name}: no result: {told['reason']}")
     why = "interrupted" if results.interrupted else state.why
     state.close("complete" if why is None else "failed" if why == "failed" else "stopped", why)
+    for reason, names in _without_result(state.document()).items():
+        state.log(f"no result yet for {', '.join(names)}: {reason}")
     state.log(f"ended: {state.state}")
 
 
@@ -293,10 +295,15 @@ def _show(document: dict[str, Any]) -> None:
         "Parts", ("part", "priority", "replications", "runs missing", "time for them"),
         [part_row(part) for part in document["parts"]],
     )  # fmt: skip
+    for reason, names in _without_result(document).items():
+        put_text(f"No result yet for {names[0] if len(names) == 1 else f'{len(names)} parts'}: {reason}.")
+    put_caution()
+
+
+def _without_result(document: dict[str, Any]) -> dict[str, list[str]]:
+    """Why parts have no result -> their names."""
     reasons: dict[str, list[str]] = {}
     for part in document["parts"]:
         if part["result"] is None:
             reasons.setdefault(part["reason"], []).append(part["name"])
-    for reason, names in reasons.items():
-        put_text(f"No result yet for {names[0] if len(names) == 1 else f'{len(names)} parts'}: {reason}.")
-    put_caution()
+    return reasons

@@ -19,6 +19,11 @@ from sim.replicate import Failure
 SNAPSHOT, LOG = "batch.json", "batch.log"
 SECONDS_BETWEEN_SNAPSHOTS = 2.0
 SHARE_OF_TIME = 0.02  # that snapshots may take
+WHY = {
+    "time": "the time is over",
+    "budget": "the budget of runs is used",
+    "interrupted": "it was interrupted",
+}
 NOT_WRITTEN = {"result": None, "reason": "results are written when the batch ends"}
 
 

@@ -9,7 +9,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from analysis.command.batch_state import LOG, SHARE_OF_TIME, SNAPSHOT
+from analysis.command.batch_state import LOG, SHARE_OF_TIME, SNAPSHOT, WHY
 from analysis.command.entry import say
 from analysis.command.output import put_json
 from analysis.command.progress import about
@@ -181,4 +181,4 @@ def watch(folder: Path, as_json: bool) -> None:
             document = snapshot(folder)
         screen.show(lambda: document, at_once=True)
     if document["ended_because"]:
-        say(f"batch {document['state']}: {document['ended_because']}")
+        say(f"batch {document['state']}: {WHY.get(document['ended_because'], document['ended_because'])}")

@@ -131,7 +131,8 @@ def test_a_budget_leaves_a_useful_answer_and_says_what_remains(call, show, plan,
 def test_an_estimate_runs_nothing(call, show, plan, tmp_path):
     folder = tmp_path / "r"
     status, document = call("batch", plan, "--out", folder, "--estimate")
-    assert (status, document["runs"]["missing"], document["seconds_left"] > 0) == (0, RUNS, True)
+    assert (status, document["runs"]["missing"], document["state"]) == (0, RUNS, "planned")
+    assert document["seconds_left"] > 0 and all(part["result"] is None for part in document["parts"])
     assert rows_in(folder) == 0
 
 
