@@ -31,7 +31,7 @@ analyses = ["simulate", "game"]
 """
 ROOT = Path(__file__).resolve().parents[2]
 RUNS = 2 * 6 * 30
-KILLED_AT = (0, 70, 250)  # `python -m tests.endurance` has twenty moments
+KILLED_AT = (0, 70, 250)  # `python -m tests.batch_endurance` has twenty moments
 
 
 WITHOUT_PICTURES = """
