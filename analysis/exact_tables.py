@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
 from analysis.chain import ExactResult, can_be_solved_together, kernels, solve, solved_together
@@ -18,18 +19,28 @@ CELLS_PER_TASK = 8
 # choice looks at nothing else, so that a table is the same to the last bit on every run.
 WORTH_KERNELS = 100_000
 
+NOTHING: Mapping[int, list[dict[str, Any]]] = MappingProxyType({})
+
 
 def must_compile(scenario: Scenario, policy: Policy, cells: int) -> bool:
     """Whether a table of so many cells will have kernels compiled first, which takes some seconds."""
+    return is_solved_together(scenario, policy, cells) and not are_kept(Path(kernels.__file__).parent)
+
+
+def is_solved_together(scenario: Scenario, policy: Policy, cells: int) -> bool:
+    """Whether a table of so many cells is solved together, in milliseconds."""
     states = math.prod(unit.beds + 1 for unit in scenario.units)
-    large = cells * states >= WORTH_KERNELS and can_be_solved_together(scenario, policy)
-    return large and not are_kept(Path(kernels.__file__).parent)
+    return cells * states >= WORTH_KERNELS and can_be_solved_together(scenario, policy)
 
 
 def solve_cells(
-    scenario: Scenario, policies: Iterable[Policy], workers: int | None = None
+    scenario: Scenario,
+    policies: Iterable[Policy],
+    workers: int | None = None,
+    *,
+    kept: Mapping[int, list[dict[str, Any]]] = NOTHING,
 ) -> Iterator[tuple[int, list[dict[str, Any]]]]:
-    """Yields (cell, measures of each unit in scenario order) as cells are solved.
+    """Yields (cell, measures of each unit in scenario order) as cells are solved; those kept, as they are, first.
 
     Where not all cells are solved together, the first other one is solved here, so that a scenario out of scope
     is refused at once (OutOfScope). Raises RunError with the cell's number where a later one fails.
@@ -38,7 +49,8 @@ def solve_cells(
     states = math.prod(unit.beds + 1 for unit in scenario.units)
     together = solved_together(scenario, listed) if len(listed) * states >= WORTH_KERNELS else {}
     yield from ((cell, _units(scenario, result)) for cell, result in together.items())
-    alone = [cell for cell in range(len(listed)) if cell not in together]
+    yield from ((cell, units) for cell, units in kept.items() if cell not in together)
+    alone = [cell for cell in range(len(listed)) if cell not in together and cell not in kept]
     if alone:
         yield alone[0], solve_block(scenario, [listed[alone[0]]])[0]
     blocks = (tuple(alone[at : at + CELLS_PER_TASK]) for at in range(1, len(alone), CELLS_PER_TASK))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -22,18 +23,20 @@ matplotlib.rcParams["svg.hashsalt"] = "brimline"  # the same bytes every time
 matplotlib.rcParams["text.parse_math"] = False  # a $ in a unit's name is a $
 FORMATS = ("png", "svg")
 LONGEST_LABEL = 32
+LONGEST_AXIS = 60
+LEAST_WIDTH = 6.0  # inches: the legend has two entries
 
 
 def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
-    """One player's payoffs over both players' closure thresholds (two players).
+    """One player's payoffs over both players' strategies (two players).
 
     Open circles mark the player's best responses, filled diamonds the equilibria.
     """
     table = game.table
-    names, strategies = [_short(name) for name in table.profiles.players], table.profiles.strategies
+    names, labels = [short_name(name) for name in table.profiles.players], table.profiles.labels
     sns.heatmap(
         table.payoffs[player], ax=ax, cmap="cividis_r" if table.goal.sense == "cost" else "cividis",
-        xticklabels=strategies[1], yticklabels=strategies[0], cbar_kws={"label": _scale(game)},
+        xticklabels=labels[1], yticklabels=labels[0], cbar_kws={"label": _scale(game, player)},
     )  # fmt: skip
     ax.invert_yaxis()
     best = np.argwhere(regrets(table.payoffs, table.goal.sense)[player] <= game.tolerance)
@@ -42,20 +45,32 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
           f"equilibrium ({'exact' if game.is_exact else 'estimated'})", 64)  # fmt: skip
     ax.set(
         title=f"What {names[player]} pays: {'darker is worse' if table.goal.sense == 'cost' else 'lighter is better'}",
-        xlabel=f"closure threshold of {names[1]} (beds)", ylabel=f"closure threshold of {names[0]} (beds)",
+        xlabel=_axis(game, 1), ylabel=_axis(game, 0),
     )  # fmt: skip
     ax.tick_params(axis="y", rotation=0)
     ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
     return ax
 
 
-def _short(name: str) -> str:
+def _axis(game: GameAnalysis, player: int) -> str:
+    """What runs along a player's axis."""
+    profiles = game.table.profiles
+    beds = " (beds)" if profiles.is_plain else ""
+    return _folded(profiles.reads(player)) + beds
+
+
+def short_name(name: str) -> str:
     """A unit's name as far as a figure has room for it."""
     return name if len(name) <= LONGEST_LABEL else name[: LONGEST_LABEL - 1] + "…"
 
 
-def _scale(game: GameAnalysis) -> str:
-    return f"{game.table.goal.reads} ({'cost' if game.table.goal.sense == 'cost' else 'gain'})"
+def _scale(game: GameAnalysis, player: int) -> str:
+    return _folded(f"{game.table.goal.reads_of(player)} ({game.table.goal.sense})")
+
+
+def _folded(text: str) -> str:
+    """A text in lines that an axis has room for."""
+    return "\n".join(textwrap.wrap(text, LONGEST_AXIS, max_lines=3, placeholder="…"))
 
 
 def _mark(ax: Axes, cells: np.ndarray, marker: str, face: str, edge: str, label: str, size: float) -> None:
@@ -78,7 +93,7 @@ def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
         ax.scatter(one["z"], place, marker=marker, s=22, facecolors=face, edgecolors="black", zorder=3)
     ax.set_yticks(
         range(len(tested)),
-        [f"{_short(one['where'])}: {one['measure'].replace('_', ' ')}" for one in tested],
+        [f"{short_name(one['where'])}: {one['measure'].replace('_', ' ')}" for one in tested],
         fontsize=7,
     )
     ax.set_ylim(len(tested) - 0.3, -0.7)
@@ -110,7 +125,7 @@ def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str)
     )
     ax.set_xticks(at, names, fontsize=8)
     ax.set(
-        title=_short(where),
+        title=short_name(where),
         xlabel="occupied beds (rare levels pooled)",
         ylabel="share of time",
         ylim=(0, None),
@@ -124,9 +139,11 @@ def save_payoffs(game: GameAnalysis, folder: Path) -> list[Path]:
     written = []
     rows, columns = game.table.profiles.shape
     for player in range(2):
-        figure, ax = plt.subplots(figsize=(2.6 + 0.36 * min(columns, 40), 2.4 + 0.32 * min(rows, 40)))
+        figure, ax = plt.subplots(
+            figsize=(max(LEAST_WIDTH, 2.6 + 0.36 * min(columns, 40)), 2.4 + 0.32 * min(rows, 40))
+        )
         payoff_heat_map(game, ax, player=player)
-        written += _save(figure, folder, f"payoffs-{player + 1}")
+        written += save_figure(figure, folder, f"payoffs-{player + 1}")
     return written
 
 
@@ -139,10 +156,11 @@ def save_verification(document: Mapping[str, Any], folder: Path) -> list[Path]:
     verification_z(document, figure.add_subplot(grid[:, 0]))
     for place, unit in enumerate(units):
         verification_occupancy(document, figure.add_subplot(grid[place, 1]), where=unit)
-    return _save(figure, folder, "verification")
+    return save_figure(figure, folder, "verification")
 
 
-def _save(figure: Any, folder: Path, name: str) -> list[Path]:
+def save_figure(figure: Any, folder: Path, name: str) -> list[Path]:
+    """Writes a figure in every format and closes it."""
     figure.tight_layout()
     paths = [folder / f"{name}.{extension}" for extension in FORMATS]
     for path in paths:

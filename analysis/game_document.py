@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from analysis.confidence import ONE_REPLICATION, Estimate
+from analysis.equilibria import Profile
 from analysis.findings import findings_of
 from analysis.games import Equilibrium, GameAnalysis, welfare_estimate
+from analysis.profiles import Profiles, choice_columns, chooses, chosen_at
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -27,25 +30,27 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
     return {
         "players": list(players),
         "goal": table.goal.reads,
+        "goals": {player: table.goal.reads_of(place) for place, player in enumerate(players)},
         "sense": table.goal.sense,
         "welfare": {
             "kind": table.welfare_goal.kind,
             "reads": table.welfare_goal.reads,
             "sense": table.welfare_goal.sense,
         },
-        "strategies": {
-            player: list(mine) for player, mine in zip(players, table.profiles.strategies, strict=True)
-        },
+        "strategies": table.profiles.plain(),
+        **({} if table.profiles.is_plain else {"chooses": chooses(table.profiles)}),
         "payoffs": {player: _payoffs(game, place) for place, player in enumerate(players)},
         "equilibria": [_equilibrium(game, one) for one in game.equilibria],
         "best_responses": _best_responses(game),
         "optimum": {
             "thresholds": [table.profiles.thresholds(profile) for profile in cost.optimum],
+            **_of_ties(table.profiles, cost.optimum),
             "welfare": _number(game, welfare_estimate(table, cost.optimum[0], game.confidence)),
             "outcome": asdict(game.place(cost.optimum[0])),
         },
         "worst_equilibrium": None if cost.worst is None else table.profiles.thresholds(cost.worst),
         "best_equilibrium": None if cost.best is None else table.profiles.thresholds(cost.best),
+        **_of_extremes(table.profiles, {"worst": cost.worst, "best": cost.best}),
         **{name: _number(game, estimate) for name, estimate in prices.items()},
         **_reason(prices),
         "transfer_weight_at_which_the_verdict_turns": asdict(game.turning),
@@ -57,6 +62,23 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
             else {"undecided_reason": "a point estimate decides nothing; every verdict is `estimated`"}
         ),
         "findings": [finding.to_dict() for finding in findings_of(game)],
+    }
+
+
+def _of_ties(profiles: Profiles, ties: Sequence[Profile]) -> dict[str, Any]:
+    """The strategies at tied profiles, where thresholds do not tell them."""
+    return (
+        {} if profiles.is_plain else {"strategies": [chosen_at(profiles, one)["strategies"] for one in ties]}
+    )
+
+
+def _of_extremes(profiles: Profiles, extremes: Mapping[str, Profile | None]) -> dict[str, Any]:
+    """The strategies at the extreme equilibria, where thresholds do not tell them."""
+    if profiles.is_plain:
+        return {}
+    return {
+        f"{name}_equilibrium_strategies": None if one is None else chosen_at(profiles, one)["strategies"]
+        for name, one in extremes.items()
     }
 
 
@@ -88,7 +110,7 @@ def _nested(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> Any:
 
 def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:
     return {
-        "thresholds": dict(one.thresholds),
+        **chosen_at(game.table.profiles, one.profile),
         "kind": one.kind,
         "verdict": one.verdict,
         "regret": {player: _number(game, regret) for player, regret in one.regret.items()},
@@ -102,27 +124,25 @@ def _best_responses(game: GameAnalysis) -> dict[str, list[dict[str, Any]]]:
     replies: dict[str, list[dict[str, Any]]] = {player: [] for player in profiles.players}
     for reply in game.best_responses:
         others = {
-            player: mine[place]
+            player: mine[place].to_plain()
             for player, mine, place in zip(profiles.players, profiles.strategies, reply.others, strict=True)
             if place is not None
         }
-        best = [profiles.strategies[reply.player][place] for place in reply.best]
+        best = [profiles.strategies[reply.player][place].to_plain() for place in reply.best]
         replies[profiles.players[reply.player]].append({"others": others, "best": best})
     return replies
 
 
 def game_frame(game: GameAnalysis) -> pd.DataFrame:
-    """The table, one row a profile: thresholds, payoffs with limits, regrets, welfare, rates and shares by unit."""
+    """The table, one row a profile: thresholds or strategies, payoffs with limits, regrets, welfare, then by unit."""
     import pandas as pd
 
     from analysis.equilibria import regrets
 
     table = game.table
     profiles = table.profiles
-    columns: dict[str, Any] = {}
-    grids = np.meshgrid(*profiles.strategies, indexing="ij")
-    for player, grid in zip(profiles.players, grids, strict=True):
-        columns[f"threshold {player}"] = grid.ravel()
+    cells = np.stack(np.unravel_index(np.arange(profiles.cells), profiles.shape), axis=1)
+    columns: dict[str, Any] = choice_columns(profiles, cells)
     regret = regrets(table.payoffs, table.goal.sense)
     for place, player in enumerate(profiles.players):
         columns[f"payoff {player}"] = table.payoffs[place].ravel()
@@ -134,6 +154,6 @@ def game_frame(game: GameAnalysis) -> pd.DataFrame:
         columns[f"regret {player}"] = regret[place].ravel()
     columns["welfare"] = table.welfare.ravel()
     for name, values in vars(table.outcomes).items():
-        for place, player in enumerate(profiles.players):
-            columns[f"{name} {player}"] = values[:, place]
+        for place, unit in enumerate(profiles.units):
+            columns[f"{name} {unit}"] = values[:, place]
     return pd.DataFrame(columns)

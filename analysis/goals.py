@@ -8,15 +8,56 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Literal
+from typing import Literal, Protocol
 
 import numpy as np
 
-from analysis.confidence import critical_value, jackknife
+from analysis.confidence import jackknife
+from analysis.goal_sums import influence, ratio, squared_distances, t_interval
+from analysis.weighted_goals import weighted_goal_of
 from sim.errors import Fault, ScenarioError
 from sim.scenario import Scenario
+from sim.scenario.goals import Sense, TargetUtilisation
 
-Sense = Literal["cost", "gain"]
+
+class Goal(Protocol):
+    """What every goal can do; `TargetGoal` says the most common one, with the shapes."""
+
+    @property
+    def sense(self) -> Sense:
+        """Whether payoffs are costs to minimise or gains to maximise."""
+
+    @property
+    def reads(self) -> str:
+        """The goal in words."""
+
+    @property
+    def display_scale(self) -> tuple[float, str]:
+        """The factor by which a dense table multiplies payoffs, and the unit that they then have."""
+
+    @property
+    def is_distance(self) -> bool:
+        """Whether every payoff is the distance of one mean utilisation from its target: what theory speaks of."""
+
+    @property
+    def exact_measures(self) -> tuple[str, ...]:
+        """The exact measures of a unit that `exact` reads."""
+
+    @property
+    def without_exact_mean(self) -> str | None:
+        """What in it has no exact mean; None where `exact` gives its payoffs."""
+
+    def reads_of(self, player: int) -> str:
+        """A player's goal in words."""
+
+    def exact(self, measures: Mapping[str, np.ndarray]) -> np.ndarray:
+        """Payoffs (cells, players) from exact measures, each (cells, units)."""
+
+    def estimate(self, sums: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
+        """Payoffs (cells, players) and their pseudo-values (replications, cells, players) from replications."""
+
+    def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
+        """Lower and upper ends of the payoffs, (cells, players) each, at pointwise confidence."""
 
 
 @dataclass(frozen=True)
@@ -46,9 +87,28 @@ class TargetGoal:
             return 100.0, "percentage points of utilisation"
         return 10_000.0, "squared percentage points of utilisation"
 
-    def exact(self, utilisation: np.ndarray) -> np.ndarray:
-        """Payoffs from exact mean utilisations, both (cells, units)."""
-        return np.abs(utilisation - self.targets)
+    def reads_of(self, player: int) -> str:
+        """A player's goal in words: all have the same."""
+        return self.reads
+
+    @property
+    def is_distance(self) -> bool:
+        """Whether every payoff is the distance of one mean utilisation from its target."""
+        return self.shape == "absolute"
+
+    @property
+    def exact_measures(self) -> tuple[str, ...]:
+        """The exact measures of a unit that `exact` reads."""
+        return ("utilisation",)
+
+    @property
+    def without_exact_mean(self) -> str | None:
+        """What in it has no exact mean; None for a distance."""
+        return "a squared distance over judged periods" if self.shape == "squared" else None
+
+    def exact(self, measures: Mapping[str, np.ndarray]) -> np.ndarray:
+        """Payoffs (cells, units) from exact measures, each (cells, units)."""
+        return np.abs(measures["utilisation"] - self.targets)
 
     def estimate(self, sums: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
         """Payoffs (cells, units) and their pseudo-values (replications, cells, units) from replications."""
@@ -56,57 +116,30 @@ class TargetGoal:
             values = self._squared(sums)
             return values.mean(axis=0), values
         occupied, staffed = sums["occupied_days"], sums["bed_days"]
-        point = np.abs(_utilisation(occupied.sum(axis=0), staffed.sum(axis=0)) - self.targets)
+        point = np.abs(ratio(occupied.sum(axis=0), staffed.sum(axis=0)) - self.targets)
         if len(occupied) < 2:
             return point, point[None]
-        others = _utilisation(occupied.sum(axis=0) - occupied, staffed.sum(axis=0) - staffed)
+        others = ratio(occupied.sum(axis=0) - occupied, staffed.sum(axis=0) - staffed)
         return point, jackknife(point, np.abs(others - self.targets))
 
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, units) each, at pointwise confidence."""
         if self.shape == "squared":
-            low, high = _t_interval(self._squared(sums), confidence)
+            low, high = t_interval(self._squared(sums), confidence)
             return np.maximum(low, 0), high
-        low, high = _ratio_interval(sums["occupied_days"], sums["bed_days"], confidence)
+        low, high = t_interval(influence(sums["occupied_days"], sums["bed_days"]), confidence)
         below, above = low - self.targets, high - self.targets
         nearest = np.where((below <= 0) & (above >= 0), 0.0, np.minimum(np.abs(below), np.abs(above)))
         return nearest, np.maximum(np.abs(below), np.abs(above))
 
     def _squared(self, sums: Mapping[str, np.ndarray]) -> np.ndarray:
         """Mean over judged periods of the squared distance, (replications, cells, units)."""
-        whole = int(round(sums["days"].flat[0] / self.judged_days, 9))
-        periods = _utilisation(
-            sums["period_occupied_days"][:, :, :whole], sums["period_bed_days"][:, :, :whole]
-        )
-        return np.square(periods - self.targets).mean(axis=2)
+        return squared_distances(sums, self.targets, self.judged_days)
 
 
-def _utilisation(occupied: np.ndarray, staffed: np.ndarray) -> np.ndarray:
-    """Occupied over staffed bed-time; 0 where no bed was ever staffed."""
-    return np.divide(occupied, staffed, out=np.zeros(np.shape(occupied)), where=staffed > 0)
-
-
-def _ratio_interval(
-    occupied: np.ndarray, staffed: np.ndarray, confidence: float
-) -> tuple[np.ndarray, np.ndarray]:
-    """Student's interval for a ratio of means over replications, by the delta method."""
-    ratio = _utilisation(occupied.sum(axis=0), staffed.sum(axis=0))
-    base = np.maximum(staffed.mean(axis=0), np.finfo(float).tiny)
-    return _t_interval(ratio + (occupied - ratio * staffed) / base, confidence)
-
-
-def _t_interval(values: np.ndarray, confidence: float) -> tuple[np.ndarray, np.ndarray]:
-    n, mean = len(values), values.mean(axis=0)
-    if n < 2:
-        return np.full_like(mean, np.nan), np.full_like(mean, np.nan)
-    half = critical_value(confidence, n - 1) * values.std(axis=0, ddof=1) / np.sqrt(n)
-    return mean - half, mean + half
-
-
-def goal_of(scenario: Scenario) -> TargetGoal:
-    """The goal that the scenario's game names; ScenarioError where a unit lacks the target it needs."""
-    missing = [unit.name for unit in scenario.units if unit.target_utilisation is None]
-    if missing:
+def goal_of(scenario: Scenario) -> Goal:
+    """The goals that the scenario's game names; ScenarioError where a unit lacks the target it needs."""
+    if missing := scenario.units_without_target():
         raise ScenarioError(
             [
                 Fault(
@@ -117,12 +150,23 @@ def goal_of(scenario: Scenario) -> TargetGoal:
             ],
             scenario.source.file,
         )  # fmt: skip
-    goal = scenario.game.goal
+    if not _is_plain(scenario):
+        return weighted_goal_of(scenario)
+    goal = scenario.game.goal_of(scenario.unit_names[0])
     return TargetGoal(
         targets=np.array([unit.target_utilisation for unit in scenario.units]),
         shape=goal.shape,
         judged_days=goal.judged_over_days,
     )
+
+
+def _is_plain(scenario: Scenario) -> bool:
+    """Whether every unit plays alone, and all for a target in the same shape, with nothing to break ties."""
+    goals = [scenario.game.goal_of(name) for name in scenario.unit_names]
+    plain = (
+        isinstance(goals[0], TargetUtilisation) and goals[0].shape != "above" and goals[0].tie_breaker is None
+    )
+    return plain and all(goal == goals[0] for goal in goals) and len(scenario.players()) == len(goals)
 
 
 @dataclass(frozen=True)

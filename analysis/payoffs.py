@@ -1,56 +1,19 @@
-"""The table of a game: every profile of thresholds, run or solved, with payoffs and welfare in scenario order."""
+"""The table of a game: every profile, run or solved, with payoffs and welfare in scenario order."""
 
 from __future__ import annotations
 
-import itertools
-import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from analysis.goals import TargetGoal, Welfare
+from analysis.goals import Goal, Welfare
 from analysis.measures import unit_sums
+from analysis.profiles import MOST_CELLS, Profiles, profiles_of
 from sim.replicate import Failure, Run
-from sim.scenario import Policy, Scenario
+from sim.scenario import Scenario
 
-MOST_CELLS = 200_000
-
-
-@dataclass(frozen=True)
-class Profiles:
-    """The axes of a table: players and their strategies, in scenario order. Cells are numbered in C order."""
-
-    players: tuple[str, ...]
-    strategies: tuple[tuple[int, ...], ...]
-
-    @property
-    def shape(self) -> tuple[int, ...]:
-        """Number of strategies of each player."""
-        return tuple(len(mine) for mine in self.strategies)
-
-    @property
-    def cells(self) -> int:
-        """Number of profiles."""
-        return math.prod(self.shape)
-
-    def thresholds(self, profile: Sequence[int]) -> dict[str, int]:
-        """Player -> closure threshold, for a profile of strategy numbers."""
-        return {
-            player: mine[place]
-            for player, mine, place in zip(self.players, self.strategies, profile, strict=True)
-        }
-
-    def policies(self, base: Policy) -> Iterator[Policy]:
-        """The policy of every cell: `base` with the cell's closure thresholds."""
-        for thresholds in itertools.product(*self.strategies):
-            yield base.with_thresholds(dict(zip(self.players, thresholds, strict=True)))
-
-
-def profiles_of(scenario: Scenario) -> Profiles:
-    """The axes that the scenario's game names."""
-    strategies = scenario.strategies()
-    return Profiles(tuple(strategies), tuple(strategies.values()))
+__all__ = ["MOST_CELLS", "Outcomes", "PayoffTable", "Profiles", "TableSums", "exact_table", "profiles_of"]
 
 
 class TableSums:
@@ -114,13 +77,13 @@ class Outcomes:
 class PayoffTable:
     """A labelled payoff table.
 
-    payoffs: (units, *shape). replicates: pseudo-values (replications, units, *shape), None where exact.
+    payoffs: (players, *shape). replicates: pseudo-values (replications, players, *shape), None where exact.
     low, high: pointwise interval ends of the payoffs, None where exact. welfare: (*shape), a day;
     welfare_replicates: (replications, *shape) or None. outcomes: by cell.
     """
 
     profiles: Profiles
-    goal: TargetGoal
+    goal: Goal
     welfare_goal: Welfare
     payoffs: np.ndarray
     welfare: np.ndarray
@@ -136,7 +99,7 @@ class PayoffTable:
         return None if self.replicates is None else len(self.replicates)
 
     def by_player(self, cells: np.ndarray) -> np.ndarray:
-        """(..., cells, units) laid out as (..., units, *shape)."""
+        """(..., cells, players) laid out as (..., players, *shape)."""
         return _by_player(cells, self.profiles.shape)
 
 
@@ -146,7 +109,7 @@ def _by_player(cells: np.ndarray, shape: tuple[int, ...]) -> np.ndarray:
 
 
 def simulated_table(
-    profiles: Profiles, goal: TargetGoal, welfare: Welfare, sums: Mapping[str, np.ndarray], confidence: float
+    profiles: Profiles, goal: Goal, welfare: Welfare, sums: Mapping[str, np.ndarray], confidence: float
 ) -> PayoffTable:
     """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication."""
     point, pseudo = goal.estimate(sums)
@@ -194,8 +157,15 @@ def exact_outcomes(units: Sequence[Sequence[Mapping[str, float]]]) -> Outcomes:
     )
 
 
+def measure_arrays(
+    units: Sequence[Sequence[Mapping[str, float]]], names: Sequence[str]
+) -> dict[str, np.ndarray]:
+    """Exact measures, `units[cell][unit]` by name, as arrays (cells, units)."""
+    return {name: np.array([[unit[name] for unit in cell] for cell in units]) for name in names}
+
+
 def exact_table(
-    profiles: Profiles, goal: TargetGoal, welfare: Welfare, units: Sequence[Sequence[Mapping[str, float]]]
+    profiles: Profiles, goal: Goal, welfare: Welfare, units: Sequence[Sequence[Mapping[str, float]]]
 ) -> PayoffTable:
     """The table from exact measures: `units[cell][unit]` maps measure names to values."""
 
@@ -203,7 +173,7 @@ def exact_table(
     worth = welfare.value(
         *(rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out))
     )
-    payoffs = goal.exact(outcomes.utilisation)
+    payoffs = goal.exact(measure_arrays(units, goal.exact_measures))
     return PayoffTable(
         profiles, goal, welfare, _by_player(payoffs, profiles.shape), worth.reshape(profiles.shape), outcomes
     )

@@ -17,8 +17,8 @@ import numpy as np
 
 from analysis.anarchy import Cost, cost_of_selfishness
 from analysis.equilibria import DEFAULT_TOLERANCE, Profile, as_costs
-from analysis.goals import TargetGoal, Welfare
-from analysis.payoffs import EXACT_MEASURES, Outcomes, Profiles, exact_outcomes
+from analysis.goals import Goal, Welfare
+from analysis.payoffs import EXACT_MEASURES, Outcomes, Profiles, exact_outcomes, measure_arrays
 from analysis.structure import Cells, Structure, certified, regrets_of, structure_of
 from sim.scenario import Policy, Scenario
 
@@ -32,12 +32,12 @@ ENDS: tuple[End, End] = ("lowest", "highest")
 
 
 def chain_solver(scenario: Scenario, base: Policy, profiles: Profiles) -> Solver:
-    """Solves cells by the exact chain, one by one, under `base` with each cell's closure thresholds."""
+    """Solves cells by the exact chain, one by one, under `base` with what each cell's players choose."""
     from analysis.chain import solve
 
     def solved(wanted: Sequence[Profile]) -> Iterable[Measures]:
         for profile in wanted:
-            units = solve(scenario, base.with_thresholds(profiles.thresholds(profile))).units
+            units = solve(scenario, profiles.policy(base, profile)).units
             yield [vars(units[name]) for name in scenario.unit_names]
 
     return solved
@@ -57,7 +57,7 @@ class Visited:
     def __init__(
         self,
         profiles: Profiles,
-        goal: TargetGoal,
+        goal: Goal,
         solver: Solver,
         *,
         most: int = MOST_VISITED,
@@ -75,13 +75,12 @@ class Visited:
         new = [profile for profile in wanted if profile not in self._known]
         if len(self._known) + len(new) > self._most:
             raise _Full
+        kept = {*EXACT_MEASURES.values(), *self._goal.exact_measures}
         for profile, units in zip(new, self._solver(new), strict=True):
-            self._known[profile] = [
-                {name: float(unit[name]) for name in EXACT_MEASURES.values()} for unit in units
-            ]
+            self._known[profile] = [{name: float(unit[name]) for name in kept} for unit in units]
             self._on_solved()
-        utilisation = np.array([[unit["utilisation"] for unit in self._known[profile]] for profile in wanted])
-        return as_costs(self._goal.exact(utilisation), self._goal.sense)
+        measures = measure_arrays([self._known[profile] for profile in wanted], self._goal.exact_measures)
+        return as_costs(self._goal.exact(measures), self._goal.sense)
 
     def replies(self, profile: Profile, player: int, tolerance: float) -> np.ndarray:
         """The player's best replies to the others at a profile, ties within the tolerance included, rising."""
@@ -102,7 +101,10 @@ class Visited:
             rate.sum(axis=-1) for rate in (outcomes.admitted, outcomes.turned_away, outcomes.diverted_out)
         )
         costs, worth = self.costs(order), welfare.value(*rates)
-        return Cells(self.profiles.shape, np.array(order), outcomes.utilisation, costs, worth, welfare.sense)
+        return Cells(
+            self.profiles.shape, np.array(order), outcomes.utilisation, costs, worth, welfare.sense,
+            self._goal.is_distance,
+        )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -149,7 +151,7 @@ class Search:
     """
 
     profiles: Profiles
-    goal: TargetGoal
+    goal: Goal
     welfare_goal: Welfare
     tolerance: float
     cells: Cells
@@ -171,7 +173,7 @@ class Search:
 
 def best_reply_search(
     profiles: Profiles,
-    goal: TargetGoal,
+    goal: Goal,
     welfare: Welfare,
     solver: Solver,
     *,
@@ -223,7 +225,7 @@ def _walk(visited: Visited, end: End, path: list[Profile], tolerance: float) -> 
 
 def _result(
     visited: Visited,
-    goal: TargetGoal,
+    goal: Goal,
     welfare: Welfare,
     walks: tuple[Walk, ...],
     tolerance: float,
@@ -252,6 +254,8 @@ def _gaps(ends: Mapping[End, Profile], structure: Structure) -> Iterable[str]:
         if end not in ends:
             yield f"the search from all-{end} came to no equilibrium"
     own, others = structure.own, structure.others
+    if not structure.of_distances:
+        yield "a goal is not the distance of a utilisation from its target"
     if own.level:
         yield f"utilisation stood still in the own threshold at {own.level} of {own.comparisons} steps"
     if own.falls:

@@ -13,7 +13,7 @@ import numpy as np
 
 from analysis.equilibria import Profile
 from analysis.games import EXACT, place_at
-from analysis.payoffs import Profiles
+from analysis.profiles import Profiles, Strategy, choice_columns, chooses, chosen_at
 from analysis.search import Search
 from analysis.structure import AtTolerance, Step, Structure, Trend
 
@@ -46,6 +46,22 @@ def structure_document(structure: Structure, profiles: Profiles) -> dict[str, An
         "greatest_equilibrium": _thresholds(here.greatest, profiles),
         "at_tolerances": [_at_tolerance(one, structure, profiles) for one in structure.at_tolerances],
         "reads": list(_reads(structure, profiles)),
+    }
+
+
+def structure_unknown(profiles: Profiles) -> dict[str, Any]:
+    """The structure where strategies have no order that a theorem speaks of: nothing is claimed."""
+    reason = f"{', '.join(profiles.unordered)}: several units, several rule parameters, or no threshold, in a strategy"
+    return {
+        "cells": profiles.cells,
+        "of_cells": profiles.cells,
+        "complete": True,
+        "theorem": None,
+        "pure_equilibrium_must_exist": None,
+        "reason": reason,
+        "reads": [
+            f"No theorem is at hand on whether a pure equilibrium must exist ({reason}): the table alone tells."
+        ],
     }
 
 
@@ -192,9 +208,11 @@ def search_document(search: Search) -> dict[str, Any]:
     return {
         "players": list(profiles.players),
         "goal": search.goal.reads,
+        "goals": {player: search.goal.reads_of(place) for place, player in enumerate(profiles.players)},
         "sense": search.goal.sense,
         "welfare": {name: getattr(search.welfare_goal, name) for name in ("kind", "reads", "sense")},
-        "strategies": dict(zip(profiles.players, map(list, profiles.strategies), strict=True)),
+        "strategies": profiles.plain(),
+        **({} if profiles.is_plain else {"chooses": chooses(profiles)}),
         "payoffs": None,
         "payoffs_reason": "a best-reply search solves no full table; `visited` lists what it solved",
         "equilibria": [_equilibrium(search, one) for one in search.equilibria],
@@ -205,6 +223,7 @@ def search_document(search: Search) -> dict[str, Any]:
             "outcome": _outcome(search, row),
             "is": "the best visited; a cell that was not visited may be better",
         },
+        **_extremes_told(search),
         "worst_equilibrium": _at_row(search, cost.worst),
         "best_equilibrium": _at_row(search, cost.best),
         **{name: one.mean for name, one in prices.items()},
@@ -242,9 +261,22 @@ def _at_row(search: Search, place: Profile | None) -> dict[str, int] | None:
     return None if place is None else search.profiles.thresholds(search.cells.profile(place[0]))
 
 
+def _extremes_told(search: Search) -> dict[str, Any]:
+    """The strategies at the extreme equilibria, where thresholds do not tell them."""
+    if search.profiles.is_plain:
+        return {}
+    rows = {"worst": search.cost.worst, "best": search.cost.best}
+    return {
+        f"{name}_equilibrium_strategies": None
+        if row is None
+        else chosen_at(search.profiles, search.cells.profile(row[0]))["strategies"]
+        for name, row in rows.items()
+    }
+
+
 def _equilibrium(search: Search, row: int) -> dict[str, Any]:
     return {
-        "thresholds": search.profiles.thresholds(search.cells.profile(row)),
+        **chosen_at(search.profiles, search.cells.profile(row)),
         "kind": "pure",
         "verdict": EXACT,
         "regret": dict(zip(search.profiles.players, search.regrets[row].tolist(), strict=True)),
@@ -257,12 +289,20 @@ def _best_responses(search: Search) -> dict[str, list[dict[str, Any]]]:
     """Each player's best replies to those choices of the others that were visited against every own one."""
     replies: dict[str, list[dict[str, Any]]] = {}
     for player, name in enumerate(search.profiles.players):
-        by_others: dict[tuple[tuple[str, int], ...], list[int]] = {}
+        by_others: dict[tuple[tuple[str, Strategy], ...], list[int]] = {}
         for row in np.flatnonzero(search.regrets[:, player] <= search.tolerance).tolist():
-            thresholds = search.profiles.thresholds(search.cells.profile(row))
-            own = thresholds.pop(name)
-            by_others.setdefault(tuple(thresholds.items()), []).append(own)
-        replies[name] = [{"others": dict(key), "best": sorted(best)} for key, best in by_others.items()]
+            profile = search.cells.profile(row)
+            others = search.profiles.chosen(profile)
+            del others[name]
+            by_others.setdefault(tuple(others.items()), []).append(profile[player])
+        mine = search.profiles.strategies[player]
+        replies[name] = [
+            {
+                "others": {other: strategy.to_plain() for other, strategy in key},
+                "best": [mine[place].to_plain() for place in sorted(best)],
+            }
+            for key, best in by_others.items()
+        ]
     return replies
 
 
@@ -340,14 +380,13 @@ def search_frame(search: Search) -> pd.DataFrame:
     import pandas as pd
 
     columns: dict[str, Any] = {}
-    for place, (player, mine) in enumerate(
-        zip(search.profiles.players, search.profiles.strategies, strict=True)
-    ):
-        columns[f"threshold {player}"] = np.array(mine)[search.cells.profiles[:, place]]
+    chosen = choice_columns(search.profiles, search.cells.profiles)
+    for place, (player, column) in enumerate(zip(search.profiles.players, chosen.items(), strict=True)):
+        columns[column[0]] = column[1]
         columns[f"payoff {player}"] = search.payoffs[:, place]
         columns[f"regret {player}"] = search.regrets[:, place]
     columns["welfare"] = search.cells.welfare
     for name, values in vars(search.outcomes).items():
-        for place, player in enumerate(search.profiles.players):
-            columns[f"{name} {player}"] = values[:, place]
+        for place, unit in enumerate(search.profiles.units):
+            columns[f"{name} {unit}"] = values[:, place]
     return pd.DataFrame(columns)

@@ -37,7 +37,8 @@ class Cells:
     """Solved cells of a game, each once, in any order.
 
     shape: strategies of each player. profiles: strategy numbers, (cells, players). utilisation, costs: of each
-    player, (cells, players). welfare: a day, (cells,), of the given sense.
+    player, (cells, players). welfare: a day, (cells,), of the given sense. of_distances: whether every cost is the
+    distance of a utilisation from its target, which is what single crossing speaks of.
     """
 
     shape: tuple[int, ...]
@@ -46,6 +47,7 @@ class Cells:
     costs: np.ndarray
     welfare: np.ndarray
     welfare_sense: Sense
+    of_distances: bool = True
 
     @property
     def is_complete(self) -> bool:
@@ -58,12 +60,20 @@ class Cells:
 
 
 def cells_of(table: PayoffTable) -> Cells:
-    """Every cell of an exact table."""
+    """Every cell of an exact table whose players choose one threshold each."""
     shape = table.profiles.shape
     profiles = np.stack(np.unravel_index(np.arange(table.profiles.cells), shape), axis=1)
     costs = as_costs(table.payoffs, table.goal.sense).reshape(len(shape), -1).T
     sense = table.welfare_goal.sense
-    return Cells(shape, profiles, table.outcomes.utilisation, costs, table.welfare.ravel(), sense)
+    return Cells(
+        shape,
+        profiles,
+        table.outcomes.utilisation,
+        costs,
+        table.welfare.ravel(),
+        sense,
+        table.goal.is_distance,
+    )
 
 
 @dataclass(frozen=True)
@@ -124,6 +134,7 @@ class Structure:
     others: Trend
     replies: Trend
     at_tolerances: tuple[AtTolerance, ...]
+    of_distances: bool = True
 
     @property
     def is_complete(self) -> bool:
@@ -132,8 +143,10 @@ class Structure:
 
     @property
     def single_crossing(self) -> bool:
-        """Whether, at every comparison, utilisation rose in the own threshold and never in the others'."""
-        return self.own.rises == self.own.comparisons and self.others.rises == 0
+        """Whether the costs are distances from targets and, at every comparison, utilisation rose in the own threshold
+        and never in the others'."""
+        crossing = self.own.rises == self.own.comparisons and self.others.rises == 0
+        return self.of_distances and crossing
 
     @property
     def replies_monotone(self) -> bool:
@@ -173,6 +186,7 @@ def structure_of(
         at_tolerances=tuple(
             _at_tolerance(cells, np.stack(regrets, axis=1), one) for one in sorted({*TOLERANCES, tolerance})
         ),
+        of_distances=cells.of_distances,
     )
 
 

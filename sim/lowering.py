@@ -120,11 +120,10 @@ def stay_factors(scenario: Scenario) -> tuple[float, ...]:
 def window_edges(scenario: Scenario) -> np.ndarray:
     """Start of the measured window, ends of whole judged periods (for a squared goal only), and its end."""
     start, length = scenario.run.warm_up_days, scenario.run.measured_days
-    goal = scenario.game.goal
-    inner = []
-    if getattr(goal, "shape", None) == "squared":
-        whole = int(length // goal.judged_over_days)
-        inner = [start + goal.judged_over_days * (period + 1) for period in range(whole)]
+    judged, inner = scenario.game.judged_over_days, []
+    if judged is not None:
+        whole = int(length // judged)
+        inner = [start + judged * (period + 1) for period in range(whole)]
     return np.array([start, *(edge for edge in inner if edge < start + length), start + length])
 
 

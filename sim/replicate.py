@@ -6,7 +6,7 @@ import itertools
 import time
 import traceback
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from sim import engines
 from sim.errors import RunError
@@ -15,10 +15,11 @@ from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy
 from sim.record import Record
 from sim.scenario import Policy, Scenario
 from sim.trace import Trace
-from sim.workers import ThisProcess, Workers
+from sim.workers import Reply, ThisProcess, Workers
 
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
+LEAST_TASK_SECONDS, MOST_TASK_SECONDS = 0.5, 2.0  # beyond them tasks are sized anew
 TASKS_PER_WORKER = 4
 
 
@@ -51,10 +52,27 @@ class Failure:
 
 @dataclass(frozen=True)
 class TaskSize:
-    """How many replications, and how many policies of each, make a task."""
+    """How many replications, and how many policies of each (None: all), make a task.
+
+    most: replications that a task may grow to where tasks prove quick; None where the size is fixed.
+    """
 
     replications: int = 1
     cells: int | None = None
+    most: int | None = None
+
+    def after(self, seconds: float, cells: int) -> TaskSize:
+        """The size for the next tasks, when a full one of some of so many cells took so long (0: not known)."""
+        if self.most is None or seconds <= 0 or LEAST_TASK_SECONDS <= seconds <= MOST_TASK_SECONDS:
+            return self
+        now = min(self.cells or cells, cells)
+        if seconds > MOST_TASK_SECONDS:
+            if self.replications > 1:
+                return replace(self, replications=self.replications // 2)
+            return replace(self, cells=max(1, now // 2))
+        if now < cells:
+            return replace(self, cells=min(cells, 2 * now))
+        return replace(self, replications=max(self.replications, min(self.most, 2 * self.replications)))
 
 
 @dataclass(frozen=True)
@@ -100,15 +118,14 @@ def replicate_shares(
     """
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
-    size = task_size or TaskSize()
+    cut = _Cut(shares, task_size or TaskSize())
     tasks = (
         ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
-        for share in shares
-        for batch in _batches(share.replications, size.replications)
-        for cells in _batches(share.cells, size.cells or len(rules))
+        for batch, cells in cut
     )
     wanted = itertools.takewhile(lambda _: go_on(), tasks)
     for reply in (workers or ThisProcess()).run(run_batch, wanted):
+        cut.learn(reply)
         if reply.failure is None:
             yield from reply.value
         else:
@@ -116,11 +133,29 @@ def replicate_shares(
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
 
 
-def _batches(numbers: Iterable[int], size: int) -> Iterator[tuple[int, ...]]:
-    """The numbers in tuples of `size`, the last one perhaps shorter."""
-    numbers = iter(numbers)
-    while batch := tuple(itertools.islice(numbers, size)):
-        yield batch
+class _Cut:
+    """Shares cut into tasks, (replications, cells) each, as they are asked for; the size follows the pace."""
+
+    def __init__(self, shares: Iterable[Share], size: TaskSize) -> None:
+        self._shares, self._size = shares, size
+        self._of: dict[tuple[tuple[int, ...], tuple[int, ...]], tuple[TaskSize, int]] = {}
+
+    def __iter__(self) -> Iterator[tuple[tuple[int, ...], tuple[int, ...]]]:
+        for share in self._shares:
+            replications = iter(share.replications)
+            while batch := tuple(itertools.islice(replications, self._size.replications)):
+                first = 0
+                while cells := share.cells[first : first + (self._size.cells or len(share.cells))]:
+                    self._of[batch, cells] = self._size, len(share.cells)
+                    first += len(cells)
+                    yield batch, cells
+
+    def learn(self, reply: Reply) -> None:
+        """Sizes the next tasks by a reply to a full one of the present size."""
+        (batch, cells), (size, of) = reply.key, self._of.pop(reply.key)
+        full = len(batch) == size.replications and len(cells) == min(size.cells or of, of)
+        if size == self._size and (full or reply.seconds > MOST_TASK_SECONDS):
+            self._size = size.after(reply.seconds, of)
 
 
 def run_batch(
@@ -208,11 +243,11 @@ class Pace:
     def task_size(self, replications: int, cells: int, workers: int) -> TaskSize:
         """Tasks of about a second, and enough of them for every worker."""
         block = max(1, min(cells, int(SECONDS_PER_TASK / max(self.running, 1e-9))))
+        fair = max(1, -(-replications // (TASKS_PER_WORKER * workers)))
         if block < cells:
-            return TaskSize(1, block)
+            return TaskSize(1, block, fair)
         in_a_second = int(SECONDS_PER_TASK / max(self.seconds(1, cells), 1e-9))
-        fair = -(-replications // (TASKS_PER_WORKER * workers))
-        return TaskSize(max(1, min(in_a_second, fair)), cells)
+        return TaskSize(max(1, min(in_a_second, fair)), cells, fair)
 
 
 def pace_of(scenario: Scenario, policy: Policy, *, engine: str = DEFAULT_ENGINE) -> Pace:

@@ -10,7 +10,7 @@ from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.replicate import Failure, Run, Share
 from sim.scenario import Policy, Scenario
 from sim.store import Store
-from sim.store_rows import Key, Row, cell_hash, scenario_hash
+from sim.store_rows import Key, Measures, Row, cell_hash, exact_hash, scenario_hash
 
 
 class Job:
@@ -39,8 +39,12 @@ class Job:
         self._failed: dict[int, set[int]] = {}
         self._command: int | None = None
         self.computed = 0
-        held = store.held(self.scenario)
-        self._missing = {one: self._cells_missing(one, held) for one in range(replications)}
+        whole = store.whole(self.scenario, self._cells)
+        held = store.held(self.scenario, but=whole)
+        self._missing: dict[int, AbstractSet[int]] = {
+            one: frozenset() if one in whole else self._cells_missing(one, held)
+            for one in range(replications)
+        }
         self.asked = len(self._cells) * replications
         self.missing = sum(map(len, self._missing.values()))
         self.reused = self.asked - self.missing
@@ -48,9 +52,7 @@ class Job:
             one for one, missing in self._missing.items()
             if missing and one in held and held[one][0] != fingerprint
         )  # fmt: skip
-        names = scenario.unit_names
-        closes = [[policy.units[name].closure_threshold for name in names] for policy in policies]
-        store.describe(self.scenario, names, dict(zip(self._cells, closes, strict=True)))
+        _describe(store, scenario, self.scenario, policies, self._cells)
 
     def _cells_missing(self, replication: int, held: Mapping[int, tuple[str, set[str]]]) -> AbstractSet[int]:
         """All of them are one and the same set, for there may be very many."""
@@ -91,17 +93,13 @@ class Job:
         wanted = range(len(self._cells)) if cells is None else cells
         for replication in range(len(self._missing) if replications is None else replications):
             missing = self._missing[replication]
-            runs = [
-                self._kept(replication, cell, place)
-                for place, cell in enumerate(wanted) if cell not in missing
-            ]  # fmt: skip
-            if runs:
-                yield runs
+            kept = [(place, cell) for place, cell in enumerate(wanted) if cell not in missing]
+            if kept:
+                rows = self._store.of_replication(self.scenario, replication)
+                yield [self._kept(rows[self._cells[cell]], place) for place, cell in kept]
 
-    def _kept(self, replication: int, cell: int, place: int) -> Run:
-        row = self._store.get(Key(self.scenario, self._cells[cell], replication))
-        assert row is not None, "only the one writer drops rows"
-        return Run(replication, place, row.record, row.intake_hash)
+    def _kept(self, row: Row, place: int) -> Run:
+        return Run(row.key.replication, place, row.record, row.intake_hash)
 
     def kept_engine(self) -> str | None:
         """The engine of a run that is there; None where there is none."""
@@ -145,3 +143,50 @@ class Job:
         """Notes in the store that the job has ended, be it interrupted, at that time."""
         if self._command is not None:
             self._store.end(self._command, at)
+
+
+class ExactJob:
+    """Exact cells of a scenario, held against what a store has of them from this machine.
+
+    kept: place among the policies -> measures by unit, of those that are there. computed: cells kept since.
+    """
+
+    def __init__(
+        self, store: Store, scenario: Scenario, policies: Sequence[Policy], *, fingerprint: str
+    ) -> None:
+        self._store, self._fingerprint = store, fingerprint
+        self.scenario = exact_hash(lower_network(scenario), plan_intake(scenario))
+        self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
+        self._command: int | None = None
+        self.computed = 0
+        there = dict(store.exact(self.scenario, fingerprint))
+        self.kept: dict[int, list[Measures]] = {
+            place: there[cell] for place, cell in enumerate(self._cells) if cell in there
+        }
+        _describe(store, scenario, self.scenario, policies, self._cells)
+
+    def begin(self, provenance: Mapping[str, Any]) -> None:
+        """Notes in the store that the job starts."""
+        asked, reused = len(self._cells), len(self.kept)
+        self._command = self._store.begin(self.scenario, provenance, asked=asked, reused=reused)
+
+    def keep(self, place: int, units: Sequence[Measures]) -> None:
+        """Keeps a cell that was solved; it is safe when this returns."""
+        if place not in self.kept:
+            self._store.put_exact(
+                self.scenario, self._cells[place], units, self._fingerprint, command=self._command
+            )
+            self.computed += 1
+
+    def end(self, at: str) -> None:
+        """Notes in the store that the job has ended, be it interrupted, at that time."""
+        if self._command is not None:
+            self._store.end(self._command, at)
+
+
+def _describe(
+    store: Store, scenario: Scenario, hashed: str, policies: Sequence[Policy], cells: Sequence[str]
+) -> None:
+    names = scenario.unit_names
+    closes = [[policy.units[name].closure_threshold for name in names] for policy in policies]
+    store.describe(hashed, names, dict(zip(cells, closes, strict=True)))

@@ -11,14 +11,25 @@ import hashlib
 import json
 import sqlite3
 import sys
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
 from sim.errors import StoreError
-from sim.store_file import FILE, STEPS, WriterLock, connect_to_read, connect_to_write
-from sim.store_rows import COUNTS, DAYS, Key, Row, by_unit, pack, unpack
+from sim.store_file import FILE, STEPS, WriterLock, cannot_be_written, connect_to_read, connect_to_write
+from sim.store_rows import (
+    COUNTS,
+    DAYS,
+    Key,
+    Measures,
+    Row,
+    by_unit,
+    pack,
+    pack_measures,
+    unpack,
+    unpack_measures,
+)
 
 UNIT_COLUMNS = COUNTS + DAYS
 # In this order the indices give key order, with nothing to sort.
@@ -28,6 +39,10 @@ _KEYED = """
     CROSS JOIN replications
         ON replications.scenario = runs.scenario AND replications.replication = runs.replication
     CROSS JOIN fingerprints ON fingerprints.id = replications.fingerprint
+"""
+_EXACT = """
+    FROM exact JOIN scenarios ON scenarios.id = exact.scenario JOIN cells ON cells.id = exact.cell
+    JOIN fingerprints ON fingerprints.id = exact.fingerprint
 """
 _ROW = "scenarios.hash, cells.hash, runs.replication, arrays, intake_hash, engine, text, seconds, record_hash"
 _IN_ORDER = "ORDER BY scenarios.hash, cells.hash, runs.replication"
@@ -144,14 +159,34 @@ class Store:
             db.execute(f"DELETE FROM replications {where}", address)
             kept = None
         if kept is None:
-            db.execute("INSERT OR IGNORE INTO fingerprints (text) VALUES (?)", (row.fingerprint,))
-            of = "(SELECT id FROM fingerprints WHERE text = ?)"
-            db.execute(
-                f"INSERT INTO replications VALUES (?, ?, {of}, ?)",
-                (*address, row.fingerprint, row.intake_hash),
-            )
+            values = (*address, self._machine(db, row.fingerprint), row.intake_hash)
+            db.execute("INSERT INTO replications VALUES (?, ?, ?, ?)", values)
         elif kept[1] != row.intake_hash:
             raise StoreError(f"{self.file}: replication {row.key.replication} met other patients before")
+
+    def _machine(self, db: sqlite3.Connection, fingerprint: str) -> int:
+        db.execute("INSERT OR IGNORE INTO fingerprints (text) VALUES (?)", (fingerprint,))
+        return db.execute("SELECT id FROM fingerprints WHERE text = ?", (fingerprint,)).fetchone()[0]
+
+    def put_exact(
+        self,
+        scenario: str,
+        cell: str,
+        units: Sequence[Measures],
+        fingerprint: str,
+        *,
+        command: int | None = None,
+    ) -> None:
+        """Keeps the exact measures of a cell by unit, in the place of those of another machine."""
+        blob = pack_measures(units)
+        with self._whole() as db:
+            values = (
+                self._id("scenarios", scenario), self._id("cells", cell), self._machine(db, fingerprint),
+                hashlib.sha256(blob).hexdigest(), blob,
+            )  # fmt: skip
+            columns = "scenario, cell, fingerprint, value_hash, vals"
+            db.execute(f"INSERT OR REPLACE INTO exact ({columns}) VALUES (?, ?, ?, ?, ?)", values)
+            db.execute("UPDATE commands SET computed = computed + 1 WHERE id = ?", (command,))
 
     def fail(self, keys: Sequence[Key], traceback: str, *, command: int | None = None) -> None:
         """Notes runs that failed; a later success takes the note away."""
@@ -199,8 +234,7 @@ class Store:
             if db.in_transaction:
                 db.execute("ROLLBACK")
             if isinstance(error, sqlite3.Error):
-                said = f"{self.file} cannot be written: {error}; what was committed before is kept"
-                raise StoreError(said) from error
+                raise StoreError(cannot_be_written(self.file, error)) from error
             raise
 
     # ---- reading ----
@@ -227,15 +261,57 @@ class Store:
             )
         return Row(Key(scenario, cell, replication), record, intake_hash, engine, fingerprint, seconds)
 
-    def held(self, scenario: str) -> dict[int, tuple[str, set[str]]]:
-        """What is here of a scenario: replication -> the fingerprint and the cells."""
+    def exact(self, scenario: str, fingerprint: str | None = None) -> Iterator[tuple[str, list[Measures]]]:
+        """The exact cells of a scenario (of one machine), cell hash and measures by unit; StoreError on damage."""
+        asked = (
+            f"SELECT cells.hash, value_hash, vals {_EXACT} WHERE scenarios.hash = ? AND (? IS NULL OR text = ?)"
+            " ORDER BY cells.hash"
+        )
+        for cell, value_hash, blob in self._ask(asked, (scenario, fingerprint, fingerprint)):
+            if hashlib.sha256(blob).hexdigest() != value_hash:
+                raise StoreError(f"{self.file}: the exact cell {cell[:12]} is damaged: choose another folder")
+            yield cell, unpack_measures(blob)
+
+    def exact_hashes(self) -> dict[Key, str]:
+        """Key (replication 0) of each exact cell -> hash of its measures, in key order."""
+        found = self._ask(
+            f"SELECT scenarios.hash, cells.hash, vals {_EXACT} ORDER BY scenarios.hash, cells.hash"
+        )
+        return {Key(*key, 0): hashlib.sha256(blob).hexdigest() for *key, blob in found}
+
+    def sample_exact(self, count: int) -> list[Key]:
+        """So many keys (replication 0) of exact cells at random."""
+        found = self._ask(
+            f"SELECT scenarios.hash, cells.hash, 0 {_EXACT} ORDER BY random() LIMIT ?", (count,)
+        )
+        return [Key(*one) for one in found]
+
+    def whole(self, scenario: str, cells: Sequence[str]) -> set[int]:
+        """The replications of a scenario that are here for every one of those cells."""
+        wanted = sorted(set(cells))
+        asked = (
+            "SELECT replication FROM runs WHERE scenario = (SELECT id FROM scenarios WHERE hash = ?)"
+            " AND cell IN (SELECT id FROM cells WHERE hash IN (SELECT value FROM json_each(?)))"
+            " GROUP BY replication HAVING count(*) = ?"
+        )
+        return {one for (one,) in self._ask(asked, (scenario, json.dumps(wanted), len(wanted)))}
+
+    def held(self, scenario: str, but: Iterable[int] = ()) -> dict[int, tuple[str, set[str]]]:
+        """What is here of a scenario, but for some replications: replication -> the fingerprint and the cells."""
         found: dict[int, tuple[str, set[str]]] = {}
-        columns = "runs.replication, text, cells.hash"
-        for replication, fingerprint, cell in self._ask(
-            f"SELECT {columns} {_KEYED} WHERE scenarios.hash = ?", (scenario,)
-        ):
+        asked = (
+            f"SELECT runs.replication, text, cells.hash {_KEYED} WHERE scenarios.hash = ?"
+            " AND runs.replication NOT IN (SELECT value FROM json_each(?))"
+        )
+        for replication, fingerprint, cell in self._ask(asked, (scenario, json.dumps(list(but)))):
             found.setdefault(replication, (fingerprint, set()))[1].add(sys.intern(cell))
         return found
+
+    def of_replication(self, scenario: str, replication: int) -> dict[str, Row]:
+        """Every run of a replication by cell hash; StoreError where bytes do not have their hash."""
+        where = "WHERE scenarios.hash = ? AND runs.replication = ?"
+        found = self._ask(f"SELECT {_ROW} {_KEYED} {where}", (scenario, replication))
+        return {row.key.cell: row for row in map(self._row, found)}
 
     def sample(self, count: int) -> list[Key]:
         """So many keys at random."""
@@ -249,17 +325,20 @@ class Store:
         return {Key(*one[:3]): one[3] for one in self._ask(f"SELECT {columns} {_KEYED} {_IN_ORDER}")}
 
     def table_hash(self) -> str:
-        """SHA-256 over keys, intakes and records in key order: the same for the same bits, however they came here."""
+        """SHA-256 over keys, intakes, records and exact measures: the same for the same bits, wherever from."""
         digest = hashlib.sha256()
         columns = "scenarios.hash, cells.hash, runs.replication, intake_hash, arrays"
         for *key, blob in self._ask(f"SELECT {columns} {_KEYED} {_IN_ORDER}"):
             digest.update(f"{' '.join(map(str, key))} {len(blob)}:".encode())
             digest.update(blob)
+        for key, value_hash in self.exact_hashes().items():
+            digest.update(f"exact {key.scenario} {key.cell} {value_hash}".encode())
         return digest.hexdigest()
 
     def counts(self) -> dict[str, int]:
-        """How many runs (`rows`), rows by unit, scenarios, cells, and runs that failed."""
-        tables = {"rows": "runs", "unit_rows": "units", "scenarios": "scenarios", "failed": "failures"}
+        """How many runs (`rows`), rows by unit, exact cells, scenarios, and runs that failed."""
+        tables = {"rows": "runs", "unit_rows": "units", "exact_cells": "exact", "scenarios": "scenarios",
+                  "failed": "failures"}  # fmt: skip
         return {name: next(self._ask(f"SELECT count(*) FROM {table}"))[0] for name, table in tables.items()}
 
     def failures(self) -> list[dict[str, Any]]:

@@ -56,6 +56,12 @@ STEPS = (
         asked INTEGER NOT NULL, reused INTEGER NOT NULL, computed INTEGER NOT NULL DEFAULT 0,
         failed INTEGER NOT NULL DEFAULT 0, began TEXT NOT NULL, ended TEXT);
     """,
+    """
+    CREATE TABLE exact (
+        id INTEGER PRIMARY KEY, scenario INTEGER NOT NULL REFERENCES scenarios,
+        cell INTEGER NOT NULL REFERENCES cells, fingerprint INTEGER NOT NULL REFERENCES fingerprints,
+        value_hash TEXT NOT NULL, vals BLOB NOT NULL, UNIQUE (scenario, cell));
+    """,
 )
 
 
@@ -113,14 +119,28 @@ def connect_to_write(file: Path) -> sqlite3.Connection:
     if not file.exists():
         _make(file)
     connect_to_read(file).close()
+    if not os.access(file, os.W_OK):  # SQLite would tell at the first row only
+        raise StoreError(f"{file} cannot be written: make it writable, or choose another folder")
     try:
         connection = sqlite3.connect(file, timeout=30, isolation_level=None)
         connection.execute("PRAGMA journal_mode = WAL")
         connection.execute("PRAGMA synchronous = NORMAL")
         migrate(connection)
     except sqlite3.Error as error:
-        raise StoreError(f"{file} cannot be written: {error}") from error
+        raise StoreError(cannot_be_written(file, error)) from error
     return connection
+
+
+def cannot_be_written(file: Path, error: sqlite3.Error) -> str:
+    """What stands in the way, and what to do about it."""
+    said = str(error)
+    if "readonly" in said:
+        remedy = "make it writable, or choose another folder"
+    elif "full" in said or "disk I/O" in said:
+        remedy = "free some space (or raise the limit on a file's size) and give the same command again"
+    else:
+        remedy = "see to that and give the same command again"
+    return f"{file} cannot be written: {said}; what was committed before is kept: {remedy}"
 
 
 def _make(file: Path) -> None:
@@ -134,7 +154,9 @@ def _make(file: Path) -> None:
         connection.close()
         half.replace(file)
     except (sqlite3.Error, OSError) as error:
-        raise StoreError(f"{file} cannot be made: {error}") from error
+        raise StoreError(
+            f"{file} cannot be made: {error}: free some space, or choose another folder"
+        ) from error
 
 
 def migrate(connection: sqlite3.Connection) -> None:
@@ -158,10 +180,10 @@ class WriterLock:
         try:
             opened = path.open("a+", encoding="utf-8")
         except OSError as error:
-            raise StoreError(f"{folder} cannot be written: {error.strerror}") from error
-        if not _take(opened) and (
-            time.sleep(LOOK_SECONDS) or not _take(opened)
-        ):  # `is_written` may have looked
+            raise StoreError(
+                f"{folder} cannot be written: {error.strerror}: choose another folder"
+            ) from error
+        if not _take(opened) and not _take_again(opened):
             opened.seek(0)
             holder = _holder(opened.read())
             opened.close()
@@ -173,7 +195,7 @@ class WriterLock:
             opened.write(json.dumps(_myself()))
             opened.flush()
         except OSError as error:
-            raise StoreError(f"{path} cannot be written: {error.strerror}") from error
+            raise StoreError(f"{path} cannot be written: {error.strerror}: free some space") from error
         self._file = opened
 
     def release(self) -> None:
@@ -182,6 +204,12 @@ class WriterLock:
             self._file.truncate(0)
             self._file.close()
             self._file = None
+
+
+def _take_again(opened: IO[str]) -> bool:
+    """A moment later, for it may only be `is_written` that looked."""
+    time.sleep(LOOK_SECONDS)
+    return _take(opened)
 
 
 def is_written(folder: Path) -> bool:

@@ -8,9 +8,13 @@ replications left out), the cell a hash of the lowered rules.
 from __future__ import annotations
 
 import hashlib
+import itertools
 import json
+import math
 import struct
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields, is_dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -20,6 +24,10 @@ from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
 
 # Raised by whoever changes the draws, the lowering or an engine so that a record differs: old rows then never match.
 RECORDS = 1
+# Raised by whoever changes the exact chain so that its measures differ.
+EXACT = 1
+
+Measures = dict[str, float | list[float] | None]
 
 COUNTS = ("arrived", "admitted", "diverted_out", "diverted_in", "turned_away")
 DAYS = ("occupied_days", "full_days", "closed_days", "closed_free_days", "incoming_closed_days")
@@ -53,6 +61,11 @@ class Row:
 def scenario_hash(network: Network, plan: IntakePlan) -> str:
     """The scenario's part of a key."""
     return _digest(("records", RECORDS, network, plan))
+
+
+def exact_hash(network: Network, plan: IntakePlan) -> str:
+    """The scenario's part of the key of an exact cell."""
+    return _digest(("exact", EXACT, network, plan))
 
 
 def cell_hash(rules: Rules) -> str:
@@ -103,15 +116,55 @@ def unpack(blob: bytes) -> Record:
     try:
         (length,) = struct.unpack_from("<I", blob)
         place, arrays = 4 + length, {}
-        for name, kind, shape in json.loads(blob[4:place]):
-            array = np.frombuffer(blob, np.dtype(kind), int(np.prod(shape)), place).reshape(shape)
-            arrays[name] = array.astype(array.dtype.newbyteorder("="))
+        for name, kind, shape, count in _layout(blob[4:place]):
+            array = np.frombuffer(blob, kind, count, place).reshape(shape)
+            arrays[name] = array.astype(kind.newbyteorder("="))
             place += array.nbytes
         if place != len(blob):
             raise ValueError(f"{len(blob) - place} bytes too many")
         return Record(**arrays)
     except (struct.error, TypeError, UnicodeDecodeError) as error:
         raise ValueError(f"no record: {error}") from error
+
+
+@lru_cache
+def _layout(head: bytes) -> list[tuple[str, np.dtype, list[int], int]]:
+    """The arrays of a record, as its list says: name, type, shape and number of values."""
+    return [(name, np.dtype(kind), shape, math.prod(shape)) for name, kind, shape in json.loads(head)]
+
+
+def pack_measures(units: Sequence[Measures]) -> bytes:
+    """Exact measures by unit as bytes: the length of a JSON list, that list, and float64 values.
+
+    The list has for each unit its (name, how many) in order: -1 is one number, -2 none.
+    """
+    head = [[[name, _how_many(value)] for name, value in unit.items()] for unit in units]
+    values = [value for unit in units for value in unit.values() if value is not None]
+    numbers = np.concatenate([np.zeros(0), *(np.atleast_1d(np.asarray(value, float)) for value in values)])
+    text = json.dumps(head).encode()
+    return struct.pack("<I", len(text)) + text + numbers.astype("<f8").tobytes()
+
+
+def _how_many(value: float | list[float] | None) -> int:
+    if value is None:
+        return -2
+    return len(value) if isinstance(value, list) else -1
+
+
+def unpack_measures(blob: bytes) -> list[Measures]:
+    """The measures of `pack_measures`, bit for bit."""
+    (length,) = struct.unpack_from("<I", blob)
+    numbers = iter(np.frombuffer(blob, "<f8", offset=4 + length).tolist())
+    units: list[Measures] = []
+    for unit in json.loads(blob[4 : 4 + length]):
+        units.append({name: _taken(numbers, many) for name, many in unit})
+    return units
+
+
+def _taken(numbers: Iterator[float], many: int) -> float | list[float] | None:
+    if many < 0:
+        return None if many == -2 else next(numbers)
+    return list(itertools.islice(numbers, many))
 
 
 def by_unit(record: Record) -> list[tuple[float, ...]]:

@@ -7,24 +7,43 @@ interface.
 
 from __future__ import annotations
 
+import atexit
 import os
 import signal
+import sys
 import threading
+import time
 import traceback
-import warnings
+from collections import deque
 from collections.abc import Callable, Hashable, Iterable, Iterator
-from contextlib import contextmanager
+from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, Future, wait
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from typing import Any, Protocol
+
+# A worker that is stopped or stuck is told by that, for it neither answers nor uses the processor.
+LEAST_PATIENCE_SECONDS, PATIENCE_TASKS = 60.0, 20
+LONG_TASK_SECONDS = 5.0
+SUSPECTS_PER_PROCESS = 2  # so many wait for their trial at most, before all else rests
+SECONDS_BETWEEN_LOOKS = 2.0
+# What the libraries of linear algebra and numba read, when they are loaded.
+THREADS = (
+    "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "BLIS_NUM_THREADS", "VECLIB_MAXIMUM_THREADS",
+    "NUMBA_NUM_THREADS", "NUMEXPR_NUM_THREADS",
+)  # fmt: skip
 
 
 @dataclass(frozen=True)
 class Reply:
-    """What became of one task. `value` where it succeeded, else `failure`, the traceback as text."""
+    """What became of one task. `value` where it succeeded, else `failure`, the traceback as text.
+
+    seconds: that it took where it ran; 0 where that is not known.
+    """
 
     key: Hashable
     value: Any = None
     failure: str | None = None
+    seconds: float = 0.0
 
 
 Task = tuple[Hashable, tuple]
@@ -50,66 +69,217 @@ class ThisProcess:
 
 
 class LocalProcesses:
-    """joblib's loky processes on this machine.
+    """loky's processes on this machine, each with one BLAS thread and a short line of tasks of its own.
 
-    Tasks are taken from the iterable as workers become free. A worker that dies takes down the tasks then
-    under way. Each of those is run again alone, and reported as failed if its worker dies once more; all
-    other tasks go on.
+    Tasks are taken from the iterable as workers become free. A worker that dies, or that for `patience` seconds
+    (default: max(60, 20 times the longest task so far)) neither answers nor computes, costs only the task that it
+    was at: that one is run again once all else rests, and reported as failed if it fells its worker once more.
     """
 
-    def __init__(self, count: int) -> None:
-        self.count = max(2, count)  # with one, joblib would run the tasks in this process
+    def __init__(self, count: int, *, patience: float | None = None) -> None:
+        self.count = max(1, count)
+        self._patience = patience
 
     def run(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
         """See Workers."""
-        from joblib.externals.loky.process_executor import TerminatedWorkerError
-
-        waiting, under_way = iter(tasks), {}
-
-        def handed_out() -> Iterator[Task]:
-            for key, arguments in waiting:
-                under_way[key] = arguments
-                yield key, arguments
-
-        while True:
-            try:
-                for reply in self._replies(function, handed_out()):
-                    del under_way[reply.key]
-                    yield reply
-                return
-            except TerminatedWorkerError:
-                stop_processes()
-            for key in list(under_way):
-                yield self._alone(function, key, under_way.pop(key))
-
-    def _alone(self, function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
-        from joblib.externals.loky.process_executor import TerminatedWorkerError
-
+        crew, finished = _Crew(function, tasks, self.count, self._patience), False
         try:
-            [reply] = self._replies(function, [(key, arguments)])
-            return reply
-        except TerminatedWorkerError as error:
-            stop_processes()
-            said = "the worker process died, with no other task beside this one (out of memory?)"
-            return Reply(key, failure=f"{error}\n{said}")
-
-    def _replies(self, function: Callable[..., Any], tasks: Iterable[Task]) -> Iterator[Reply]:
-        from joblib import Parallel, delayed
-
-        pool = Parallel(n_jobs=self.count, backend="loky", batch_size=1, return_as="generator_unordered")
-        with _interrupts_ignored():  # or they would tell of it in tracebacks while they import
-            replies = pool(delayed(_in_worker)(function, key, arguments) for key, arguments in tasks)
-        finished = False
-        try:
-            for reply in replies:  # noqa: UP028 - `yield from` would close joblib's generator with a warning
-                yield reply
+            while crew.hand_out():
+                yield from crew.answers()
             finished = True
         finally:
-            if not finished:  # interrupted, or nobody wants the rest
-                with warnings.catch_warnings():
-                    warnings.simplefilter("ignore")  # joblib's, that tasks were cancelled
-                    replies.close()
-                stop_processes()
+            crew.dismiss(kill=not finished)  # interrupted, or nobody wants the rest
+
+
+class _Crew:
+    """The processes of one run, and the tasks that are under way, returned, or suspected.
+
+    A suspect was under way when its worker was lost; a task behind it in the line is only returned. A suspect is on
+    trial once every line is empty, so that neither takes others down nor runs short of memory because of them.
+    """
+
+    def __init__(
+        self, function: Callable[..., Any], tasks: Iterable[Task], count: int, patience: float | None
+    ) -> None:
+        self._function, self._tasks, self._patience = function, iter(tasks), patience
+        self._processes = [_hired() for _ in range(count)]
+        self._returned: deque[Task] = deque()
+        self._suspects: deque[Task] = deque()
+        self._on_trial = False
+        self._longest = 0.0
+        self._looked = time.monotonic()
+
+    def hand_out(self) -> bool:
+        """Fills the lines; False where nothing is left to be done."""
+        if not self._on_trial and len(self._suspects) < SUSPECTS_PER_PROCESS * len(self._processes):
+            for length in range(1, self._line + 1):
+                for process in self._processes:
+                    if len(process.line) < length and (task := self._next()) is not None:
+                        process.give(self._function, task)
+        if self._suspects and not self._busy:
+            self._on_trial = True
+            self._processes[0].give(self._function, self._suspects.popleft())
+        return self._busy
+
+    @property
+    def _busy(self) -> bool:
+        return any(process.line for process in self._processes)
+
+    @property
+    def _line(self) -> int:
+        """A second task waits at every worker, unless tasks are so long that it could wait in vain."""
+        return 2 if 0 < self._longest < LONG_TASK_SECONDS else 1
+
+    def _next(self) -> Task | None:
+        return self._returned.popleft() if self._returned else next(self._tasks, None)
+
+    def answers(self) -> Iterator[Reply]:
+        """The replies that are there, after a wait for the first of them; lost workers are replaced."""
+        tick = min(1.0, self._limit / 5)
+        wait(
+            [future for process in self._processes for _, future in process.line],
+            timeout=tick,
+            return_when=FIRST_COMPLETED,
+        )
+        now = time.monotonic()
+        elapsed, self._looked = min(now - self._looked, 2 * tick), now  # no more, if this process was stopped
+        for place, process in enumerate(self._processes):
+            process.watch(elapsed, self._limit)
+            yield from self._settled(place, process)
+
+    @property
+    def _limit(self) -> float:
+        """Seconds for which a worker may neither answer nor compute."""
+        return self._patience or max(LEAST_PATIENCE_SECONDS, PATIENCE_TASKS * self._longest)
+
+    def _settled(self, place: int, process: _Process) -> Iterator[Reply]:
+        while process.line and process.line[0][1].done():
+            task, future = process.line.popleft()
+            process.quiet = 0.0
+            error = future.exception()
+            if isinstance(error, BrokenExecutor):
+                yield from self._lost(place, task, f"{error}\nthe worker process died")
+                return
+            self._on_trial = False
+            reply = future.result() if error is None else Reply(task[0], failure=_as_text(error))
+            self._longest = max(self._longest, reply.seconds)
+            yield reply
+        if process.line and process.quiet > self._limit:
+            task, _ = process.line.popleft()
+            said = f"the worker process gave no answer and did not compute for {process.quiet:.0f} s"
+            yield from self._lost(place, task, said)
+
+    def _lost(self, place: int, task: Task, said: str) -> Iterator[Reply]:
+        """A new worker in the place of one that is lost; its task is suspected, or found guilty."""
+        lost = self._processes[place]
+        self._returned.extend(waiting for waiting, _ in lost.line)
+        lost.dismiss()
+        self._processes[place] = _hired()
+        if self._on_trial:
+            self._on_trial = False
+            yield Reply(task[0], failure=f"{said}, with no other task beside this one (out of memory?)")
+        else:
+            self._suspects.append(task)
+
+    def dismiss(self, *, kill: bool) -> None:
+        """Ends the processes, or keeps them for the next run."""
+        for process in self._processes:
+            if kill:
+                process.dismiss()
+            else:
+                _resting.append(process)
+
+
+class _Process:
+    """One worker process: a pool of one, so that nothing else dies with it.
+
+    line: the tasks given and not settled, in order. quiet: seconds without an answer or a sign of work.
+    """
+
+    def __init__(self) -> None:
+        from joblib.externals.loky.process_executor import ProcessPoolExecutor
+
+        self._pool = ProcessPoolExecutor(
+            1, initializer=_begin, initargs=(os.getpid(),), env=dict.fromkeys(THREADS, "1")
+        )
+        with _interrupts_ignored():  # or it would tell of Ctrl-C in a traceback while it imports
+            self._pool.submit(int)  # starts it
+        self.line: deque[tuple[Task, Future]] = deque()
+        self.quiet = 0.0
+        self._used: float | None = None
+
+    def give(self, function: Callable[..., Any], task: Task) -> None:
+        """One more task in the line."""
+        try:
+            future = self._pool.submit(_guarded, function, *task)
+        except RuntimeError as error:  # it died while it had nothing to do
+            future = Future()
+            future.set_exception(BrokenExecutor(str(error)))
+        self.line.append((task, future))
+
+    def watch(self, elapsed: float, limit: float) -> None:
+        """Counts quiet seconds; work of the processor ends the quiet, where the system tells of it."""
+        self.quiet = self.quiet + elapsed if self.line else 0.0
+        if self.quiet < limit / 4:
+            return
+        used = self._processor_seconds()
+        if used != self._used:
+            self._used, self.quiet = used, 0.0
+
+    def _processor_seconds(self) -> float | None:
+        try:
+            [number] = self._numbers()
+            with open(f"/proc/{number}/stat", encoding="utf-8") as opened:
+                fields = opened.read().rpartition(")")[2].split()
+        except (OSError, ValueError):
+            return None
+        return float(fields[11]) + float(fields[12])  # of user and system, in ticks
+
+    def _numbers(self) -> list[int]:
+        """The one process's number; none where it has ended."""
+        return list(self._pool._processes or ())
+
+    def dismiss(self) -> None:
+        """Ends the process at once, whatever it is doing."""
+        if sys.platform == "win32":
+            self._pool.shutdown(wait=False, kill_workers=True)
+            return
+        for number in self._numbers():  # the pool then finds itself broken, and ends in good order
+            with suppress(ProcessLookupError):
+                os.kill(number, signal.SIGKILL)
+
+
+_resting: list[_Process] = []  # processes without a task, kept for the next run
+atexit.register(_resting.clear)  # loky has ended them by then
+
+
+def _hired() -> _Process:
+    if not _resting:
+        return _Process()
+    return _resting.pop()
+
+
+def stop_processes() -> None:
+    """Stops the worker processes that rest."""
+    while _resting:
+        _resting.pop().dismiss()
+
+
+def _begin(parent: int) -> None:
+    """In a new worker: Ctrl-C is the parent's to handle, and without the parent there is nothing to do."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    if hasattr(os, "getppid") and sys.platform != "win32":
+        threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
+
+
+def _end_with(parent: int) -> None:
+    while os.getppid() == parent:
+        time.sleep(SECONDS_BETWEEN_LOOKS)
+    os._exit(1)
+
+
+def _as_text(error: BaseException) -> str:
+    return "".join(traceback.format_exception(error))
 
 
 @contextmanager
@@ -125,25 +295,13 @@ def _interrupts_ignored() -> Iterator[None]:
         signal.signal(signal.SIGINT, before)
 
 
-def stop_processes() -> None:
-    """Stops the local worker processes at once, whatever they are doing."""
-    from joblib.externals.loky import get_reusable_executor
-
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")
-        get_reusable_executor().shutdown(wait=False, kill_workers=True)
-
-
-def _in_worker(function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
-    signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the parent's to handle
-    return _guarded(function, key, arguments)
-
-
 def _guarded(function: Callable[..., Any], key: Hashable, arguments: tuple) -> Reply:
+    started = time.perf_counter()
     try:
-        return Reply(key, function(*arguments))
+        value = function(*arguments)
     except Exception:
         return Reply(key, failure=traceback.format_exc())
+    return Reply(key, value, seconds=time.perf_counter() - started)
 
 
 def available_cores() -> int:

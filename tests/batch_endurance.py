@@ -1,4 +1,4 @@
-"""`python -m tests.batch_endurance [MOMENTS]`: a batch killed at many moments, which must leave the store of a whole one.
+"""`python -m tests.batch_endurance [MOMENTS]`: a batch killed at many moments must leave the store of a whole one.
 
 Run by hand, for it takes minutes. A batch on two worker processes is killed with SIGKILL, workers and all, after ever
 more runs have been kept (20 moments unless told otherwise), each time resumed by the same command, and at last run to

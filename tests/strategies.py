@@ -110,3 +110,17 @@ def cases(draw: st.DrawFn) -> Case:
     factors = draw(st.sampled_from(STAY_FACTORS))
     of = draw(networks(tick, len(factors)))
     return Case(of, draw(policies(of, tick)), draw(intakes(of, tick, factors)))
+
+
+@st.composite
+def rule_parameters(draw: st.DrawFn, beds: int) -> dict[str, tuple]:
+    """What a unit of so many beds may choose in a game: some rule parameters, each over some values."""
+    of_beds = st.lists(st.integers(0, beds), min_size=1, max_size=4, unique=True).map(tuple)
+    values = {
+        "closure_threshold": of_beds,
+        "incoming_threshold": of_beds,
+        "reopening_gap": st.sampled_from([(1,), (1, 2), (3, 1)]),
+        "admit_while_closed": st.sampled_from([(0.0,), (0.0, 0.25)]),
+    }
+    chosen = draw(st.sets(st.sampled_from(list(values)), min_size=1))
+    return {name: draw(values[name]) for name in values if name in chosen}

@@ -53,7 +53,7 @@ def show_control(document: dict[str, Any]) -> None:
     put_table("Forgone to central control", ("by", f"{what} a day", f"{what} a year"), list(_split(control)))
     _show_outcome(control["outcome"])
     for one in control["maps"]:
-        _show_map(one, document["players"])
+        _show_map(one, list(control["outcome"]["utilisation"]))
     if not control["maps"]:
         put_text(f"The rule is no grid of two numbers here; --out writes it to {FILE}, a row a state.", "")
 

@@ -119,10 +119,30 @@ def _show_patients(patients: dict[str, Any]) -> None:
     )
 
 
-def _goal(goal: dict[str, Any]) -> str:
-    if goal["shape"] == "absolute":
-        return "mean utilisation at the target"
-    return f"utilisation of each {goal['judged_over_days']:g} days at the target (squared distance)"
+def _goals(game: dict[str, Any]) -> str:
+    goals = game["goals"]
+    if len(set(goals.values())) == 1:
+        return f"Goal: {next(iter(goals.values()))}"
+    return "Goals: " + "; ".join(f"{name}: {said}" for name, said in goals.items())
+
+
+def _players(game: dict[str, Any]) -> list[str]:
+    """A line on who runs several units, or a unit under another name; none where every unit plays by itself."""
+    named = [f"{name} runs {', '.join(units)}" for name, units in game["players"].items() if units != [name]]
+    return [f"Players: {'; '.join(named)}; every other unit plays by itself."] if named else []
+
+
+def _strategies(game: dict[str, Any]) -> str:
+    closures = {name: mine for name, mine in game["strategies"].items() if isinstance(mine, list)}
+    parts = []
+    if closures:
+        spans = "; ".join(f"{name} {_span(mine)}" for name, mine in closures.items())
+        parts.append(f"Closure thresholds to choose from: {spans}")
+    for name, mine in game["strategies"].items():
+        if name not in closures:
+            spans = ", ".join(f"{field.replace('_', ' ')} {_span(values)}" for field, values in mine.items())
+            parts.append(f"{name} chooses {spans}")
+    return ". ".join(parts)
 
 
 def _welfare(welfare: dict[str, Any]) -> str:
@@ -131,9 +151,10 @@ def _welfare(welfare: dict[str, Any]) -> str:
     return f"patients turned away + {welfare['transfer_weight']:g} x transfers (a loss)"
 
 
-def _span(thresholds: list[int]) -> str:
+def _span(thresholds: list[Any]) -> str:
     first, last = thresholds[0], thresholds[-1]
-    if thresholds == list(range(first, last + 1)) and last > first:
+    whole = all(isinstance(one, int) for one in thresholds)
+    if whole and thresholds == list(range(first, last + 1)) and last > first:
         return f"{first} to {last}"
     return ", ".join(map(str, thresholds))
 
@@ -156,9 +177,8 @@ def _show_rest(document: dict[str, Any]) -> None:
     game, expected = document["game"], document["expected"]
     put_text("Rules in force:", *(f"  {name}: {reads}." for name, reads in document["rules"].items()), "")
     put_text(
-        f"Goal: {_goal(game['goal'])}. Welfare: {_welfare(game['welfare'])}. Closure thresholds to choose from: "
-        + "; ".join(f"{name} {_span(mine)}" for name, mine in game["strategies"].items())
-        + ".",
+        *_players(game),
+        f"{_goals(game)}. Welfare: {_welfare(game['welfare'])}. {_strategies(game)}.",
         f"Game: {count(game['cells'])} cells, {count(game['runs'])} runs. {_game_takes(expected)}",
         f"One policy (`simulate`): {about(expected['simulate_seconds'])}.",
     )

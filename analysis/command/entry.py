@@ -76,7 +76,12 @@ def main(arguments: Sequence[str] | None = None) -> None:
     for stream in (sys.stdout, sys.stderr):  # a name that the terminal cannot show is shown in escapes
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="backslashreplace")
-    sys.exit(run(list(sys.argv[1:] if arguments is None else arguments)))
+    try:
+        status = run(list(sys.argv[1:] if arguments is None else arguments))
+    finally:
+        if "sim.workers" in sys.modules:
+            sys.modules["sim.workers"].stop_processes()  # a stopped one would keep this one from ending
+    sys.exit(status)
 
 
 def run(arguments: list[str]) -> int:

@@ -42,7 +42,8 @@ def game(
 ) -> None:
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
-    Players are the units; a strategy is a closure threshold. Every cell of the table meets the same patients.
+    Players are the units, or whoever runs several; a strategy is a closure threshold, or any rule that the scenario
+    lists values of. Every cell of the table meets the same patients.
     With --exact, --phase-fit N gives near-exact payoffs for stays that the chain cannot count.
     """
     from analysis.command import game_search
@@ -59,7 +60,9 @@ def game(
     if phase_fit is not None and not exact:
         raise click.UsageError("--phase-fit is for the exact chain; add --exact, or leave it out to simulate")
     if any(change.startswith("closure threshold") for change in request.changes):
-        say("in a game the closure thresholds are the units' to choose: --threshold has no effect")
+        say(
+            "in a game closure thresholds are the units' to choose: --threshold has no effect where they choose one"
+        )
     request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
@@ -96,7 +99,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
     from analysis.payoffs import MOST_CELLS, profiles_of
     from sim.errors import Fault, ScenarioError
 
-    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario)
+    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario, request.policy)
     if profiles.cells > MOST_CELLS:
         rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
         remedy = "list fewer thresholds for some units"
@@ -133,19 +136,16 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.command.progress import progress
-    from analysis.exact_tables import must_compile, solve_cells
+    from analysis.command.exact_cells import solved
+    from analysis.exact_tables import must_compile
     from analysis.payoffs import exact_table
 
     profiles, goal, welfare = _axes(request)
     if must_compile(request.scenario, request.policy, profiles.cells):
         say("compiling the exact chain's kernels, once on this machine (some seconds)")
-    cells = [None] * profiles.cells
-    with progress("game --exact", profiles.cells, "cells") as bar:
-        for cell, units in solve_cells(request.scenario, profiles.policies(request.policy), request.workers):
-            cells[cell] = units
-            bar.advance()
-    return exact_table(profiles, goal, welfare, cells), None, {"engine": "exact chain", "interrupted": False}
+    cells, kept = solved(request, list(profiles.policies(request.policy)))
+    told = {"engine": "exact chain", "interrupted": False} | kept
+    return exact_table(profiles, goal, welfare, cells), None, told
 
 
 def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:
@@ -225,7 +225,7 @@ def _show_payoffs(analysis: Any, player: int) -> None:
     from analysis.equilibria import regrets
 
     table = analysis.table
-    names, strategies = table.profiles.players, table.profiles.strategies
+    names, labels = table.profiles.players, table.profiles.labels
     best = regrets(table.payoffs, table.goal.sense)[player] <= analysis.tolerance
     equilibria = {one.profile for one in analysis.equilibria}
     scale, scale_reads = table.goal.display_scale
@@ -237,13 +237,14 @@ def _show_payoffs(analysis: Any, player: int) -> None:
         return f"[{text}]" if (row, column) in equilibria else text
 
     aim = "smaller is better" if table.goal.sense == "cost" else "larger is better"
-    for first in range(0, len(strategies[1]), COLUMNS_AT_ONCE):
-        columns = range(first, min(first + COLUMNS_AT_ONCE, len(strategies[1])))
+    down, across = table.profiles.reads(0), table.profiles.reads(1).removeprefix("closure threshold ")
+    for first in range(0, len(labels[1]), COLUMNS_AT_ONCE):
+        columns = range(first, min(first + COLUMNS_AT_ONCE, len(labels[1])))
         put_grid(
             f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] equilibrium)\n"
-            f"down: closure threshold of {names[0]}; across: of {names[1]}",
-            ["", *(str(strategies[1][column]) for column in columns)],
-            [[str(k), *(cell(row, column) for column in columns)] for row, k in enumerate(strategies[0])],
+            f"down: {down}; across: {across}",
+            ["", *(labels[1][column] for column in columns)],
+            [[own, *(cell(row, column) for column in columns)] for row, own in enumerate(labels[0])],
         )
 
 
@@ -258,12 +259,12 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
     rows = [("equilibrium", profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
 
     def cell(player: int, profile: tuple[int, ...]) -> str:
-        own = table.profiles.strategies[player][profile[player]]
+        own = table.profiles.labels[player][profile[player]]
         paid = number(float(table.payoffs[(player, *profile)]) * scale, 1)
         return f"{own}: {paid}" + ("*" if best[(player, *profile)] else "")
 
     put_table(
-        f"Threshold and payoff in {scale_reads} (* best response to the others); all {count(table.profiles.cells)} "
+        f"Strategy and payoff in {scale_reads} (* best response to the others); all {count(table.profiles.cells)} "
         "cells are in --json and --out",
         ("profile", *players),
         [(name, *(cell(player, profile) for player in range(len(players)))) for name, profile in rows],
@@ -271,19 +272,31 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
 
 
 def _show_equilibria(document: dict[str, Any]) -> None:
+    from analysis.profiles import text_of
+
     players, listed = document["players"], document["equilibria"][:MOST_LISTED]
     put_table(
-        "Equilibria (closure thresholds; regret, in the goal's unit: the most a unit gains by deviating alone; "
+        f"Equilibria ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating alone; "
         "welfare a day)",
         ("verdict", *players, *(f"regret {player}" for player in players), "welfare"),
         [
-            (one["verdict"], *(one["thresholds"][p] for p in players), *(_regret(one["regret"][p]) for p in players),
+            (one["verdict"], *(text_of(_told(one)[p]) for p in players), *(_regret(one["regret"][p]) for p in players),
              _value(one["welfare"]))
             for one in listed
         ],
     )  # fmt: skip
     if len(document["equilibria"]) > MOST_LISTED:
         put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+
+
+def _chosen(document: dict[str, Any]) -> str:
+    """What the strategies listed are, in words."""
+    return document.get("chooses", "closure thresholds")
+
+
+def _told(one: dict[str, Any]) -> dict[str, Any]:
+    """What tells an equilibrium from others: its strategies, or the thresholds where these are enough."""
+    return one.get("strategies", one["thresholds"])
 
 
 def _regret(value: Any) -> str:
@@ -318,15 +331,21 @@ def _show_outcomes(document: dict[str, Any]) -> None:
 def _named_outcomes(document: dict[str, Any]) -> Iterator[tuple[str, dict[str, Any]]]:
     ties = len(document["optimum"]["thresholds"])
     yield "optimum" + (f" (1 of {ties} ties)" if ties > 1 else ""), document["optimum"]["outcome"]
-    by_thresholds = {tuple(one["thresholds"].items()): one["outcome"] for one in document["equilibria"]}
-    extremes = {name: document[f"{name}_equilibrium"] for name in ("worst", "best")}
+    extremes = {
+        name: document.get(f"{name}_equilibrium_strategies", document[f"{name}_equilibrium"])
+        for name in ("worst", "best")
+    }
     if extremes["worst"] is None:
         return
     if extremes["worst"] == extremes["best"]:
-        yield "equilibrium", by_thresholds[tuple(extremes["worst"].items())]
+        yield "equilibrium", _outcome_of(document, extremes["worst"])
         return
-    for name, thresholds in extremes.items():
-        yield f"{name} equilibrium", by_thresholds[tuple(thresholds.items())]
+    for name, told in extremes.items():
+        yield f"{name} equilibrium", _outcome_of(document, told)
+
+
+def _outcome_of(document: dict[str, Any], told: dict[str, Any]) -> dict[str, Any]:
+    return next(one["outcome"] for one in document["equilibria"] if _told(one) == told)
 
 
 def _outcome_rows(name: str, outcome: dict[str, Any]) -> Iterator[tuple[Any, ...]]:

@@ -33,17 +33,21 @@ class Choice:
 
 
 def choose(request: Request, wanted: str | None) -> Choice:
-    """The choice for a scenario, `wanted` where that is given; ScenarioError where the goal is not `absolute`."""
+    """The choice for a scenario, `wanted` where that is given; ScenarioError where the chain has no payoffs for it."""
     from analysis.chain import can_be_solved_together, chain_size
     from analysis.payoffs import MOST_CELLS, profiles_of
 
-    _require_absolute(request)
-    profiles = profiles_of(request.scenario)
-    highest = {player: mine[-1] for player, mine in zip(profiles.players, profiles.strategies, strict=True)}
-    states = chain_size(request.scenario, request.policy.with_thresholds(highest))
+    _require_exact_means(request)
+    profiles = profiles_of(request.scenario, request.policy)
+    highest = [number - 1 for number in profiles.shape]
+    states = chain_size(request.scenario, profiles.policy(request.policy, highest))
     size = f"{count(profiles.cells)} cells" + (
         "" if states is None else f" of at most {count(states)} states"
     )
+    if not profiles.is_ordered:
+        _refuse_search(request, wanted)
+        reads = f"{_named(TABLE)}, for a search climbs one threshold a player: {size}"
+        return Choice(TABLE, "cost" if wanted is None else "--search", profiles.cells, states, None, reads)
     if wanted is not None:
         return Choice(wanted, "--search", profiles.cells, states, None, f"{_named(wanted)} as asked: {size}")
     if profiles.cells > MOST_CELLS:
@@ -70,34 +74,47 @@ def _named(method: str) -> str:
     return "Full table" if method == TABLE else "Best-reply search"
 
 
-def _require_absolute(request: Request) -> None:
+def _require_exact_means(request: Request) -> None:
     from analysis.goals import goal_of
     from sim.errors import Fault, ScenarioError
 
-    if goal_of(request.scenario).shape == "absolute":
+    if goal_of(request.scenario).without_exact_mean is None:
         return
-    rule, remedy = "must be `absolute` with --exact", "drop --exact, or use the absolute goal"
+    rule, remedy = "must not be `squared` with --exact", "drop --exact, or use another goal"
     got = "got 'squared': the chain has no finite-period variance here"
-    fault = Fault(None, "game.goal.shape", rule, got, remedy)
+    of_all = getattr(request.scenario.game.goal, "shape", None) == "squared"
+    fault = Fault(None, "game.goal.shape" if of_all else "game.goals", rule, got, remedy)
     raise ScenarioError([fault], request.scenario.source.file)
+
+
+def _refuse_search(request: Request, wanted: str | None) -> None:
+    from sim.errors import Fault, ScenarioError
+
+    if wanted != BEST_REPLY:
+        return
+    rule = "needs players who choose one threshold each"
+    got = "got players with several units, or several rule parameters to choose"
+    remedy = "drop --search for the full table, or list one threshold a player"
+    raise ScenarioError([Fault(None, "--search", rule, got, remedy)], request.scenario.source.file)
 
 
 def _seconds_per_cell(request: Request, profiles: Any) -> float:
     """Seconds that the cell with the most states takes; another one before it pays for what is done once only."""
     from analysis.chain import solve
 
-    for place in (0, -1):
-        thresholds = {p: mine[place] for p, mine in zip(profiles.players, profiles.strategies, strict=True)}
+    for profile in ([0] * len(profiles.shape), [number - 1 for number in profiles.shape]):
         began = time.perf_counter()
-        solve(request.scenario, request.policy.with_thresholds(thresholds))
+        solve(request.scenario, profiles.policy(request.policy, profile))
     return time.perf_counter() - began
 
 
 def structure_of_table(analysis: Any, choice: Choice) -> dict[str, Any]:
     """What a full table's document says besides: how it was chosen, and its structure."""
-    from analysis.search_document import structure_document
+    from analysis.search_document import structure_document, structure_unknown
     from analysis.structure import cells_of, structure_of
 
+    if not analysis.table.profiles.is_ordered:
+        return {"search": asdict(choice), "structure": structure_unknown(analysis.table.profiles)}
     structure = structure_of(cells_of(analysis.table), tolerance=analysis.tolerance)
     return {
         "search": asdict(choice),
@@ -113,7 +130,7 @@ def searched(request: Request, choice: Choice, tolerance: float, *, told: dict[s
     from analysis.search import best_reply_search, chain_solver
     from analysis.search_document import search_document, search_frame
 
-    begun, profiles = started(), profiles_of(request.scenario)
+    begun, profiles = started(), profiles_of(request.scenario, request.policy)
     found = best_reply_search(
         profiles,
         goal_of(request.scenario),

@@ -100,6 +100,7 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
     def __exit__(self, *_: object) -> None:
         for one, handler in self._before.items():
             signal.signal(one, handler)
+        self._replies.close()  # type: ignore[attr-defined] - after an error in handling a reply
 
     def __iter__(self) -> Iterator[Any]:
         return self

@@ -4,17 +4,18 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Iterator, Mapping, Sequence
-from contextlib import chdir
+from contextlib import chdir, suppress
 from dataclasses import dataclass
 from typing import Any
 
 from analysis.command.entry import brimline
 from analysis.command.options import Request, request_of
+from analysis.command.phase_fit import fitted
 from sim.errors import BrimlineError, StoreError
 from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy, plan_intake
 from sim.replicate import Failure, run_batch
 from sim.store import Store
-from sim.store_rows import Key, Row, cell_hash, scenario_hash
+from sim.store_rows import Key, Row, cell_hash, exact_hash, pack_measures, scenario_hash
 
 
 def arguments_of(origin: Mapping[str, Any]) -> list[str]:
@@ -24,11 +25,10 @@ def arguments_of(origin: Mapping[str, Any]) -> list[str]:
 
 def request_again(origin: Mapping[str, Any]) -> tuple[str, Request]:
     """A recorded command's name and request; StoreError where its scenario or data are not what they were."""
-    name, *arguments = arguments_of(origin)
-    command = brimline.get_command(None, name)  # type: ignore[arg-type]
+    name = arguments_of(origin)[0]
     try:
         with chdir(origin["cwd"]):
-            request = request_of(command.make_context(name, arguments).params)
+            request = request_of(_options(origin))
     except (BrimlineError, OSError) as error:
         raise StoreError(f"the recorded command cannot be run again: {error}") from error
     source, then = request.scenario.source, origin["scenario"]
@@ -42,6 +42,13 @@ def request_again(origin: Mapping[str, Any]) -> tuple[str, Request]:
     return name, request
 
 
+def _options(origin: Mapping[str, Any]) -> dict[str, Any]:
+    """A recorded command's options by name."""
+    name, *arguments = arguments_of(origin)
+    command = brimline.get_command(None, name)  # type: ignore[arg-type]
+    return command.make_context(name, arguments).params
+
+
 def parts_of(origin: Mapping[str, Any]) -> list[Mapping[str, Any]]:
     """The provenances of a batch's parts; any other command is its own one part."""
     return list(origin.get("parts", [origin]))
@@ -52,7 +59,7 @@ def policies_of(name: str, request: Request) -> Sequence[Any]:
     from analysis.payoffs import profiles_of
 
     if name == "game":
-        return list(profiles_of(request.scenario).policies(request.policy))
+        return list(profiles_of(request.scenario, request.policy).policies(request.policy))
     return [request.policy]
 
 
@@ -112,3 +119,37 @@ def _difference(row: Row, again: Any) -> str | None:
     if again.intake_hash != row.intake_hash:
         return "other patients"
     return None if again.record.hash == row.record.hash else "another record"
+
+
+def differing_exact_cells(store: Store, sample: int) -> tuple[int, dict[Key, str]]:
+    """Solves a random sample of exact cells again: how many could be, and in words how those differ that do.
+
+    Raises StoreError where any exact cell does not have its hash.
+    """
+    from analysis.exact_tables import solve_block
+
+    wanted, checked, different = set(store.sample_exact(sample)), 0, {}
+    for scenario, hashed, policies in _exact_recipes(store) if wanted else ():
+        for cell, units in store.exact(hashed):
+            key = Key(hashed, cell, 0)
+            if key not in wanted or cell not in policies:
+                continue
+            wanted.discard(key)
+            checked += 1
+            if pack_measures(solve_block(scenario, [policies[cell]])[0]) != pack_measures(units):
+                different[key] = "other measures"
+    return checked, different
+
+
+def _exact_recipes(store: Store) -> Iterator[tuple[Any, str, dict[str, Any]]]:
+    """Scenario, its hash, and policies by cell hash, of every recorded exact game that can be made again."""
+    for origin in _distinct(store):
+        options = _options(origin)
+        if not options.get("exact"):
+            continue
+        with suppress(StoreError):
+            name, request = request_again(origin)
+            scenario = fitted(request, options["phase_fit"])[0].scenario
+            hashed = exact_hash(lower_network(scenario), plan_intake(scenario))
+            policies = policies_of(name, request)
+            yield scenario, hashed, {cell_hash(lower_policy(scenario, policy)): policy for policy in policies}

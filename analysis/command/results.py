@@ -102,8 +102,8 @@ def show(folder: Path, as_json: bool) -> None:
     if as_json:
         put_json(document)
         return
-    names = ("command", "engine", "rows", "unit_rows", "asked", "computed", "reused", "complete", "failed",
-             "began", "ended", "table_hash")  # fmt: skip
+    names = ("command", "engine", "rows", "unit_rows", "exact_cells", "asked", "computed", "reused", "complete",
+             "failed", "began", "ended", "table_hash")  # fmt: skip
     put_table(f"Results in {folder}", ("what", "value"), [(name, document[name]) for name in names])
     for one in document["failures"]:
         last_line = one["traceback"].strip().splitlines()[-1]
@@ -178,22 +178,26 @@ def _write_parquet(store: Any, file: Path) -> None:
 @JSON
 def verify(folder: Path, sample: int, as_json: bool) -> None:
     """Compute a random sample of rows again and compare every bit; status 1 if any differs."""
-    from analysis.command.recorded import differs, recipes
+    from analysis.command.recorded import differing_exact_cells, differs, recipes
 
     with _store(folder) as store:
         found, reasons = recipes(store)
         keys = store.sample(sample)
         known = [key for key in keys if key.scenario in found and key.cell in found[key.scenario].rules]
         different = {key: said for key in known if (said := differs(store, key, found[key.scenario]))}
+        exact, other = differing_exact_cells(store, sample)
     for reason in reasons:
         say(reason)
-    if not known:
+    if not known and not exact:
         raise StoreError(f"no row of {folder} could be computed again")
+    different |= other
     document = {
-        "agrees": not different, "checked": len(known), "not_computed": len(keys) - len(known),
+        "agrees": not different, "checked": len(known), "exact_checked": exact,
+        "not_computed": len(keys) - len(known),
         "different": [vars(key) | {"reads": said} for key, said in different.items()],
     }  # fmt: skip
-    _conclude(document, f"{len(known)} rows computed again, {len(different)} differ.", as_json)
+    cells = f" and {exact} exact cells" if exact else ""
+    _conclude(document, f"{len(known)} rows{cells} computed again, {len(different)} differ.", as_json)
 
 
 @command.command()
@@ -204,7 +208,7 @@ def repeat(folder: Path, as_json: bool) -> None:
     from analysis.command.recorded import parts_of, request_again
 
     with _store(folder) as store:
-        commands, before = store.commands(), store.hashes()
+        commands, before = store.commands(), store.hashes() | store.exact_hashes()
     if not commands:
         raise StoreError(f"{folder} records no command")
     origin = commands[-1]["provenance"]
@@ -234,7 +238,7 @@ def _hashes_again(origin: dict[str, Any]) -> dict[Any, str]:
         if status == INTERRUPTED:
             raise Interrupted
         with _store(Path(fresh)) as store:
-            return store.hashes()
+            return store.hashes() | store.exact_hashes()
 
 
 def _conclude(document: dict[str, Any], said: str, as_json: bool) -> None:

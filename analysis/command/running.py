@@ -114,23 +114,26 @@ class Ran:
 
 
 def run_replications(
-    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False
+    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False, first: int = 0
 ) -> Ran:
     """Runs every replication of the request under every policy and hands each reply to `take`.
 
     keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
+    first: replications below it have been run by this command; without a store they are left out.
     """
     if request.kept is not None:
         return request.kept(policies, take)
     if not keep or request.out is None:
-        whole = [Share(tuple(range(len(policies))), range(request.scenario.run.replications))]
+        whole = [Share(tuple(range(len(policies))), range(first, request.scenario.run.replications))]
         return _run(request, policies, whole, _effort(request, whole), label=label, take=take)
     with Store(request.out, write=True) as store:
-        return _run_beside(store, request, policies, label=label, take=take)
+        return _run_beside(store, request, policies, label=label, take=take, quiet=first > 0)
 
 
-def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, label: str, take: Any) -> Ran:
-    """Takes what the store has, then runs and keeps what is missing."""
+def _run_beside(
+    store: Store, request: Request, policies: Sequence[Any], *, label: str, take: Any, quiet: bool
+) -> Ran:
+    """Takes what the store has, then runs and keeps what is missing; quiet: without telling what is there."""
     job = Job(
         store, request.scenario, policies, request.scenario.run.replications,
         fingerprint=json.dumps(fingerprint(), sort_keys=True),
@@ -140,7 +143,7 @@ def _run_beside(store: Store, request: Request, policies: Sequence[Any], *, labe
         say(f"{len(job.restarted)} {said}")
     for runs in job.kept_runs():
         take(runs)
-    if job.reused:
+    if job.reused and not quiet:
         say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
     shares = job.shares()
     planned = _effort(request, shares)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -19,6 +20,15 @@ from analysis.command.output import (
     put_text,
     write_result,
 )
+from analysis.command.paths import (
+    check_path_options,
+    draw_paths,
+    path_document,
+    path_options,
+    show_paths,
+    tell,
+)
+from analysis.command.precise import aim_of, collect_until_precise, precision_options, show_precision
 from sim.errors import Fault, ScenarioError
 
 
@@ -32,8 +42,18 @@ from sim.errors import Fault, ScenarioError
     "--replication", type=click.IntRange(0, 999_999), default=0, show_default=True, help="Which one to trace."
 )
 @click.option("--per-replication", is_flag=True, help="Raw measures and hashes of each replication.")
+@precision_options
+@path_options
 def simulate(
-    request: Request, trace: Path | None, intake_out: Path | None, replication: int, per_replication: bool
+    request: Request,
+    trace: Path | None,
+    intake_out: Path | None,
+    replication: int,
+    per_replication: bool,
+    precision: float | None,
+    precise: tuple[str, ...],
+    warm_up_advice: bool,
+    hour_of_week: bool,
 ) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
@@ -44,9 +64,14 @@ def simulate(
 
     begun = started()
     _check_files(request, trace, intake_out)
+    check_path_options(request, hour_of_week)
+    aim = aim_of(request, precision, precise)
     for said in advice(request.scenario):
         say(f"advice: {said}")
-    runs, ran = collect_runs(request, label="simulate", keep=True)
+    if aim is None:
+        (runs, ran), known = collect_runs(request, label="simulate", keep=True), None
+    else:
+        runs, ran, known = collect_until_precise(request, aim, label="simulate")
     result = summarise(
         [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
     )
@@ -58,6 +83,9 @@ def simulate(
     } | ran.to_dict()  # fmt: skip
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
+    if known is not None:
+        document["precision"] = known
+    ran = _add_paths(document, request, runs, ran, warm_up=warm_up_advice, week=hour_of_week)
     if request.as_json:
         put_json(document)
     else:
@@ -65,12 +93,27 @@ def simulate(
     if request.out is not None:
         origin = provenance(request, "simulate", begun, engine=ran.engine.name)
         write_result(prepare_folder(request.out), document, origin)
+        draw_paths(document, {unit.name: unit.beds for unit in request.scenario.units}, request.out)
     if trace is not None or intake_out is not None:  # perhaps into that very folder
         _write_trace(request, ran.engine.name, replication, trace, intake_out)
     finish(ran)
 
 
 command = scenario_command(simulate)
+
+
+def _add_paths(
+    document: dict[str, Any], request: Request, runs: list[Any], ran: Any, *, warm_up: bool, week: bool
+) -> Any:
+    """Adds what is asked of the runs over time; gives how all was run. An interrupted run is not traced."""
+    if ran.interrupted:
+        return ran
+    replications = [run.replication for run in runs]
+    found, traced = path_document(request, replications, warm_up=warm_up, week=week)
+    ran = replace(ran, interrupted=traced.interrupted, failures=[*ran.failures, *traced.failures])
+    document |= found | ran.to_dict()
+    tell(document)
+    return ran
 
 
 def _heading(request: Request) -> dict[str, Any]:
@@ -132,4 +175,7 @@ def _show(document: dict[str, Any], request: Request) -> None:
         "Network", ("measure", "mean (low to high)"),
         [(m.reads, interval(document["network"][m.name])) for m in NETWORK_MEASURES],
     )  # fmt: skip
+    if "precision" in document:
+        show_precision(document["precision"])
+    show_paths(document)
     put_caution()

@@ -53,6 +53,11 @@ def check(draft: Draft) -> None:
     days = draft.run_days
     paths = [("units", row, "review_hours") for row in draft.rows("units")]
     paths += [path for row in draft.rows("policies") for path in draft.below("policies", row, "review_hours")]
+    paths += [
+        place
+        for unit in draft.below("game", "strategies")
+        for place in draft.below(*unit, "review_hours", "values")
+    ]
     for path in paths:
         hours = draft.read(*path)
         if days is not None and hours and days * 24 / hours > MOST_REVIEWS:

@@ -12,8 +12,8 @@ from functools import cached_property
 from typing import Any
 
 from sim.rules import RULES, tables
+from sim.scenario import game_checks
 from sim.scenario.faults import Collector
-from sim.scenario.game import TargetUtilisation
 from sim.scenario.positions import Path
 from sim.scenario.run import Run
 from sim.tables import MOST_PATIENTS
@@ -89,11 +89,25 @@ class Draft:
             rule, value = "must not be above the unit's beds", f"got {self.read(*path)} for {beds} beds"
             self.fault(path, rule, value, f"choose a threshold from 0 to {beds}")
 
+    def known_unit(self, path: Path, name: str) -> None:
+        """A fault where no unit bears the name at `path`.
+
+        A unit may have lost its name: then only what is plainly a slip for a known name is at fault.
+        """
+        if name in self.beds:
+            return
+        remedy = nearest(name, self.beds)
+        if self.every_unit_named or remedy.startswith("did you mean"):
+            self.fault(path, "must be the name of a unit", f"got {shown(name)}", remedy)
+
 
 def cross_check(collector: Collector) -> None:
     """Adds every broken rule between keys to the collector."""
     draft = Draft(collector)
-    own = (_names, _thresholds, _referrals, _homes, _isolated_units, _strategies, _policies, _periods, _sizes)
+    own = (
+        _names, _thresholds, _referrals, _homes, _isolated_units, _policies, _sizes,
+        *game_checks.CHECKS,
+    )  # fmt: skip
     for check in (*own, *(rule.check for rule in RULES)):
         check(draft)
 
@@ -136,24 +150,15 @@ def _order(draft: Draft, path: Path, home: str | None) -> None:
         elif name in seen:
             draft.fault(entry, "must not name a unit twice", f"got {shown(name)} again", "remove it")
         else:
-            _known_unit(draft, entry, name)
+            draft.known_unit(entry, name)
         seen.add(name)
-
-
-def _known_unit(draft: Draft, path: Path, name: str) -> None:
-    """A unit may have lost its name: then only what is plainly a slip for a known name is at fault."""
-    if name in draft.beds:
-        return
-    remedy = nearest(name, draft.beds)
-    if draft.every_unit_named or remedy.startswith("did you mean"):
-        draft.fault(path, "must be the name of a unit", f"got {shown(name)}", remedy)
 
 
 def _homes(draft: Draft) -> None:
     for row in draft.rows("patients"):
         home = draft.read("patients", row, "home")
         if home is not None:
-            _known_unit(draft, ("patients", row, "home"), home)
+            draft.known_unit(("patients", row, "home"), home)
 
 
 def _isolated_units(draft: Draft) -> None:
@@ -186,35 +191,16 @@ def _reached(draft: Draft) -> set[str] | None:
     return named
 
 
-def _strategies(draft: Draft) -> None:
-    for path in draft.below("game", "strategies"):
-        _known_unit(draft, path, path[-1])
-        for threshold in ((*path, "from"), (*path, "to"), *draft.below(*path, "values")):
-            draft.fault_above_beds(threshold, draft.beds.get(path[-1]))
-
-
 def _policies(draft: Draft) -> None:
     of_rules = [key for keys in tables("policy_keys") for key in keys.model_fields]
     for row in draft.rows("policies"):
         for key in ("closure_threshold", *of_rules, "referral_order"):
             for path in draft.below("policies", row, key):
-                _known_unit(draft, path, path[-1])
+                draft.known_unit(path, path[-1])
                 if key.endswith("threshold"):
                     draft.fault_above_beds(path, draft.beds.get(path[-1]))
                 elif key == "referral_order":
                     _order(draft, path, path[-1])
-
-
-def _periods(draft: Draft) -> None:
-    path = ("game", "goal", "judged_over_days")
-    judged = draft.read(*path, default=TargetUtilisation.model_fields["judged_over_days"].default)
-    measured = draft.read("run", "measured_days", default=Run.model_fields["measured_days"].default)
-    squared = draft.read("game", "goal", "shape") == "squared"
-    if squared and None not in (judged, measured) and judged > measured:
-        by_default = "" if draft.read(*path) else " (the default)"
-        value = f"got {judged:,.12g}{by_default} over {measured:,.12g}"
-        remedy = f"give {measured:,.12g} or less, or raise `run.measured_days`"
-        draft.fault(path, "must not be longer than the measured days", value, remedy)
 
 
 def _sizes(draft: Draft) -> None:

@@ -8,6 +8,7 @@ from typing import Any
 from sim.rules import RULES
 from sim.scenario.policies import Policy
 from sim.scenario.scenario import Scenario
+from sim.scenario.strategies import CLOSURE
 
 WARM_UP_STAYS = 5
 
@@ -83,15 +84,23 @@ def _diversion(scenario: Scenario, policy: Policy) -> dict[str, Any]:
 
 
 def _game(scenario: Scenario) -> dict[str, Any]:
-    strategies = scenario.strategies()
-    cells = math.prod(len(mine) for mine in strategies.values())
+    cells = math.prod(scenario.strategies_of_players().values())
     return {
         "goal": scenario.game.goal.model_dump(),
+        "goals": {name: scenario.game.goal_of(name).reads for name in scenario.unit_names},
         "welfare": scenario.game.welfare.model_dump(),
-        "strategies": {name: list(mine) for name, mine in strategies.items()},
+        "players": {name: list(units) for name, units in scenario.players().items()},
+        "strategies": {name: _choices(mine) for name, mine in scenario.choices().items()},
         "cells": cells,
         "runs": cells * scenario.run.replications,
     }
+
+
+def _choices(parameters: dict[str, tuple[Any, ...]]) -> Any:
+    """Closure thresholds as a list; anything else by parameter."""
+    if parameters.keys() == {CLOSURE}:
+        return list(parameters[CLOSURE])
+    return {name: list(values) for name, values in parameters.items()}
 
 
 def mean_stay_days(scenario: Scenario) -> float:
@@ -134,21 +143,24 @@ def _whole_weeks(scenario: Scenario) -> list[str]:
 
 
 def _whole_periods(scenario: Scenario) -> list[str]:
-    goal, days = scenario.game.goal, scenario.run.measured_days
-    left = days - goal.judged_over_days * int(days / goal.judged_over_days + 1e-9)
-    if goal.shape != "squared" or left < 1e-6:
+    judged, days = scenario.game.judged_over_days, scenario.run.measured_days
+    left = 0.0 if judged is None else days - judged * int(days / judged + 1e-9)
+    if left < 1e-6:
         return []
     return [
-        f"the last {left:g} of {days:g} measured days make no whole period of {goal.judged_over_days:g} days and are "
+        f"the last {left:g} of {days:g} measured days make no whole period of {judged:g} days and are "
         "not judged by the squared goal"
     ]
 
 
 def _targets(scenario: Scenario) -> list[str]:
-    missing = [unit.name for unit in scenario.units if unit.target_utilisation is None]
+    missing = scenario.units_without_target()
     if not missing:
         return []
-    return [f"no target_utilisation for {', '.join(missing)}: `game` needs one for every unit (or --target)"]
+    return [
+        f"no target_utilisation for {', '.join(missing)}: `game` needs one for every unit whose goal has a target "
+        "(or --target)"
+    ]
 
 
 def _one_replication(scenario: Scenario) -> list[str]:

@@ -10,14 +10,19 @@ from pydantic import BaseModel, ValidationError
 from pydantic.fields import FieldInfo
 
 from sim.errors import Fault
+from sim.scenario.goals import DEFAULT_KIND
 from sim.scenario.positions import Path, line_of
 from sim.wording import as_written, in_words, nearest, shown
 
 __all__ = ["Collector", "nearest", "shown", "step"]
 
-_NAMED_ROWS = {"units": "name", "patients": "group", "policies": "name", "parts": "name"}
+_NAMED_ROWS = {
+    ("units",): "name", ("patients",): "group", ("policies",): "name", ("game", "players"): "name",
+    ("parts",): "name",
+}  # fmt: skip
 _TAGS = ("family", "kind")
-_UNIONS = ("stay", "delay", "welfare")
+_UNIONS = ("stay", "delay", "welfare", "goal")
+_TABLES_OF_UNIONS = (("parts",), ("goals",))
 
 
 class Collector:
@@ -81,8 +86,8 @@ class Collector:
         for depth, part in enumerate(path):
             level = step(level, part)
             if isinstance(part, int):
-                named = depth == 1 and isinstance(level, Mapping)
-                label = level.get(_NAMED_ROWS.get(path[0], "")) if named else None
+                named = isinstance(level, Mapping)
+                label = level.get(_NAMED_ROWS.get(path[:depth], "")) if named else None
                 part = label if isinstance(label, str) and label else f"{part + 1}"
             words.append(as_written(part))
         return ".".join(words) or "file"
@@ -92,12 +97,18 @@ class Collector:
         path: list[str | int] = []
         for place, part in enumerate(loc):
             below_union = place > 0 and (
-                loc[place - 1] in _UNIONS or loc[place - 2 : place - 1] == ("parts",)
+                loc[place - 1] in _UNIONS or loc[place - 2 : place - 1] in _TABLES_OF_UNIONS
             )
             level = self.value(tuple(path))
-            if not (below_union and isinstance(level, Mapping) and part in (level.get(tag) for tag in _TAGS)):
+            if not (below_union and isinstance(level, Mapping) and _is_member(part, level)):
                 path.append(part)
         return tuple(path)
+
+
+def _is_member(part: str | int, level: Mapping[str, Any]) -> bool:
+    """Whether `part` of a location names the member of a union that the table `level` is, by its tag or by default."""
+    by_default = part == DEFAULT_KIND and "kind" not in level
+    return by_default or part in (level.get(tag) for tag in _TAGS)
 
 
 def step(level: Any, part: str | int) -> Any:
@@ -133,4 +144,9 @@ def _models_in(annotation: Any) -> list[type[BaseModel]]:
 
 def _tag_fits(model: type[BaseModel], level: Any) -> bool:
     tags = [tag for tag in _TAGS if tag in model.model_fields]
-    return all(step(level, tag) in get_args(model.model_fields[tag].annotation) for tag in tags)
+    given = {tag: step(level, tag) for tag in tags}
+    return all(
+        given[tag] in get_args(model.model_fields[tag].annotation)
+        or (given[tag] is None and not model.model_fields[tag].is_required())
+        for tag in tags
+    )

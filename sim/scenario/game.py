@@ -1,25 +1,15 @@
-"""The `[game]` table: what each unit pursues, what the network values, which thresholds may be chosen."""
+"""The `[game]` table: who plays, what each unit pursues, what the network values, what may be chosen."""
 
 from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import Discriminator, Field, Tag, model_validator
+from pydantic import Discriminator, Field, Tag
 
-from sim.scenario.units import Threshold
-from sim.tables import NotNegative, Row, Table, breach
-
-
-class TargetUtilisation(Table):
-    """Each unit wants its utilisation at its own target.
-
-    `absolute`: the distance of mean utilisation from the target. `squared`: the mean squared distance of the
-    utilisation over each `judged_over_days`, a different game.
-    """
-
-    kind: Literal["target_utilisation"] = "target_utilisation"
-    shape: Annotated[Literal["absolute", "squared"], Field(examples=['shape = "absolute"'])] = "absolute"
-    judged_over_days: Annotated[float, Field(ge=1, examples=["judged_over_days = 365"])] = 365.0
+from sim.scenario.goals import AnyGoal, Goal, TargetUtilisation
+from sim.scenario.strategies import UnitStrategies
+from sim.scenario.units import Name, Names
+from sim.tables import NotNegative, Row, Table
 
 
 class Throughput(Table):
@@ -40,57 +30,44 @@ Welfare = Annotated[
 ]
 
 
-_Several = Annotated[tuple[Threshold, ...], Row, Field(min_length=1)]
+class Player(Table):
+    """One who decides for several units together, a trust for example."""
 
-
-class Thresholds(Table):
-    """The closure thresholds that one unit may choose: `from` and `to` inclusive, or a list of `values`."""
-
-    from_: Annotated[Threshold | None, Field(alias="from", examples=["from = 1"])] = None
-    to: Annotated[Threshold | None, Field(examples=["to = 12"])] = None
-    values: Annotated[_Several | None, Field(examples=["values = [6, 9, 12]"])] = None
-
-    @model_validator(mode="after")
-    def _one_way_of_saying(self):
-        ends = self.from_ is not None, self.to is not None
-        if (self.values is not None) == any(ends) or any(ends) != all(ends):
-            raise breach(
-                "needs either both `from` and `to`, or `values`", self._said(), "give one of the two"
-            )
-        if all(ends) and self.from_ > self.to:
-            raise breach(
-                "must not be above `to`",
-                f"{self.from_} above {self.to}",
-                "swap or correct them",
-                key=("from",),
-            )
-        for place, value in enumerate(self.values or ()):
-            if value in self.values[:place]:
-                raise breach(
-                    "must not repeat a threshold", f"{value} again", "remove it", key=("values", place)
-                )
-        return self
-
-    def _said(self) -> str:
-        given = (
-            (name, value) for name, value in (("from", self.from_), ("to", self.to), ("values", self.values))
-        )
-        return " and ".join(f"`{name}`" for name, value in given if value is not None) or "neither"
-
-    def listed(self) -> tuple[int, ...]:
-        """The thresholds in the order of the file."""
-        return self.values if self.values is not None else tuple(range(self.from_, self.to + 1))
+    name: Annotated[Name, Field(examples=['name = "North trust"'])]
+    units: Annotated[Names, Field(min_length=1, examples=['units = ["Ashgill", "Norbeck"]'])]
 
 
 class Game(Table):
-    """The game between the units; `strategies` defaults to all closure thresholds from 1 to the beds."""
+    """The game between the players.
 
-    goal: Annotated[TargetUtilisation, Field(examples=['goal = { kind = "target_utilisation" }'])] = (
-        TargetUtilisation()
-    )
+    goal: of every unit that `goals` does not name. goals: unit, or player (for all its units) -> goal.
+    players: a unit that no row names is a player by itself. strategies: of a unit, by default all closure
+    thresholds from 1 to its beds.
+    """
+
+    goal: Annotated[AnyGoal, Field(examples=['goal = { kind = "target_utilisation" }'])] = TargetUtilisation()
+    goals: Annotated[
+        dict[str, AnyGoal], Field(examples=['goals = { Ashgill = { kind = "turned_away" } }'])
+    ] = {}
     welfare: Annotated[Welfare, Field(examples=['welfare = { kind = "throughput" }'])] = Throughput(
         kind="throughput"
     )
+    players: Annotated[
+        tuple[Player, ...], Row, Field(examples=['[[game.players]]` with `name = "North trust"'])
+    ] = ()
     strategies: Annotated[
-        dict[str, Thresholds], Field(examples=["strategies = { Ashgill = { from = 1, to = 12 } }"])
+        dict[str, UnitStrategies], Field(examples=["strategies = { Ashgill = { from = 1, to = 12 } }"])
     ] = {}
+
+    def goal_of(self, unit: str) -> Goal:
+        """What a unit pursues: its own goal, else its player's, else that of the game."""
+        runs = next((row.name for row in self.players if unit in row.units), unit)
+        return self.goals.get(unit) or self.goals.get(runs) or self.goal
+
+    @property
+    def judged_over_days(self) -> float | None:
+        """The length of the periods that a squared goal judges; None where no goal is squared."""
+        squared = (
+            one for one in (self.goal, *self.goals.values()) if getattr(one, "shape", None) == "squared"
+        )
+        return next((one.judged_over_days for one in squared), None)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Annotated, Any
@@ -14,6 +15,7 @@ from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
 from sim.scenario.policies import Policy, PolicyRow, policy_of_file
 from sim.scenario.run import Run
+from sim.scenario.strategies import CLOSURE, number_of_strategies
 from sim.scenario.units import Line, Unit
 from sim.tables import Row, Table, breach
 from sim.wording import shown
@@ -88,12 +90,42 @@ class Scenario(Table):
         return own.after(rows[name])
 
     def strategies(self) -> dict[str, tuple[int, ...]]:
-        """Unit name -> the closure thresholds that it may choose in the game."""
+        """Unit name -> the closure thresholds that it may choose in the game, for every unit that chooses one."""
+        return {name: mine[CLOSURE] for name, mine in self.choices().items() if CLOSURE in mine}
+
+    def choices(self) -> dict[str, dict[str, tuple[Any, ...]]]:
+        """Unit name -> field of UnitRules -> the values that it may choose in the game."""
         chosen = self.game.strategies
         return {
-            unit.name: chosen[unit.name].listed() if unit.name in chosen else tuple(range(1, unit.beds + 1))
+            unit.name: chosen[unit.name].parameters()
+            if unit.name in chosen
+            else {CLOSURE: tuple(range(1, unit.beds + 1))}
             for unit in self.units
         }
+
+    def players(self) -> dict[str, tuple[str, ...]]:
+        """Player -> the units that it runs, both in file order of the units; a unit that no row names runs itself."""
+        runs = {unit: row.name for row in self.game.players for unit in row.units}
+        players: dict[str, list[str]] = {}
+        for unit in self.unit_names:
+            players.setdefault(runs.get(unit, unit), []).append(unit)
+        return {name: tuple(units) for name, units in players.items()}
+
+    def strategies_of_players(self, policy: Policy | None = None) -> dict[str, int]:
+        """Player -> how many strategies it has, without listing them. policy: default the file's own rules."""
+        closures, choices = (policy or self.policy()).thresholds, self.choices()
+        return {
+            player: math.prod(number_of_strategies(choices[unit], closures[unit]) for unit in units)
+            for player, units in self.players().items()
+        }
+
+    def units_without_target(self) -> list[str]:
+        """The units whose goal needs a target utilisation that they do not have."""
+        return [
+            unit.name
+            for unit in self.units
+            if unit.target_utilisation is None and self.game.goal_of(unit.name).needs_target
+        ]
 
     def with_run(self, **changes: Any) -> Scenario:
         """The same scenario with other values in its run table (already validated)."""

@@ -40,7 +40,9 @@ def periods(*replications, beds=10.0, judged=10.0, days=20.0):
 def test_exact_payoffs_are_distances_from_each_units_own_target():
     utilisation = np.array([[0.6, 0.9], [0.7, 0.8]])  # (cells, units)
     expected = [[0.1, 0.1], [0.0, 0.0]]
-    assert goal([0.7, 0.8]).exact(utilisation) == pytest.approx(np.array(expected), abs=1e-12)
+    assert goal([0.7, 0.8]).exact({"utilisation": utilisation}) == pytest.approx(
+        np.array(expected), abs=1e-12
+    )
 
 
 def test_it_is_the_mean_that_is_judged_not_every_replication():

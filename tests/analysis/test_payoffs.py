@@ -1,7 +1,5 @@
 """Payoff tables: laid out in scenario order, filled in any order, from complete replications only."""
 
-import itertools
-
 import numpy as np
 import pytest
 
@@ -28,7 +26,8 @@ def utilisation_of(thresholds):
 
 
 def exact_cells():
-    for thresholds in itertools.product(*THREE.strategies):
+    for profile in np.ndindex(THREE.shape):
+        thresholds = list(THREE.thresholds(profile).values())
         yield [
             {
                 "utilisation": utilisation,
@@ -172,7 +171,7 @@ def test_the_squared_goal_keeps_judged_periods_by_cell():
     scenario = memoryless(UNITS[0], run={"measured_days": DAYS})
     sums = TableSums(scenario, 2, 2)
     levels = {0: (1, 2), 1: (0, 2)}
-    for replication, cell in itertools.product(range(2), range(2)):
+    for replication, cell in np.ndindex(2, 2):
         occupancy = np.zeros((2, 1, 3))
         for period, level in enumerate(levels[cell]):
             occupancy[period, 0, level] = 5.0

@@ -140,7 +140,7 @@ def test_kill_9_at_any_moment_then_resume_gives_the_table_of_an_uninterrupted_ru
     whole, folder = tmp_path / "whole", tmp_path / "killed"
     assert call(*asked, "--out", whole)[0] == 0
     reached, expected = [], call("results", "show", whole)[1]
-    for moment in (0, 23, 90, 170, 261):
+    for moment in (0, 261):  # at random ones: test_endurance.py
         killed = client(*asked, "--out", folder)
         while rows_in(folder) < moment and killed.poll() is None:
             time.sleep(0.005)

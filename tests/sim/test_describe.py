@@ -160,7 +160,9 @@ def test_weeks_that_are_not_whole():
 
 def test_a_missing_target_matters_to_a_game():
     (said,) = advised("beds = 20\ntarget_utilisation = 0.8\n", "beds = 20\n")
-    assert said == "no target_utilisation for B: `game` needs one for every unit (or --target)"
+    assert said == (
+        "no target_utilisation for B: `game` needs one for every unit whose goal has a target (or --target)"
+    )
     assert advice(parse_scenario(TEXT.replace("target_utilisation = 0.8\n", "")).with_target(0.8)) == []
 
 

@@ -10,6 +10,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -108,14 +109,43 @@ def test_a_trace_is_of_the_replication_asked_for(plain):
 
 
 def test_tasks_take_about_a_second():
-    assert Pace(0.0, 0.1).task_size(8, 1000, 2) == TaskSize(1, 10)
-    assert Pace(0.0, 60.0).task_size(8, 1000, 2) == TaskSize(1, 1)
-    assert Pace(0.01, 0.01).task_size(1000, 4, 2) == TaskSize(20, 4)  # 0.05 s a replication
-    assert Pace(0.01, 0.01).task_size(16, 4, 2) == TaskSize(2, 4)  # every worker gets its share
+    assert Pace(0.0, 0.1).task_size(8, 1000, 2) == TaskSize(1, 10, 1)
+    assert Pace(0.0, 60.0).task_size(8, 1000, 2) == TaskSize(1, 1, 1)
+    assert Pace(0.01, 0.01).task_size(1000, 4, 2) == TaskSize(20, 4, 125)  # 0.05 s a replication
+    assert Pace(0.01, 0.01).task_size(16, 4, 2) == TaskSize(2, 4, 2)  # every worker gets its share
     assert Pace(0.5, 0.1).seconds(10, 5) == pytest.approx(10.0)
     for engine in ("reference", "compiled"):
         pace = pace_of(SCENARIO, POLICIES[0], engine=engine)
         assert pace.drawing > 0 and pace.running > 0
+
+
+class Timed:
+    """Workers that take so many seconds for a run, as their replies say; notes the runs of every task."""
+
+    def __init__(self, seconds_per_run):
+        self.seconds_per_run, self.runs = seconds_per_run, []
+
+    def run(self, function, tasks):
+        for reply in ThisProcess().run(function, tasks):
+            runs = len(reply.key[0]) * len(reply.key[1])
+            self.runs.append(runs)
+            yield replace(reply, seconds=runs * self.seconds_per_run)
+
+
+@pytest.mark.parametrize("seconds", [0.01, 0.06, 0.9])
+@pytest.mark.parametrize("size", [TaskSize(1, 1, 8), TaskSize(8, 3, 8)])
+def test_tasks_are_sized_anew_where_the_pace_proves_another(plain, seconds, size):
+    """In the end a task takes 0.5 to 2 s, or is as large or as small as it may be."""
+    workers = Timed(seconds)
+    runs = [
+        run
+        for reply in replicate(SCENARIO, POLICIES, range(60), workers=workers, task_size=size)
+        for run in reply
+    ]
+    assert len({(run.replication, run.cell) for run in runs}) == len(runs) == 60 * len(POLICIES)
+    assert all(plain[run.replication, run.cell][0] == run.record.hash for run in runs if run.replication < 4)
+    taken = workers.runs[-2] * seconds  # the last one may be what was left over
+    assert 0.5 <= taken <= 2 or workers.runs[-2] == 8 * len(POLICIES)
 
 
 # --- failures ---------------------------------------------------------------------------------------------

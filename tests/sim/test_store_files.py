@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import os
 import sqlite3
+import subprocess
+import sys
 from contextlib import closing
 from pathlib import Path
 
@@ -14,6 +16,8 @@ from sim.store import Store
 from sim.store_file import FILE, STEPS
 from sim.store_rows import by_unit, pack
 from tests.sim.stored import filled, record_of, row
+
+ROOT = Path(__file__).resolve().parents[2]
 
 
 def cut(file: Path) -> None:
@@ -26,7 +30,22 @@ def scribble(file: Path) -> None:
     file.write_bytes(content)
 
 
+def blank_a_page_within(file: Path) -> None:
+    content = bytearray(file.read_bytes())
+    middle = len(content) // 8192 * 4096
+    content[middle : middle + 4096] = bytes(4096)
+    file.write_bytes(content)
+
+
+def spoil_the_header(file: Path) -> None:
+    content = bytearray(file.read_bytes())
+    content[:100] = bytes(reversed(content[:100]))
+    file.write_bytes(content)
+
+
 DAMAGE = {
+    "a blank page": blank_a_page_within,
+    "a spoilt header": spoil_the_header,
     "emptied": lambda file: file.write_bytes(b""),
     "cut": cut,
     "scribbled over": scribble,
@@ -44,6 +63,40 @@ def test_a_damaged_file_is_refused_in_plain_words_and_left_as_it_is(tmp_path, ha
         with pytest.raises(StoreError, match="is damaged .* left as it is"):
             Store(tmp_path, write=write)
     assert (tmp_path / FILE).read_bytes() == left
+
+
+HALF_WRITTEN = """
+import os, sys
+from pathlib import Path
+from sim.store import Store
+from tests.sim.stored import row
+store = Store(Path(sys.argv[1]), write=True)
+for number in range(1, 9):
+    store.put([row(replication=number)])
+os._exit(9)
+"""
+
+
+def test_a_log_that_is_cut_or_scribbled_over_costs_only_what_it_held(tmp_path):
+    """A process dies with commits in the log; then the log loses its end, or all its sense."""
+    for name, harm in {
+        "cut": lambda log: os.truncate(log, log.stat().st_size * 2 // 3),
+        "scribble": scribble,
+    }.items():
+        folder = tmp_path / name
+        folder.mkdir()
+        filled(folder, [row()])
+        ended = subprocess.run([sys.executable, "-c", HALF_WRITTEN, str(folder)], cwd=ROOT, check=False)
+        assert ended.returncode == 9
+        harm(folder / (FILE + "-wal"))
+        with Store(folder, write=True) as store:
+            kept = [one.key.replication for one in store.rows()]
+        assert kept == list(range(len(kept))) and 1 <= len(kept) < 9, "whole commits, in order"
+        filled(folder, [row(replication=number) for number in range(9)])
+        (tmp_path / f"whole {name}").mkdir()
+        again = filled(tmp_path / f"whole {name}", [row(replication=number) for number in range(9)])
+        with Store(folder) as store:
+            assert store.table_hash() == again
 
 
 def test_a_row_whose_bits_have_changed_is_refused(tmp_path):
