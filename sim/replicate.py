@@ -5,7 +5,7 @@ from __future__ import annotations
 import itertools
 import time
 import traceback
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 
 from sim import engines
@@ -110,8 +110,12 @@ def replicate_shares(
     engine: str = DEFAULT_ENGINE,
     workers: Workers | None = None,
     task_size: TaskSize | None = None,
+    go_on: Callable[[], bool] = lambda: True,
 ) -> Iterator[list[Run] | Failure]:
-    """As `replicate`, but each replication under the policies of its share only."""
+    """As `replicate`, but each replication under the policies of its share only.
+
+    go_on: asked before each task is handed out; once it says no, only what is under way still arrives.
+    """
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
     cut = _Cut(shares, task_size or TaskSize())
@@ -119,7 +123,8 @@ def replicate_shares(
         ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
         for batch, cells in cut
     )
-    for reply in (workers or ThisProcess()).run(run_batch, tasks):
+    wanted = itertools.takewhile(lambda _: go_on(), tasks)
+    for reply in (workers or ThisProcess()).run(run_batch, wanted):
         cut.learn(reply)
         if reply.failure is None:
             yield from reply.value

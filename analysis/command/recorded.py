@@ -49,6 +49,11 @@ def _options(origin: Mapping[str, Any]) -> dict[str, Any]:
     return command.make_context(name, arguments).params
 
 
+def parts_of(origin: Mapping[str, Any]) -> list[Mapping[str, Any]]:
+    """The provenances of a batch's parts; any other command is its own one part."""
+    return list(origin.get("parts", [origin]))
+
+
 def policies_of(name: str, request: Request) -> Sequence[Any]:
     """The policies that a command runs."""
     from analysis.payoffs import profiles_of
@@ -88,8 +93,7 @@ def recipes(store: Store) -> tuple[dict[str, Recipe], list[str]]:
 def _distinct(store: Store) -> Iterator[Mapping[str, Any]]:
     """The provenances of different command lines or scenario texts."""
     seen = set()
-    for command in store.commands():
-        origin = command["provenance"]
+    for origin in (one for command in store.commands() for one in parts_of(command["provenance"])):
         mark = (*origin["command"], origin["cwd"], origin["scenario"]["sha256"])
         if mark not in seen:
             seen.add(mark)
