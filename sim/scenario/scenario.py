@@ -80,12 +80,28 @@ class Scenario(Table):
             raise KeyError(name) from None
 
     def policy(self, name: str | None = None) -> Policy:
-        """The file's own rules, or a named policy; KeyError where there is none of that name."""
-        own = policy_of_file(self.units, self.diversion.when_all_closed)
+        """The file's own rules, or a named policy; KeyError where there is none of that name.
+
+        A policy that changes beds is for `under(name)`, the network that has them.
+        """
+        own = policy_of_file(self.under(name).units, self.diversion.when_all_closed)
+        return own if name is None else own.after(self._row(name))
+
+    def under(self, name: str | None) -> Scenario:
+        """The network that a named policy is for: with the beds and targets that its row gives, if any.
+
+        The patients of a replication are the same. KeyError where there is no policy of that name.
+        """
         if name is None:
-            return own
-        rows = {row.name: row for row in self.policies}
-        return own.after(rows[name])
+            return self
+        row = self._row(name)
+        changes = {key: getattr(row, key) for key in ("beds", "target_utilisation")}
+        if not any(changes.values()):
+            return self
+        return self._changed(units=tuple(_with(unit, changes) for unit in self.units))
+
+    def _row(self, name: str) -> PolicyRow:
+        return {row.name: row for row in self.policies}[name]
 
     def strategies(self) -> dict[str, tuple[int, ...]]:
         """Unit name -> the closure thresholds that it may choose in the game."""
@@ -126,3 +142,10 @@ class Scenario(Table):
         copy = self.model_copy()
         copy._source = dataclasses.replace(source)
         return copy
+
+
+def _with(unit: Unit, changes: Mapping[str, Mapping[str, Any]]) -> Unit:
+    """The unit with its own values of some keys, each given by unit name."""
+    return unit.model_copy(
+        update={key: named[unit.name] for key, named in changes.items() if unit.name in named}
+    )
