@@ -30,7 +30,7 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     Open circles mark the player's best responses, filled diamonds the equilibria.
     """
     table = game.table
-    names, strategies = [_short(name) for name in table.profiles.players], table.profiles.strategies
+    names, strategies = [short(name) for name in table.profiles.players], table.profiles.strategies
     sns.heatmap(
         table.payoffs[player], ax=ax, cmap="cividis_r" if table.goal.sense == "cost" else "cividis",
         xticklabels=strategies[1], yticklabels=strategies[0], cbar_kws={"label": _scale(game)},
@@ -49,7 +49,7 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     return ax
 
 
-def _short(name: str) -> str:
+def short(name: str) -> str:
     """A unit's name as far as a figure has room for it."""
     return name if len(name) <= LONGEST_LABEL else name[: LONGEST_LABEL - 1] + "…"
 
@@ -78,7 +78,7 @@ def verification_z(document: Mapping[str, Any], ax: Axes) -> Axes:
         ax.scatter(one["z"], place, marker=marker, s=22, facecolors=face, edgecolors="black", zorder=3)
     ax.set_yticks(
         range(len(tested)),
-        [f"{_short(one['where'])}: {one['measure'].replace('_', ' ')}" for one in tested],
+        [f"{short(one['where'])}: {one['measure'].replace('_', ' ')}" for one in tested],
         fontsize=7,
     )
     ax.set_ylim(len(tested) - 0.3, -0.7)
@@ -110,7 +110,7 @@ def verification_occupancy(document: Mapping[str, Any], ax: Axes, *, where: str)
     )
     ax.set_xticks(at, names, fontsize=8)
     ax.set(
-        title=_short(where),
+        title=short(where),
         xlabel="occupied beds (rare levels pooled)",
         ylabel="share of time",
         ylim=(0, None),
@@ -126,7 +126,7 @@ def save_payoffs(game: GameAnalysis, folder: Path) -> list[Path]:
     for player in range(2):
         figure, ax = plt.subplots(figsize=(2.6 + 0.36 * min(columns, 40), 2.4 + 0.32 * min(rows, 40)))
         payoff_heat_map(game, ax, player=player)
-        written += _save(figure, folder, f"payoffs-{player + 1}")
+        written += save(figure, folder, f"payoffs-{player + 1}")
     return written
 
 
@@ -139,10 +139,11 @@ def save_verification(document: Mapping[str, Any], folder: Path) -> list[Path]:
     verification_z(document, figure.add_subplot(grid[:, 0]))
     for place, unit in enumerate(units):
         verification_occupancy(document, figure.add_subplot(grid[place, 1]), where=unit)
-    return _save(figure, folder, "verification")
+    return save(figure, folder, "verification")
 
 
-def _save(figure: Any, folder: Path, name: str) -> list[Path]:
+def save(figure: Any, folder: Path, name: str) -> list[Path]:
+    """Writes and closes a figure as PNG and SVG, the same bytes every time."""
     figure.tight_layout()
     paths = [folder / f"{name}.{extension}" for extension in FORMATS]
     for path in paths:

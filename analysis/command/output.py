@@ -12,7 +12,8 @@ from typing import Any
 from analysis.command.caution import CAUTION
 
 PLAIN_WIDTH = 132
-WRITTEN = ("result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*")
+WRITTEN = ("result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*",
+           "comparison-*.*", "ledger.*")  # fmt: skip
 
 
 def put_json(document: Any) -> None:

@@ -16,7 +16,7 @@ from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.provenance import fingerprint, now
-from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
+from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_networks, replicate_shares
 from sim.resuming import Job
 from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
@@ -114,14 +114,15 @@ class Ran:
 
 
 def run_replications(
-    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False
+    request: Request, policies: Sequence[Any], *, label: str, take: Any, keep: bool = False, start: int = 0
 ) -> Ran:
     """Runs every replication of the request under every policy and hands each reply to `take`.
 
     keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
+    start: the first replication to run, where no store is kept.
     """
     if not keep or request.out is None:
-        whole = [Share(tuple(range(len(policies))), range(request.scenario.run.replications))]
+        whole = [Share(tuple(range(len(policies))), range(start, request.scenario.run.replications))]
         return _run(request, policies, whole, _effort(request, whole), label=label, take=take)
     with Store(request.out, write=True) as store:
         return _run_beside(store, request, policies, label=label, take=take)
@@ -190,6 +191,30 @@ def _run(
     with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
             take(reply)
+            if isinstance(reply, Failure):
+                failures.append(reply)
+                say(f"failed: {reply}")
+            bar.advance(len(reply.cells) if isinstance(reply, Failure) else len(reply))
+    return Ran(planned.engine, failures, replies.interrupted)
+
+
+def run_resampled(request: Request, resampling: Any) -> Ran:
+    """Runs the few replications of every resampling; none of them is kept in a store."""
+    cells = resampling.runs // len(resampling.replications)
+    planned = effort(request, len(resampling.replications), cells)
+    engine, failures = planned.engine.name, []
+    engines.load(engine).warm(
+        lower_network(request.scenario),
+        [lower_policy(request.scenario, request.policy)],
+        plan_intake(request.scenario),
+    )
+    jobs = ((key, group.scenario, group.policies) for key, group in resampling.networks())
+    replies = until_interrupted(
+        replicate_networks(jobs, resampling.replications, engine=engine, workers=planned.workers)
+    )
+    with replies, progress("resampled records", resampling.runs, "runs") as bar:
+        for key, reply in replies:
+            resampling.take(key, reply)
             if isinstance(reply, Failure):
                 failures.append(reply)
                 say(f"failed: {reply}")

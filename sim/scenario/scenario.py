@@ -9,6 +9,7 @@ from typing import Annotated, Any
 
 from pydantic import AfterValidator, Field, PrivateAttr
 
+from sim.durations import Observed, observed, with_observed
 from sim.scenario.diversion import Diversion
 from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
@@ -124,6 +125,22 @@ class Scenario(Table):
         """Every unit's target utilisation set to `target`."""
         units = (unit.model_copy(update={"target_utilisation": target}) for unit in self.units)
         return self._changed(units=tuple(units))
+
+    def observed(self) -> Observed:
+        """Every record that stays and delays are taken from: (file, column) -> times."""
+        durations = [*(group.stay for group in self.patients), self.diversion.delay]
+        return {key: values for one in durations for key, values in observed(one).items()}
+
+    def with_observed(self, records: Observed) -> Scenario:
+        """The same scenario with other records in the place of its own, all of them: a resampling."""
+        delay = self.diversion.delay
+        groups = (
+            group.model_copy(update={"stay": with_observed(group.stay, records)}) for group in self.patients
+        )
+        moved = None if delay is None else with_observed(delay, records)
+        return self._changed(
+            patients=tuple(groups), diversion=self.diversion.model_copy(update={"delay": moved})
+        )
 
     def exponential(self) -> Scenario:
         """The exponential counterpart: exponential stays of the same means, transfers that take no time and
