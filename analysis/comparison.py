@@ -153,7 +153,7 @@ def columns_of(scenario: Scenario) -> list[Column]:
 
 
 def column_values(columns: Sequence[Column], scenario: Scenario, sums: Sums) -> np.ndarray:
-    """Each column by replication, (replications, columns): a share of random bases as its linear part (delta method)."""
+    """Each column by replication, (replications, columns); of a ratio its linear part (delta method)."""
     whole = network_sums(sums)
     parts = {NETWORK: whole} | {name: of_unit(sums, place) for place, name in enumerate(scenario.unit_names)}
     return np.column_stack([_linear(one.measure, parts[one.where]) for one in columns])

@@ -67,7 +67,10 @@ def comparison_document(
         "could_be_best": [_chance(one) for one in best],
         "refusals_against_transfers": [_efficiency(one) for one in efficient],
         "by_home": list(_by_home(comparison)),
-        "findings": [*_same_rules(comparison.cases), *_of_best(best, welfare.reads, comparison.confidence), *_of_efficient(efficient)],
+        "findings": [
+            *_same_rules(comparison.cases), *_of_best(best, welfare.reads, comparison.confidence),
+            *_of_efficient(efficient),
+        ],
     }  # fmt: skip
 
 

@@ -74,7 +74,8 @@ def years_turned_away(document: Mapping[str, Any], ax: Axes) -> Axes:
     for place, (policy, years) in enumerate(found["turned_away_by_year"].items()):
         share = np.arange(1, len(years) + 1) / len(years)
         ax.step(years, share, where="post", color=COLOURS[place % len(COLOURS)],
-                linestyle=LINES[place % len(LINES)], label=short(policy))  # fmt: skip
+                linestyle=LINES[place % len(LINES)], marker=MARKERS[place % len(MARKERS)], markevery=[],
+                markeredgecolor="black", label=short(policy))  # fmt: skip
         [bad] = [
             one["bad_year"] for one in found["rows"]
             if (one["policy"], one["where"], one["measure"]) == (policy, "network", "turned away")
@@ -133,7 +134,9 @@ def save_comparison(document: Mapping[str, Any], folder: Path) -> list[Path]:
         for ax, (measure, reads) in zip(axes, _NETWORK.items(), strict=True):
             difference_forest(document, ax, measure=measure, reads=reads)
         share = f"{100 * document['confidence']:g} %"
-        figure.suptitle(f"Bands hold for all differences at once ({share}); filled: told apart", fontsize=9)
+        figure.suptitle(
+            f"Bands hold for all differences at once ({share}); filled: told apart; x: no band", fontsize=9
+        )
         written += save(figure, folder, "comparison-differences")
     written += _saved(folder, "comparison-refusals", (6.5, 5.5), refusals_against_transfers, document)
     if document["worst_year"] is not None:

@@ -110,10 +110,7 @@ def _case(
 ) -> Case:
     if name in rows:
         return Case(name, scenario.under(name), scenario.policy(name))
-    if name in BUILT:
-        policy = BUILT[name](scenario, base)
-    else:
-        policy = base.with_thresholds(thresholds[name])
+    policy = BUILT[name](scenario, base) if name in BUILT else base.with_thresholds(thresholds[name])
     return Case(name, scenario, dataclasses.replace(policy, name=name))
 
 

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import replace
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -32,17 +31,20 @@ MOST_REPLICATIONS = 10_000
 @click.option("--years", type=click.IntRange(2, 1_000_000), metavar="N",
               help="Also run N years, for what the worst year in ten brings.")  # fmt: skip
 @click.option("--input-uncertainty", type=click.IntRange(100, 100_000), metavar="B",
-              help="Also resample the recorded stays B times: what of the error no replication can take away.")  # fmt: skip
+              help="Also resample recorded stays B times: what of the error no replication takes away.")  # fmt: skip
 @click.option("--runs-each", type=click.IntRange(2, 10_000), default=5, show_default=True,
               help="Replications of each resampling.")  # fmt: skip
-def compare(request: Request, policies: tuple[str, ...], game_folder: Path | None, difference: float | None,
-            first_stage: int, most: int, years: int | None, input_uncertainty: int | None, runs_each: int) -> None:  # fmt: skip
+def compare(
+    request: Request, policies: tuple[str, ...], game_folder: Path | None, difference: float | None,
+    first_stage: int, most: int, years: int | None, input_uncertainty: int | None, runs_each: int,
+) -> None:  # fmt: skip
     """Policies side by side: the same patients meet each of them, and every difference is paired.
 
     The file's own rules come first (with any --threshold or --incoming), then its policies, which may have beds of
     their own.
     """
     from analysis.command.compare_display import show
+    from analysis.command.jobs import Jobs
     from analysis.command.provenance import provenance, started
     from analysis.command.running import finish, require
     from analysis.comparison import PairedRuns
@@ -103,50 +105,8 @@ def jobs(request: Request, own: Mapping[str, Any]) -> list[tuple[Any, Sequence[A
     return [(one.scenario, one.policies) for one in [*grouped(cases), *(grouped(years) if years else [])]]
 
 
-class Jobs:
-    """The jobs of one command, one after another; Ctrl-C in one ends them all."""
-
-    def __init__(self, request: Request) -> None:
-        self.request = request
-        self._runs: list[Any] = []
-
-    @property
-    def interrupted(self) -> bool:
-        """Whether Ctrl-C has ended the work."""
-        return bool(self._runs) and self._runs[-1].interrupted
-
-    def run(self, groups: Sequence[Any], taker: Callable[[int], Any], *, label: str, start: int = 0) -> None:
-        """Runs each group's policies on its network; `taker(place)` is what takes a group's replies."""
-        from analysis.command.running import run_replications
-
-        for place, group in enumerate(groups):
-            if self.interrupted:
-                return
-            own = replace(self.request, scenario=group.scenario, policy=group.policies[0])
-            take = taker(place)
-            self._runs.append(
-                run_replications(own, group.policies, label=label, take=take, keep=True, start=start)
-            )
-
-    def add(self, ran: Any) -> None:
-        """A job that was run in another way."""
-        self._runs.append(ran)
-
-    def joined(self) -> Any:
-        """How all of them were run, as one."""
-        first = self._runs[0]
-        kept = first.reused is not None
-        return replace(
-            first,
-            failures=[one for ran in self._runs for one in ran.failures],
-            interrupted=self.interrupted,
-            computed=sum(ran.computed or 0 for ran in self._runs) if kept else None,
-            reused=sum(ran.reused or 0 for ran in self._runs) if kept else None,
-        )
-
-
 def _selection(
-    jobs_done: Jobs,
+    jobs_done: Any,
     comparison: Any,
     replications: Sequence[int],
     difference: float | None,
@@ -168,7 +128,7 @@ def _selection(
 
 
 def _worst_year(
-    jobs_done: Jobs, cases: Sequence[Any], sums: Sequence[Any], years: int | None
+    jobs_done: Any, cases: Sequence[Any], sums: Sequence[Any], years: int | None
 ) -> dict[str, Any] | None:
     """Runs of a year each; without --years those of the comparison, where they are of a year."""
     from analysis.comparison import PairedRuns
@@ -196,7 +156,7 @@ def _check_observed(request: Request, resamples: int | None) -> None:
 
 
 def _input_share(
-    jobs_done: Jobs, comparison: Any, resamples: int | None, runs_each: int
+    jobs_done: Any, comparison: Any, resamples: int | None, runs_each: int
 ) -> dict[str, Any] | None:
     """Runs on resampled records, for the share of the error that comes from the data."""
     from analysis.command.running import run_resampled
