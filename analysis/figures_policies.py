@@ -98,7 +98,7 @@ def ledger_matrix(document: Mapping[str, Any], ax: Axes, *, counted: str, reads:
     cells = {(one["closes"], one["home"]): one for one in document["matrix"] if one["counted"] == counted}
     values = np.array([[cells[row, column]["a_year"]["mean"] for column in units] for row in units])
     texts = [[_cell(cells[row, column]) for column in units] for row in units]
-    most = max(1e-9, float(np.abs(values).max()))
+    most = max([1e-9, *(abs(one["a_year"]["mean"]) for one in document["matrix"] if one["home"] in units)])
     names = [short(unit) for unit in units]
     sns.heatmap(
         values, ax=ax, cmap="PuOr", vmin=-most, vmax=most, annot=np.array(texts), fmt="", linewidths=0.5,
@@ -116,7 +116,9 @@ def ledger_matrix(document: Mapping[str, Any], ax: Axes, *, counted: str, reads:
 
 def _cell(one: Mapping[str, Any]) -> str:
     number = one["a_year"]
-    text = f"{number['mean']:+.1f}" + ("" if one["verdict"] == "cannot be told apart" else " *")
+    text = f"{number['mean']:+.1f}".replace("+0.0", "0.0").replace("-0.0", "0.0") + (
+        "" if one["verdict"] == "cannot be told apart" else " *"
+    )
     return text if number["low"] is None else f"{text}\n{number['low']:.1f} to {number['high']:.1f}"
 
 
@@ -159,4 +161,8 @@ def save_ledger(document: Mapping[str, Any], folder: Path) -> list[Path]:
     counted: Sequence[tuple[str, str]] = (("turned away", "turned away"), ("moved", "moved"))
     for ax, (key, reads) in zip(axes, counted, strict=True):
         ledger_matrix(document, ax, counted=key, reads=reads)
+    share = f"{100 * document['confidence']:g} %"
+    figure.suptitle(
+        f"*: told apart from 0; bands hold for all cells at once ({share}); no band: too rare", fontsize=9
+    )
     return save(figure, folder, "ledger")
