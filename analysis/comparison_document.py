@@ -20,6 +20,7 @@ from analysis.comparison import (
     efficient_set,
 )
 from analysis.confidence import Estimate
+from analysis.findings import Finding
 from analysis.goals import welfare_of
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, network_sums
 from analysis.named_policies import Case
@@ -68,10 +69,19 @@ def comparison_document(
         "refusals_against_transfers": [_efficiency(one) for one in efficient],
         "by_home": list(_by_home(comparison)),
         "findings": [
-            *_same_rules(comparison.cases), *_of_best(best, welfare.reads, comparison.confidence),
-            *_of_efficient(efficient),
+            Finding(said, None, "policies", _basis(comparison)).to_dict()
+            for said in (
+                *_same_rules(comparison.cases), *_of_best(best, welfare.reads, comparison.confidence),
+                *_of_efficient(efficient),
+            )
         ],
     }  # fmt: skip
+
+
+def _basis(comparison: Comparison) -> str:
+    return (
+        f"{len(comparison.welfare)} paired replications, {100 * comparison.confidence:g} %, all bands at once"
+    )
 
 
 def _policy(case: Case, sums: Sums, confidence: float) -> dict[str, Any]:

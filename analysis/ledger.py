@@ -18,6 +18,7 @@ import numpy as np
 from analysis.anarchy import DAYS_A_YEAR
 from analysis.comparison import NETWORK, NOT_TOLD_APART, banded
 from analysis.confidence import Estimate
+from analysis.findings import Finding
 from analysis.measures import Sums
 from analysis.named_policies import Case, full
 from sim import engines
@@ -273,7 +274,10 @@ def ledger_document(
         "simultaneous": True,
         "displaced": [dataclasses.asdict(one) for one in displaced],
         "traced_replications": traced,
-        "findings": list(_reads(matrix, early)),
+        "findings": [
+            Finding(said, None, "patients a year", "paired replications, all bands at once").to_dict()
+            for said in _reads(matrix, early)
+        ],
     }
 
 

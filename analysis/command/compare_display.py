@@ -26,7 +26,7 @@ def show(document: dict[str, Any]) -> None:
     _show_best(document)
     _show_efficient(document)
     for finding in document["findings"]:
-        put_text(finding + ".")
+        put_text(finding["statement"] + ".")
     _show_selection(document["selection"])
     _show_worst_year(document["worst_year"])
     _show_input(document["input_uncertainty"])

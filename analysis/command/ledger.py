@@ -155,7 +155,7 @@ def _show(document: dict[str, Any]) -> None:
     _show_matrix(document, "turned away")
     _show_matrix(document, "moved")
     for finding in document["findings"]:
-        put_text(finding + ".")
+        put_text(finding["statement"] + ".")
     put_text("")
     _show_displaced(document)
     _show_episode(document["episode"])
@@ -186,7 +186,7 @@ def _show_matrix(document: dict[str, Any], counted: str) -> None:
 def _show_displaced(document: dict[str, Any]) -> None:
     rows = document["displaced"]
     put_table(
-        f"Whom it displaces, from {document['traced_replications']} replications followed patient by patient",
+        f"Whom it displaces (replications followed patient by patient: {document['traced_replications']})",
         ("unit that closes", "group", "home", "without the closing", "with it", "patients a year"),
         [
             (one["closes"], one["group"], one["home"], one["without"], one["now"], number(one["a_year"], 1))

@@ -151,6 +151,7 @@ def test_the_document_says_who_pays():
     with_it["diverted_out"] = with_it["diverted_out"] + rng.normal(size=(30, 2))
     matrix = costs(HAND, [with_it, without, with_it], 0.95, rng)
     said = ledger_document(HAND, HAND.policy(), matrix, [], 0)["findings"]
+    said = [one["statement"] for one in said]
     assert len(said) == 1 and "more of A's patients moved a year" in said[0] and "B's patients" not in said[0]
     nobody = dataclasses.replace(HAND.policy().with_thresholds({"A": 2}))
-    assert "No unit closes early" in ledger_document(HAND, nobody, matrix, [], 0)["findings"][0]
+    assert "No unit closes early" in ledger_document(HAND, nobody, matrix, [], 0)["findings"][0]["statement"]
