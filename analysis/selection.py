@@ -58,17 +58,17 @@ def select(
     first = values[:first_stage]
     spread = (first[:, :, None] - first[:, None, :]).var(axis=0, ddof=1)
     ratio = h_squared * spread / difference**2
-    most = int(math.floor(ratio.max())) + 1
     alive, dropped = list(range(policies)), {}
-    for r in range(first_stage, min(replications, max(most, first_stage)) + 1):
-        means = values[:r, alive].mean(axis=0)
-        slack = np.maximum(0.0, difference / (2 * r) * (ratio[np.ix_(alive, alive)] - r))
+    for r in range(first_stage, replications + 1):
+        own = ratio[np.ix_(alive, alive)]
+        means, slack = values[:r, alive].mean(axis=0), np.maximum(0.0, difference / (2 * r) * (own - r))
         stays = np.all(means[:, None] >= means[None, :] - slack, axis=1)
         dropped |= {place: r for place, keep in zip(alive, stays, strict=True) if not keep}
+        most = int(own[np.ix_(stays, stays)].max()) + 1  # from there on only the largest mean stays
         alive = [place for place, keep in zip(alive, stays, strict=True) if keep]
         if len(alive) == 1 or r >= most:
             best = alive[int(np.argmax(values[:r, alive].mean(axis=0)))]
-            return Selection(best, tuple(alive), r, most, dropped)
+            return Selection(best, tuple(alive), r, max(r, most), dropped)
     return Selection(None, tuple(alive), replications, most, dropped)
 
 

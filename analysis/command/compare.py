@@ -22,7 +22,7 @@ MOST_REPLICATIONS = 10_000
               "refused, no sharing.")  # fmt: skip
 @click.option("--game", "game_folder", type=click.Path(path_type=Path, file_okay=False), metavar="FOLDER",
               help="Where `game --out` left the equilibria [default: solved exactly, where they can be].")  # fmt: skip
-@click.option("--difference", type=FiniteRange(0, min_open=True), metavar="D",
+@click.option("--difference", type=FiniteRange(1e-6), metavar="D",
               help="Pick one policy: the least that matters, in patients (or welfare) a year.")  # fmt: skip
 @click.option("--first-stage", type=click.IntRange(5, 10_000), default=20, show_default=True,
               help="Replications before --difference drops any policy.")  # fmt: skip
