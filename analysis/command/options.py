@@ -114,7 +114,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
     scenario = read_scenario(values["scenario"])
     faults: list[Fault] = []
     changes = {key: values[key] for key in ("seed", "replications", "confidence") if values[key] is not None}
-    scenario = scenario.with_run(**changes)
+    scenario = _under(scenario.with_run(**changes), values["policy"])
     scenario = _with_demand(scenario, values["demand"], faults)
     scenario = _with_target(scenario, values["target"], faults)
     if values["exponential"]:
@@ -190,6 +190,14 @@ def _with_target(scenario: Any, target: float | None, faults: list[Fault]) -> An
         )
         return scenario
     return scenario.with_target(target)
+
+
+def _under(scenario: Any, name: str | None) -> Any:
+    """The network that the policy is for; of an unknown policy `_policy` tells."""
+    try:
+        return scenario.under(None if name is None else unicodedata.normalize("NFC", name))
+    except KeyError:
+        return scenario
 
 
 def _policy(scenario: Any, name: str | None, faults: list[Fault]) -> Any:

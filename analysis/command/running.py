@@ -16,7 +16,7 @@ from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.provenance import fingerprint, now
-from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
+from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_networks, replicate_shares
 from sim.resuming import Job
 from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
@@ -195,6 +195,30 @@ def _run(
     with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
             take(reply)
+            if isinstance(reply, Failure):
+                failures.append(reply)
+                say(f"failed: {reply}")
+            bar.advance(len(reply.cells) if isinstance(reply, Failure) else len(reply))
+    return Ran(planned.engine, failures, replies.interrupted)
+
+
+def run_resampled(request: Request, resampling: Any) -> Ran:
+    """Runs the few replications of every resampling; none of them is kept in a store."""
+    cells = resampling.runs // len(resampling.replications)
+    planned = effort(request, len(resampling.replications), cells)
+    engine, failures = planned.engine.name, []
+    engines.load(engine).warm(
+        lower_network(request.scenario),
+        [lower_policy(request.scenario, request.policy)],
+        plan_intake(request.scenario),
+    )
+    jobs = ((key, group.scenario, group.policies) for key, group in resampling.networks())
+    replies = until_interrupted(
+        replicate_networks(jobs, resampling.replications, engine=engine, workers=planned.workers)
+    )
+    with replies, progress("resampled records", resampling.runs, "runs") as bar:
+        for key, reply in replies:
+            resampling.take(key, reply)
             if isinstance(reply, Failure):
                 failures.append(reply)
                 say(f"failed: {reply}")
