@@ -28,6 +28,7 @@ class Cost:
 
     optimum: every profile within the tolerance of the best welfare. worst, best: the equilibria with the
     lowest and the highest welfare (None without one). lost_per_year: welfare forgone at the worst, a year.
+    is_projected: whether intervals hold over all equilibria that are possible, not for the listed profiles alone.
     """
 
     optimum: tuple[Profile, ...]
@@ -36,6 +37,7 @@ class Cost:
     price_of_anarchy: Estimate
     price_of_stability: Estimate
     lost_per_year: Estimate
+    is_projected: bool = False
 
 
 def cost_of_selfishness(
@@ -121,10 +123,15 @@ class _Pair:
 
 @dataclass(frozen=True)
 class TurningWeight:
-    """The transfer weight at which coordinating for throughput stops paying; None with a reason where it never does."""
+    """The transfer weight at which coordinating for throughput stops paying; None with a reason where it never does.
+
+    low, high: its interval, where replications give one.
+    """
 
     weight: float | None
     reason: str | None = None
+    low: float | None = None
+    high: float | None = None
 
 
 def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profile | None) -> TurningWeight:

@@ -9,6 +9,7 @@ from typing import Any
 from analysis.anarchy import NO_EQUILIBRIUM
 from analysis.confidence import Estimate
 from analysis.games import ESTIMATED, GameAnalysis
+from analysis.prices_document import projected_sentences, turning_interval
 from analysis.sets_document import sets_sentences
 
 POINT_ESTIMATE_WARNING = (
@@ -21,6 +22,7 @@ SETS_NOTE = (
     "confirmed one has, with the stated confidence, no gain from deviating above epsilon. Best responses "
     "and payoffs in the table are point estimates. More replications shorten the list."
 )
+NO_INTERVAL = "a point estimate; no interval is worked out"
 SELECTION_CAVEAT = (
     ", for the profiles listed here only: that these may be the wrong ones is not in the interval"
 )
@@ -78,6 +80,9 @@ def _basis(game: GameAnalysis) -> str:
 
 def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
     cost, welfare = game.cost, game.table.welfare_goal
+    if cost.is_projected:
+        yield from (Finding(*one, basis) for one in projected_sentences(cost, welfare, game.sets))
+        return
     if cost.worst is None:
         yield Finding(f"No price of anarchy: {NO_EQUILIBRIUM}", None, "ratio", basis)
         return
@@ -109,13 +114,13 @@ def _turning(game: GameAnalysis, basis: str) -> Finding:
     turning = game.turning
     where = "" if game.is_exact else " in the estimated table"
     if turning.weight is None:
-        said = f"No transfer weight turns the verdict{where}: {turning.reason}"
+        said = f"No transfer weight turns the verdict{where}: {turning.reason}" + turning_interval(turning)
         return Finding(said, None, "weight", basis)
     return Finding(
         f"The verdict turns{where} at a transfer weight of {turning.weight:.3f}: where one transfer counts for more "
         "than that many patients turned away, the profile that turns fewest away is no better than the worst listed "
-        "equilibrium",
-        Estimate(turning.weight, reason=None if game.is_exact else "a point estimate; no interval is worked out"),
+        f"equilibrium{turning_interval(turning)}",
+        Estimate(turning.weight, turning.low, turning.high, None if game.is_exact else turning.reason or NO_INTERVAL),
         "patients turned away per transfer",
         basis,
     )  # fmt: skip

@@ -20,6 +20,7 @@ from analysis.equilibria import (
 )
 from analysis.noticing import YEARS, noticeable_gain, yearly_spread
 from analysis.payoffs import Outcomes, PayoffTable
+from analysis.prices import projected_cost, projected_turning
 from analysis.sets import ConfirmedSet, PossibleSet, RegretBounds, confirmed, possible, regret_bounds, spend
 
 EXACT, ESTIMATED, POSSIBLE, CONFIRMED = "exact", "estimated", "possible", "confirmed"
@@ -151,13 +152,17 @@ def analyse(
         degrees=table.degrees,
         confidence=confidence,
     )
+    turning = turning_weight(*network, cost.worst)
+    if sets is not None:
+        known = (found, table, sets.possible.mask, 1 - confidence, seed)
+        cost, turning = projected_cost(cost, *known), projected_turning(*known)
     regret = regrets(table.payoffs, sense)
     return GameAnalysis(
         table,
         tuple(_equilibrium(table, profile, regret, sets, confidence) for profile in listed),
         tuple(best_responses(table.payoffs, sense, tolerance=tolerance)),
         cost,
-        turning_weight(*network, cost.worst),
+        turning,
         tolerance,
         confidence,
         tuple(found),

@@ -89,7 +89,8 @@ class PayoffTable:
     welfare_replicates: (replications, *shape) or None. outcomes: by cell. All replicates are after control variates,
     where there are any (`controls`), such that their plain mean and error hold with `degrees` degrees of freedom.
     signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
-    raw_replicates: these, or else the replicates, before control variates. measured_days: of each replication.
+    raw_replicates: these, or else the replicates, before control variates. turned_away_replicates,
+    transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each replication.
     """
 
     profiles: Profiles
@@ -104,6 +105,8 @@ class PayoffTable:
     welfare_replicates: np.ndarray | None = None
     signed_replicates: np.ndarray | None = None
     raw_replicates: np.ndarray | None = None
+    turned_away_replicates: np.ndarray | None = None
+    transfers_replicates: np.ndarray | None = None
     controls: Controls | None = None
     beside_counterpart: bool = False
     measured_days: float = 365.0
@@ -173,6 +176,7 @@ def simulated_table(
         if signed is not None:
             point, low, high = _folded(point, low, high)
     shape = profiles.shape
+    away, moved = (_network(a_day[name], controls, shape) for name in ("turned_away", "diverted_out"))
     return PayoffTable(
         profiles, goal, welfare,
         payoffs=_by_player(point, shape),
@@ -184,10 +188,18 @@ def simulated_table(
         welfare_replicates=worth.reshape(len(worth), *shape),
         signed_replicates=None if signed is None else _by_player(signed, shape),
         raw_replicates=_by_player(raw, shape),
+        turned_away_replicates=away,
+        transfers_replicates=moved,
         controls=controls,
         beside_counterpart=counterpart is not None,
         measured_days=float(sums["days"].flat[0]),
     )  # fmt: skip
+
+
+def _network(rates: np.ndarray, controls: Controls | None, shape: tuple[int, ...]) -> np.ndarray:
+    """A rate's sum over the units by replication, (replications, *shape)."""
+    total = rates.sum(axis=-1)
+    return (total if controls is None else controls.adjust(total)).reshape(len(rates), *shape)
 
 
 def _adjusted_payoffs(

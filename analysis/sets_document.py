@@ -12,6 +12,7 @@ from analysis.controls import controls_document, variance_ratio
 from analysis.games import Equilibrium, GameAnalysis, Sets
 from analysis.noticing import years_to_notice
 from analysis.payoffs import PayoffTable
+from analysis.profiles import chosen_at, told
 
 NO_GAIN = "nothing to notice: no gain from deviating"
 FEW = 10  # replications, below which nothing is excluded
@@ -30,14 +31,14 @@ def sets_document(game: GameAnalysis) -> dict[str, Any]:
         "undecided": [_undecided(game, one) for one in game.undecided],
         "possible": int(game.sets.possible.mask.sum()),
         "confirmed": int((game.sets.confirmed.mask & game.sets.possible.mask).sum()),
-        "confirmed_only": [game.table.profiles.thresholds(profile) for profile in _confirmed_only(game.sets)],
+        "confirmed_only": [told(game.table.profiles, profile) for profile in _confirmed_only(game.sets)],
         "epsilon": {"value": game.sets.confirmed.epsilon, "origin": game.sets.origin},
         "set_confidence": {
             "both": game.confidence,
             "possible": 1 - game.sets.possible.level,
             "confirmed": 1 - game.sets.confirmed.level,
         },
-        "estimated_equilibria": [game.table.profiles.thresholds(profile) for profile in game.found],
+        "estimated_equilibria": [told(game.table.profiles, profile) for profile in game.found],
         "controls": controls_document(game.table.controls, _won(game.table)),
     }
 
@@ -49,7 +50,7 @@ def _confirmed_only(sets: Sets) -> list[tuple[int, ...]]:
 
 def _undecided(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:
     return {
-        "thresholds": dict(one.thresholds),
+        **chosen_at(game.table.profiles, one.profile),
         "regret": {player: regret.to_dict() for player, regret in one.regret.items()},
     } | years_document(game, one)
 

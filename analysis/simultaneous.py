@@ -16,6 +16,7 @@ from scipy.special import ndtr, stdtr
 from analysis.confidence import t_quantile
 
 DRAWS = 1000
+PURPOSE = 7  # beside the seed, so that multipliers share no stream with anything else
 CELLS_AT_ONCE = 4_000_000  # numbers held by one block of draws x contrasts
 
 
@@ -35,6 +36,11 @@ class Studentised:
     def degrees(self) -> int:
         """Degrees of freedom of each error."""
         return len(self.scores) - 1
+
+
+def rng_of(seed: int) -> np.random.Generator:
+    """The generator of a result's multipliers: of the scenario's seed, so that a result repeats."""
+    return np.random.default_rng([seed, PURPOSE])
 
 
 def studentise(values: np.ndarray) -> Studentised:

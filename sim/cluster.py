@@ -103,9 +103,11 @@ class Cluster:
         for address, (machine, its_bits) in self._workers.items():
             desk.join(address, its_bits, machine.threads[address])
         self._began = self._present_at = time.monotonic()
+        self._told = 0.0
         try:
             while not desk.finished:
                 yield from self._round(function, desk)
+            self.watch(self.sentence(time.monotonic()))
         finally:
             self._forget_link()  # with it, orders under way are dropped everywhere
 

@@ -17,6 +17,13 @@ from analysis.command.counterpart import (
     show_counterpart,
 )
 from analysis.command.entry import CheckFailed, Interrupted, say
+from analysis.command.game_beyond import (
+    beyond_options,
+    look_beyond,
+    require_a_table,
+    show_beyond,
+    write_pictures,
+)
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
@@ -51,9 +58,10 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
+@beyond_options
 def game(
     request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, counterpart: bool,
-    control: bool, search: str | None, phase_fit: int | None,
+    control: bool, search: str | None, phase_fit: int | None, **wanted: Any,
 ) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
@@ -89,6 +97,7 @@ def game(
     request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
+        require_a_table(wanted)
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
@@ -97,6 +106,7 @@ def game(
     analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
+    found = look_beyond(request, analysis, document, **wanted)
     if best is not None:
         document["control"] = beside(best, analysis)
     if choice is not None:
@@ -104,10 +114,11 @@ def game(
     if request.as_json:
         put_json(document)
     else:
-        _show(analysis, document)
+        _show(analysis, document, found)
     if request.out is not None:
         engine = "exact chain" if ran is None else ran.engine.name
         _write(request, analysis, document, provenance(request, "game", begun, engine=engine))
+        write_pictures(request.out, found)
         if best is not None:
             write_rule(best, request.out)
     if ran is not None:
@@ -201,7 +212,7 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
         say("payoff pictures are drawn for two players only; the table is in table.csv")
 
 
-def _show(analysis: Any, document: dict[str, Any]) -> None:
+def _show(analysis: Any, document: dict[str, Any], found: Any) -> None:
     from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING, SETS_NOTE
 
     put_heading(document)
@@ -223,6 +234,7 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
     _show_outcomes(document)
     for finding in document["findings"]:
         put_text(finding["statement"] + ".")
+    show_beyond(document, found)
     if "control" in document:
         show_control(document)
     if "structure" in document:
@@ -316,7 +328,8 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
 def _show_equilibria(document: dict[str, Any]) -> None:
     from analysis.profiles import text_of
 
-    players, listed = document["players"], document["equilibria"][:MOST_LISTED]
+    players, pure = document["players"], [one for one in document["equilibria"] if one["kind"] == "pure"]
+    listed = pure[:MOST_LISTED]
     put_table(
         f"Equilibria ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating alone; "
         "welfare a day)",
@@ -327,8 +340,8 @@ def _show_equilibria(document: dict[str, Any]) -> None:
             for one in listed
         ],
     )  # fmt: skip
-    if len(document["equilibria"]) > MOST_LISTED:
-        put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+    if len(pure) > MOST_LISTED:
+        put_text(f"... and {len(pure) - MOST_LISTED} more (all are in --json and --out).")
 
 
 def _chosen(document: dict[str, Any]) -> str:

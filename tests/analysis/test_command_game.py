@@ -263,13 +263,17 @@ def files_in(folder):
     return {path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()}
 
 
-PICTURES = {f"payoffs-{player}.{ending}" for player in (1, 2) for ending in ("png", "svg")}
+CURVE = {"price-over-weights.png", "price-over-weights.svg"}
+PICTURES = CURVE | {
+    f"{name}.{ending}" for name in ("payoffs-1", "payoffs-2", "replies") for ending in ("png", "svg")
+}
 
 
 def test_results_are_written_to_a_folder(call, two, tmp_path):
     folder = tmp_path / "out"
     _, document = call("game", two, "--exact", "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | PICTURES
+    store = {"runs.sqlite", "runs.lock"}
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | store | PICTURES
     kept = json.loads((folder / "result.json").read_text(encoding="utf-8"), parse_constant=no_constants)
     assert kept == document
     origin = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))
@@ -298,10 +302,10 @@ def test_a_second_run_keeps_the_earlier_result_and_leaves_other_files_alone(call
         assert json.loads((folder / place / "result.json").read_text(encoding="utf-8")) == document
 
 
-def test_three_units_have_a_table_but_no_pictures(call, three, tmp_path):
+def test_three_units_have_a_table_but_no_pictures_of_two_axes(call, three, tmp_path):
     folder = tmp_path / "out"
     call("game", three, "--replications", 2, "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | STORE
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | CURVE | STORE
     header = (folder / "table.csv").read_text(encoding="utf-8").splitlines()[0].split(",")
     assert {"threshold C", "payoff C", "payoff C low", "payoff C high", "regret C", "welfare"} <= set(header)
 
