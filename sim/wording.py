@@ -142,3 +142,8 @@ def _example(field: FieldInfo | None, key: str) -> str | None:
     values = {"mean": "3.9", "rates": "[0.8, 0.2]"}
     known = [value for start, value in values.items() if field and key.startswith(f"{start}_")]
     return f"{key} = {known[0]}" if known else None
+
+
+def count(whole: int) -> str:
+    """A count, in full or, where it is vast, as a power of ten."""
+    return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"

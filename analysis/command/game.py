@@ -43,7 +43,6 @@ from analysis.command.phase_fit import fitted, option, show_fits
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
 LONG_YEARS = 100  # of watching, beyond which the number says nothing more
-MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
 @option
@@ -130,32 +129,15 @@ def game(
 command = scenario_command(game)
 
 
-def _axes(request: Request) -> tuple[Any, Any, Any]:
-    """Profiles, goal and welfare; ScenarioError where the game is too large or a target is missing."""
-    from analysis.goals import goal_of, welfare_of
-    from analysis.payoffs import MOST_CELLS, profiles_of
-    from sim.errors import Fault, ScenarioError
-
-    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario, request.policy)
-    if profiles.cells > MOST_CELLS:
-        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
-        remedy = "list fewer thresholds for some units"
-        raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
-    if len(profiles.players) > MOST_PLAYERS:
-        rule, got = f"a game may have at most {MOST_PLAYERS} units", f"got {len(profiles.players)}"
-        remedy = "describe the part of the region that matters"
-        raise ScenarioError([Fault(None, "units", rule, got, remedy)], request.scenario.source.file)
-    return profiles, goal, welfare_of(request.scenario)
-
-
 def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
-    from analysis.payoffs import TableSums, simulated_table
-    from sim.record import hash_records
+    from analysis.game_tables import axes_of, table_document
+    from analysis.payoffs import TableSums
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = _axes(request)
+    axes = axes_of(request.scenario, request.policy)
+    profiles = axes.profiles
     for said in advice(request.scenario):
         say(f"advice: {said}")
     beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
@@ -169,24 +151,17 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
     also, checked = None, {}
     if beside is not None:
         also, checked = run_counterpart_table(beside, profiles, sums, exact, known)
-    table = simulated_table(
-        profiles, goal, welfare, sums.sums(), run.confidence, controls=known, counterpart=also
-    )
-    hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
-    told = {
-        "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
-        "record_hash": hash_records(hashes),
-    } | ran.to_dict() | checked  # fmt: skip
+    table = axes.simulated(sums, run.confidence, controls=known, counterpart=also)
+    told = table_document(sums, request.scenario) | ran.to_dict() | checked
     return table, ran, told
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.payoffs import exact_table
+    from analysis.game_tables import axes_of
 
-    profiles, goal, welfare = _axes(request)
-    cells, kept = _exact_cells(request, profiles)
-    told = {"engine": "exact chain", "interrupted": False} | kept
-    return exact_table(profiles, goal, welfare, cells), None, told
+    axes = axes_of(request.scenario, request.policy)
+    cells, kept = _exact_cells(request, axes.profiles)
+    return axes.exact(cells), None, {"engine": "exact chain", "interrupted": False} | kept
 
 
 def _exact_cells(request: Request, profiles: Any) -> tuple[list[Any], dict[str, int]]:

@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from analysis.command.caution import CAUTION
+from sim.wording import count as count
 
 PLAIN_WIDTH = 132
 WRITTEN = (
@@ -104,11 +105,6 @@ def put_text(*lines: str) -> None:
 def put_caution() -> None:
     """What the figures are not for."""
     put_text("", CAUTION)
-
-
-def count(whole: int) -> str:
-    """A count, in full or, where it is vast, as a power of ten."""
-    return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
 
 
 def number(value: Any, digits: int = 3) -> str:

@@ -19,8 +19,6 @@ from analysis.command.output import (
 )
 from analysis.command.phase_fit import fitted, option, show_fits
 
-LEAST_REPLICATIONS = 5
-
 
 @option
 @click.option(
@@ -35,20 +33,13 @@ def verify(request: Request, false_alarm_rate: float | None, phase_fit: int | No
     from analysis.chain import solve
     from analysis.command.provenance import provenance, started
     from analysis.command.running import collect_runs, finish
-    from analysis.verification import FALSE_ALARM_RATE
+    from analysis.verification import FALSE_ALARM_RATE, LEAST_REPLICATIONS, require_replications
     from analysis.verification import verify as compare
-    from sim.errors import Fault, ScenarioError
     from sim.scenario.describe import advice
 
     begun = started()
     request, told = fitted(request, phase_fit)
-    if request.scenario.run.replications < LEAST_REPLICATIONS:
-        rule, got = (
-            f"must be at least {LEAST_REPLICATIONS} to verify",
-            f"got {request.scenario.run.replications}",
-        )
-        remedy = "raise it, for example --replications 30"
-        raise ScenarioError([Fault(None, "run.replications", rule, got, remedy)])
+    require_replications(request.scenario)
     too_short = [said for said in advice(request.scenario) if "warm_up" in said]
     for said in too_short:
         say(f"advice: {said}")
