@@ -1,0 +1,279 @@
+"""A network as a notebook holds it: a scenario with what was changed of it, and the steps that it can take."""
+
+from __future__ import annotations
+
+import dataclasses
+import numbers
+import os
+import shlex
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from analysis.overrides import LIMITS, NOTHING, changes_of, overridden
+from sim.errors import Fault, ScenarioError
+from sim.scenario import Policy, Scenario, read_scenario
+from sim.wording import nearest, shown
+
+if TYPE_CHECKING:
+    from analysis.notebook.results import Agreement, Comparison, Description, Exact, Game, Simulation
+
+ENGINES = ("compiled", "reference")
+
+
+def read(file: str | os.PathLike[str]) -> Network:
+    """The network of a scenario file (TOML), checked whole.
+
+    Raises ScenarioError with every fault of the file and of the data that it names.
+    """
+    scenario = read_scenario(os.fspath(file))
+    return _network(os.fspath(file), scenario, NOTHING)
+
+
+@dataclass(frozen=True, kw_only=True)
+class How:
+    """How a step is run; what is None follows the file, or the size of the job.
+
+    replications: 1 to 1,000,000. seed: of every draw. confidence: of every interval, between 0 and 1. workers: worker
+    processes. engine: "compiled" or "reference" (the same numbers). out: a folder whose store keeps every run as it
+    finishes, and in which the same step goes on after an interrupt. progress: called with (label, done, total) as runs
+    finish.
+    """
+
+    replications: int | None = None
+    seed: int | None = None
+    confidence: float | None = None
+    workers: int | None = None
+    engine: str | None = None
+    out: str | os.PathLike[str] | None = None
+    progress: Callable[[str, int, int], Any] | None = None
+
+    @property
+    def folder(self) -> Path | None:
+        """Where runs are kept; None where they are not."""
+        return None if self.out is None else Path(self.out)
+
+
+@dataclass(frozen=True, repr=False)
+class Network:
+    """A scenario and the policy that it is run by, after every change.
+
+    file: as it was given. base: the scenario as the file has it. overrides: what was changed, by option. Networks are
+    never changed: every `with_` gives another one, and a second call replaces what the first one said. The order of
+    calls does not matter; it is that of the command line.
+    """
+
+    file: str
+    base: Scenario
+    scenario: Scenario
+    policy: Policy
+    overrides: Mapping[str, Any]
+
+    # ---- changes ----
+
+    def with_demand(self, factor: float) -> Network:
+        """Every arrival rate of the file times `factor`; each patient keeps the other draws."""
+        return self._with(demand=factor)
+
+    def with_target(self, target: float) -> Network:
+        """Every unit's target utilisation, above 0 and at most 1."""
+        return self._with(target=target)
+
+    def with_policy(self, name: str) -> Network:
+        """Run by one of the file's policies, with its beds and targets if it has any."""
+        return self._with(policy=name)
+
+    def with_thresholds(self, thresholds: Mapping[str, int]) -> Network:
+        """Closure thresholds by unit, in beds; an incoming threshold follows where the file gives none."""
+        return self._with(threshold=self._entries("threshold", thresholds))
+
+    def with_incoming(self, thresholds: Mapping[str, int]) -> Network:
+        """Incoming thresholds by unit, in beds."""
+        return self._with(incoming=self._entries("incoming", thresholds))
+
+    def exponential(self) -> Network:
+        """The exponential counterpart: stays of the same means, no delay, constant demand; for the exact chain."""
+        return self._with(exponential=True)
+
+    def _entries(self, option: str, chosen: Mapping[str, int]) -> tuple[str, ...]:
+        before = dict(entry.rpartition("=")[::2] for entry in self.overrides[option])
+        return tuple(f"{unit}={threshold}" for unit, threshold in (before | dict(chosen)).items())
+
+    def _with(self, **changes: Any) -> Network:
+        return _network(self.file, self.base, dict(self.overrides) | changes)
+
+    # ---- steps ----
+
+    def describe(self) -> Description:
+        """The network read back in numbers: units, offered load, stays, rules, and advice before it runs."""
+        from analysis.notebook.results import Description
+
+        return Description.of(self)
+
+    def simulate(self, *, controls: bool = True, **how: Any) -> Simulation:
+        """Simulates the policy: every measure with its interval.
+
+        controls: use arrivals and offered work, whose means are known, to narrow every interval. how: see `How`.
+        Raises ScenarioError, RunError where no replication was finished, StoreError where `out` cannot be used.
+        """
+        from analysis.notebook import steps
+
+        return steps.simulate(self, How(**how), controls=controls)
+
+    def exact(self) -> Exact:
+        """The same measures from the exact Markov chain.
+
+        Raises OutOfScope (a BrimlineError) with every reason where it has no answer; `exponential()` has one.
+        """
+        from analysis.notebook import steps
+
+        return steps.exact(self)
+
+    def verify(self, *, false_alarm_rate: float | None = None, **how: Any) -> Agreement:
+        """Holds the simulation against the exact chain, measure by measure.
+
+        false_alarm_rate: the chance that a correct simulator is refused (default: 0.01, or 1 - confidence where that is
+        given). how: see `How`; runs are not kept. Raises as `simulate` and `exact`.
+        """
+        from analysis.notebook import steps
+
+        return steps.verify(self, How(**how), false_alarm_rate=false_alarm_rate)
+
+    def game(
+        self, *, exact: bool = False, tolerance: float = 1e-9, epsilon: float | None = None, controls: bool = True,
+        mixed: bool | None = None, correlated: bool = False, dynamics: bool = False, **how: Any,
+    ) -> Game:  # fmt: skip
+        """The game's whole table, its equilibria, the optimum and the prices of selfish rules.
+
+        exact: by the exact chain. tolerance: regret still allowed in an exact equilibrium, epsilon: in a confirmed one,
+        both in the goal's unit. controls: as in `simulate`. mixed, correlated, dynamics: also these (default: mixed for
+        an exact game of two without a pure equilibrium). how: see `How`. Raises as `simulate` and `exact`.
+        """
+        from analysis.notebook import steps
+
+        asked = steps.GameAsked(exact, tolerance, epsilon, controls, mixed, correlated, dynamics)
+        return steps.game(self, How(**how), asked)
+
+    def compare(
+        self, policies: Iterable[str] = (), *, game: str | os.PathLike[str] | None = None, **how: Any
+    ) -> Comparison:
+        """Policies side by side on the same patients, against the file's own rules; every difference is paired.
+
+        policies: names (default: all of the file's). game: where `brimline game --out` left the equilibria. how: see
+        `How`. Raises as `simulate`.
+        """
+        from analysis.notebook import steps
+
+        return steps.compare(self, How(**how), _names(policies), None if game is None else Path(game))
+
+    # ---- reading ----
+
+    @property
+    def title(self) -> str:
+        """The scenario's title."""
+        return self.scenario.title
+
+    @property
+    def changes(self) -> tuple[str, ...]:
+        """What was changed of the file, in words."""
+        return changes_of(self.overrides)
+
+    def command(self, name: str, *own: str) -> list[str]:
+        """The command line that gives the same numbers; own: further options of that command."""
+        given = [
+            (f"--{key}", value)
+            for key, value in self.overrides.items()
+            if value is not None and value is not False
+        ]
+        options = [part for option, value in given for part in _written(option, value)]
+        return ["brimline", name, self.file, *options, *own]
+
+    def __repr__(self) -> str:
+        said = [self.title or "(no title)", f"{len(self.scenario.units)} units", *self.changes]
+        return f"<Network {'; '.join(said)}>"
+
+    def _repr_html_(self) -> str:
+        return self.describe()._repr_html_()
+
+    # ---- for the steps ----
+
+    def prepared(self, how: How) -> Network:
+        """The network with the run table that `how` asks for; ScenarioError with every fault of it."""
+        faults = [*_faults(how), *_folder_faults(how)]
+        if faults:
+            raise ScenarioError(faults)
+        given = {key: getattr(how, key) for key in ("seed", "replications", "confidence")}
+        return self._with(**given)
+
+
+def _network(file: str, base: Scenario, overrides: Mapping[str, Any]) -> Network:
+    faults = [
+        Fault(None, key, "must be a number", f"got {overrides[key]!r}", "give a number such as 0.8")
+        for key in ("demand", "target")
+        if not isinstance(overrides[key], numbers.Real | None)
+    ]
+    name = overrides["policy"]
+    if not isinstance(name, str | None):
+        faults.append(Fault(None, "policy", "must be a name", f"got {name!r}", "give it in quotes"))
+    if not faults:
+        scenario, policy = overridden(base, overrides, faults)
+    if faults:
+        raise named(faults, file)
+    return Network(file, base, scenario, policy, overrides)
+
+
+def named(faults: Iterable[Fault], file: str) -> ScenarioError:
+    """The error of faults whose keys are options of a command line, which have no dashes here."""
+    return ScenarioError(
+        (dataclasses.replace(fault, key=fault.key.removeprefix("--")) for fault in faults), file
+    )
+
+
+def _names(policies: Iterable[str]) -> tuple[str, ...]:
+    return (policies,) if isinstance(policies, str) else tuple(policies)
+
+
+def _written(option: str, value: Any) -> list[str]:
+    if value is True:
+        return [option]
+    values = value if isinstance(value, tuple) else (value,)
+    return [part for one in values for part in (option, str(one))]
+
+
+def shell(command: list[str]) -> str:
+    """A command line as a shell takes it."""
+    return shlex.join(command)
+
+
+def _faults(how: How) -> list[Fault]:
+    """Values that no run can have."""
+    faults = []
+    for key, (least, most) in LIMITS.items():
+        value = getattr(how, key)
+        whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
+        if value is not None and not (whole and least <= value <= most):
+            rule = f"must be a whole number from {least:,} to {most:,}"
+            faults.append(Fault(None, key, rule, f"got {value!r}", "give another number, or leave it out"))
+    level = how.confidence
+    if level is not None and not (isinstance(level, numbers.Real) and 0 < level < 1):
+        rule, remedy = "must be between 0 and 1", "give a share such as 0.95"
+        faults.append(Fault(None, "confidence", rule, f"got {level!r}", remedy))
+    if how.engine is not None and how.engine not in ENGINES:
+        rule = "must be one of compiled, reference"
+        faults.append(Fault(None, "engine", rule, f"got {shown(how.engine)}", nearest(how.engine, ENGINES)))
+    return faults
+
+
+def _folder_faults(how: How) -> list[Fault]:
+    """A folder in which nothing can be kept, before hours are spent on it."""
+    folder = how.folder
+    if folder is None:
+        return []
+    above = folder
+    while not above.exists() and above != above.parent:
+        above = above.parent
+    if above.is_dir() and os.access(above, os.W_OK):
+        return []
+    rule, remedy = "must be a folder that can be written", "choose another folder"
+    return [Fault(None, "out", rule, f"got {str(folder)!r}", remedy)]
