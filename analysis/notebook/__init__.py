@@ -8,7 +8,8 @@ Every step calls what the command of the same name calls, and gives the same num
 printed. For planning only, not for decisions on a patient or a live bed.
 """
 
-from analysis.notebook.network import How, Network, read
+from analysis.notebook.how import How
+from analysis.notebook.network import Network, read
 from analysis.notebook.results import Agreement, Comparison, Description, Exact, Game, Simulation
 from sim.errors import BrimlineError, RunError, ScenarioError, StoreError
 

@@ -2,24 +2,20 @@
 
 from __future__ import annotations
 
-import dataclasses
 import numbers
 import os
-import shlex
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from analysis.overrides import LIMITS, NOTHING, changes_of, overridden
+from analysis.notebook.how import How, faults_of, named
+from analysis.overrides import NOTHING, changes_of, overridden
 from sim.errors import Fault, ScenarioError
 from sim.scenario import Policy, Scenario, read_scenario
-from sim.wording import nearest, shown
 
 if TYPE_CHECKING:
     from analysis.notebook.results import Agreement, Comparison, Description, Exact, Game, Simulation
-
-ENGINES = ("compiled", "reference")
 
 
 def read(file: str | os.PathLike[str]) -> Network:
@@ -29,30 +25,6 @@ def read(file: str | os.PathLike[str]) -> Network:
     """
     scenario = read_scenario(os.fspath(file))
     return _network(os.fspath(file), scenario, NOTHING)
-
-
-@dataclass(frozen=True, kw_only=True)
-class How:
-    """How a step is run; what is None follows the file, or the size of the job.
-
-    replications: 1 to 1,000,000. seed: of every draw. confidence: of every interval, between 0 and 1. workers: worker
-    processes. engine: "compiled" or "reference" (the same numbers). out: a folder whose store keeps every run as it
-    finishes, and in which the same step goes on after an interrupt. progress: called with (label, done, total) as runs
-    finish.
-    """
-
-    replications: int | None = None
-    seed: int | None = None
-    confidence: float | None = None
-    workers: int | None = None
-    engine: str | None = None
-    out: str | os.PathLike[str] | None = None
-    progress: Callable[[str, int, int], Any] | None = None
-
-    @property
-    def folder(self) -> Path | None:
-        """Where runs are kept; None where they are not."""
-        return None if self.out is None else Path(self.out)
 
 
 @dataclass(frozen=True, repr=False)
@@ -200,8 +172,7 @@ class Network:
 
     def prepared(self, how: How) -> Network:
         """The network with the run table that `how` asks for; ScenarioError with every fault of it."""
-        faults = [*_faults(how), *_folder_faults(how)]
-        if faults:
+        if faults := faults_of(how):
             raise ScenarioError(faults)
         given = {key: getattr(how, key) for key in ("seed", "replications", "confidence")}
         return self._with(**given)
@@ -223,13 +194,6 @@ def _network(file: str, base: Scenario, overrides: Mapping[str, Any]) -> Network
     return Network(file, base, scenario, policy, overrides)
 
 
-def named(faults: Iterable[Fault], file: str) -> ScenarioError:
-    """The error of faults whose keys are options of a command line, which have no dashes here."""
-    return ScenarioError(
-        (dataclasses.replace(fault, key=fault.key.removeprefix("--")) for fault in faults), file
-    )
-
-
 def _names(policies: Iterable[str]) -> tuple[str, ...]:
     return (policies,) if isinstance(policies, str) else tuple(policies)
 
@@ -239,41 +203,3 @@ def _written(option: str, value: Any) -> list[str]:
         return [option]
     values = value if isinstance(value, tuple) else (value,)
     return [part for one in values for part in (option, str(one))]
-
-
-def shell(command: list[str]) -> str:
-    """A command line as a shell takes it."""
-    return shlex.join(command)
-
-
-def _faults(how: How) -> list[Fault]:
-    """Values that no run can have."""
-    faults = []
-    for key, (least, most) in LIMITS.items():
-        value = getattr(how, key)
-        whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
-        if value is not None and not (whole and least <= value <= most):
-            rule = f"must be a whole number from {least:,} to {most:,}"
-            faults.append(Fault(None, key, rule, f"got {value!r}", "give another number, or leave it out"))
-    level = how.confidence
-    if level is not None and not (isinstance(level, numbers.Real) and 0 < level < 1):
-        rule, remedy = "must be between 0 and 1", "give a share such as 0.95"
-        faults.append(Fault(None, "confidence", rule, f"got {level!r}", remedy))
-    if how.engine is not None and how.engine not in ENGINES:
-        rule = "must be one of compiled, reference"
-        faults.append(Fault(None, "engine", rule, f"got {shown(how.engine)}", nearest(how.engine, ENGINES)))
-    return faults
-
-
-def _folder_faults(how: How) -> list[Fault]:
-    """A folder in which nothing can be kept, before hours are spent on it."""
-    folder = how.folder
-    if folder is None:
-        return []
-    above = folder
-    while not above.exists() and above != above.parent:
-        above = above.parent
-    if above.is_dir() and os.access(above, os.W_OK):
-        return []
-    rule, remedy = "must be a folder that can be written", "choose another folder"
-    return [Fault(None, "out", rule, f"got {str(folder)!r}", remedy)]

@@ -3,13 +3,18 @@
 from __future__ import annotations
 
 import copy
+import os
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from analysis.notebook import frames
+from analysis.notebook.how import folder_faults
 from analysis.notebook.page import Grid, page
+from analysis.result_files import RESULT, write_result
 from sim.errors import Fault, ScenarioError
+from sim.provenance import now, provenance
 from sim.scenario.describe import describe
 from sim.wording import nearest, shown
 
@@ -45,6 +50,22 @@ class Result:
     def to_frame(self) -> pd.DataFrame:
         """The result as a tidy frame; columns as the class says."""
         raise NotImplementedError
+
+    def save(self, folder: str | os.PathLike[str]) -> Path:
+        """Writes `result.json` and `provenance.json`, as the command does with --out; returns the folder.
+
+        Raises ScenarioError where a result lies there already, or where nothing can be written.
+        """
+        path = Path(folder)
+        faults = list(folder_faults(path, "folder"))
+        if (path / RESULT).exists():
+            rule, remedy = "must not hold a result already", "choose another folder"
+            faults.append(Fault(None, "folder", rule, f"got {str(path)!r}", remedy))
+        if faults:
+            raise ScenarioError(faults)
+        path.mkdir(parents=True, exist_ok=True)
+        write_result(path, self.document, self.provenance)
+        return path
 
     def __repr__(self) -> str:
         return f"<{type(self).__name__} of {self.document['scenario'] or '(no title)'}: {'; '.join(self._reads())}>"
@@ -303,7 +324,8 @@ class Description(Result):
         """The description of a network."""
         told = describe(network.scenario, network.policy)
         heading = {"scenario": network.title, "changes": list(network.changes), "policy": network.policy.name}
-        return cls(heading | told, {}, tuple(told["advice"]))
+        origin = provenance(network.scenario, command=network.command("check"), engine="none", started=now())
+        return cls(heading | told, origin, tuple(told["advice"]))
 
     def to_frame(self) -> pd.DataFrame:
         """One row a unit."""

@@ -6,7 +6,7 @@ import datetime
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from analysis import running
 from analysis.beyond_pure import Wanted, beyond, beyond_document, with_mixed
@@ -20,7 +20,7 @@ from analysis.game_document import game_document
 from analysis.game_tables import GameAxes, axes_of, table_document
 from analysis.games import analyse
 from analysis.named_policies import Case, cases_of
-from analysis.notebook.network import How, Network, named
+from analysis.notebook.how import How, named
 from analysis.notebook.results import Agreement, Comparison, Exact, Game, Simulation
 from analysis.payoffs import TableSums
 from analysis.simulation import simulation_document, summarise
@@ -33,6 +33,9 @@ from sim.provenance import now, provenance
 from sim.record import hash_records
 from sim.replicate import Run
 from sim.scenario.describe import advice
+
+if TYPE_CHECKING:
+    from analysis.notebook.network import Network
 
 LEAST_COMPARED = 2
 EXACT_CHAIN = "exact chain"

@@ -122,8 +122,25 @@ def test_what_a_notebook_kept_is_verified_and_repeated_by_the_commands(two, tmp_
     read(two).game(replications=2, out=out)
     read(two).compare(["early"], replications=2, out=out)
     assert command(["results", "verify", str(out)]) == 0
+    assert "12 rows computed again, 0 differ" in capsys.readouterr().out
     assert command(["results", "repeat", str(out)]) == 0
-    assert "0 of" not in capsys.readouterr().out
+    assert "4 runs compared, 0 differ, 0 were not there before" in capsys.readouterr().out
+
+
+def test_a_saved_result_is_what_the_command_writes(two, call, tmp_path):
+    result = read(two).simulate(replications=3)
+    assert result.save(tmp_path / "new" / "saved") == tmp_path / "new" / "saved"
+    said_by(call, "simulate", two, "--replications", "3", "--out", tmp_path / "commands")
+    saved, commands = (
+        [json.loads((tmp_path / folder / name).read_text()) for name in ("result.json", "provenance.json")]
+        for folder in ("new/saved", "commands")
+    )
+    assert saved[0]["units"] == commands[0]["units"] and saved[0]["record_hash"] == commands[0]["record_hash"]
+    assert saved[1].keys() == commands[1].keys() and saved[1]["scenario"] == commands[1]["scenario"]
+    with pytest.raises(ScenarioError, match="must not hold a result already"):
+        result.save(tmp_path / "commands")
+    with pytest.raises(ScenarioError, match="must be a folder that can be written"):
+        result.save(two)
 
 
 def test_an_interrupt_leaves_what_was_run(two, tmp_path):
