@@ -91,8 +91,9 @@ class Result:
 
 def _rests_on(document: Mapping[str, Any]) -> str:
     """How many replications are behind a document, and how sure its intervals are."""
+    noun = "replication" if document["replications"] == 1 else "replications"
     return (
-        f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, "
+        f"{document['replications']} {noun}, {100 * document['confidence']:g} % intervals, "
         f"seed {document['seed']}, engine {document['engine']}"
     )
 
@@ -178,7 +179,10 @@ class Agreement(Result):
 
     def _grids(self) -> Iterator[Grid]:
         columns = ("where", "measure", "exact", "mean", "low", "high", "z", "agrees")
-        rows = [[one[column] for column in columns] for one in self.document["measures"]]
+        rows = [
+            [one["where"], one["measure"].replace("_", " "), *(one[column] for column in columns[2:])]
+            for one in self.document["measures"]
+        ]
         yield Grid("Simulation against the exact chain", columns, rows)
 
 
