@@ -5,6 +5,7 @@ from __future__ import annotations
 import datetime
 import difflib
 import re
+import unicodedata
 from collections.abc import Iterable, Mapping
 from typing import Any
 
@@ -142,3 +143,19 @@ def _example(field: FieldInfo | None, key: str) -> str | None:
     values = {"mean": "3.9", "rates": "[0.8, 0.2]"}
     known = [value for start, value in values.items() if field and key.startswith(f"{start}_")]
     return f"{key} = {known[0]}" if known else None
+
+
+_HIDDEN = "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
+
+
+def visible(text: str) -> str:
+    """A text in which nothing acts unseen: control characters, and those that turn text round, as escapes."""
+    return "".join(
+        f"\\u{ord(one):04x}" if one in _HIDDEN or unicodedata.category(one) in ("Cc", "Cs") else one
+        for one in text
+    )
+
+
+def in_spreadsheet(text: str) -> str:
+    """A text as a cell of a CSV file: one that a spreadsheet would take for a formula gets an apostrophe before it."""
+    return f"'{text}" if text[:1] in ("=", "+", "-", "@", "\t", "\r") else text
