@@ -28,6 +28,7 @@ class Cost:
 
     optimum: every profile within the tolerance of the best welfare. worst, best: the equilibria with the
     lowest and the highest welfare (None without one). lost_per_year: welfare forgone at the worst, a year.
+    is_projected: whether intervals hold over all equilibria that are possible, not for the listed profiles alone.
     """
 
     optimum: tuple[Profile, ...]
@@ -36,6 +37,7 @@ class Cost:
     price_of_anarchy: Estimate
     price_of_stability: Estimate
     lost_per_year: Estimate
+    is_projected: bool = False
 
 
 def cost_of_selfishness(
@@ -44,13 +46,15 @@ def cost_of_selfishness(
     equilibria: Sequence[Profile],
     *,
     replicates: np.ndarray | None = None,
+    degrees: int | None = None,
     confidence: float = 0.95,
     tolerance: float = DEFAULT_TOLERANCE,
 ) -> Cost:
     """The cost of the listed equilibria against the optimum.
 
     welfare: mean a day, (*shape). replicates: the same by replication, (replications, *shape); None where the
-    welfare is exact. tolerance: within which the optimum is tied, in the welfare's unit, inclusive. The
+    welfare is exact. degrees: of freedom of their errors (default: replications - 1).
+    tolerance: within which the optimum is tied, in the welfare's unit, inclusive. The
     intervals are paired, for the profiles that the point estimate selects; that it may select wrong ones is
     not in them.
     """
@@ -63,7 +67,7 @@ def cost_of_selfishness(
     best = _numbers(
         np.unravel_index(np.argmax(gains), gains.shape)
     )  # no tie: a tie may be worse by a rounding error
-    pair = _Pair(welfare, sense, replicates, confidence, best)
+    pair = _Pair(welfare, sense, replicates, confidence, best, degrees)
     return Cost(
         optimum,
         ranked[0],
@@ -87,6 +91,7 @@ class _Pair:
     replicates: np.ndarray | None
     confidence: float
     optimum: Profile
+    degrees: int | None = None
 
     def ratio(self, profile: Profile) -> Estimate:
         """Better welfare over worse, with an interval on the log ratio by the delta method."""
@@ -101,7 +106,7 @@ class _Pair:
         if n < 2:
             return Estimate(point, reason=ONE_REPLICATION)
         log_ratio = self._of(better) / above - self._of(worse) / below
-        half = critical_value(self.confidence, n - 1) * standard_error(log_ratio)
+        half = critical_value(self.confidence, self.degrees or n - 1) * standard_error(log_ratio)
         return Estimate(point, max(1.0, point * np.exp(-half)), point * np.exp(half))
 
     def lost_a_year(self, profile: Profile) -> Estimate:
@@ -109,7 +114,8 @@ class _Pair:
         sign = DAYS_A_YEAR if self.sense == "gain" else -DAYS_A_YEAR
         if self.replicates is None:
             return Estimate(float(sign * (self.welfare[self.optimum] - self.welfare[profile])))
-        return mean_estimate(sign * (self._of(self.optimum) - self._of(profile)), self.confidence)
+        lost = sign * (self._of(self.optimum) - self._of(profile))
+        return mean_estimate(lost, self.confidence, degrees=self.degrees)
 
     def _of(self, profile: Profile) -> np.ndarray:
         return self.replicates[(slice(None), *profile)]  # type: ignore[index]
@@ -117,10 +123,15 @@ class _Pair:
 
 @dataclass(frozen=True)
 class TurningWeight:
-    """The transfer weight at which coordinating for throughput stops paying; None with a reason where it never does."""
+    """The transfer weight at which coordinating for throughput stops paying; None with a reason where it never does.
+
+    low, high: its interval, where replications give one.
+    """
 
     weight: float | None
     reason: str | None = None
+    low: float | None = None
+    high: float | None = None
 
 
 def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profile | None) -> TurningWeight:

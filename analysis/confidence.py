@@ -19,11 +19,14 @@ class Estimate:
     reason: str | None = None
 
     def within(self, least: float, most: float) -> Estimate:
-        """The same with its interval cut to what the number can be."""
-        if self.low is None or self.high is None:
+        """The same, its interval too, cut to what the number can be."""
+        if self.low is None or self.high is None or self.mean is None:
             return self
         return Estimate(
-            self.mean, min(max(self.low, least), most), max(min(self.high, most), least), self.reason
+            min(max(self.mean, least), most),
+            min(max(self.low, least), most),
+            max(min(self.high, most), least),
+            self.reason,
         )
 
     def to_dict(self) -> dict[str, float | str | None]:
@@ -45,10 +48,15 @@ def critical_value(confidence: float, degrees: int, *, comparisons: int = 1) -> 
     return float(t_quantile(1 - (1 - confidence) / (2 * comparisons), degrees))
 
 
-def mean_estimate(values: np.ndarray, confidence: float, *, comparisons: int = 1) -> Estimate:
-    """Mean of independent values, (replications,), with Student's interval."""
+def mean_estimate(
+    values: np.ndarray, confidence: float, *, comparisons: int = 1, degrees: int | None = None
+) -> Estimate:
+    """Mean of independent values, (replications,), with Student's interval.
+
+    degrees: of freedom of the error (default: replications - 1).
+    """
     values = np.asarray(values, float)
-    return _estimate(float(values.mean()), values, confidence, comparisons)
+    return _estimate(float(values.mean()), values, confidence, comparisons, degrees)
 
 
 def ratio_estimate(
@@ -62,16 +70,24 @@ def ratio_estimate(
     totals, bases = np.asarray(totals, float), np.asarray(bases, float)
     if bases.sum() <= 0:
         return Estimate(None, reason="nothing to take a share of")
-    ratio = float(totals.sum() / bases.sum())
-    influence = (totals - ratio * bases) / bases.mean()
-    return _estimate(ratio, ratio + influence, confidence, comparisons)
+    values = ratio_values(totals, bases)
+    return _estimate(float(totals.sum() / bases.sum()), values, confidence, comparisons)
 
 
-def _estimate(point: float, values: np.ndarray, confidence: float, comparisons: int) -> Estimate:
+def ratio_values(totals: np.ndarray, bases: np.ndarray) -> np.ndarray:
+    """Values by replication whose mean is the ratio of means and whose spread is its error (delta method)."""
+    ratio = totals.sum() / bases.sum()
+    return ratio + (totals - ratio * bases) / bases.mean()
+
+
+def _estimate(
+    point: float, values: np.ndarray, confidence: float, comparisons: int, degrees: int | None = None
+) -> Estimate:
     """The interval around `point` from the spread of per-replication values."""
     if len(values) < 2:
         return Estimate(point, reason=ONE_REPLICATION)
-    half = critical_value(confidence, len(values) - 1, comparisons=comparisons) * standard_error(values)
+    left = len(values) - 1 if degrees is None else degrees
+    half = critical_value(confidence, left, comparisons=comparisons) * standard_error(values)
     return Estimate(point, point - half, point + half)
 
 

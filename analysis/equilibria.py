@@ -6,6 +6,7 @@ certifies every equilibrium: the regret, the most a player gains by deviating al
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -67,3 +68,27 @@ def deviations(profile: Profile, player: int, strategies: int) -> list[Profile]:
         for one in range(strategies)
         if one != profile[player]
     ]
+
+
+Mix = tuple[np.ndarray, ...]  # a probability per strategy, for each player
+
+
+def expected(cost: np.ndarray, mix: Sequence[np.ndarray], *, keep: Sequence[int] = ()) -> np.ndarray:
+    """The mean of one player's cost, (*shape), over the others' draws; axes of the players in `keep` stay."""
+    for player in reversed(range(len(mix))):
+        if player not in keep:
+            cost = np.tensordot(cost, mix[player], axes=(player, 0))
+    return cost
+
+
+def mixed_regrets(payoffs: np.ndarray, sense: Sense, mix: Mix) -> np.ndarray:
+    """What each player would gain at most by deviating alone from a mix of strategies, (players,), never below 0.
+
+    payoffs: (players, *shape). mix: probabilities of each player's strategies. A pure profile has the same regret
+    as in `regrets`.
+    """
+    gains = []
+    for player, cost in enumerate(as_costs(np.asarray(payoffs, float), sense)):
+        own = expected(cost, mix, keep=(player,))
+        gains.append(max(0.0, float(own @ mix[player] - own.min())))
+    return np.array(gains)

@@ -160,7 +160,7 @@ def save_verification(document: Mapping[str, Any], folder: Path) -> list[Path]:
 
 
 def save_figure(figure: Any, folder: Path, name: str) -> list[Path]:
-    """Writes a figure in every format and closes it."""
+    """Writes a figure in every format, the same bytes every time, and closes it."""
     figure.tight_layout()
     paths = [folder / f"{name}.{extension}" for extension in FORMATS]
     for path in paths:

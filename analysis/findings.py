@@ -9,12 +9,20 @@ from typing import Any
 from analysis.anarchy import NO_EQUILIBRIUM
 from analysis.confidence import Estimate
 from analysis.games import ESTIMATED, GameAnalysis
+from analysis.prices_document import projected_sentences, turning_interval
+from analysis.sets_document import sets_sentences
 
 POINT_ESTIMATE_WARNING = (
     "These are the equilibria of an ESTIMATED table. The point estimate of a game is often wrong: sampling error "
-    "hides true equilibria and shows false ones, above all where payoffs nearly tie. Read them as candidates, "
-    "look at the upper end of each regret, and repeat with more replications before relying on any of them."
+    "hides true equilibria and shows false ones, above all where payoffs nearly tie. One replication cannot tell: "
+    "repeat with more before relying on any of them."
 )
+SETS_NOTE = (
+    "A profile listed as possible is one that the replications cannot exclude, and need not be an equilibrium. A "
+    "confirmed one has, with the stated confidence, no gain from deviating above epsilon. Best responses "
+    "and payoffs in the table are point estimates. More replications shorten the list."
+)
+NO_INTERVAL = "a point estimate; no interval is worked out"
 SELECTION_CAVEAT = (
     ", for the profiles listed here only: that these may be the wrong ones is not in the interval"
 )
@@ -49,6 +57,11 @@ def findings_of(game: GameAnalysis) -> list[Finding]:
 
 def _findings(game: GameAnalysis) -> Iterator[Finding]:
     basis = _basis(game)
+    if game.sets is not None:
+        yield from (Finding(said, None, "profiles", basis) for said in sets_sentences(game))
+        yield from _prices(game, basis)
+        yield _turning(game, basis)
+        return
     count = len(game.equilibria)
     verdict = "in the estimated table " if not game.is_exact else ""
     noun = "equilibrium" if count == 1 else "equilibria"
@@ -61,13 +74,15 @@ def _findings(game: GameAnalysis) -> Iterator[Finding]:
 def _basis(game: GameAnalysis) -> str:
     if game.is_exact:
         return "exact Markov chain"
-    return (
-        f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals, {ESTIMATED}"
-    )
+    said = f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals"
+    return said + (f", {ESTIMATED}" if game.sets is None else "")
 
 
 def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
     cost, welfare = game.cost, game.table.welfare_goal
+    if cost.is_projected:
+        yield from (Finding(*one, basis) for one in projected_sentences(cost, welfare, game.sets))
+        return
     if cost.worst is None:
         yield Finding(f"No price of anarchy: {NO_EQUILIBRIUM}", None, "ratio", basis)
         return
@@ -99,13 +114,13 @@ def _turning(game: GameAnalysis, basis: str) -> Finding:
     turning = game.turning
     where = "" if game.is_exact else " in the estimated table"
     if turning.weight is None:
-        said = f"No transfer weight turns the verdict{where}: {turning.reason}"
+        said = f"No transfer weight turns the verdict{where}: {turning.reason}" + turning_interval(turning)
         return Finding(said, None, "weight", basis)
     return Finding(
         f"The verdict turns{where} at a transfer weight of {turning.weight:.3f}: where one transfer counts for more "
         "than that many patients turned away, the profile that turns fewest away is no better than the worst listed "
-        "equilibrium",
-        Estimate(turning.weight, reason=None if game.is_exact else "a point estimate; no interval is worked out"),
+        f"equilibrium{turning_interval(turning)}",
+        Estimate(turning.weight, turning.low, turning.high, None if game.is_exact else turning.reason or NO_INTERVAL),
         "patients turned away per transfer",
         basis,
     )  # fmt: skip

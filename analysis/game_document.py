@@ -13,6 +13,7 @@ from analysis.equilibria import Profile
 from analysis.findings import findings_of
 from analysis.games import Equilibrium, GameAnalysis, welfare_estimate
 from analysis.profiles import Profiles, choice_columns, chooses, chosen_at
+from analysis.sets_document import sets_document, years_document
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -55,12 +56,7 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
         **_reason(prices),
         "transfer_weight_at_which_the_verdict_turns": asdict(game.turning),
         "tolerance": game.tolerance,
-        "undecided": [] if game.is_exact else None,
-        **(
-            {}
-            if game.is_exact
-            else {"undecided_reason": "a point estimate decides nothing; every verdict is `estimated`"}
-        ),
+        **sets_document(game),
         "findings": [finding.to_dict() for finding in findings_of(game)],
     }
 
@@ -116,7 +112,7 @@ def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:
         "regret": {player: _number(game, regret) for player, regret in one.regret.items()},
         "welfare": _number(game, one.welfare),
         "outcome": asdict(game.place(one.profile)),
-    }
+    } | years_document(game, one)
 
 
 def _best_responses(game: GameAnalysis) -> dict[str, list[dict[str, Any]]]:

@@ -8,20 +8,22 @@ from dataclasses import dataclass
 import numpy as np
 
 from analysis.anarchy import Cost, TurningWeight, cost_of_selfishness, turning_weight
-from analysis.confidence import ONE_REPLICATION, Estimate, critical_value, mean_estimate, standard_error
+from analysis.confidence import ONE_REPLICATION, Estimate, mean_estimate
+from analysis.contrasts import evidence_of
 from analysis.equilibria import (
     DEFAULT_TOLERANCE,
     BestResponse,
     Profile,
-    as_costs,
     best_responses,
-    deviations,
     pure_equilibria,
     regrets,
 )
+from analysis.noticing import YEARS, noticeable_gain, yearly_spread
 from analysis.payoffs import Outcomes, PayoffTable
+from analysis.prices import projected_cost, projected_turning
+from analysis.sets import ConfirmedSet, PossibleSet, RegretBounds, confirmed, possible, regret_bounds, spend
 
-EXACT, ESTIMATED = "exact", "estimated"
+EXACT, ESTIMATED, POSSIBLE, CONFIRMED = "exact", "estimated", "possible", "confirmed"
 
 
 @dataclass(frozen=True)
@@ -52,8 +54,23 @@ class Place:
 
 
 @dataclass(frozen=True)
+class Sets:
+    """What replications support: the two sets at half the level each, and every regret's bounds.
+
+    origin: where epsilon comes from. spread: of a player's own measure over a year, (players, *shape).
+    """
+
+    possible: PossibleSet
+    confirmed: ConfirmedSet
+    bounds: RegretBounds
+    origin: str
+    spread: np.ndarray
+
+
+@dataclass(frozen=True)
 class GameAnalysis:
-    """All that the table says."""
+    """All that the table says. sets: None where it is exact, or of one replication. equilibria: where there are
+    sets, every possible profile; else those of the table. found: the equilibria of the table as it stands."""
 
     table: PayoffTable
     equilibria: tuple[Equilibrium, ...]
@@ -62,6 +79,23 @@ class GameAnalysis:
     turning: TurningWeight
     tolerance: float
     confidence: float
+    found: tuple[Profile, ...] = ()
+    sets: Sets | None = None
+
+    @property
+    def possible(self) -> np.ndarray | None:
+        """Profiles that may be equilibria, bool (*shape); None without sets."""
+        return None if self.sets is None else self.sets.possible.mask
+
+    @property
+    def confirmed(self) -> np.ndarray | None:
+        """Profiles confirmed within epsilon, bool (*shape), possible ones or not; None without sets."""
+        return None if self.sets is None else self.sets.confirmed.mask
+
+    @property
+    def undecided(self) -> tuple[Equilibrium, ...]:
+        """The possible profiles that are not confirmed."""
+        return tuple(one for one in self.equilibria if one.verdict == POSSIBLE)
 
     @property
     def is_exact(self) -> bool:
@@ -87,16 +121,24 @@ def place_at(outcomes: Outcomes, cell: int, thresholds: Mapping[str, int]) -> Pl
 
 
 def analyse(
-    table: PayoffTable, *, tolerance: float = DEFAULT_TOLERANCE, confidence: float = 0.95
+    table: PayoffTable,
+    *,
+    tolerance: float = DEFAULT_TOLERANCE,
+    confidence: float = 0.95,
+    epsilon: float | None = None,
+    seed: int = 0,
 ) -> GameAnalysis:
-    """The pure equilibria of the table and what they cost the network.
+    """The pure equilibria of the table, or what its replications say of them, and what they cost the network.
 
-    tolerance: regret still allowed, in the goal's unit, inclusive (the optimum's ties, in the welfare's unit,
-    have a tolerance of their own). confidence: of the paired intervals, each
-    regret's Bonferroni over the player's deviations.
+    tolerance: regret still allowed in an exact table, in the goal's unit, inclusive (the optimum's ties, in the
+    welfare's unit, have a tolerance of their own). confidence: of both sets together, and of the paired intervals.
+    epsilon: the regret up to which a simulated equilibrium is confirmed, in the goal's unit (default: the gain that
+    takes a manager 10 years of own data to notice). seed: of the multipliers.
     """
     sense = table.goal.sense
     found = pure_equilibria(table.payoffs, sense, tolerance=tolerance)
+    sets = _sets(table, confidence, epsilon, seed)
+    listed = found if sets is None else _profiles(sets.possible.mask)
     shape = table.profiles.shape
     network = [
         values.sum(axis=-1).reshape(shape)
@@ -105,60 +147,93 @@ def analyse(
     cost = cost_of_selfishness(
         table.welfare,
         table.welfare_goal.sense,
-        found,
+        listed,
         replicates=table.welfare_replicates,
+        degrees=table.degrees,
         confidence=confidence,
     )
+    turning = turning_weight(*network, cost.worst)
+    if sets is not None:
+        known = (found, table, sets.possible.mask, 1 - confidence, seed)
+        cost, turning = projected_cost(cost, *known), projected_turning(*known)
+    regret = regrets(table.payoffs, sense)
     return GameAnalysis(
         table,
-        tuple(_equilibrium(table, profile, confidence) for profile in found),
+        tuple(_equilibrium(table, profile, regret, sets, confidence) for profile in listed),
         tuple(best_responses(table.payoffs, sense, tolerance=tolerance)),
         cost,
-        turning_weight(*network, cost.worst),
+        turning,
         tolerance,
         confidence,
+        tuple(found),
+        sets,
     )
 
 
-def _equilibrium(table: PayoffTable, profile: Profile, confidence: float) -> Equilibrium:
+def _profiles(mask: np.ndarray) -> list[Profile]:
+    return [tuple(map(int, profile)) for profile in np.argwhere(mask)]
+
+
+def _sets(table: PayoffTable, confidence: float, epsilon: float | None, seed: int) -> Sets | None:
+    """Both sets, half the level each; None without at least two replications."""
+    if table.replicates is None or len(table.replicates) < 2:
+        return None
+    evidence, (for_possible, for_confirmed) = evidence_of(table), spend(1 - confidence)
+    spread = yearly_spread(table.unadjusted, table.measured_days)
+    origin = (
+        "asked for" if epsilon is not None else f"the gain that takes a manager {YEARS:g} years to notice"
+    )
+    allowed = max(noticeable_gain(spread), DEFAULT_TOLERANCE) if epsilon is None else epsilon
+    rng = np.random.default_rng([seed, len(table.replicates)])
+    return Sets(
+        possible(evidence, for_possible, rng),
+        confirmed(evidence, allowed, for_confirmed),
+        regret_bounds(evidence, for_confirmed),
+        origin,
+        spread,
+    )
+
+
+def _equilibrium(
+    table: PayoffTable, profile: Profile, regret: np.ndarray, sets: Sets | None, confidence: float
+) -> Equilibrium:
     players = table.profiles.players
-    regret = {
-        player: regret_estimate(table, profile, place, confidence) for place, player in enumerate(players)
+    estimates = {
+        player: regret_estimate(table, float(regret[(place, *profile)]), (place, *profile), sets)
+        for place, player in enumerate(players)
     }
-    verdict = EXACT if table.replicates is None else ESTIMATED
     return Equilibrium(
         profile,
         table.profiles.thresholds(profile),
-        verdict,
-        regret,
+        _verdict(table, profile, sets),
+        estimates,
         welfare_estimate(table, profile, confidence),
     )
+
+
+def _verdict(table: PayoffTable, profile: Profile, sets: Sets | None) -> str:
+    if sets is None:
+        return EXACT if table.replicates is None else ESTIMATED
+    return CONFIRMED if sets.confirmed.mask[profile] else POSSIBLE
 
 
 def welfare_estimate(table: PayoffTable, profile: Profile, confidence: float) -> Estimate:
     """The welfare a day at a profile, with its interval where it comes from replications."""
     if table.welfare_replicates is None:
         return Estimate(float(table.welfare[profile]))
-    return mean_estimate(table.welfare_replicates[(slice(None), *profile)], confidence)
+    values = table.welfare_replicates[(slice(None), *profile)]
+    return mean_estimate(values, confidence, degrees=table.degrees)
 
 
-def regret_estimate(table: PayoffTable, profile: Profile, player: int, confidence: float) -> Estimate:
-    """A player's regret at a profile; from replications with a paired interval over all the player's deviations.
+def regret_estimate(table: PayoffTable, point: float, place: tuple[int, ...], sets: Sets | None) -> Estimate:
+    """A player's regret at a profile, `place` (player, *profile), around its point; from replications with bounds.
 
-    The upper end is the largest upper end of any deviation's gain, so it holds for all of them at once.
+    The upper end holds for all profiles at once: with the set's confidence no profile's regret is above its
+    players' largest.
     """
-    point = float(regrets(table.payoffs, table.goal.sense)[(player, *profile)])
-    others = deviations(profile, player, table.profiles.shape[player])
     if table.replicates is None:
         return Estimate(point)
-    if not others:
-        return Estimate(point, point, point)
-    if len(table.replicates) < 2:
+    if sets is None:
         return Estimate(point, reason=ONE_REPLICATION)
-    costs = as_costs(table.replicates[:, player], table.goal.sense)
-    critical = critical_value(confidence, len(costs) - 1, comparisons=len(others))
-    gains = [costs[(slice(None), *profile)] - costs[(slice(None), *other)] for other in others]
-    means = np.array([gain.mean() for gain in gains])
-    halves = critical * np.array([standard_error(gain) for gain in gains])
-    low, high = float((means - halves).max()), float((means + halves).max())
-    return Estimate(point, min(point, max(0.0, low)), max(point, high))
+    low, high = float(sets.bounds.low[place]), float(sets.bounds.high[place])
+    return Estimate(point, min(point, low), max(point, high))

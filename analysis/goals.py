@@ -56,6 +56,9 @@ class Goal(Protocol):
     def estimate(self, sums: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
         """Payoffs (cells, players) and their pseudo-values (replications, cells, players) from replications."""
 
+    def signed(self, sums: Mapping[str, np.ndarray]) -> np.ndarray | None:
+        """Values (replications, cells, players) where the payoff is the distance of their mean from 0, else None."""
+
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, players) each, at pointwise confidence."""
 
@@ -121,6 +124,16 @@ class TargetGoal:
             return point, point[None]
         others = ratio(occupied.sum(axis=0) - occupied, staffed.sum(axis=0) - staffed)
         return point, jackknife(point, np.abs(others - self.targets))
+
+    def signed(self, sums: Mapping[str, np.ndarray]) -> np.ndarray | None:
+        """Utilisation less target by replication, (replications, cells, units), where the payoff is |E U - T|.
+
+        Where staffed bed-time varies the ratio of means is linearised (delta method). None for the squared goal.
+        """
+        if self.shape == "squared":
+            return None
+        occupied, staffed = sums["occupied_days"], sums["bed_days"]
+        return influence(occupied, staffed) - self.targets
 
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, units) each, at pointwise confidence."""

@@ -7,6 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from analysis.confidence import critical_value
+from analysis.controls import Controls, no_controls
+from analysis.counterpart import TableCounterpart
 from analysis.goals import Goal, Welfare
 from analysis.measures import unit_sums
 from analysis.profiles import MOST_CELLS, Profiles, profiles_of
@@ -54,7 +57,11 @@ class TableSums:
 
     def sums(self) -> dict[str, np.ndarray]:
         """The sums over complete replications only, so that every contrast is paired."""
-        return {name: array[self.complete] for name, array in self._arrays.items()}
+        return self.sums_of(self.complete)
+
+    def sums_of(self, replications: Sequence[int]) -> dict[str, np.ndarray]:
+        """The sums of these replications, in that order."""
+        return {name: array[replications] for name, array in self._arrays.items()}
 
 
 @dataclass(frozen=True)
@@ -79,7 +86,11 @@ class PayoffTable:
 
     payoffs: (players, *shape). replicates: pseudo-values (replications, players, *shape), None where exact.
     low, high: pointwise interval ends of the payoffs, None where exact. welfare: (*shape), a day;
-    welfare_replicates: (replications, *shape) or None. outcomes: by cell.
+    welfare_replicates: (replications, *shape) or None. outcomes: by cell. All replicates are after control variates,
+    where there are any (`controls`), such that their plain mean and error hold with `degrees` degrees of freedom.
+    signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
+    raw_replicates: these, or else the replicates, before control variates. turned_away_replicates,
+    transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each replication.
     """
 
     profiles: Profiles
@@ -92,6 +103,26 @@ class PayoffTable:
     low: np.ndarray | None = None
     high: np.ndarray | None = None
     welfare_replicates: np.ndarray | None = None
+    signed_replicates: np.ndarray | None = None
+    raw_replicates: np.ndarray | None = None
+    turned_away_replicates: np.ndarray | None = None
+    transfers_replicates: np.ndarray | None = None
+    controls: Controls | None = None
+    beside_counterpart: bool = False
+    measured_days: float = 365.0
+
+    @property
+    def unadjusted(self) -> np.ndarray | None:
+        """Replicates before control variates: signed where the goal has that form."""
+        return self.replicates if self.raw_replicates is None else self.raw_replicates
+
+    @property
+    def degrees(self) -> int:
+        """Degrees of freedom of every error; 0 where the table is exact."""
+        if self.replicates is None:
+            return 0
+        left = len(self.replicates) - 1 if self.controls is None else self.controls.degrees
+        return left - self.beside_counterpart
 
     @property
     def replications(self) -> int | None:
@@ -109,29 +140,99 @@ def _by_player(cells: np.ndarray, shape: tuple[int, ...]) -> np.ndarray:
 
 
 def simulated_table(
-    profiles: Profiles, goal: Goal, welfare: Welfare, sums: Mapping[str, np.ndarray], confidence: float
+    profiles: Profiles,
+    goal: Goal,
+    welfare: Welfare,
+    sums: Mapping[str, np.ndarray],
+    confidence: float,
+    *,
+    controls: Controls | None = None,
+    counterpart: TableCounterpart | None = None,
 ) -> PayoffTable:
-    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication."""
+    """The table estimated from paired replications; `sums` as TableSums gives them, at least one replication.
+
+    controls, counterpart: of the same replications; payoffs, welfare and outcomes are then the adjusted ones
+    (outcomes by `controls` alone).
+    """
     point, pseudo = goal.estimate(sums)
     low, high = goal.interval(sums, confidence)
+    signed = goal.signed(sums)
+    raw = pseudo if signed is None else signed
     a_day = {name: sums[name] / sums["days"] for name in _RATES}
-    worth = welfare.value(*(a_day[name].sum(axis=-1) for name in ("admitted", "turned_away", "diverted_out")))
-    outcomes = Outcomes(
-        **{name: rate.mean(axis=0) for name, rate in a_day.items() if name != "closed_free_days"},
-        closed_free=a_day["closed_free_days"].mean(axis=0),
-        utilisation=sums["occupied_days"].mean(axis=0) / np.maximum(sums["bed_days"].mean(axis=0), 1e-300),
-    )
+
+    def worth_of(sums: Mapping[str, np.ndarray]) -> np.ndarray:
+        rates = ("admitted", "turned_away", "diverted_out")
+        return welfare.value(*((sums[name] / sums["days"]).sum(axis=-1) for name in rates))
+
+    worth = worth_of(sums)
+    if counterpart is not None and controls is None:
+        controls = no_controls(len(raw))
+    if controls is not None:
+        own, own_worth = (None, None) if counterpart is None else counterpart.known(goal.signed, worth_of)
+        pseudo, worth = controls.adjust(pseudo), controls.adjust(worth, own_worth)
+        signed = None if signed is None else controls.adjust(signed, own)
+        degrees = controls.degrees - (counterpart is not None)
+        point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, degrees)
+        if signed is not None:
+            point, low, high = _folded(point, low, high)
     shape = profiles.shape
+    away, moved = (_network(a_day[name], controls, shape) for name in ("turned_away", "diverted_out"))
     return PayoffTable(
         profiles, goal, welfare,
         payoffs=_by_player(point, shape),
         welfare=worth.mean(axis=0).reshape(shape),
-        outcomes=outcomes,
+        outcomes=_outcomes(a_day, sums, controls),
         replicates=_by_player(pseudo, shape),
         low=_by_player(low, shape),
         high=_by_player(high, shape),
         welfare_replicates=worth.reshape(len(worth), *shape),
+        signed_replicates=None if signed is None else _by_player(signed, shape),
+        raw_replicates=_by_player(raw, shape),
+        turned_away_replicates=away,
+        transfers_replicates=moved,
+        controls=controls,
+        beside_counterpart=counterpart is not None,
+        measured_days=float(sums["days"].flat[0]),
     )  # fmt: skip
+
+
+def _network(rates: np.ndarray, controls: Controls | None, shape: tuple[int, ...]) -> np.ndarray:
+    """A rate's sum over the units by replication, (replications, *shape)."""
+    total = rates.sum(axis=-1)
+    return (total if controls is None else controls.adjust(total)).reshape(len(rates), *shape)
+
+
+def _adjusted_payoffs(
+    values: np.ndarray, raw: np.ndarray, confidence: float, degrees: int
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Means and interval ends of adjusted values; what is never negative in a replication is not so in the mean."""
+    mean, error = values.mean(axis=0), values.std(axis=0, ddof=1) / np.sqrt(len(values))
+    half = critical_value(confidence, degrees) * error
+    least = np.where((raw >= 0).all(axis=0), 0.0, -np.inf)
+    return np.maximum(mean, least), np.maximum(mean - half, least), mean + half
+
+
+def _folded(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """A distance and its interval from a signed one's."""
+    nearest = np.where((low <= 0) & (high >= 0), 0.0, np.minimum(np.abs(low), np.abs(high)))
+    return np.abs(mean), nearest, np.maximum(np.abs(low), np.abs(high))
+
+
+def _outcomes(
+    a_day: Mapping[str, np.ndarray], sums: Mapping[str, np.ndarray], controls: Controls | None
+) -> Outcomes:
+    """Means by cell, adjusted where there are controls, and never below 0."""
+
+    def mean(values: np.ndarray) -> np.ndarray:
+        if controls is None:
+            return values.mean(axis=0)
+        return np.maximum(np.tensordot(controls.weights, values, axes=1), 0.0)
+
+    return Outcomes(
+        **{name: mean(rate) for name, rate in a_day.items() if name != "closed_free_days"},
+        closed_free=mean(a_day["closed_free_days"]),
+        utilisation=mean(sums["occupied_days"]) / np.maximum(mean(sums["bed_days"]), 1e-300),
+    )
 
 
 _RATES = ("admitted", "turned_away", "diverted_out", "arrived", "closed_free_days")

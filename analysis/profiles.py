@@ -217,6 +217,24 @@ def _faults(scenario: Scenario, base: Policy) -> Iterator[Fault]:
             yield Fault(None, "game.strategies", rule, f"got nothing for {player}", remedy)
 
 
+def nearest_profile(profiles: Profiles, present: Policy) -> tuple[int, ...]:
+    """The strategy numbers nearest to the rules now in force, player by player; of two as near, the lower values."""
+
+    def key(one: Strategy) -> tuple[Any, ...]:
+        values = [value for _, _, value in one.choices]
+        return (
+            sum(abs(value - _in_force(present, unit, field)) for unit, field, value in one.choices),
+            values,
+        )
+
+    return tuple(min(range(len(mine)), key=lambda place: key(mine[place])) for mine in profiles.strategies)
+
+
+def _in_force(present: Policy, unit: str, field: str) -> float:
+    rules = present.units[unit]
+    return rules.incoming if field == INCOMING else getattr(rules, field)
+
+
 # ---- in documents and tables ----
 
 
@@ -227,6 +245,12 @@ def chosen_at(profiles: Profiles, profile: Sequence[int]) -> dict[str, Any]:
         return {"thresholds": thresholds}
     strategies = {player: one.to_plain() for player, one in profiles.chosen(profile).items()}
     return {"thresholds": thresholds, "strategies": strategies}
+
+
+def told(profiles: Profiles, profile: Sequence[int]) -> dict[str, Any]:
+    """What tells a profile from others: its thresholds by unit, or its strategies by player where these do not."""
+    chosen = chosen_at(profiles, profile)
+    return chosen.get("strategies", chosen["thresholds"])
 
 
 def chooses(profiles: Profiles) -> str:

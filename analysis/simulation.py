@@ -8,7 +8,9 @@ from typing import Any
 
 import numpy as np
 
-from analysis.confidence import Estimate, mean_estimate, ratio_estimate
+from analysis.confidence import Estimate, mean_estimate, ratio_estimate, ratio_values
+from analysis.controls import Controls, no_controls, variance_ratio
+from analysis.counterpart import Counterpart
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, combine, network_sums, unit_sums
 from sim.record import Record
 from sim.replicate import Run
@@ -20,7 +22,8 @@ class Simulation:
     """Measures of one policy.
 
     units: unit -> measure -> estimate. occupancy: unit -> an estimate for each number of occupied beds.
-    network: measure -> estimate.
+    network: measure -> estimate. variance_ratio: unit, or `network` -> measure -> how many times smaller control
+    variates made the variance (None where nothing is left of it, or where it has none); None without them.
     """
 
     units: Mapping[str, Mapping[str, Estimate]]
@@ -28,6 +31,8 @@ class Simulation:
     network: Mapping[str, Estimate]
     replications: int
     confidence: float
+    controls: Controls | None = None
+    variance_ratio: Mapping[str, Mapping[str, float | None]] | None = None
 
     def to_dict(self) -> dict[str, Any]:
         """The tree of `exact`, each number as `{"mean", "low", "high"}`."""
@@ -42,24 +47,84 @@ class Simulation:
         }
 
 
-def summarise(records: Sequence[Record], scenario: Scenario, *, confidence: float) -> Simulation:
-    """The measures over the records of one policy, one a replication."""
+def summarise(
+    records: Sequence[Record],
+    scenario: Scenario,
+    *,
+    confidence: float,
+    controls: Controls | None = None,
+    counterpart: Counterpart | None = None,
+) -> Simulation:
+    """The measures over the records of one policy, one a replication.
+
+    controls, counterpart: of the same replications in the same order; every mean and interval is then adjusted.
+    """
     beds = np.array([unit.beds for unit in scenario.units], float)
     sums = unit_sums(records, beds, scenario.run.measured_days)
     whole = network_sums(sums)
+    if counterpart is not None and controls is None:
+        controls = no_controls(len(records))
+    judge = _Judge(confidence, controls, counterpart)
     return Simulation(
         units={
-            unit.name: {m.name: _shown(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
+            unit.name: {m.name: judge.shown(m, of_unit(sums, place), unit.name) for m in UNIT_MEASURES}
             for place, unit in enumerate(scenario.units)
         },
         occupancy={
-            unit.name: _occupancy(sums["occupancy_days"][:, place, : unit.beds + 1], scenario, confidence)
+            unit.name: judge.occupancy(
+                sums["occupancy_days"][:, place, : unit.beds + 1].T / scenario.run.measured_days, unit.name
+            )
             for place, unit in enumerate(scenario.units)
         },
-        network={m.name: _shown(m, whole, confidence) for m in NETWORK_MEASURES},
+        network={m.name: judge.shown(m, whole, None) for m in NETWORK_MEASURES},
         replications=len(records),
         confidence=confidence,
+        controls=controls,
+        variance_ratio=None if controls is None else _variance_ratios(sums, whole, scenario, judge),
     )
+
+
+@dataclass(frozen=True)
+class _Judge:
+    """Turns sums into estimates, adjusted where there are controls."""
+
+    confidence: float
+    controls: Controls | None
+    counterpart: Counterpart | None
+
+    def shown(self, measure: Measure, sums: Sums, unit: str | None) -> Estimate:
+        """A measure, with its interval, cut to what the measure can be."""
+        if self.controls is None or sums[measure.base].sum() <= 0:
+            return estimate_measure(measure, sums, self.confidence).within(0.0, measure.most)
+        own = self._own(measure, unit)
+        return self._adjusted(self.plain(measure, sums), own).within(0.0, measure.most)
+
+    def occupancy(self, shares: np.ndarray, unit: str) -> list[Estimate]:
+        """Shares of time, (levels, replications), with intervals."""
+        if self.controls is None:
+            return [mean_estimate(share, self.confidence).within(0.0, 1.0) for share in shares]
+        owns = [None] * len(shares) if self.counterpart is None else list(self.counterpart.levels(unit))
+        return [self._adjusted(share, own).within(0.0, 1.0) for share, own in zip(shares, owns, strict=True)]
+
+    def won(self, measure: Measure, sums: Sums, unit: str | None) -> float | None:
+        """How many times smaller the variance became; None where nothing is left of it."""
+        if self.controls is None or sums[measure.base].sum() <= 0:
+            return None
+        values = self.plain(measure, sums)
+        ratio = float(variance_ratio(values, self.controls.adjust(values, self._own(measure, unit))))
+        return None if np.isnan(ratio) else ratio
+
+    def plain(self, measure: Measure, sums: Sums) -> np.ndarray:
+        """A measure's values by replication."""
+        return ratio_values(sums[measure.total], sums[measure.base])
+
+    def _own(self, measure: Measure, unit: str | None) -> np.ndarray | None:
+        return None if self.counterpart is None else self.counterpart.measure(unit, measure)
+
+    def _adjusted(self, values: np.ndarray, own: np.ndarray | None) -> Estimate:
+        assert self.controls is not None
+        degrees = self.controls.degrees - (own is not None)
+        return mean_estimate(self.controls.adjust(values, own), self.confidence, degrees=degrees)
 
 
 def of_unit(sums: Sums, place: int) -> Sums:
@@ -67,19 +132,20 @@ def of_unit(sums: Sums, place: int) -> Sums:
     return {name: values[:, place] for name, values in sums.items() if values.ndim == 2}
 
 
-def _shown(measure: Measure, sums: Sums, confidence: float) -> Estimate:
-    """A measure with its interval cut to what the measure can be."""
-    return estimate_measure(measure, sums, confidence).within(0.0, measure.most)
+def _variance_ratios(
+    sums: Sums, whole: Sums, scenario: Scenario, judge: _Judge
+) -> dict[str, dict[str, float | None]]:
+    """How many times smaller the variance of each measure's mean became."""
+    units = {
+        name: {m.name: judge.won(m, of_unit(sums, place), name) for m in UNIT_MEASURES}
+        for place, name in enumerate(scenario.unit_names)
+    }
+    return units | {"network": {m.name: judge.won(m, whole, None) for m in NETWORK_MEASURES}}
 
 
 def estimate_measure(measure: Measure, sums: Sums, confidence: float, *, comparisons: int = 1) -> Estimate:
     """A measure over replications, with Student's interval."""
     return ratio_estimate(sums[measure.total], sums[measure.base], confidence, comparisons=comparisons)
-
-
-def _occupancy(days: np.ndarray, scenario: Scenario, confidence: float) -> list[Estimate]:
-    levels = (mean_estimate(level / scenario.run.measured_days, confidence) for level in days.T)
-    return [estimate.within(0.0, 1.0) for estimate in levels]
 
 
 def per_replication_measures(runs: Sequence[Run], scenario: Scenario) -> list[dict[str, Any]]:

@@ -11,11 +11,12 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import ndtr
+from scipy.special import ndtr, stdtr
 
 from analysis.confidence import t_quantile
 
 DRAWS = 1000
+PURPOSE = 7  # beside the seed, so that multipliers share no stream with anything else
 CELLS_AT_ONCE = 4_000_000  # numbers held by one block of draws x contrasts
 
 
@@ -37,6 +38,11 @@ class Studentised:
         return len(self.scores) - 1
 
 
+def rng_of(seed: int) -> np.random.Generator:
+    """The generator of a result's multipliers: of the scenario's seed, so that a result repeats."""
+    return np.random.default_rng([seed, PURPOSE])
+
+
 def studentise(values: np.ndarray) -> Studentised:
     """Means and joint errors of paired values, (replications, contrasts), of at least 2 replications."""
     values = np.asarray(values, float)
@@ -50,6 +56,36 @@ def studentise(values: np.ndarray) -> Studentised:
 def multipliers(rng: np.random.Generator, draws: int, replications: int) -> np.ndarray:
     """Standard normal multipliers, (draws, replications); that they need no centring is the scores' doing."""
     return rng.standard_normal((draws, replications))
+
+
+def sign_flips(rng: np.random.Generator, draws: int, replications: int) -> np.ndarray:
+    """Signs, (draws, replications), for `flip_scores`."""
+    return rng.choice([-1.0, 1.0], size=(draws, replications))
+
+
+def flip_scores(parts: Studentised) -> np.ndarray:
+    """The values themselves, not centred, each column of length 1, (replications, contrasts).
+
+    Signs times these are a joint null that is exact where values are symmetric about 0, however few the replications
+    and however many the contrasts; `flip_to_student` turns the result into Student's t, for each flip leaves the sum of
+    squares as it is. (Randomisation by signs: Fisher 1935, "The design of experiments"; from memory.)
+    """
+    n = len(parts.scores)
+    length = parts.error * np.sqrt(n * (n - 1))
+    values = parts.mean + length * parts.scores
+    whole = np.sqrt(np.square(values).sum(axis=0))
+    return np.divide(values, whole, out=np.zeros_like(values), where=whole > 0)
+
+
+def flip_to_student(flipped: float, replications: int, degrees: int) -> float:
+    """Student's t, on the scale of `degrees`, of a sum of flipped scores; infinite where all values have one sign."""
+    share = min(flipped / np.sqrt(replications), 1.0)
+    if share >= 1 - 1e-12:
+        return np.inf
+    t = share * np.sqrt((replications - 1) / (1 - share * share))
+    return (
+        float(t) if degrees == replications - 1 else float(-t_quantile(stdtr(replications - 1, -t), degrees))
+    )
 
 
 def draws_of(scores: np.ndarray, rows: np.ndarray) -> Iterator[tuple[slice, np.ndarray]]:

@@ -143,6 +143,17 @@ class Empirical(Duration):
         """The hash of the data file's bytes."""
         return self._sha256
 
+    @property
+    def values(self) -> tuple[float, ...]:
+        """The observed times, in file order."""
+        return self._values
+
+    def with_values(self, values: tuple[float, ...]) -> Empirical:
+        """The same column with other observed times: a resampling of them."""
+        copy = self.model_copy()
+        copy._values = tuple(values)
+        return copy
+
 
 def read_column(path: Path, column: str) -> tuple[tuple[float, ...], str]:
     """The numbers of one CSV column in file order, and the file's SHA-256; a breach where one is no stay."""
@@ -240,6 +251,27 @@ class Mixture(Duration):
                 "must give at least one part a weight above 0", "only 0", "raise one", key=("parts",)
             )
         return self
+
+
+Observed = dict[tuple[str, str], tuple[float, ...]]  # (file, column) -> the observed times
+
+
+def observed(duration: Duration | None) -> Observed:
+    """The records that a duration is taken from; none where it is a family with parameters."""
+    if isinstance(duration, Empirical):
+        return {(duration.file, duration.column): duration.values}
+    parts = duration.parts if isinstance(duration, Mixture) else ()
+    return {key: values for part in parts for key, values in observed(part).items()}
+
+
+def with_observed(duration: Duration, records: Observed) -> Duration:
+    """The same duration taken from other records, by file and column."""
+    if isinstance(duration, Empirical):
+        return duration.with_values(records[duration.file, duration.column])
+    if isinstance(duration, Mixture):
+        parts = tuple(with_observed(part, records) for part in duration.parts)
+        return duration.model_copy(update={"parts": parts})
+    return duration
 
 
 def _variant(family: type[Duration], name: str, unit: str, **keys: Any) -> type[Duration]:

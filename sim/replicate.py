@@ -5,7 +5,7 @@ from __future__ import annotations
 import itertools
 import time
 import traceback
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Hashable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 
 from sim import engines
@@ -110,8 +110,12 @@ def replicate_shares(
     engine: str = DEFAULT_ENGINE,
     workers: Workers | None = None,
     task_size: TaskSize | None = None,
+    go_on: Callable[[], bool] = lambda: True,
 ) -> Iterator[list[Run] | Failure]:
-    """As `replicate`, but each replication under the policies of its share only."""
+    """As `replicate`, but each replication under the policies of its share only.
+
+    go_on: asked before each task is handed out; once it says no, only what is under way still arrives.
+    """
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
     cut = _Cut(shares, task_size or TaskSize())
@@ -119,7 +123,8 @@ def replicate_shares(
         ((batch, cells), (network, plan, batch, cells, [rules[cell] for cell in cells], engine))
         for batch, cells in cut
     )
-    for reply in (workers or ThisProcess()).run(run_batch, tasks):
+    wanted = itertools.takewhile(lambda _: go_on(), tasks)
+    for reply in (workers or ThisProcess()).run(run_batch, wanted):
         cut.learn(reply)
         if reply.failure is None:
             yield from reply.value
@@ -151,6 +156,41 @@ class _Cut:
         full = len(batch) == size.replications and len(cells) == min(size.cells or of, of)
         if size == self._size and (full or reply.seconds > MOST_TASK_SECONDS):
             self._size = size.after(reply.seconds, of)
+
+
+def replicate_networks(
+    jobs: Iterable[tuple[Hashable, Scenario, Sequence[Policy]]],
+    replications: Sequence[int],
+    *,
+    engine: str = DEFAULT_ENGINE,
+    workers: Workers | None = None,
+) -> Iterator[tuple[Hashable, list[Run] | Failure]]:
+    """A few replications of each of many networks, one network a task; yields (the job's key, what became of it).
+
+    jobs: (key, scenario, policies); lowered only when a worker is free for it.
+    """
+    seeds: dict[Hashable, tuple[int, int]] = {}
+
+    def handed_out() -> Iterator[tuple[Hashable, tuple]]:
+        for key, scenario, policies in jobs:
+            seeds[key] = scenario.run.seed, len(policies)
+            yield key, _whole_task(scenario, policies, replications, engine)
+
+    for reply in (workers or ThisProcess()).run(run_batch, handed_out()):
+        if reply.failure is None:
+            yield from ((reply.key, one) for one in reply.value)
+        else:
+            seed, cells = seeds[reply.key]
+            failed = (Failure(seed, one, tuple(range(cells)), reply.failure) for one in replications)
+            yield from ((reply.key, one) for one in failed)
+
+
+def _whole_task(
+    scenario: Scenario, policies: Sequence[Policy], replications: Sequence[int], engine: str
+) -> tuple:
+    rules = [lower_policy(scenario, policy) for policy in policies]
+    cells = tuple(range(len(policies)))
+    return lower_network(scenario), plan_intake(scenario), tuple(replications), cells, rules, engine
 
 
 def run_batch(

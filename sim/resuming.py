@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Set as AbstractSet
 from typing import Any
 
 from sim.lowering import lower_network, lower_policy, plan_intake
@@ -17,7 +18,9 @@ class Job:
 
     fingerprint: of this machine, as text. A replication that is there for every policy is reused whoever ran it;
     one begun under another fingerprint is run again whole (`restarted`); of any other only missing cells are run.
-    computed: the number of runs kept since.
+    asked, reused, missing: the number of runs that the job asks for, of those that were there, and of the others.
+    computed: kept since.
+    `cells` of a method are places among the policies (default: all), `replications` how many from 0 on.
     """
 
     def __init__(
@@ -32,67 +35,94 @@ class Job:
         self._store, self._fingerprint = store, fingerprint
         self.scenario = scenario_hash(lower_network(scenario), plan_intake(scenario))
         self._cells = [cell_hash(lower_policy(scenario, policy)) for policy in policies]
+        self._every = frozenset(range(len(policies)))
+        self._failed: dict[int, set[int]] = {}
         self._command: int | None = None
         self.computed = 0
         whole = store.whole(self.scenario, self._cells)
         held = store.held(self.scenario, but=whole)
-        self._missing = {
-            one: () if one in whole else self._cells_missing(one, held) for one in range(replications)
+        self._missing: dict[int, AbstractSet[int]] = {
+            one: frozenset() if one in whole else self._cells_missing(one, held)
+            for one in range(replications)
         }
+        self.asked = len(self._cells) * replications
+        self.missing = sum(map(len, self._missing.values()))
+        self.reused = self.asked - self.missing
         self.restarted = tuple(
             one for one, missing in self._missing.items()
             if missing and one in held and held[one][0] != fingerprint
         )  # fmt: skip
         _describe(store, scenario, self.scenario, policies, self._cells)
 
-    def _cells_missing(self, replication: int, held: Mapping[int, tuple[str, set[str]]]) -> tuple[int, ...]:
+    def _cells_missing(self, replication: int, held: Mapping[int, tuple[str, set[str]]]) -> AbstractSet[int]:
+        """All of them are one and the same set, for there may be very many."""
         fingerprint, there = held.get(replication, (self._fingerprint, set()))
-        missing = tuple(place for place, cell in enumerate(self._cells) if cell not in there)
-        return tuple(range(len(self._cells))) if missing and fingerprint != self._fingerprint else missing
+        if not there:
+            return self._every
+        missing = {place for place, cell in enumerate(self._cells) if cell not in there}
+        return self._every if missing and fingerprint != self._fingerprint else missing
 
-    @property
-    def asked(self) -> int:
-        """The number of runs that the job asks for."""
-        return len(self._cells) * len(self._missing)
+    def count_missing(self, cells: AbstractSet[int], replications: int) -> int:
+        """The number of runs of these cells that are still missing."""
+        return sum(len(self._lacking(one, cells)) for one in range(replications))
 
-    @property
-    def missing(self) -> int:
-        """The number of runs to be computed."""
-        return sum(map(len, self._missing.values()))
+    def complete(self, cells: AbstractSet[int], replications: int) -> int:
+        """The number of replications that are there for all of these cells."""
+        return sum(self._missing[one].isdisjoint(cells) for one in range(replications))
 
-    @property
-    def reused(self) -> int:
-        """The number of runs that are there already."""
-        return self.asked - self.missing
+    def _lacking(self, replication: int, cells: AbstractSet[int]) -> AbstractSet[int]:
+        missing = self._missing[replication]
+        return cells if missing is self._every else missing & cells
 
-    def shares(self) -> list[Share]:
-        """The missing runs: the replications that lack the same cells together."""
-        lacking: dict[tuple[int, ...], list[int]] = {}
-        for replication, cells in self._missing.items():
-            if cells:
-                lacking.setdefault(cells, []).append(replication)
-        return [Share(cells, tuple(replications)) for cells, replications in lacking.items()]
+    def shares(self, cells: AbstractSet[int] | None = None, replications: int | None = None) -> list[Share]:
+        """The missing runs, but for those that failed since: the replications that lack the same cells together."""
+        cells = self._every if cells is None else cells
+        lacking: dict[AbstractSet[int], list[int]] = {}
+        for one in range(len(self._missing) if replications is None else replications):
+            wanted = frozenset(self._lacking(one, cells))
+            if one in self._failed:
+                wanted -= self._failed[one]
+            if wanted:
+                lacking.setdefault(wanted, []).append(one)
+        return [Share(tuple(sorted(places)), tuple(numbers)) for places, numbers in lacking.items()]
 
-    def kept_runs(self) -> Iterator[list[Run]]:
-        """The runs that are there, a replication at a time."""
-        for replication, missing in self._missing.items():
-            kept = sorted(set(range(len(self._cells))) - {*missing})
+    def kept_runs(
+        self, cells: Sequence[int] | None = None, replications: int | None = None
+    ) -> Iterator[list[Run]]:
+        """The runs that are there, a replication at a time; a run's cell is its place among `cells`."""
+        wanted = range(len(self._cells)) if cells is None else cells
+        for replication in range(len(self._missing) if replications is None else replications):
+            missing = self._missing[replication]
+            kept = [(place, cell) for place, cell in enumerate(wanted) if cell not in missing]
             if kept:
                 rows = self._store.of_replication(self.scenario, replication)
-                yield [self._kept(rows[self._cells[cell]], cell) for cell in kept]
+                yield [self._kept(rows[self._cells[cell]], place) for place, cell in kept]
 
-    def _kept(self, row: Row, cell: int) -> Run:
-        return Run(row.key.replication, cell, row.record, row.intake_hash)
+    def _kept(self, row: Row, place: int) -> Run:
+        return Run(row.key.replication, place, row.record, row.intake_hash)
+
+    def kept_engine(self) -> str | None:
+        """The engine of a run that is there; None where there is none."""
+        for replication, missing in self._missing.items():
+            for cell in self._every - missing:
+                row = self._store.get(Key(self.scenario, self._cells[cell], replication))
+                return None if row is None else row.engine
+        return None
 
     def begin(self, provenance: Mapping[str, Any]) -> None:
         """Notes in the store that the job starts."""
         self._command = self._store.begin(self.scenario, provenance, asked=self.asked, reused=self.reused)
+
+    def join(self, command: int) -> None:
+        """The job is part of a command that has begun."""
+        self._command = command
 
     def keep(self, reply: list[Run] | Failure, engine: str) -> None:
         """Keeps what a task yielded; it is safe when this returns."""
         if isinstance(reply, Failure):
             keys = [Key(self.scenario, self._cells[cell], reply.replication) for cell in reply.cells]
             self._store.fail(keys, reply.traceback, command=self._command)
+            self._failed.setdefault(reply.replication, set()).update(reply.cells)
             return
         rows = [
             Row(Key(self.scenario, self._cells[run.cell], run.replication), run.record, run.intake_hash,
@@ -101,6 +131,13 @@ class Job:
         ]  # fmt: skip
         self._store.put(rows, command=self._command)
         self.computed += len(rows)
+        self._settle(reply)
+
+    def _settle(self, runs: list[Run]) -> None:
+        """They are no longer missing."""
+        for replication in {run.replication for run in runs}:
+            done = {run.cell for run in runs if run.replication == replication}
+            self._missing[replication] = self._missing[replication] - done
 
     def end(self, at: str) -> None:
         """Notes in the store that the job has ended, be it interrupted, at that time."""

@@ -84,6 +84,11 @@ class Store:
             self._connection = connect_to_read(self.file)
         self._connection.execute("BEGIN")  # so that everything read is of one moment
 
+    @property
+    def left_by(self) -> str | None:
+        """In words, the writer before this one where it ended without closing (killed, or the machine stopped)."""
+        return None if self._lock is None else self._lock.left_by
+
     def __enter__(self) -> Store:
         return self
 

@@ -11,6 +11,7 @@ import os
 import platform
 import sqlite3
 import sys
+import time
 from contextlib import suppress
 from datetime import UTC, datetime
 from pathlib import Path
@@ -22,6 +23,7 @@ FILE = "runs.sqlite"
 LOCK = "runs.lock"
 APPLICATION = 0x42524D4C  # marks the file as this program's
 HEADER = b"SQLite format 3\0"
+LOOK_SECONDS = 0.05
 
 STEPS = (
     """
@@ -167,11 +169,13 @@ def migrate(connection: sqlite3.Connection) -> None:
 class WriterLock:
     """Keeps two writers off one folder: a lock of the operating system, which ends with its process however that dies.
 
-    The file beside it says who holds it, for the message to the other; left behind, it means nothing.
+    The file beside it says who holds it, for the message to the other. Left behind it keeps nobody off.
+    left_by: in words, who held it and ended without letting go (killed, or the machine stopped); None for nobody.
     """
 
     def __init__(self, folder: Path) -> None:
         self._file: IO[str] | None = None
+        self.left_by: str | None = None
         path = folder / LOCK
         try:
             opened = path.open("a+", encoding="utf-8")
@@ -179,11 +183,13 @@ class WriterLock:
             raise StoreError(
                 f"{folder} cannot be written: {error.strerror}: choose another folder"
             ) from error
-        if not _take(opened):
+        if not _take(opened) and not _take_again(opened):
             opened.seek(0)
             holder = _holder(opened.read())
             opened.close()
             raise StoreError(f"{folder} is being written by {holder}: wait for it, or choose another folder")
+        opened.seek(0)
+        self.left_by = _holder(said) if (said := opened.read()) else None
         try:
             opened.truncate(0)
             opened.write(json.dumps(_myself()))
@@ -198,6 +204,21 @@ class WriterLock:
             self._file.truncate(0)
             self._file.close()
             self._file = None
+
+
+def _take_again(opened: IO[str]) -> bool:
+    """A moment later, for it may only be `is_written` that looked."""
+    time.sleep(LOOK_SECONDS)
+    return _take(opened)
+
+
+def is_written(folder: Path) -> bool:
+    """Whether some process is writing the folder's store at this moment."""
+    try:
+        with (folder / LOCK).open(encoding="utf-8") as opened:
+            return not _take(opened)  # and closing it lets it go
+    except OSError:
+        return False
 
 
 def _myself() -> dict[str, Any]:

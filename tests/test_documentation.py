@@ -10,7 +10,8 @@ from pathlib import Path
 import pytest
 
 from analysis.command.entry import COMMANDS, run
-from sim.scenario import parse_scenario
+from analysis.plan import read_plan
+from sim.scenario import parse_scenario, read_scenario
 
 ROOT = Path(__file__).resolve().parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -34,7 +35,7 @@ def test_an_example_prints_what_it_shows(command, shown, capsys, monkeypatch):
 
 
 def test_every_command_has_an_example_or_is_named():
-    assert {command.split()[0] for command, _ in EXAMPLES} >= set(COMMANDS) - {"exact", "results"}
+    assert {command.split()[0] for command, _ in EXAMPLES} >= set(COMMANDS) - {"exact", "results", "batch"}
     assert all(f"`{name}" in README or f"brimline {name}" in README for name in COMMANDS)
 
 
@@ -65,6 +66,17 @@ def test_the_toml_shown_is_legal():
     first_unit, rest = demo.split("[[units]]", 2)[1], demo.split("[[units]]", 2)
     for block in blocks:  # keys of the first unit of a demo network
         parse_scenario(f"{rest[0]}[[units]]{first_unit}{block}\n[[units]]{rest[2]}")
+
+
+def test_the_plan_shown_is_legal(tmp_path):
+    [block] = re.findall(r"```plan\n(.*?)```", README, flags=re.S)
+    (tmp_path / "scenarios").symlink_to(ROOT / "scenarios")
+    (tmp_path / "night.toml").write_text(block, encoding="utf-8")
+    parts = [
+        part
+        for part, _ in read_plan(tmp_path / "night.toml", lambda part: read_scenario(part.scenario)).parts
+    ]
+    assert len(parts) == 2 * 3 * (1 + 2) and parts[-1].exponential and not parts[0].exponential
 
 
 def test_the_rooms_that_developers_are_told_of_exist():

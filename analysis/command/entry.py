@@ -25,6 +25,9 @@ COMMANDS = {
     "exact": "The same measures from the exact Markov chain.",
     "verify": "Hold the simulation against the exact chain, measure by measure.",
     "game": "Payoff table, equilibria, optimum and price of anarchy.",
+    "batch": "A long plan of scenarios and analyses, resumable, by rounds through the night.",
+    "compare": "Policies side by side on the same patients: differences, the best, bad years.",
+    "ledger": "Who pays for whose closure: what each unit's early closing costs each home.",
     "results": "What runs with --out have left: list, show, export, verify, repeat.",
 }
 

@@ -3,12 +3,27 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import Any
 
 import click
 
 from analysis.command.central import beside, best_rule, show_control, write_rule
-from analysis.command.entry import Interrupted, say
+from analysis.command.controls import controls_of, controls_option, controls_sentence
+from analysis.command.counterpart import (
+    counterpart_option,
+    counterpart_scenario,
+    run_counterpart_table,
+    show_counterpart,
+)
+from analysis.command.entry import CheckFailed, Interrupted, say
+from analysis.command.game_beyond import (
+    beyond_options,
+    look_beyond,
+    require_a_table,
+    show_beyond,
+    write_pictures,
+)
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
@@ -27,6 +42,7 @@ from analysis.command.phase_fit import fitted, option, show_fits
 
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
+LONG_YEARS = 100  # of watching, beyond which the number says nothing more
 MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
@@ -34,12 +50,19 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @click.option("--exact", is_flag=True, help="Solve every cell by the exact chain instead of simulating it.")
 @click.option("--tolerance", type=FiniteRange(0), default=1e-9, show_default=True,
               help="Regret still allowed in an equilibrium, in the goal's unit.")  # fmt: skip
+@click.option("--epsilon", type=FiniteRange(0), metavar="X",
+              help="Simulated: regret within which an equilibrium is confirmed, in the goal's unit [default: the gain "
+                   "that takes a manager 10 years of own data to notice].")  # fmt: skip
+@controls_option
+@counterpart_option
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
 @click.option("--search", type=click.Choice(["table", "best_reply"]),
               help="With --exact: full table, or best-reply search from both ends [default: by cost].")  # fmt: skip
+@beyond_options
 def game(
-    request: Request, exact: bool, tolerance: float, control: bool, search: str | None, phase_fit: int | None
-) -> None:
+    request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, counterpart: bool,
+    control: bool, search: str | None, phase_fit: int | None, **wanted: Any,
+) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
     Players are the units, or whoever runs several; a strategy is a closure threshold, or any rule that the scenario
@@ -55,6 +78,14 @@ def game(
     begun = started()
     if search is not None and not exact:
         raise click.BadOptionUsage("--search", "--search is for --exact only")
+    if exact and epsilon is not None:
+        raise click.BadOptionUsage(
+            "--epsilon", "--epsilon is for simulated games; with --exact use --tolerance"
+        )
+    if exact and counterpart:
+        raise click.BadOptionUsage(
+            "--counterpart", "--counterpart is for simulated games; --exact needs none"
+        )
     if control and search == game_search.BEST_REPLY:
         raise click.BadOptionUsage("--search", "--control is compared with a full table, not with a search")
     if phase_fit is not None and not exact:
@@ -66,13 +97,16 @@ def game(
     request, fits = fitted(request, phase_fit)
     choice = game_search.choose(request, game_search.TABLE if control else search) if exact else None
     if choice is not None and choice.method == game_search.BEST_REPLY:
+        require_a_table(wanted)
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
-    table, ran, told = _exact_table(request) if exact else _simulated_table(request)
-    analysis = analyse(table, tolerance=tolerance, confidence=request.scenario.run.confidence)
+    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
+    run = request.scenario.run
+    analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
+    found = look_beyond(request, analysis, document, **wanted)
     if best is not None:
         document["control"] = beside(best, analysis)
     if choice is not None:
@@ -80,14 +114,17 @@ def game(
     if request.as_json:
         put_json(document)
     else:
-        _show(analysis, document)
+        _show(analysis, document, found)
     if request.out is not None:
         engine = "exact chain" if ran is None else ran.engine.name
         _write(request, analysis, document, provenance(request, "game", begun, engine=engine))
+        write_pictures(request.out, found)
         if best is not None:
             write_rule(best, request.out)
     if ran is not None:
         finish(ran)
+    if not document.get("counterpart", {"agrees": True})["agrees"]:
+        raise CheckFailed
 
 
 command = scenario_command(game)
@@ -111,7 +148,7 @@ def _axes(request: Request) -> tuple[Any, Any, Any]:
     return profiles, goal, welfare_of(request.scenario)
 
 
-def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
+def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums, simulated_table
@@ -121,31 +158,45 @@ def _simulated_table(request: Request) -> tuple[Any, Any, dict[str, Any]]:
     profiles, goal, welfare = _axes(request)
     for said in advice(request.scenario):
         say(f"advice: {said}")
+    beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
+    exact = None if beside is None else _exact_cells(beside, profiles)[0]
     run = request.scenario.run
     sums = TableSums(request.scenario, profiles.cells, run.replications)
     policies = list(profiles.policies(request.policy))
     ran = run_replications(request, policies, label="game", take=sums.add, keep=True)
     require(len(sums.complete), ran.interrupted)
-    table = simulated_table(profiles, goal, welfare, sums.sums(), run.confidence)
+    known = controls_of(request, sums.complete, controls)
+    also, checked = None, {}
+    if beside is not None:
+        also, checked = run_counterpart_table(beside, profiles, sums, exact, known)
+    table = simulated_table(
+        profiles, goal, welfare, sums.sums(), run.confidence, controls=known, counterpart=also
+    )
     hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
     told = {
         "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
         "record_hash": hash_records(hashes),
-    } | ran.to_dict()  # fmt: skip
+    } | ran.to_dict() | checked  # fmt: skip
     return table, ran, told
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.command.exact_cells import solved
-    from analysis.exact_tables import must_compile
     from analysis.payoffs import exact_table
 
     profiles, goal, welfare = _axes(request)
-    if must_compile(request.scenario, request.policy, profiles.cells):
-        say("compiling the exact chain's kernels, once on this machine (some seconds)")
-    cells, kept = solved(request, list(profiles.policies(request.policy)))
+    cells, kept = _exact_cells(request, profiles)
     told = {"engine": "exact chain", "interrupted": False} | kept
     return exact_table(profiles, goal, welfare, cells), None, told
+
+
+def _exact_cells(request: Request, profiles: Any) -> tuple[list[Any], dict[str, int]]:
+    """The units' exact measures of every cell, and what the document says of the store."""
+    from analysis.command.exact_cells import solved
+    from analysis.exact_tables import must_compile
+
+    if must_compile(request.scenario, request.policy, profiles.cells):
+        say("compiling the exact chain's kernels, once on this machine (some seconds)")
+    return solved(request, list(profiles.policies(request.policy)))
 
 
 def _write(request: Request, analysis: Any, document: dict[str, Any], origin: dict[str, Any]) -> None:
@@ -161,8 +212,8 @@ def _write(request: Request, analysis: Any, document: dict[str, Any], origin: di
         say("payoff pictures are drawn for two players only; the table is in table.csv")
 
 
-def _show(analysis: Any, document: dict[str, Any]) -> None:
-    from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING
+def _show(analysis: Any, document: dict[str, Any], found: Any) -> None:
+    from analysis.findings import ONE_NETWORK, POINT_ESTIMATE_WARNING, SETS_NOTE
 
     put_heading(document)
     put_text(f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
@@ -171,6 +222,8 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
         put_text(
             f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
         )
+        put_text(*controls_sentence(document))
+        show_counterpart(document)
     put_text("")
     if len(document["players"]) == 2:
         for player in (0, 1):
@@ -181,13 +234,14 @@ def _show(analysis: Any, document: dict[str, Any]) -> None:
     _show_outcomes(document)
     for finding in document["findings"]:
         put_text(finding["statement"] + ".")
+    show_beyond(document, found)
     if "control" in document:
         show_control(document)
     if "structure" in document:
         put_text("", *document["structure"]["reads"], document["search"]["reads"] + ".")
     put_text("", ONE_NETWORK)
     if not analysis.is_exact:
-        put_text("", POINT_ESTIMATE_WARNING)
+        put_text("", POINT_ESTIMATE_WARNING if analysis.sets is None else SETS_NOTE)
     put_caution()
 
 
@@ -274,19 +328,20 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
 def _show_equilibria(document: dict[str, Any]) -> None:
     from analysis.profiles import text_of
 
-    players, listed = document["players"], document["equilibria"][:MOST_LISTED]
+    players, pure = document["players"], [one for one in document["equilibria"] if one["kind"] == "pure"]
+    listed = pure[:MOST_LISTED]
     put_table(
         f"Equilibria ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating alone; "
         "welfare a day)",
-        ("verdict", *players, *(f"regret {player}" for player in players), "welfare"),
+        ("verdict", *players, *(f"regret {player}" for player in players), *_years_heading(listed), "welfare"),
         [
             (one["verdict"], *(text_of(_told(one)[p]) for p in players), *(_regret(one["regret"][p]) for p in players),
-             _value(one["welfare"]))
+             *_soonest(one), _value(one["welfare"]))
             for one in listed
         ],
     )  # fmt: skip
-    if len(document["equilibria"]) > MOST_LISTED:
-        put_text(f"... and {len(document['equilibria']) - MOST_LISTED} more (all are in --json and --out).")
+    if len(pure) > MOST_LISTED:
+        put_text(f"... and {len(pure) - MOST_LISTED} more (all are in --json and --out).")
 
 
 def _chosen(document: dict[str, Any]) -> str:
@@ -297,6 +352,20 @@ def _chosen(document: dict[str, Any]) -> str:
 def _told(one: dict[str, Any]) -> dict[str, Any]:
     """What tells an equilibrium from others: its strategies, or the thresholds where these are enough."""
     return one.get("strategies", one["thresholds"])
+
+
+def _years_heading(listed: list[dict[str, Any]]) -> list[str]:
+    return ["years before a gain shows"] if any("years_to_notice" in one for one in listed) else []
+
+
+def _soonest(one: dict[str, Any]) -> list[str]:
+    """The fewest years of own data after which any unit could notice a gain, from the regrets' upper ends."""
+    if "years_to_notice" not in one:
+        return []
+    soon = [years["low"] for years in one["years_to_notice"].values() if years["low"] is not None]
+    if not soon:
+        return ["never"]
+    return [f"at least {min(soon):.0f}" if min(soon) < LONG_YEARS else f"more than {LONG_YEARS}"]
 
 
 def _regret(value: Any) -> str:

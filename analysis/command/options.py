@@ -6,7 +6,7 @@ import functools
 import math
 import os
 import unicodedata
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -26,7 +26,7 @@ class Request:
     """A scenario with every override of the command line applied, and how to run it.
 
     confidence: as the command line gave it; the scenario's run table has the one in force. changes: what the
-    command line changed of the scenario, in words.
+    command line changed of the scenario, in words. kept: hands over runs that are there, instead of running any.
     """
 
     scenario: Any
@@ -37,6 +37,7 @@ class Request:
     out: Path | None
     as_json: bool
     changes: tuple[str, ...] = ()
+    kept: Callable[..., Any] | None = None
 
     @property
     def heading(self) -> dict[str, Any]:
@@ -113,7 +114,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
     scenario = read_scenario(values["scenario"])
     faults: list[Fault] = []
     changes = {key: values[key] for key in ("seed", "replications", "confidence") if values[key] is not None}
-    scenario = scenario.with_run(**changes)
+    scenario = _under(scenario.with_run(**changes), values["policy"])
     scenario = _with_demand(scenario, values["demand"], faults)
     scenario = _with_target(scenario, values["target"], faults)
     if values["exponential"]:
@@ -136,6 +137,24 @@ def request_of(values: Mapping[str, Any]) -> Request:
         values["as_json"],
         _changes(values),
     )
+
+
+def call_with(request: Request, name: str, arguments: Sequence[str]) -> None:
+    """Runs a scenario command on a request that is there already; its own options come from the arguments."""
+    from analysis.command.entry import brimline
+
+    command = brimline.get_command(None, name)  # type: ignore[arg-type]
+    with command.make_context(name, list(arguments), obj=(name, *arguments)) as context:
+        own = {option: value for option, value in context.params.items() if option not in _COMMON}
+        command.callback.__wrapped__(request, **own)
+
+
+def require_folder(folder: Path) -> None:
+    """A fault where results cannot be written there."""
+    faults: list[Fault] = []
+    _writable(folder, faults)
+    if faults:
+        raise ScenarioError(faults)
 
 
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
@@ -171,6 +190,14 @@ def _with_target(scenario: Any, target: float | None, faults: list[Fault]) -> An
         )
         return scenario
     return scenario.with_target(target)
+
+
+def _under(scenario: Any, name: str | None) -> Any:
+    """The network that the policy is for; of an unknown policy `_policy` tells."""
+    try:
+        return scenario.under(None if name is None else unicodedata.normalize("NFC", name))
+    except KeyError:
+        return scenario
 
 
 def _policy(scenario: Any, name: str | None, faults: list[Fault]) -> Any:

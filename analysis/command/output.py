@@ -14,7 +14,7 @@ from analysis.command.caution import CAUTION
 PLAIN_WIDTH = 132
 WRITTEN = (
     "result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*", "warm-up.*",
-    "hour-of-week.*",
+    "hour-of-week.*", "replies.*", "price-over-weights.*", "comparison-*.*", "ledger.*",
 )  # fmt: skip
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import importlib
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import chdir, suppress
 from dataclasses import dataclass
@@ -11,7 +12,7 @@ from typing import Any
 from analysis.command.entry import brimline
 from analysis.command.options import Request, request_of
 from analysis.command.phase_fit import fitted
-from sim.errors import BrimlineError, StoreError
+from sim.errors import BrimlineError, ScenarioError, StoreError
 from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy, plan_intake
 from sim.replicate import Failure, run_batch
 from sim.store import Store
@@ -25,10 +26,17 @@ def arguments_of(origin: Mapping[str, Any]) -> list[str]:
 
 def request_again(origin: Mapping[str, Any]) -> tuple[str, Request]:
     """A recorded command's name and request; StoreError where its scenario or data are not what they were."""
+    name, request, _ = _made_again(origin)
+    return name, request
+
+
+def _made_again(origin: Mapping[str, Any]) -> tuple[str, Request, Mapping[str, Any]]:
+    """As `request_again`, with the values of all the command's options."""
     name = arguments_of(origin)[0]
     try:
         with chdir(origin["cwd"]):
-            request = request_of(_options(origin))
+            values = _options(origin)
+            request = request_of(values)
     except (BrimlineError, OSError) as error:
         raise StoreError(f"the recorded command cannot be run again: {error}") from error
     source, then = request.scenario.source, origin["scenario"]
@@ -39,7 +47,7 @@ def request_again(origin: Mapping[str, Any]) -> tuple[str, Request]:
         raise StoreError(
             f"{then['file']} or its data have changed since; its text then is in `results show --json`"
         )
-    return name, request
+    return name, request, values
 
 
 def _options(origin: Mapping[str, Any]) -> dict[str, Any]:
@@ -49,13 +57,25 @@ def _options(origin: Mapping[str, Any]) -> dict[str, Any]:
     return command.make_context(name, arguments).params
 
 
+def parts_of(origin: Mapping[str, Any]) -> list[Mapping[str, Any]]:
+    """The provenances of a batch's parts; any other command is its own one part."""
+    return list(origin.get("parts", [origin]))
+
+
 def policies_of(name: str, request: Request) -> Sequence[Any]:
-    """The policies that a command runs."""
+    """The policies that `simulate` or `game` runs."""
     from analysis.payoffs import profiles_of
 
     if name == "game":
         return list(profiles_of(request.scenario, request.policy).policies(request.policy))
     return [request.policy]
+
+
+def jobs_of(name: str, request: Request, values: Mapping[str, Any]) -> Sequence[tuple[Any, Sequence[Any]]]:
+    """The networks that a command keeps runs of, each with its policies."""
+    if name in ("compare", "ledger"):
+        return importlib.import_module(f"analysis.command.{name}").jobs(request, values)
+    return [(request.scenario, policies_of(name, request))]
 
 
 @dataclass(frozen=True)
@@ -73,23 +93,25 @@ def recipes(store: Store) -> tuple[dict[str, Recipe], list[str]]:
     reasons: dict[str, None] = {}
     for origin in _distinct(store):
         try:
-            name, request = request_again(origin)
-        except StoreError as error:
+            made = _made_again(origin)
+            with chdir(origin["cwd"]):
+                jobs = jobs_of(*made)
+        except (StoreError, ScenarioError) as error:
             reasons[str(error)] = None
             continue
-        network, plan = lower_network(request.scenario), plan_intake(request.scenario)
-        recipe = found.setdefault(scenario_hash(network, plan), Recipe(network, plan, {}))
-        for policy in policies_of(name, request):
-            rules = lower_policy(request.scenario, policy)
-            recipe.rules[cell_hash(rules)] = rules
+        for scenario, policies in jobs:
+            network, plan = lower_network(scenario), plan_intake(scenario)
+            recipe = found.setdefault(scenario_hash(network, plan), Recipe(network, plan, {}))
+            for policy in policies:
+                rules = lower_policy(scenario, policy)
+                recipe.rules[cell_hash(rules)] = rules
     return found, list(reasons)
 
 
 def _distinct(store: Store) -> Iterator[Mapping[str, Any]]:
     """The provenances of different command lines or scenario texts."""
     seen = set()
-    for command in store.commands():
-        origin = command["provenance"]
+    for origin in (one for command in store.commands() for one in parts_of(command["provenance"])):
         mark = (*origin["command"], origin["cwd"], origin["scenario"]["sha256"])
         if mark not in seen:
             seen.add(mark)

@@ -110,6 +110,16 @@ def show(folder: Path, as_json: bool) -> None:
         put_text(f"failed: thresholds {one['thresholds']}, replication {one['replication']}: {last_line}")
 
 
+@command.command()
+@FOLDER
+@JSON
+def watch(folder: Path, as_json: bool) -> None:
+    """How far a batch is, until it ends or Ctrl-C (with --json: once); the batch is not touched."""
+    from analysis.command.watching import watch as follow
+
+    follow(folder, as_json)
+
+
 # ---- export ----
 
 
@@ -197,14 +207,15 @@ def verify(folder: Path, sample: int, as_json: bool) -> None:
 @JSON
 def repeat(folder: Path, as_json: bool) -> None:
     """Run the last recorded command again, beside the old results, and compare; status 1 on different bits."""
-    from analysis.command.recorded import request_again
+    from analysis.command.recorded import parts_of, request_again
 
     with _store(folder) as store:
         commands, before = store.commands(), store.hashes() | store.exact_hashes()
     if not commands:
         raise StoreError(f"{folder} records no command")
     origin = commands[-1]["provenance"]
-    request_again(origin)  # refuses a scenario that is not what it was
+    for part in parts_of(origin):
+        request_again(part)  # refuses a scenario that is not what it was
     again = _hashes_again(origin)
     different = [key for key, found in again.items() if before.get(key, found) != found]
     missing = sum(key not in before for key in again)

@@ -16,7 +16,7 @@ from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.provenance import fingerprint, now
-from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
+from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_networks, replicate_shares
 from sim.resuming import Job
 from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
@@ -121,6 +121,8 @@ def run_replications(
     keep: with --out, runs are kept in the folder's store as they arrive, and those that are there are not run again.
     first: replications below it have been run by this command; without a store they are left out.
     """
+    if request.kept is not None:
+        return request.kept(policies, take)
     if not keep or request.out is None:
         whole = [Share(tuple(range(len(policies))), range(first, request.scenario.run.replications))]
         return _run(request, policies, whole, _effort(request, whole), label=label, take=take)
@@ -157,7 +159,7 @@ def _run_beside(
     return replace(ran, computed=job.computed, reused=job.reused)
 
 
-def _size(shares: Sequence[Share]) -> tuple[int, int]:
+def size_of(shares: Sequence[Share]) -> tuple[int, int]:
     """Replications, and policies of each on average, at least one."""
     replications = sum(len(share.replications) for share in shares)
     runs = sum(len(share.replications) * len(share.cells) for share in shares)
@@ -165,7 +167,7 @@ def _size(shares: Sequence[Share]) -> tuple[int, int]:
 
 
 def _effort(request: Request, shares: Sequence[Share]) -> Effort:
-    return effort(request, *_size(shares))
+    return effort(request, *size_of(shares))
 
 
 def _run(
@@ -185,7 +187,7 @@ def _run(
     replies = until_interrupted(
         replicate_shares(
             scenario, policies, shares, engine=engine, workers=planned.workers,
-            task_size=planned.pace.task_size(*_size(shares), planned.count),
+            task_size=planned.pace.task_size(*size_of(shares), planned.count),
         )
     )  # fmt: skip
     failures = []
@@ -193,6 +195,30 @@ def _run(
     with replies, progress(label, runs, "runs") as bar:
         for reply in replies:
             take(reply)
+            if isinstance(reply, Failure):
+                failures.append(reply)
+                say(f"failed: {reply}")
+            bar.advance(len(reply.cells) if isinstance(reply, Failure) else len(reply))
+    return Ran(planned.engine, failures, replies.interrupted)
+
+
+def run_resampled(request: Request, resampling: Any) -> Ran:
+    """Runs the few replications of every resampling; none of them is kept in a store."""
+    cells = resampling.runs // len(resampling.replications)
+    planned = effort(request, len(resampling.replications), cells)
+    engine, failures = planned.engine.name, []
+    engines.load(engine).warm(
+        lower_network(request.scenario),
+        [lower_policy(request.scenario, request.policy)],
+        plan_intake(request.scenario),
+    )
+    jobs = ((key, group.scenario, group.policies) for key, group in resampling.networks())
+    replies = until_interrupted(
+        replicate_networks(jobs, resampling.replications, engine=engine, workers=planned.workers)
+    )
+    with replies, progress("resampled records", resampling.runs, "runs") as bar:
+        for key, reply in replies:
+            resampling.take(key, reply)
             if isinstance(reply, Failure):
                 failures.append(reply)
                 say(f"failed: {reply}")

@@ -8,7 +8,15 @@ from typing import Any
 
 import click
 
-from analysis.command.entry import say
+from analysis.command.controls import controls_of, controls_option, controls_sentence
+from analysis.command.counterpart import (
+    counterpart_document,
+    counterpart_option,
+    exact_counterpart,
+    run_counterpart,
+    show_counterpart,
+)
+from analysis.command.entry import CheckFailed, say
 from analysis.command.options import Request, require_file_can_be_written, scenario_command
 from analysis.command.output import (
     interval,
@@ -44,6 +52,8 @@ from sim.errors import Fault, ScenarioError
 @click.option("--per-replication", is_flag=True, help="Raw measures and hashes of each replication.")
 @precision_options
 @path_options
+@controls_option
+@counterpart_option
 def simulate(
     request: Request,
     trace: Path | None,
@@ -54,10 +64,13 @@ def simulate(
     precise: tuple[str, ...],
     warm_up_advice: bool,
     hour_of_week: bool,
+    controls: bool,
+    counterpart: bool,
 ) -> None:
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
     from analysis.command.running import collect_runs, finish
+    from analysis.controls import controls_document
     from analysis.simulation import per_replication_measures, summarise
     from sim.record import hash_records
     from sim.scenario.describe import advice
@@ -68,23 +81,34 @@ def simulate(
     aim = aim_of(request, precision, precise)
     for said in advice(request.scenario):
         say(f"advice: {said}")
+    beside = exact_counterpart(request) if counterpart else None
     if aim is None:
-        (runs, ran), known = collect_runs(request, label="simulate", keep=True), None
+        (runs, ran), reached = collect_runs(request, label="simulate", keep=True), None
     else:
-        runs, ran, known = collect_until_precise(request, aim, label="simulate")
+        runs, ran, reached = collect_until_precise(request, aim, label="simulate")
+    replications = [run.replication for run in runs]
+    known = controls_of(request, replications, controls)
+    also, checked = (None, None) if beside is None else run_counterpart(beside, request, replications)
     result = summarise(
-        [run.record for run in runs], request.scenario, confidence=request.scenario.run.confidence
+        [run.record for run in runs],
+        request.scenario,
+        confidence=request.scenario.run.confidence,
+        controls=known,
+        counterpart=also,
     )
     document = _heading(request) | result.to_dict() | {
         "replications": result.replications,
         "confidence": result.confidence,
         "seed": request.scenario.run.seed,
         "record_hash": hash_records([run.record.hash for run in runs]),
+        "controls": controls_document(result.controls, result.variance_ratio),
     } | ran.to_dict()  # fmt: skip
+    if checked is not None:
+        document["counterpart"] = counterpart_document(checked, used=also is not None)
     if per_replication:
         document["per_replication"] = per_replication_measures(runs, request.scenario)
-    if known is not None:
-        document["precision"] = known
+    if reached is not None:
+        document["precision"] = reached
     ran = _add_paths(document, request, runs, ran, warm_up=warm_up_advice, week=hour_of_week)
     if request.as_json:
         put_json(document)
@@ -97,6 +121,8 @@ def simulate(
     if trace is not None or intake_out is not None:  # perhaps into that very folder
         _write_trace(request, ran.engine.name, replication, trace, intake_out)
     finish(ran)
+    if checked is not None and not checked.agrees:
+        raise CheckFailed
 
 
 command = scenario_command(simulate)
@@ -160,8 +186,10 @@ def _show(document: dict[str, Any], request: Request) -> None:
         + ", ".join(f"{name} {k}" for name, k in document["thresholds"].items()),
         f"{document['replications']} replications, {100 * document['confidence']:g} % intervals, "
         f"seed {document['seed']}, engine {document['engine']}",
+        *controls_sentence(document),
         "",
     )
+    show_counterpart(document)
     units = document["units"]
     put_table(
         "By unit (rates marked h count the unit's own population, wherever treated)",

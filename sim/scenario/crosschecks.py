@@ -194,13 +194,32 @@ def _reached(draft: Draft) -> set[str] | None:
 def _policies(draft: Draft) -> None:
     of_rules = [key for keys in tables("policy_keys") for key in keys.model_fields]
     for row in draft.rows("policies"):
-        for key in ("closure_threshold", *of_rules, "referral_order"):
+        for key in ("closure_threshold", *of_rules, "referral_order", "beds", "target_utilisation"):
             for path in draft.below("policies", row, key):
                 draft.known_unit(path, path[-1])
                 if key.endswith("threshold"):
-                    draft.fault_above_beds(path, draft.beds.get(path[-1]))
+                    beds = draft.read("policies", row, "beds", path[-1], default=draft.beds.get(path[-1]))
+                    draft.fault_above_beds(path, beds)
                 elif key == "referral_order":
                     _order(draft, path, path[-1])
+                elif key == "beds":
+                    _beds_hold_thresholds(draft, row, path)
+
+
+def _beds_hold_thresholds(draft: Draft, row: int, path: Path) -> None:
+    """Beds that a policy takes away must leave room for the thresholds that it keeps from the file."""
+    beds = draft.read(*path)
+    for unit in (one for one in draft.rows("units") if draft.name(one) == path[-1]):
+        for key in ("closure_threshold", "incoming_threshold"):
+            kept = draft.read("units", unit, key)
+            if None not in (beds, kept) and beds < kept and not _given(draft, row, key, path[-1]):
+                rule = f"must not be below the unit's own {key}, unless the policy gives one too"
+                remedy = f"give the policy `{key} = {{ {shown(path[-1])} = {beds} }}` or less"
+                draft.fault(path, rule, f"got {beds} below {kept}", remedy)
+
+
+def _given(draft: Draft, row: int, key: str, unit: str | int) -> bool:
+    return any(path[-1] == unit for path in draft.below("policies", row, key))
 
 
 def _sizes(draft: Draft) -> None:

@@ -17,7 +17,8 @@ from sim.wording import as_written, in_words, nearest, shown
 __all__ = ["Collector", "nearest", "shown", "step"]
 
 _NAMED_ROWS = {
-    ("units",): "name", ("patients",): "group", ("policies",): "name", ("game", "players"): "name"
+    ("units",): "name", ("patients",): "group", ("policies",): "name", ("game", "players"): "name",
+    ("parts",): "name",
 }  # fmt: skip
 _TAGS = ("family", "kind")
 _UNIONS = ("stay", "delay", "welfare", "goal")

@@ -45,6 +45,12 @@ def parse_scenario(text: str, *, folder: str | Path = ".", file: str = "scenario
     return scenario.from_source(Source(file, text, _data_hashes(scenario)))
 
 
+def read_toml(path: str | Path) -> tuple[str, dict[str, Any]]:
+    """The text of a TOML file and its tables, names and keys in NFC; ScenarioError where it cannot be read."""
+    text = unicodedata.normalize("NFC", _text_of(Path(path)))
+    return text, _toml(text, str(path))
+
+
 def _text_of(path: Path) -> str:
     try:
         with path.open("rb") as opened:
@@ -97,7 +103,7 @@ def _composed(value: Any) -> Any:
 
 _SYNTAX = {
     r"Cannot overwrite a value": ("a key is given twice", "remove one of the two"),
-    r"Cannot (?:declare|mutate immutable namespace) \('(units|patients|policies)',\).*": (
+    r"Cannot (?:declare|mutate immutable namespace) \('(units|patients|policies|parts)',\).*": (
         "a second table `[{0}]`", "write `[[{0}]]` in double brackets above each row"),
     r"Cannot declare \((.*?),?\) twice": ("a second table {0}", "join the two"),
     r"Invalid value": ("no value that TOML knows", "correct this line (text needs quotes)"),

@@ -10,16 +10,21 @@ from typing import Annotated
 from pydantic import Field
 
 from sim.rules import tables
-from sim.scenario.units import Name, Names, Unit
+from sim.scenario.units import Beds, Name, Names, Target, Unit
 from sim.tables import Table, Threshold
 
 
 class PolicyRow(*tables("policy_keys"), Table):
-    """A named change of the file's own rules; what a row does not name stays as the units have it."""
+    """A named change of the file's own rules; what a row does not name stays as the units have it.
+
+    beds, target_utilisation: of a network that is otherwise the same and meets the same patients.
+    """
 
     name: Annotated[Name, Field(examples=['name = "close only when full"'])]
     closure_threshold: dict[str, Threshold] = {}
     referral_order: dict[str, Names] = {}
+    beds: dict[str, Beds] = {}
+    target_utilisation: dict[str, Target] = {}
 
 
 @dataclass(frozen=True)

@@ -10,6 +10,7 @@ from typing import Annotated, Any
 
 from pydantic import AfterValidator, Field, PrivateAttr
 
+from sim.durations import Observed, observed, with_observed
 from sim.scenario.diversion import Diversion
 from sim.scenario.game import Game
 from sim.scenario.patients import PatientGroup
@@ -82,12 +83,28 @@ class Scenario(Table):
             raise KeyError(name) from None
 
     def policy(self, name: str | None = None) -> Policy:
-        """The file's own rules, or a named policy; KeyError where there is none of that name."""
-        own = policy_of_file(self.units, self.diversion.when_all_closed)
+        """The file's own rules, or a named policy; KeyError where there is none of that name.
+
+        A policy that changes beds is for `under(name)`, the network that has them.
+        """
+        own = policy_of_file(self.under(name).units, self.diversion.when_all_closed)
+        return own if name is None else own.after(self._row(name))
+
+    def under(self, name: str | None) -> Scenario:
+        """The network that a named policy is for: with the beds and targets that its row gives, if any.
+
+        The patients of a replication are the same. KeyError where there is no policy of that name.
+        """
         if name is None:
-            return own
-        rows = {row.name: row for row in self.policies}
-        return own.after(rows[name])
+            return self
+        row = self._row(name)
+        changes = {key: getattr(row, key) for key in ("beds", "target_utilisation")}
+        if not any(changes.values()):
+            return self
+        return self._changed(units=tuple(_with(unit, changes) for unit in self.units))
+
+    def _row(self, name: str) -> PolicyRow:
+        return {row.name: row for row in self.policies}[name]
 
     def strategies(self) -> dict[str, tuple[int, ...]]:
         """Unit name -> the closure thresholds that it may choose in the game, for every unit that chooses one."""
@@ -141,6 +158,22 @@ class Scenario(Table):
         units = (unit.model_copy(update={"target_utilisation": target}) for unit in self.units)
         return self._changed(units=tuple(units))
 
+    def observed(self) -> Observed:
+        """Every record that stays and delays are taken from: (file, column) -> times."""
+        durations = [*(group.stay for group in self.patients), self.diversion.delay]
+        return {key: values for one in durations for key, values in observed(one).items()}
+
+    def with_observed(self, records: Observed) -> Scenario:
+        """The same scenario with other records in the place of its own, all of them: a resampling."""
+        delay = self.diversion.delay
+        groups = (
+            group.model_copy(update={"stay": with_observed(group.stay, records)}) for group in self.patients
+        )
+        moved = None if delay is None else with_observed(delay, records)
+        return self._changed(
+            patients=tuple(groups), diversion=self.diversion.model_copy(update={"delay": moved})
+        )
+
     def exponential(self) -> Scenario:
         """The exponential counterpart: exponential stays of the same means, transfers that take no time and
         add no days, constant demand. Closure rules stay as they are."""
@@ -158,3 +191,10 @@ class Scenario(Table):
         copy = self.model_copy()
         copy._source = dataclasses.replace(source)
         return copy
+
+
+def _with(unit: Unit, changes: Mapping[str, Mapping[str, Any]]) -> Unit:
+    """The unit with its own values of some keys, each given by unit name."""
+    return unit.model_copy(
+        update={key: named[unit.name] for key, named in changes.items() if unit.name in named}
+    )

@@ -44,6 +44,7 @@ Line = Annotated[str, AfterValidator(_of_one_line)]
 Name = Annotated[Line, AfterValidator(_speakable)]
 Target = Annotated[float, Field(gt=0, le=1)]
 Names = Annotated[tuple[str, ...], Row]
+Beds = Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["beds = 12"])]
 
 
 class Unit(*tables("unit_keys"), Table):
@@ -53,7 +54,7 @@ class Unit(*tables("unit_keys"), Table):
     """
 
     name: Annotated[Name, AfterValidator(_not_reserved), Field(examples=['name = "Ashgill"'])]
-    beds: Annotated[int, Field(ge=1, le=MOST_BEDS, examples=["beds = 12"])]
+    beds: Beds
     closure_threshold: Annotated[Threshold | None, Field(examples=["closure_threshold = 11"])] = None
     target_utilisation: Annotated[Target | None, Field(examples=["target_utilisation = 0.75"])] = None
     referral_order: Annotated[Names | None, Field(examples=['referral_order = ["Norbeck"]'])] = None

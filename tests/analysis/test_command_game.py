@@ -43,8 +43,9 @@ def check_replies(document):
 
 
 def check_equilibria(document):
-    """Everybody replies best there, and there only."""
+    """Everybody replies best there, and there only: in the table as it stands, where that is estimated."""
     listed = [one["thresholds"] for one in document["equilibria"]]
+    listed = document.get("estimated_equilibria", listed)
     every = product(*(document["strategies"][name] for name in document["players"]))
     for profile in (dict(zip(document["players"], ks, strict=True)) for ks in every):
         stable = all(
@@ -106,13 +107,43 @@ def test_the_simulated_game_has_intervals(call, two):
     numbers += [document[name] for name in ("price_of_anarchy", "price_of_stability", "lost_per_year")]
     numbers += [document["optimum"]["welfare"]]
     for one in document["equilibria"]:
-        assert one["verdict"] == "estimated"
+        assert one["verdict"] in ("possible", "confirmed")
         numbers += [one["welfare"], *one["regret"].values()]
     assert document["equilibria"]
     assert all(set(number) == {"mean", "low", "high"} for number in numbers)
     assert all(number["low"] <= number["mean"] <= number["high"] for number in numbers)
     check_replies(document)
     check_equilibria(document)
+
+
+def test_what_is_undecided_is_what_is_possible_and_not_confirmed(call, two):
+    status, document = call("game", two, "--replications", 20, "--epsilon", 0.02)
+    assert status == 0 and document["epsilon"] == {"value": 0.02, "origin": "asked for"}
+    verdicts = [one["verdict"] for one in document["equilibria"]]
+    assert document["possible"] == len(verdicts) and document["confirmed"] == verdicts.count("confirmed")
+    undecided = [one["thresholds"] for one in document["equilibria"] if one["verdict"] == "possible"]
+    assert [one["thresholds"] for one in document["undecided"]] == undecided
+    for one in (*document["undecided"], *document["equilibria"]):
+        assert set(one["regret"]) == set(one["years_to_notice"]) == {"A", "B=b"}
+    assert document["controls"]["used"] and document["controls"]["degrees"] == 15
+    tight = call("game", two, "--replications", 20, "--epsilon", 0)[1]
+    assert tight["confirmed"] == 0 and len(tight["undecided"]) == tight["possible"] == document["possible"]
+    wide = call("game", two, "--replications", 20, "--epsilon", 1)[1]
+    assert wide["undecided"] == [] and {one["verdict"] for one in wide["equilibria"]} == {"confirmed"}
+
+
+def test_the_default_epsilon_takes_a_manager_ten_years(call, two):
+    document = call("game", two, "--replications", 20)[1]
+    assert "10 years" in document["epsilon"]["origin"] and document["epsilon"]["value"] > 0
+
+
+def test_controls_can_be_switched_off_and_are_off_where_replications_are_few(call, two):
+    assert call("game", two, "--replications", 20, "--no-controls")[1]["controls"] == {"used": False}
+    assert call("game", two, "--replications", 9)[1]["controls"] == {"used": False}
+
+
+def test_epsilon_is_for_simulation(call, two):
+    assert call("game", two, "--exact", "--epsilon", 0.1)[0] == 2
 
 
 def test_worker_processes_and_order_of_replies_change_nothing(call, two):
@@ -232,13 +263,17 @@ def files_in(folder):
     return {path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()}
 
 
-PICTURES = {f"payoffs-{player}.{ending}" for player in (1, 2) for ending in ("png", "svg")}
+CURVE = {"price-over-weights.png", "price-over-weights.svg"}
+PICTURES = CURVE | {
+    f"{name}.{ending}" for name in ("payoffs-1", "payoffs-2", "replies") for ending in ("png", "svg")
+}
 
 
 def test_results_are_written_to_a_folder(call, two, tmp_path):
     folder = tmp_path / "out"
     _, document = call("game", two, "--exact", "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | PICTURES
+    store = {"runs.sqlite", "runs.lock"}
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | store | PICTURES
     kept = json.loads((folder / "result.json").read_text(encoding="utf-8"), parse_constant=no_constants)
     assert kept == document
     origin = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))
@@ -267,10 +302,10 @@ def test_a_second_run_keeps_the_earlier_result_and_leaves_other_files_alone(call
         assert json.loads((folder / place / "result.json").read_text(encoding="utf-8")) == document
 
 
-def test_three_units_have_a_table_but_no_pictures(call, three, tmp_path):
+def test_three_units_have_a_table_but_no_pictures_of_two_axes(call, three, tmp_path):
     folder = tmp_path / "out"
     call("game", three, "--replications", 2, "--out", folder)
-    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | STORE
+    assert files_in(folder) == {"result.json", "provenance.json", "table.csv"} | CURVE | STORE
     header = (folder / "table.csv").read_text(encoding="utf-8").splitlines()[0].split(",")
     assert {"threshold C", "payoff C", "payoff C low", "payoff C high", "regret C", "welfare"} <= set(header)
 

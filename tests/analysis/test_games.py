@@ -5,9 +5,11 @@ import math
 import numpy as np
 import pytest
 
-from analysis.games import analyse, regret_estimate, welfare_estimate
+from analysis.contrasts import evidence_of
+from analysis.games import analyse, welfare_estimate
 from analysis.goals import TargetGoal, Welfare
 from analysis.payoffs import Outcomes, PayoffTable, Profiles
+from analysis.sets import regret_bounds
 
 PROFILES = Profiles(("A", "B"), ((3, 5, 8), (4,)))  # B has no choice
 COSTS = np.array([[1.0, 2.0, 3.0], [0.0, 1.0, 1.0], [3.0, 3.0, 3.0]])  # of A: (strategies, replications)
@@ -38,27 +40,34 @@ def students_2(probability):
     return a * math.sqrt(2 / (1 - a * a))
 
 
-def test_the_regrets_interval_is_paired_and_holds_for_all_deviations_at_once():
+LEVEL = 0.025  # of either set, and of either end of a regret, where both together have 95 %
+
+
+def bounds_of(costs):
+    found = regret_bounds(evidence_of(table_of(costs)), LEVEL)
+    return found.low[:, :, 0], found.high[:, :, 0]
+
+
+def test_a_regrets_bounds_are_paired_and_share_the_level_as_they_must():
     """A gains 1, 1, 2 by moving to 5: mean 4/3, standard error 1/3. By moving to 8 it gains -2, -1, 0.
 
-    Two deviations share the 5 %; the upper end is the larger of the two gains' upper ends.
+    The upper end is the larger of the gains' upper ends, three profiles sharing the level; at the lower end the two
+    deviations share it.
     """
-    critical = students_2(1 - 0.05 / 4)
-    found = regret_estimate(table_of(COSTS), (0, 0), 0, 0.95)
-    assert found.mean == pytest.approx(4 / 3)
-    assert found.high == pytest.approx(max(4 / 3 + critical / 3, -1 + critical / math.sqrt(3)))
-    assert found.low == 0  # 4/3 - critical / 3 is below the least that a regret can be
+    low, high = bounds_of(COSTS)
+    above = students_2(1 - LEVEL / 3)
+    assert high[0, 0] == pytest.approx(max(4 / 3 + above / 3, -1 + above / math.sqrt(3)))
+    assert low[0, 0] == 0  # 4/3 - students_2(1 - LEVEL / 2) / 3 is below the least that a regret can be
 
 
 def test_a_regret_that_is_sure_has_a_lower_end_above_nought():
     steady = np.array([[1.0, 2.0, 3.0], [0.5, 1.5, 2.4], [3.0, 3.0, 3.0]])
-    found = regret_estimate(table_of(steady), (0, 0), 0, 0.95)
-    half = students_2(1 - 0.05 / 4) * np.std([0.5, 0.5, 0.6], ddof=1) / math.sqrt(3)
-    assert found.low == pytest.approx(1.6 / 3 - half)
+    half = students_2(1 - LEVEL / 2) * np.std([0.5, 0.5, 0.6], ddof=1) / math.sqrt(3)
+    assert bounds_of(steady)[0][0, 0] == pytest.approx(1.6 / 3 - half)
 
 
 def test_the_plug_in_regret_of_an_equilibrium_is_0_but_its_upper_end_is_not():
-    found = regret_estimate(table_of(COSTS), (1, 0), 0, 0.95)
+    found = {one.profile: one for one in analyse(table_of(COSTS)).equilibria}[1, 0].regret["A"]
     assert found.mean == 0 and found.low == 0 and found.high > 0
 
 
@@ -67,13 +76,13 @@ def test_the_interval_always_holds_its_point():
     payoffs = np.zeros((2, 3, 1))
     payoffs[0, :, 0] = [0.01, 0.0, 9.0]
     lean = np.array([[1.0, 1.0, 1.0], [0.5, 0.5, 0.5], [3.0, 3.0, 3.0]])
-    found = regret_estimate(table_of(lean, payoffs), (0, 0), 0, 0.95)
+    found = analyse(table_of(lean, payoffs)).equilibria[0].regret["A"]
     assert found.mean == found.low == pytest.approx(0.01)
     assert found.high == pytest.approx(0.5)
 
 
 def test_a_player_without_a_choice_regrets_nothing_for_certain():
-    found = regret_estimate(table_of(COSTS), (0, 0), 1, 0.95)
+    found = analyse(table_of(COSTS)).equilibria[0].regret["B"]
     assert (found.mean, found.low, found.high, found.reason) == (0, 0, 0, None)
 
 
@@ -85,11 +94,23 @@ def test_the_welfare_of_a_profile_by_hand():
 
 
 def test_an_analysis_names_what_it_found_by_thresholds():
+    """Three replications exclude nothing; the table's own equilibrium is kept beside."""
     game = analyse(table_of(COSTS))
-    (one,) = game.equilibria
-    assert one.thresholds == {"A": 5, "B": 4} and (one.kind, one.verdict) == ("pure", "estimated")
+    assert [one.thresholds for one in game.equilibria] == [{"A": k, "B": 4} for k in (3, 5, 8)]
+    assert {(one.kind, one.verdict) for one in game.equilibria} == {("pure", "possible")}
+    assert game.possible.all() and not game.confirmed.any() and len(game.undecided) == 3
+    assert game.found == ((1, 0),)
     assert not game.is_exact and game.cost.optimum == ((1, 0),)
-    assert game.cost.price_of_anarchy.mean == 1
+    assert (
+        game.cost.price_of_stability.mean == 1 == game.cost.price_of_anarchy.mean
+    )  # of (1, 0), the estimated one
+    assert game.cost.is_projected and game.cost.price_of_anarchy.high > 1.5  # of (0, 0), which is possible
+
+
+def test_one_replication_leaves_point_estimates():
+    game = analyse(table_of(COSTS[:, :1]))
+    assert game.sets is None and game.possible is None and game.undecided == ()
+    assert [(one.profile, one.verdict) for one in game.equilibria] == [((1, 0), "estimated")]
 
 
 def test_what_happens_at_a_profile_is_its_own_row_by_unit():

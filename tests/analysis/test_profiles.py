@@ -5,7 +5,16 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from analysis.profiles import Profiles, Strategy, choice_columns, chosen_at, closure, profiles_of, text_of
+from analysis.profiles import (
+    Profiles,
+    Strategy,
+    choice_columns,
+    chosen_at,
+    closure,
+    nearest_profile,
+    profiles_of,
+    text_of,
+)
 from sim.errors import ScenarioError
 from sim.scenario.strategies import listed_strategies, number_of_strategies
 from tests.analysis.builders import memoryless
@@ -132,3 +141,22 @@ def test_a_bare_number_is_the_closure_threshold_of_the_unit_with_the_players_nam
     assert profiles.strategies == ((closure("A", 3), closure("A", 5)), (closure("B", 4),))
     assert profiles.is_plain and profiles.plain() == {"A": [3, 5], "B": [4]}
     assert Strategy((("A", "closure_threshold", 3),)).rules == {"A": {"closure_threshold": 3}}
+
+
+# ---- the present rules ----
+
+
+def test_the_profile_nearest_to_the_present_rules_is_found_player_by_player_the_lower_of_two():
+    present = memoryless(
+        {"name": "A", "beds": 9, "per_day": 1.0}, {"name": "B", "beds": 9, "per_day": 1.0}
+    ).policy()
+    profiles = Profiles(("A", "B"), ((2, 4, 6), (1, 9)))
+    assert nearest_profile(profiles, present.with_thresholds({"A": 5, "B": 7})) == (1, 1)
+    assert nearest_profile(profiles, present.with_thresholds({"A": 9, "B": 2})) == (2, 0)
+
+
+def test_the_present_rules_of_several_units_count_together():
+    profiles, base = axes({"B": {"closure": {"values": [1, 2, 3]}, "incoming": {"values": [0, 2]}}}, TRUST)
+    now = nearest_profile(profiles, base.with_thresholds({"A": 1, "C": 2}))
+    assert profiles.policy(base, now).thresholds == {"A": 1, "B": 2, "C": 2}
+    assert profiles.policy(base, now).units["B"].incoming == 2

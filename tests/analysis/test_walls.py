@@ -156,7 +156,7 @@ WALLS: dict[str, tuple[Callable[[Sources], Iterator[str]], tuple[str, str]]] = {
         ("sim.workers", "import simpy.core"),
     ),
     "only the figures draw": (
-        forbidden(all_but("analysis.figures", "analysis.figures_paths"), *DRAWING),
+        forbidden(lambda module: not module.startswith("analysis.figures"), *DRAWING),
         ("analysis.command.game", "from matplotlib import pyplot"),
     ),
     "numba stands in the compiled engine and the chain, and where both keep their kernels": (
