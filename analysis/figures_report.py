@@ -39,7 +39,10 @@ def occupancy(levels: Sequence[Any], ax: Axes, *, unit: str, closes_at: int | No
         ax.errorbar(beds, mean, yerr=[mean - low, high - mean], fmt="none", ecolor="black", elinewidth=1, capsize=2,
                     label="interval")  # fmt: skip
     if closes_at is not None:
-        ax.axvline(closes_at - 0.5, color="black", linestyle="--", linewidth=1.2, label=f"closes at {closes_at}")
+        ax.axvline(
+            closes_at - 0.5, color="black", linestyle="--", linewidth=1.2, label=f"closes at {closes_at}"
+        )
+    ax.xaxis.get_major_locator().set_params(integer=True)
     ax.set(title=short_name(unit), xlabel="occupied beds", ylabel="share of time", ylim=(0, None))
     ax.legend(fontsize=8)
     return ax
@@ -93,18 +96,26 @@ def _best(document: Mapping[str, Any], player: str) -> Any:
     rows, columns = document["strategies"][player], document["strategies"][other]
     for reply in document["best_responses"][player]:
         across = columns.index(reply["others"][other])
-        yield from ((rows.index(one), across) if own == 0 else (across, rows.index(one)) for one in reply["best"])
+        yield from (
+            (rows.index(one), across) if own == 0 else (across, rows.index(one)) for one in reply["best"]
+        )
 
 
 def _listed(document: Mapping[str, Any], verdict: str) -> Any:
     """(row, column) of the pure equilibria of a verdict."""
     for one in document["equilibria"]:
         chosen = one.get("strategies") or one.get("thresholds") or {}
-        if one.get("verdict") == verdict and one.get("kind") == "pure" and set(document["players"]) <= set(chosen):
+        if (
+            one.get("verdict") == verdict
+            and one.get("kind") == "pure"
+            and set(document["players"]) <= set(chosen)
+        ):
             yield tuple(document["strategies"][who].index(chosen[who]) for who in document["players"])
 
 
-def _mark(ax: Axes, cells: Sequence[tuple[int, int]], marker: str, face: str, label: str, size: float) -> None:
+def _mark(
+    ax: Axes, cells: Sequence[tuple[int, int]], marker: str, face: str, label: str, size: float
+) -> None:
     if cells:
         at = np.array(cells) + 0.5
         ax.scatter(at[:, 1], at[:, 0], marker=marker, s=size, facecolors=face, edgecolors="black", linewidths=1.3,

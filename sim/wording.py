@@ -145,7 +145,9 @@ def _example(field: FieldInfo | None, key: str) -> str | None:
     return f"{key} = {known[0]}" if known else None
 
 
-_HIDDEN = "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
+_HIDDEN = (
+    "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
+)
 
 
 def visible(text: str) -> str:

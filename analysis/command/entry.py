@@ -28,6 +28,7 @@ COMMANDS = {
     "batch": "A long plan of scenarios and analyses, resumable, by rounds through the night.",
     "compare": "Policies side by side on the same patients: differences, the best, bad years.",
     "ledger": "Who pays for whose closure: what each unit's early closing costs each home.",
+    "report": "One page for the board from what --out left.",
     "results": "What runs with --out have left: list, show, export, verify, repeat.",
 }
 

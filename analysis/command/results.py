@@ -147,7 +147,9 @@ def _write_csv(store: Any, file: Path) -> None:
         if first is not None:
             lines = csv.DictWriter(opened, first)
             lines.writeheader()
-            lines.writerows(row | {"unit": in_spreadsheet(row["unit"])} for row in itertools.chain([first], rows))
+            lines.writerows(
+                row | {"unit": in_spreadsheet(row["unit"])} for row in itertools.chain([first], rows)
+            )
 
 
 def _write_parquet(store: Any, file: Path) -> None:

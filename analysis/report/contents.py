@@ -28,6 +28,15 @@ class Report:
     sections: tuple[Section, ...]
 
 
+@dataclass(frozen=True)
+class Headline:
+    """A statement for the answer. rank: the lowest are printed, one of each. result: what it rests on."""
+
+    rank: int
+    said: str
+    result: Result
+
+
 class Results:
     """The results that a report is written from, in the order given."""
 
@@ -104,15 +113,19 @@ def report_of(results: Sequence[Result]) -> Report:
     return Report(results[0].network.title, tuple(one for one in sections if one.blocks))
 
 
-def headlines(results: Results) -> list[str]:
-    """The most important statements of every section that makes some, most important first."""
+def headlines(results: Results) -> list[Headline]:
+    """The most important statements of every section that makes some, by rank; one of each rank."""
     modules = [import_module(f"analysis.report.sections.{place}") for place in SECTIONS]
     found = [one for module in modules if hasattr(module, "headlines") for one in module.headlines(results)]
-    return [said for _, said in sorted(found, key=lambda one: one[0])]
+    first = {
+        one.rank: one for one in reversed(found)
+    }  # of several results of a kind, the one that was given first
+    return [first[rank] for rank in sorted(first)]
 
 
 def optional(module: str, function: str, *arguments: Any, **named: Any) -> Callable[[Any], Any]:
     """A figure's function bound to its data, loaded only when it is drawn."""
+
     def draw(ax: Any) -> Any:
         return partial(getattr(import_module(module), function), *arguments, **named)(ax=ax)
 

@@ -126,7 +126,9 @@ def _read(folder: Path, faults: list[Fault]) -> tuple[Any, Any]:
         return None, None
     if not _has_scenario(origin):
         rule, got = "must hold the scenario's text", "it holds none"
-        faults.append(Fault(None, visible(str(folder / PROVENANCE)), rule, got, "run the command again with --out"))
+        faults.append(
+            Fault(None, visible(str(folder / PROVENANCE)), rule, got, "run the command again with --out")
+        )
         return None, None
     return document, origin
 

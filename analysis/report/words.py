@@ -98,7 +98,9 @@ def profile(chosen: Mapping[str, Any]) -> str:
 
 def _chosen(what: Any) -> str:
     if isinstance(what, Mapping):
-        return "(" + ", ".join(f"{str(key).replace('_', ' ')} {_chosen(one)}" for key, one in what.items()) + ")"
+        return (
+            "(" + ", ".join(f"{str(key).replace('_', ' ')} {_chosen(one)}" for key, one in what.items()) + ")"
+        )
     return f"{what:g}" if isinstance(what, float) else str(what)
 
 

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 
+from analysis.report import contents
 from analysis.report.blocks import Block, Points, Text
-from analysis.report.contents import Figures, Results, headlines
-from analysis.report.words import sentence
+from analysis.report.words import listed, sentence
 
 TITLE = "Answer"
 SENTENCES = 3
@@ -20,6 +20,18 @@ FILLING = (
 )
 
 
-def blocks(results: Results, figures: Figures) -> Iterator[Block]:
-    yield Points(tuple(sentence(one) for one in [*headlines(results), *FILLING][:SENTENCES]))
+def blocks(results: contents.Results, figures: contents.Figures) -> Iterator[Block]:
+    found = contents.headlines(results)[:SENTENCES]
+    said = [one.said for one in found]
+    yield Points(tuple(sentence(one) for one in [*said, *FILLING][:SENTENCES]))
+    yield from _bases(found, results)
     yield Text(CAUTION, warns=True)
+
+
+def _bases(found: Sequence[contents.Headline], results: contents.Results) -> Iterator[Text]:
+    """What the sentences rest on, where there are several results or the run changed the scenario."""
+    sentences: dict[str, list[str]] = {}
+    for place, one in enumerate(found, 1):
+        sentences.setdefault(results.basis(one.result), []).append(str(place))
+    for basis, places in sentences.items():
+        yield Text(f"{'Sentence' if len(places) == 1 else 'Sentences'} {listed(places)}: {basis}")

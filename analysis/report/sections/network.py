@@ -7,34 +7,42 @@ from typing import Any
 
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure
 from analysis.report.blocks import Block, Heading, Points, Table, Text, table
-from analysis.report.contents import Figures, Results, optional
+from analysis.report.contents import Figures, Headline, Results, optional
 from analysis.report.reading import Network, Result
 from analysis.report.words import a_year, counted, estimate, listed, name, profile, sentence, share
 
 TITLE = "The network"
+DRAWN = "analysis.figures_report"
 BY_DAY = ("utilisation", "full_fraction", "closed_with_free_bed_fraction", "turned_away_per_day")
+RHYTHMS = {"hour_of_day": "hour", "day_of_week": "weekday"}
 LAST_RESORT = {
     "home_bed": "when every unit asked is closed or full, the patient is admitted at home if a bed is free there, else "
     "turned away",
-    "any_bed": "when every unit asked is closed or full, any free bed is sought whatever the gates, first at home, then "
-    "along the referral order; without one the patient is turned away",
+    "any_bed": "when every unit asked is closed or full, any free bed is sought whatever the gates, then along "
+    "the referral order; without one the patient is turned away",
     "turned_away": "when every unit asked is closed or full, the patient is turned away",
 }
 
 
-def headlines(results: Results) -> Iterator[tuple[int, str]]:
+def headlines(results: Results) -> Iterator[Headline]:
     for one in results.of("simulate", "exact"):
         network, units = one.document["network"], one.document["units"]
-        yield 40, (
+        yield Headline(
+            40,
             f"Under the closure thresholds {profile(one.document['thresholds'])} the network treats "
-            f"{a_year(network['throughput_per_day'])} patients a year"
+            f"{a_year(network['throughput_per_day'])} patients a year",
+            one,
         )
-        yield 41, (
+        yield Headline(
+            41,
             f"It turns {a_year(network['turned_away_per_day'])} patients away a year and moves "
-            f"{a_year(network['transfers_per_day'])} between units"
+            f"{a_year(network['transfers_per_day'])} between units",
+            one,
         )
-        closed = [f"{name(unit)} {share(own['closed_with_free_bed_fraction'])}" for unit, own in units.items()]
-        yield 42, f"Time closed with a free bed: {listed(closed)}"
+        closed = [
+            f"{name(unit)} {share(own['closed_with_free_bed_fraction'])}" for unit, own in units.items()
+        ]
+        yield Headline(42, f"Time closed with a free bed: {listed(closed)}", one)
 
 
 def blocks(results: Results, figures: Figures) -> Iterator[Block]:
@@ -73,7 +81,9 @@ def _units(network: Network, told: Mapping[str, Any] | None) -> Table:
             f"{unit['target_utilisation']:g}" if "target_utilisation" in unit else "-",
             "not known here" if load is None else f"{load:.3f}",
         ))  # fmt: skip
-    caption = "Units as the scenario gives them (thresholds in beds; offered load: own patients' bed-days per bed and day)"
+    caption = (
+        "Units as the scenario gives them (thresholds in beds; load: own patients' bed-days per bed and day)"
+    )
     return table(caption, ("unit", "staffed beds", "closes at", "closes to others at", "target utilisation",
                            "offered load per bed"), rows)  # fmt: skip
 
@@ -86,7 +96,7 @@ def _groups(network: Network, told: Mapping[str, Any] | None) -> Table:
             name(group["group"]), name(group["home"]), f"{group['per_day']:g}", str(group["stay"].get("family", "-")),
             "in the data file" if known is None else f"{known['mean_days']:.3f}",
             "in the data file" if known is None else f"{known['cv']:.3f}",
-            listed([word for key, word in (("hour_of_day", "hour"), ("day_of_week", "weekday")) if key in group]) or "no",
+            listed([word for key, word in RHYTHMS.items() if key in group]) or "no",
         ))  # fmt: skip
     caption = "Patient groups as the scenario gives them (stays in days; cv: coefficient of variation)"
     return table(caption, ("group", "home", "a day", "stay", "mean stay", "cv", "varies by"), rows)
@@ -111,22 +121,31 @@ def _measures(result: Result, figures: Figures) -> Iterator[Block]:
     units, thresholds = document["units"], document["thresholds"]
     yield Text(f"Closure thresholds: {profile(thresholds)}.")
     rows = [
-        (m.reads + (" (of the home's patients)" if m.by_home else ""), *(_value(m, own.get(m.name)) for own in units.values()))
+        (
+            _reads(m) + (" (of the home's patients)" if m.by_home else ""),
+            *(_value(m, own.get(m.name)) for own in units.values()),
+        )
         for m in UNIT_MEASURES
-    ]  # fmt: skip
+    ]
     caption = "By unit, with intervals (patients a year; shares of time or of patients)"
     yield table(caption, ("measure", *map(name, units)), rows)
-    whole = [(m.reads, _value(m, document["network"].get(m.name))) for m in NETWORK_MEASURES]
+    whole = [(_reads(m), _value(m, document["network"].get(m.name))) for m in NETWORK_MEASURES]
     yield table("The whole network, patients a year, with intervals", ("measure", "a year"), whole)
     for unit, own in units.items():
         yield figures.draw(
-            optional("analysis.figures_report", "occupancy", own["occupancy"], unit=unit, closes_at=thresholds.get(unit)),
+            optional(DRAWN, "occupancy", own["occupancy"], unit=unit, closes_at=thresholds.get(unit)),
             f"Occupied beds of {name(unit)}",
             f"Bars: the share of time with so many of {counted(len(own['occupancy']) - 1, 'bed')} occupied; mean "
-            f"{estimate(own['mean_occupied'])}, time full {share(own['full_fraction'])}. A line marks the closure threshold.",
+            f"{estimate(own['mean_occupied'])}, time full {share(own['full_fraction'])}. A line marks "
+            "the closure threshold.",
             (7.0, 3.2),
         )  # fmt: skip
     yield from _over_time(result, figures)
+
+
+def _reads(measure: Measure) -> str:
+    """What a measure counts; rates are given a year."""
+    return measure.reads.replace(" a day", " a year")
 
 
 def _value(measure: Measure, value: Any) -> str:
@@ -141,7 +160,11 @@ def _over_time(result: Result, figures: Figures) -> Iterator[Block]:
     """Advice on the warm-up, the hours of the week, precision and batch means, where the run was asked for them."""
     document = result.document
     if advice := document.get("warm_up_advice"):
-        said = f"no advice: {advice['reason']}" if advice["days"] is None else f"{advice['days']:g} days are advised"
+        said = (
+            f"no advice: {advice['reason']}"
+            if advice["days"] is None
+            else f"{advice['days']:g} days are advised"
+        )
         yield Text(f"Warm-up: {advice['present_days']:g} days were used; {said}.")
     if week := document.get("hour_of_week"):
         yield Text("The hours of the week: bands hold for all 168 hours of a unit at once, units one by one.")
@@ -164,4 +187,8 @@ def _days(result: Result) -> Iterator[Block]:
     times = [(f"day {one['day']:g}", one) for one in document["days"]] + [("long run", document["long_run"])]
     for unit in document["long_run"]["units"]:
         rows = [(when, *(_value(m, then["units"][unit].get(m.name)) for m in shown)) for when, then in times]
-        yield table(f"{name(unit)}: at that moment, not averages since the start", ("when", *(m.reads for m in shown)), rows)
+        yield table(
+            f"{name(unit)}: at that moment, not averages since the start",
+            ("when", *(_reads(m) for m in shown)),
+            rows,
+        )

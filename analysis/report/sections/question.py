@@ -27,7 +27,9 @@ ASKED = {
 def blocks(results: Results, figures: Figures) -> Iterator[Block]:
     several = len(results.networks) > 1
     titles = "; ".join(f"scenario {one.number}: {name(one.title)}" for one in results.networks)
-    yield Text(f"{'Networks' if several else 'Network'}: {titles if several else name(results.networks[0].title)}.")
+    yield Text(
+        f"{'Networks' if several else 'Network'}: {titles if several else name(results.networks[0].title)}."
+    )
     yield Text("Put to it, one question for each result:")
     yield Points(tuple(_asked(one, several) for one in results.all))
 

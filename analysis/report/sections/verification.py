@@ -7,7 +7,7 @@ from typing import Any
 
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES
 from analysis.report.blocks import Block, Text, table
-from analysis.report.contents import Figures, Results, optional
+from analysis.report.contents import Figures, Headline, Results, optional
 from analysis.report.reading import Result
 from analysis.report.words import counted, name
 
@@ -18,10 +18,10 @@ MEANS = (
 READS = {one.name: one.reads for one in (*NETWORK_MEASURES, *UNIT_MEASURES)}
 
 
-def headlines(results: Results) -> Iterator[tuple[int, str]]:
+def headlines(results: Results) -> Iterator[Headline]:
     for one in results.of("verify"):
-        yield 50, _said(one)
-        yield 51, MEANS
+        yield Headline(50, _said(one), one)
+        yield Headline(51, MEANS, one)
 
 
 def blocks(results: Results, figures: Figures) -> Iterator[Block]:
@@ -51,10 +51,13 @@ def _figures(result: Result, figures: Figures) -> Iterator[Block]:
         largest = max(abs(one["z"]) for one in tested)
         yield figures.draw(
             optional("analysis.figures", "verification_z", document), "Simulated less exact, in standard errors",
-            f"A point a measure, {len(tested)} in all; the largest is {largest:.2f} from 0, the limit for all at once is "
+            f"A point a measure, {len(tested)} in all; the largest is {largest:.2f} from 0, the limit "
+            "for all at once is "
             f"{document['critical_z']:.2f}.", (7.0, max(3.0, 0.17 * len(tested) + 1)),
         )  # fmt: skip
-    for unit in dict.fromkeys(one["where"] for one in document["measures"] if one["measure"].startswith("occupancy ")):
+    for unit in dict.fromkeys(
+        one["where"] for one in document["measures"] if one["measure"].startswith("occupancy ")
+    ):
         yield figures.draw(
             optional("analysis.figures", "verification_occupancy", document, where=unit),
             f"Occupied beds of {name(unit)}: simulated and exact",
