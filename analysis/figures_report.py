@@ -127,7 +127,7 @@ def outcomes(rows: Mapping[str, tuple[float, float]], ax: Axes) -> Axes:
     at = np.arange(len(rows))
     for place, (words, colour, hatch) in enumerate((("turned away", "0.35", ""), ("moved", "0.85", "//"))):
         numbers = [both[place] for both in rows.values()]
-        bars = ax.barh(at + 0.2 - 0.4 * place, numbers, height=0.38, color=colour, edgecolor="black", hatch=hatch,
+        bars = ax.barh(at - 0.2 + 0.4 * place, numbers, height=0.38, color=colour, edgecolor="black", hatch=hatch,
                        linewidth=0.8, label=words)  # fmt: skip
         ax.bar_label(bars, fmt="%.1f", padding=3, fontsize=8)
     ax.set_yticks(at, list(rows))

@@ -15,7 +15,7 @@ from sim.lowering import IntakePlan, Network, Rules, lower_network, lower_policy
 from sim.record import Record
 from sim.scenario import Policy, Scenario
 from sim.trace import Trace
-from sim.workers import Reply, ThisProcess, Workers
+from sim.workers import Binding, Reply, Task, ThisProcess, Workers
 
 DEFAULT_ENGINE = "reference"
 SECONDS_PER_TASK = 1.0
@@ -25,13 +25,17 @@ TASKS_PER_WORKER = 4
 
 @dataclass(frozen=True)
 class Run:
-    """One finished run: its address, its record, the hash of the intake it met, and the seconds it took."""
+    """One finished run: its address, its record, the hash of the intake it met, and the seconds it took.
+
+    fingerprint: of the machine that ran it, as text, where that may be another one.
+    """
 
     replication: int
     cell: int
     record: Record
     intake_hash: str
     seconds: float = field(default=0.0, compare=False)
+    fingerprint: str | None = field(default=None, compare=False)
 
 
 @dataclass(frozen=True)
@@ -77,10 +81,14 @@ class TaskSize:
 
 @dataclass(frozen=True)
 class Share:
-    """Replications that are to run under the same policies: `cells` are places among the policies."""
+    """Replications that are to run under the same policies: `cells` are places among the policies.
+
+    fingerprint: of the machines that may run them, where others have run a part already.
+    """
 
     cells: tuple[int, ...]
     replications: Iterable[int]
+    fingerprint: str | None = None
 
 
 def replicate(
@@ -124,13 +132,26 @@ def replicate_shares(
         for batch, cells in cut
     )
     wanted = itertools.takewhile(lambda _: go_on(), tasks)
-    for reply in (workers or ThisProcess()).run(run_batch, wanted):
+    for reply in _run_on(workers or ThisProcess(), wanted, cut):
         cut.learn(reply)
         if reply.failure is None:
-            yield from reply.value
+            yield from (_stamped(one, reply.fingerprint) for one in reply.value)
         else:
             batch, cells = reply.key
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
+
+
+def _run_on(workers: Workers, tasks: Iterable[Task], cut: _Cut) -> Iterator[Reply]:
+    """The replies; workers that may differ in bits are told that a replication's cells belong together."""
+    if getattr(workers, "binds", False):
+        return workers.run(run_batch, tasks, binding=cut.binding)  # type: ignore[call-arg]
+    return workers.run(run_batch, tasks)
+
+
+def _stamped(reply: list[Run] | Failure, fingerprint: str | None) -> list[Run] | Failure:
+    if fingerprint is None or isinstance(reply, Failure):
+        return reply
+    return [replace(run, fingerprint=fingerprint) for run in reply]
 
 
 class _Cut:
@@ -138,7 +159,7 @@ class _Cut:
 
     def __init__(self, shares: Iterable[Share], size: TaskSize) -> None:
         self._shares, self._size = shares, size
-        self._of: dict[tuple[tuple[int, ...], tuple[int, ...]], tuple[TaskSize, int]] = {}
+        self._of: dict[Hashable, tuple[TaskSize, Share]] = {}
 
     def __iter__(self) -> Iterator[tuple[tuple[int, ...], tuple[int, ...]]]:
         for share in self._shares:
@@ -146,13 +167,19 @@ class _Cut:
             while batch := tuple(itertools.islice(replications, self._size.replications)):
                 first = 0
                 while cells := share.cells[first : first + (self._size.cells or len(share.cells))]:
-                    self._of[batch, cells] = self._size, len(share.cells)
+                    self._of[batch, cells] = self._size, share
                     first += len(cells)
                     yield batch, cells
 
+    def binding(self, key: Hashable) -> Binding:
+        """What a task that is under way belongs to: all cells of a replication must come from the same bits."""
+        (batch, cells), (_, share) = key, self._of[key]  # type: ignore[misc]
+        return Binding(batch, len(cells), len(share.cells), share.fingerprint)
+
     def learn(self, reply: Reply) -> None:
         """Sizes the next tasks by a reply to a full one of the present size."""
-        (batch, cells), (size, of) = reply.key, self._of.pop(reply.key)
+        (batch, cells), (size, share) = reply.key, self._of.pop(reply.key)
+        of = len(share.cells)
         full = len(batch) == size.replications and len(cells) == min(size.cells or of, of)
         if size == self._size and (full or reply.seconds > MOST_TASK_SECONDS):
             self._size = size.after(reply.seconds, of)

@@ -16,8 +16,9 @@ from sim.store_rows import Key, Measures, Row, cell_hash, exact_hash, scenario_h
 class Job:
     """Policies times replications of a scenario, held against what a store has of them.
 
-    fingerprint: of this machine, as text. A replication that is there for every policy is reused whoever ran it;
-    one begun under another fingerprint is run again whole (`restarted`); of any other only missing cells are run.
+    fingerprint: of this machine, as text; a run may name another machine's. A replication that is there for every
+    policy is reused whoever ran it; one begun under another fingerprint is run again whole (`restarted`); of any other
+    only missing cells are run.
     asked, reused, missing: the number of runs that the job asks for, of those that were there, and of the others.
     computed: kept since.
     `cells` of a method are places among the policies (default: all), `replications` how many from 0 on.
@@ -41,6 +42,7 @@ class Job:
         self.computed = 0
         whole = store.whole(self.scenario, self._cells)
         held = store.held(self.scenario, but=whole)
+        self._begun = {one for one, (by, _) in held.items() if by == fingerprint}
         self._missing: dict[int, AbstractSet[int]] = {
             one: frozenset() if one in whole else self._cells_missing(one, held)
             for one in range(replications)
@@ -75,16 +77,20 @@ class Job:
         return cells if missing is self._every else missing & cells
 
     def shares(self, cells: AbstractSet[int] | None = None, replications: int | None = None) -> list[Share]:
-        """The missing runs, but for those that failed since: the replications that lack the same cells together."""
+        """The missing runs, but for those that failed since: the replications that lack the same cells together.
+
+        What was begun under this machine's fingerprint says so.
+        """
         cells = self._every if cells is None else cells
-        lacking: dict[AbstractSet[int], list[int]] = {}
+        lacking: dict[tuple[AbstractSet[int], str | None], list[int]] = {}
         for one in range(len(self._missing) if replications is None else replications):
             wanted = frozenset(self._lacking(one, cells))
             if one in self._failed:
                 wanted -= self._failed[one]
             if wanted:
-                lacking.setdefault(wanted, []).append(one)
-        return [Share(tuple(sorted(places)), tuple(numbers)) for places, numbers in lacking.items()]
+                bits = self._fingerprint if one in self._begun else None
+                lacking.setdefault((wanted, bits), []).append(one)
+        return [Share(tuple(sorted(places)), tuple(some), bits) for (places, bits), some in lacking.items()]
 
     def kept_runs(
         self, cells: Sequence[int] | None = None, replications: int | None = None
@@ -126,7 +132,7 @@ class Job:
             return
         rows = [
             Row(Key(self.scenario, self._cells[run.cell], run.replication), run.record, run.intake_hash,
-                engine, self._fingerprint, run.seconds)
+                engine, run.fingerprint or self._fingerprint, run.seconds)
             for run in reply
         ]  # fmt: skip
         self._store.put(rows, command=self._command)

@@ -1,8 +1,8 @@
 """Where tasks run: in this process or in local worker processes, behind one small interface.
 
 A pool takes a function and addressed tasks and yields replies as they finish, in any order. A task that
-raises costs only itself: its reply carries the traceback. Other machines will stand behind the same
-interface.
+raises costs only itself: its reply carries the traceback. Other machines stand behind the same interface
+(`sim.cluster`).
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from collections.abc import Callable, Hashable, Iterable, Iterator
 from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, Future, wait
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 # A worker that is stopped or stuck is told by that, for it neither answers nor uses the processor.
 LEAST_PATIENCE_SECONDS, PATIENCE_TASKS = 60.0, 20
@@ -38,15 +38,30 @@ class Reply:
     """What became of one task. `value` where it succeeded, else `failure`, the traceback as text.
 
     seconds: that it took where it ran; 0 where that is not known.
+    fingerprint: of the machine that ran it, as text, where it may be another one.
     """
 
     key: Hashable
     value: Any = None
     failure: str | None = None
     seconds: float = 0.0
+    fingerprint: str | None = None
 
 
 Task = tuple[Hashable, tuple]
+
+
+class Binding(NamedTuple):
+    """What a task belongs to, where workers may differ in bits.
+
+    group: its tasks must all come from one kind of bits. weight, size: how much of the group the task is, and how much
+    there is in all. bits: which ones, where that is settled.
+    """
+
+    group: Hashable
+    weight: int = 1
+    size: int = 1
+    bits: str | None = None
 
 
 class Workers(Protocol):

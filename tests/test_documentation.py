@@ -35,7 +35,12 @@ def test_an_example_prints_what_it_shows(command, shown, capsys, monkeypatch):
 
 
 def test_every_command_has_an_example_or_is_named():
-    assert {command.split()[0] for command, _ in EXAMPLES} >= set(COMMANDS) - {"exact", "results", "batch"}
+    assert {command.split()[0] for command, _ in EXAMPLES} >= set(COMMANDS) - {
+        "exact",
+        "results",
+        "batch",
+        "cluster",
+    }
     assert all(f"`{name}" in README or f"brimline {name}" in README for name in COMMANDS)
 
 

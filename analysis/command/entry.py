@@ -29,6 +29,7 @@ COMMANDS = {
     "compare": "Policies side by side on the same patients: differences, the best, bad years.",
     "ledger": "Who pays for whose closure: what each unit's early closing costs each home.",
     "report": "One page for the board from what --out left.",
+    "cluster": "Several machines as one: keys, the scheduler, workers, who is there.",
     "results": "What runs with --out have left: list, show, export, verify, repeat.",
 }
 

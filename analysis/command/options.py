@@ -27,6 +27,7 @@ class Request:
 
     confidence: as the command line gave it; the scenario's run table has the one in force. changes: what the
     command line changed of the scenario, in words. kept: hands over runs that are there, instead of running any.
+    cluster: the full address of a scheduler.
     """
 
     scenario: Any
@@ -38,6 +39,7 @@ class Request:
     as_json: bool
     changes: tuple[str, ...] = ()
     kept: Callable[..., Any] | None = None
+    cluster: str | None = None
 
     @property
     def heading(self) -> dict[str, Any]:
@@ -85,6 +87,11 @@ _OPTIONS = (
         "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
     ),
     click.option(
+        "--cluster",
+        metavar="ADDRESS",
+        help="Run on the machines of a cluster; see `brimline cluster --help`.",
+    ),
+    click.option(
         "--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."
     ),
     click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the results."),
@@ -102,8 +109,8 @@ _OPTIONS = (
     ),
 )
 _COMMON = (
-    "scenario", "as_json", "seed", "replications", "confidence", "workers", "engine", "out", "threshold", "incoming",
-    "demand", "target", "policy", "exponential",
+    "scenario", "as_json", "seed", "replications", "confidence", "workers", "cluster", "engine", "out", "threshold",
+    "incoming", "demand", "target", "policy", "exponential",
 )  # fmt: skip
 
 
@@ -125,6 +132,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
         "incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults)
     )
     _writable(values["out"], faults)
+    cluster = _cluster(values, faults)
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
     return Request(
@@ -136,6 +144,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
         values["out"],
         values["as_json"],
         _changes(values),
+        cluster=cluster,
     )
 
 
@@ -155,6 +164,23 @@ def require_folder(folder: Path) -> None:
     _writable(folder, faults)
     if faults:
         raise ScenarioError(faults)
+
+
+def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
+    """The full address of the scheduler; the cluster's packages are looked for only where one is given."""
+    if values.get("cluster") is None:
+        return None
+    from sim.machines.keys import full_address, require_packages
+
+    if values["workers"] is not None:
+        rule, remedy = "must not stand beside --cluster", "give it to `brimline cluster join` on each machine"
+        faults.append(Fault(None, "--workers", rule, f"got {values['workers']}", remedy))
+    try:
+        require_packages("--cluster")
+        return full_address(values["cluster"])
+    except ScenarioError as error:
+        faults.extend(error.faults)
+        return None
 
 
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:

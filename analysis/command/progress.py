@@ -19,6 +19,10 @@ class Progress(Protocol):
         """`count` more are done."""
         ...
 
+    def note(self, text: str) -> None:
+        """Who is at work, shown beside what is done."""
+        ...
+
 
 class _Lines:
     """A plain line every few seconds."""
@@ -26,6 +30,7 @@ class _Lines:
     def __init__(self, label: str, total: int, unit: str) -> None:
         self._label, self._total, self._unit = label, total, unit
         self._done = 0
+        self._note = ""
         self._started = self._last = time.monotonic()
 
     def __enter__(self) -> _Lines:
@@ -34,11 +39,19 @@ class _Lines:
     def __exit__(self, *_: object) -> None:
         pass
 
+    def note(self, text: str) -> None:
+        self._note = text
+        self.advance(0)
+
     def advance(self, count: int = 1) -> None:
         self._done += count
         now = time.monotonic()
         if now - self._last >= SECONDS_BETWEEN_LINES:
             self._last = now
+            if self._note:
+                print(f"{self._label}: {self._note}", file=sys.stderr, flush=True)
+            if not self._done:
+                return
             early = self._done < 0.01 * self._total  # one reply tells little of the rest
             left = (now - self._started) / self._done * (self._total - self._done)
             when = "time left not known yet" if early else f"{about(left)} left"
@@ -53,11 +66,20 @@ class _Bar:
         from rich.console import Console
         from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeRemainingColumn
         from rich.progress import Progress as RichProgress
+        from rich.text import Text
+
+        class WithNote(RichProgress):
+            """The bar, and below it who is at work."""
+
+            said = ""
+
+            def get_renderables(self) -> Iterator[Any]:
+                yield from super().get_renderables()
+                if self.said:
+                    yield Text(self.said)
 
         columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn(unit))
-        self._bar = RichProgress(
-            *columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True
-        )
+        self._bar = WithNote(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True)
         self._task = self._bar.add_task(label, total=total)
 
     def __enter__(self) -> _Bar:
@@ -71,6 +93,9 @@ class _Bar:
 
     def advance(self, count: int = 1) -> None:
         self._bar.advance(self._task, count)
+
+    def note(self, text: str) -> None:
+        self._bar.said = text
 
 
 def progress(label: str, total: int, unit: str) -> Any:

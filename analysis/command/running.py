@@ -42,10 +42,21 @@ def effort(request: Request, replications: int, cells: int) -> Effort:
     if choice.name == "compiled":
         _announce_compiling()
         pace = pace_of(request.scenario, request.policy, engine="compiled")
+    if request.cluster is not None:
+        workers = cluster_workers(request.cluster)
+        return Effort(choice, pace, workers, workers.count)
     count = request.workers
     if count is None:
         count = available_cores() if pace.seconds(replications, cells) > WORTH_PROCESSES_SECONDS else 1
     return Effort(choice, pace, local_workers(count), count)
+
+
+def cluster_workers(address: str) -> Any:
+    """The workers behind the scheduler at that address, what they have to say going to standard error."""
+    from sim.cluster import Cluster
+    from sim.machines.keys import default_folder
+
+    return Cluster(address, default_folder(), notice=say)
 
 
 def _announce_compiling() -> None:
@@ -61,6 +72,7 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
     """Expected seconds and bytes of `simulate`, and of a `game` of so many cells (null where it is too large)."""
     from analysis.payoffs import MOST_CELLS
 
+    request = replace(request, cluster=None)  # of this machine alone
     replications = request.scenario.run.replications
     feasible = cells <= MOST_CELLS
     planned = effort(request, replications, cells if feasible else 1)
@@ -193,6 +205,8 @@ def _run(
     failures = []
     runs = sum(len(share.replications) * len(share.cells) for share in shares)
     with replies, progress(label, runs, "runs") as bar:
+        if request.cluster is not None:
+            planned.workers.watch = bar.note
         for reply in replies:
             take(reply)
             if isinstance(reply, Failure):

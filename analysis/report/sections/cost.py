@@ -205,7 +205,8 @@ def _picture(result: Result, figures: Figures) -> Iterator[Figure]:
 def _further(result: Result) -> Iterator[str]:
     """The turning weight, bounds and yardsticks, each with what it holds for."""
     document = result.document
-    yield from (one["statement"] for one in document["findings"] if "transfer weight" in one["statement"])
+    weights = (one for one in document["findings"] if "transfer weight" in one["statement"])
+    yield from (f"{one['statement']} ({one['basis']})" for one in weights)
     if "is" in document["optimum"]:
         yield f"The best fixed thresholds are {document['optimum']['is']}"
     within = document.get("prices_within_epsilon")
