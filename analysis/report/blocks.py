@@ -23,9 +23,10 @@ class Heading:
 
 @dataclass(frozen=True)
 class Points:
-    """A list of short statements."""
+    """A list of short statements. ordered: it is numbered."""
 
     points: tuple[str, ...]
+    ordered: bool = False
 
 
 @dataclass(frozen=True)

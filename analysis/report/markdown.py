@@ -19,13 +19,15 @@ def to_markdown(report: Report) -> str:
 
 def escaped(text: str) -> str:
     """A text that Markdown shows as it stands: no markup, no HTML, no line of its own."""
-    one_line = " ".join(text.split())
-    quoted = re.sub(r"([\\`*_\[\]<>#|~$&!])", r"\\\1", one_line)
-    return re.sub(r"^(\d+)([.)])|^([-+=])", lambda found: _first(found), quoted)
+    return re.sub(r"([\\`*_\[\]<>#|~$&!])", r"\\\1", " ".join(text.split()))
 
 
-def _first(found: re.Match[str]) -> str:
-    """What would open a list or a heading at the start of a line."""
+def _opening(text: str) -> str:
+    """A text at the start of a line, where a number or a sign must not open a list, a heading or a rule."""
+    return re.sub(r"^(\d+)([.)])(?=\s|$)|^([-+=])", _guarded, escaped(text))
+
+
+def _guarded(found: re.Match[str]) -> str:
     return f"{found[1]}\\{found[2]}" if found[1] else f"\\{found[3]}"
 
 
@@ -34,11 +36,12 @@ def _set(block: Block) -> str:
 
 
 def _text(block: Text) -> str:
-    return f"> **{escaped(block.text)}**" if block.warns else escaped(block.text)
+    return f"> **{escaped(block.text)}**" if block.warns else _opening(block.text)
 
 
 def _points(block: Points) -> str:
-    return "\n".join(f"- {escaped(one)}" for one in block.points)
+    marks = (f"{place}." if block.ordered else "-" for place in range(1, len(block.points) + 1))
+    return "\n".join(f"{mark} {_opening(one)}" for mark, one in zip(marks, block.points, strict=True))
 
 
 def _table(block: Table) -> str:

@@ -23,7 +23,7 @@ FILLING = (
 def blocks(results: contents.Results, figures: contents.Figures) -> Iterator[Block]:
     found = contents.headlines(results)[:SENTENCES]
     said = [one.said for one in found]
-    yield Points(tuple(sentence(one) for one in [*said, *FILLING][:SENTENCES]))
+    yield Points(tuple(sentence(one) for one in [*said, *FILLING][:SENTENCES]), ordered=True)
     yield from _bases(found, results)
     yield Text(CAUTION, warns=True)
 

@@ -9,7 +9,17 @@ from analysis.report.blocks import Block, Figure, Points, Table, Text, table
 from analysis.report.contents import Figures, Headline, Results, optional
 from analysis.report.reading import Result
 from analysis.report.sections.equilibria import is_searched
-from analysis.report.words import DAYS_A_YEAR, between, estimate, listed, name, point, profile, sentence
+from analysis.report.words import (
+    DAYS_A_YEAR,
+    EXACT,
+    between,
+    estimate,
+    listed,
+    name,
+    point,
+    profile,
+    sentence,
+)
 
 TITLE = "What selfish rules cost in patients a year"
 THROUGHPUT = (
@@ -99,10 +109,10 @@ def _trade(result: Result) -> str | None:
     rows = list(named(result.document))
     if len(rows) < 2:
         return None
-    (_, best, at_best), (which, worst, at_worst) = rows[:2]
+    (fixed, best, at_best), (which, worst, at_worst) = rows[:2]
     whose = "exact" if result.is_exact else "means of the replications, without intervals"
     return (
-        f"The best fixed thresholds ({profile(best)}) turn {_all(at_best, 'turned_away_per_day')} "
+        f"The {fixed} ({profile(best)}) turn {_all(at_best, 'turned_away_per_day')} "
         "patients away a year and "
         f"move {_all(at_best, 'diverted_out_per_day')}, the {which} ({profile(worst)}) turns "
         f"{_all(at_worst, 'turned_away_per_day')} away and moves "
@@ -127,12 +137,21 @@ def named(document: Mapping[str, Any]) -> Iterator[Named]:
     optimum = document["optimum"]
     chosen = optimum.get("strategies") or optimum["thresholds"]
     ties = f" (1 of {len(chosen)} ties)" if len(chosen) > 1 else ""
-    yield f"best fixed thresholds{ties}", chosen[0], optimum["outcome"]
+    estimated = "" if document.get("method") == EXACT else ", by the estimates"
+    yield f"best fixed thresholds{estimated}{ties}", chosen[0], optimum["outcome"]
     worst, best = (_extreme(document, which) for which in ("worst", "best"))
+    noun = _noun(document)
     if worst is not None:
-        yield ("only listed equilibrium" if worst == best else "worst listed equilibrium"), *worst
+        yield f"{'only' if worst == best else 'worst'} {noun}", *worst
     if best is not None and best != worst:
-        yield "best listed equilibrium", *best
+        yield f"best {noun}", *best
+
+
+def _noun(document: Mapping[str, Any]) -> str:
+    """What a listed profile may be called."""
+    if document.get("method") == EXACT:
+        return "listed equilibrium"
+    return "listed candidate" if document.get("possible") is None else "profile listed as possible"
 
 
 def _extreme(document: Mapping[str, Any], which: str) -> tuple[Any, Any] | None:

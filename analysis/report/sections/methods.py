@@ -155,30 +155,18 @@ def _experimentation(results: Results, network: Network) -> Iterator[tuple[str, 
         for one in results.of("simulate")
         if one.network is network and (one.document.get("warm_up_advice") or {}).get("days") is not None
     ]
-    yield (
-        "4.1 Initialisation",
-        (
-            f"every unit is empty at the start; a warm-up of {run['warm_up_days']:g} days is not counted"
-            + (f"; {listed(advised)}" if advised else "")
-        ),
-    )
-    yield "4.2 Run length", f"{run['measured_days']:g} days are measured in each replication"
     counts = [
         f"“{name(one.label)}” {counted(one.document['replications'], 'replication')}"
         for one in results.all
         if one.network is network and "replications" in one.document
     ]
-    yield (
-        "4.3 Estimation",
-        (
-            (
-                f"{listed(counts)}, each from draws of its own; "
-                if counts
-                else "no replications: exact results only; "
-            )
-            + "every policy and every cell of a table meets the same patients (common random numbers)"
-        ),
-    )
+    start = f"every unit is empty at the start; a warm-up of {run['warm_up_days']:g} days is not counted"
+    length = f"{run['measured_days']:g} days are measured in each replication"
+    chain = "not simulated: long-run values of the exact chain, or its course from a stated start"
+    yield "4.1 Initialisation", "; ".join([start, *advised]) if counts else chain
+    yield "4.2 Run length", length if counts else chain
+    paired = "every policy and every cell of a table meets the same patients (common random numbers)"
+    yield "4.3 Estimation", f"{listed(counts)}, each from draws of its own; {paired}" if counts else chain
 
 
 def _run(network: Network) -> Mapping[str, Any]:
