@@ -17,6 +17,7 @@ CAUTION = (
 FILLING = (
     "How well the model fits a real network is not answered by these results",
     "Every statement holds for the network as its scenario describes it, and for nothing else",
+    "No interval covers a wrong assumption of the scenario",
 )
 
 

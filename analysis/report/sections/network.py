@@ -15,6 +15,7 @@ TITLE = "The network"
 DRAWN = "analysis.figures_report"
 BY_DAY = ("utilisation", "full_fraction", "closed_with_free_bed_fraction", "turned_away_per_day")
 RHYTHMS = {"hour_of_day": "hour", "day_of_week": "weekday"}
+RATES = {"throughput_per_day": "treats", "turned_away_per_day": "turns away", "transfers_per_day": "moves"}
 LAST_RESORT = {
     "home_bed": "when every unit asked is closed or full, the patient is admitted at home if a bed is free there, else "
     "turned away",
@@ -25,6 +26,9 @@ LAST_RESORT = {
 
 
 def headlines(results: Results) -> Iterator[Headline]:
+    for one in results.of("transient"):
+        if one.document["days"]:
+            yield from _headlines_of_days(one)
     for one in results.of("simulate", "exact"):
         network, units = one.document["network"], one.document["units"]
         yield Headline(
@@ -43,6 +47,19 @@ def headlines(results: Results) -> Iterator[Headline]:
             f"{name(unit)} {share(own['closed_with_free_bed_fraction'])}" for unit, own in units.items()
         ]
         yield Headline(42, f"Time closed with a free bed: {listed(closed)}", one)
+
+
+def _headlines_of_days(result: Result) -> Iterator[Headline]:
+    """The first moment asked for, beside the long run."""
+    first, later = result.document["days"][0], result.document["long_run"]
+    for rank, (key, words) in enumerate(RATES.items(), 40):
+        yield Headline(
+            rank,
+            f"{first['day']:g} days after the start the network {words} patients at a rate of "
+            f"{a_year(first['network'][key])} "
+            f"a year, in the long run of {a_year(later['network'][key])}",
+            result,
+        )
 
 
 def blocks(results: Results, figures: Figures) -> Iterator[Block]:
