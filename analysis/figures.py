@@ -17,7 +17,7 @@ from matplotlib import pyplot as plt  # noqa: E402
 from matplotlib.axes import Axes  # noqa: E402
 
 from analysis.equilibria import regrets  # noqa: E402
-from analysis.games import GameAnalysis  # noqa: E402
+from analysis.games import CONFIRMED, EXACT, GameAnalysis  # noqa: E402
 
 matplotlib.rcParams["svg.hashsalt"] = "brimline"  # the same bytes every time
 matplotlib.rcParams["text.parse_math"] = False  # a $ in a unit's name is a $
@@ -30,7 +30,8 @@ LEAST_WIDTH = 6.0  # inches: the legend has two entries
 def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     """One player's payoffs over both players' strategies (two players).
 
-    Open circles mark the player's best responses, filled diamonds the equilibria.
+    Open circles mark the player's best responses, diamonds the equilibria: white what may be one, black what is
+    confirmed or exact.
     """
     table = game.table
     names, labels = [short_name(name) for name in table.profiles.players], table.profiles.labels
@@ -41,8 +42,9 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     ax.invert_yaxis()
     best = np.argwhere(regrets(table.payoffs, table.goal.sense)[player] <= game.tolerance)
     _mark(ax, best, "o", "none", "black", f"best response of {names[player]}", 46)
-    _mark(ax, np.array([one.profile for one in game.equilibria]).reshape(-1, 2), "D", "white", "black",
-          f"equilibrium ({'exact' if game.is_exact else 'estimated'})", 64)  # fmt: skip
+    for verdict, cells in _by_verdict(game).items():
+        face = "black" if verdict in (EXACT, CONFIRMED) else "white"
+        _mark(ax, cells, "D", face, "white" if face == "black" else "black", f"equilibrium ({verdict})", 64)
     ax.set(
         title=f"What {names[player]} pays: {'darker is worse' if table.goal.sense == 'cost' else 'lighter is better'}",
         xlabel=_axis(game, 1), ylabel=_axis(game, 0),
@@ -50,6 +52,15 @@ def payoff_heat_map(game: GameAnalysis, ax: Axes, *, player: int) -> Axes:
     ax.tick_params(axis="y", rotation=0)
     ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
     return ax
+
+
+def _by_verdict(game: GameAnalysis) -> dict[str, np.ndarray]:
+    """Verdict -> the profiles of the equilibria with it, (equilibria, 2)."""
+    verdicts = dict.fromkeys(one.verdict for one in game.equilibria)
+    return {
+        verdict: np.array([one.profile for one in game.equilibria if one.verdict == verdict])
+        for verdict in verdicts
+    }
 
 
 def _axis(game: GameAnalysis, player: int) -> str:

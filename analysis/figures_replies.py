@@ -103,7 +103,7 @@ def price_curve(found: Beyond, ax: Axes) -> Axes:
     if turning.weight is not None and turning.weight <= weights[-1]:
         ax.axvline(turning.weight, color=ORANGE, linestyle="--", label="verdict turns")
     ax.set(
-        title="What selfish rules cost if transfers count", xlim=(weights[0], weights[-1]), ylim=(0, None),
+        title="What selfish rules cost if transfers count", xlim=(weights[0], 1.02 * weights[-1]), ylim=(0, None),
         xlabel="weight of a transfer (patients turned away)", ylabel="loss forgone at the worst equilibrium (a year)",
     )  # fmt: skip
     ax.legend(fontsize=8, frameon=False)
