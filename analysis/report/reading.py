@@ -106,12 +106,18 @@ def kind_of(document: Mapping[str, Any], origin: Mapping[str, Any]) -> str | Non
 def _once(folders: Sequence[Path], faults: list[Fault]) -> list[Path]:
     """Each folder once; a second time is a fault."""
     seen: dict[Path, Path] = {}
-    for folder in folders:
+    for folder in (part for one in folders for part in _parts(one)):
         if folder.resolve() in seen:
             rule, remedy = "must be given once", "leave the second one out"
             faults.append(Fault(None, "RESULTS", rule, f"got {shown(str(folder))} twice", remedy))
         seen.setdefault(folder.resolve(), folder)
     return list(seen.values())
+
+
+def _parts(folder: Path) -> list[Path]:
+    """The folder itself, or those in it that hold results where it holds none: a batch's parts, by name."""
+    inner = sorted(file.parent for file in folder.glob(f"*/{RESULT}")) if folder.is_dir() else []
+    return inner if inner and not (folder / RESULT).exists() else [folder]
 
 
 def _read(folder: Path, faults: list[Fault]) -> tuple[Any, Any]:

@@ -340,6 +340,11 @@ def test_results_that_contradict_each_other_are_refused(results, tmp_path):
     assert len(read_results([results["exact"], same])) == 2
 
 
+def test_a_folder_of_results_stands_for_what_it_holds(results):
+    [folder] = {one.parent for one in results.values()}
+    assert {one.label for one in read_results([folder])} == set(COMMANDS)
+
+
 def test_no_result_is_written_over(results, capsys):
     folder = results["exact"]
     before = (folder / "result.json").read_bytes()
