@@ -11,9 +11,9 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
+import sim
 from analysis.report.contents import Report
 from analysis.report.words import GAP
-from sim import __version__
 
 STYLE = "page.css"
 
@@ -46,6 +46,6 @@ def to_html(report: Report) -> str:
     """The whole page. The same report gives the same bytes."""
     sheet = style()
     matter: dict[str, Any] = {
-        "report": report, "style": Markup(sheet), "policy": policy(sheet), "gap": GAP, "version": __version__,
+        "report": report, "style": Markup(sheet), "policy": policy(sheet), "gap": GAP, "version": sim.__version__,
     }  # fmt: skip
     return _templates().get_template("page.html").render(matter)

@@ -18,14 +18,15 @@ from sim.wording import shown, visible
 RESULT, PROVENANCE = "result.json", "provenance.json"
 MOST_BYTES = 400_000_000
 NOWHERE = Path(os.devnull) / "no data files are read"
-# kind -> the keys by which its document is known; the first that fits holds where the command does not tell
+# kind -> the keys by which its document is known (none: its command alone tells); the first that fits holds where the
+# command does not tell
 KINDS: Mapping[str, tuple[str, ...]] = {
     "game": ("players", "equilibria", "optimum"),
     "verify": ("agrees", "measures"),
     "compare": ("policies", "differences"),
     "ledger": ("matrix", "closes_early"),
-    "sweep": ("sweep",),
-    "align": ("align",),
+    "sweep": (),
+    "align": (),
     "simulate": ("units", "network", "replications"),
     "exact": ("units", "network", "states"),
     "transient": ("days", "long_run"),
@@ -100,7 +101,7 @@ def kind_of(document: Mapping[str, Any], origin: Mapping[str, Any]) -> str | Non
     """The kind of a document: what its command says where the keys fit, else the first kind whose keys it has."""
     said = next((word for word in origin.get("command", [])[1:] if word in KINDS), None)
     fitting = [kind for kind, keys in KINDS.items() if set(keys) <= set(document)]
-    return said if said in fitting else next(iter(fitting), None)
+    return said if said in fitting else next((kind for kind in fitting if KINDS[kind]), None)
 
 
 def _once(folders: Sequence[Path], faults: list[Fault]) -> list[Path]:

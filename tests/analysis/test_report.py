@@ -229,6 +229,28 @@ def test_the_provenance_repeats_each_result(results, page):
     assert tomllib.loads(text) == tomllib.loads(TWO)
 
 
+def test_a_sweep_is_told_as_far_as_its_document_goes(results, tmp_path):
+    """No command leaves one yet: any lists of rows and any findings are shown, numbers with their intervals."""
+    folder = shutil.copytree(results["exact"], tmp_path / "sweep")
+    rows = [
+        {
+            "demand": 1.1,
+            "lost_per_year": {"mean": 3.0, "low": 2.0, "high": 4.0},
+            "is_known": True,
+            "why": None,
+        }
+    ]
+    document = {"points": rows, "findings": [{"statement": "The loss rises with demand"}], "replications": 9}
+    origin = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))
+    origin["command"][1] = "sweep"
+    (folder / "result.json").write_text(json.dumps(document), encoding="utf-8")
+    (folder / "provenance.json").write_text(json.dumps(origin), encoding="utf-8")
+    html, markdown = texts_of([folder])
+    assert "The loss rises with demand" in section(html, "answer")
+    assert "| 1.1 | 3.0000 (2.0000 to 4.0000) | yes | - |" in markdown
+    assert list(breaches(html)) == []
+
+
 # ---- the same bytes, and a form that is kept ----
 
 

@@ -42,6 +42,8 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
     for one in found:
         yield from results.heading(one, found)
         yield Text(f"{sentence(_said(one))} {_kind_of_statement(one.document)}".strip())
+        goals = one.document.get("goals") or {}
+        yield Points(tuple(sentence(f"goal of {name(who)}: {goal}") for who, goal in goals.items()))
         yield _listed(one)
         more = len(one.document["equilibria"]) - MOST_LISTED
         if more > 0:
@@ -83,23 +85,30 @@ def _kind_of_statement(document: Mapping[str, Any]) -> str:
 
 def _listed(result: Result) -> Table:
     document = result.document
-    players, notice = document["players"], any("years_to_notice" in one for one in document["equilibria"])
-    rows = []
-    for one in document["equilibria"][:MOST_LISTED]:
-        row = [f"{one['verdict']}, {one.get('kind', 'pure')}", chosen_in(one)]
-        row += [estimate(one["regret"].get(who), 4) for who in players]
-        row += (
-            [estimate(one["years_to_notice"].get(who)) for who in players]
-            if notice and "years_to_notice" in one
-            else []
+    players = document["players"]
+    notice = any("years_to_notice" in one for one in document["equilibria"])
+    rows = [
+        (
+            f"{one['verdict']}, {one.get('kind', 'pure')}",
+            chosen_in(one),
+            *(estimate(one["regret"].get(who), 4) for who in players),
+            *(_soonest(one.get("years_to_notice", {}).get(who)) for who in players if notice),
+            estimate(one["welfare"], 3),
         )
-        rows.append(
-            [*row, *["-"] * (2 + len(players) * (1 + notice) - len(row)), estimate(one["welfare"], 3)]
-        )
+        for one in document["equilibria"][:MOST_LISTED]
+    ]
     columns = ["verdict", "thresholds", *(f"regret of {name(who)}" for who in players)]
-    columns += [f"years until {name(who)} notices" for who in players] if notice else []
+    columns += [f"{name(who)} would notice" for who in players] if notice else []
     caption = "Regret: the most a player gains by moving alone, in its goal's unit; welfare: a day"
-    return table(caption, [*columns, "welfare"], rows)
+    said = "; notice: years of own data until the gain shows, at the soonest" if notice else ""
+    return table(caption + said, [*columns, "welfare"], rows)
+
+
+def _soonest(years: Mapping[str, Any] | None) -> str:
+    """The low end: the gain may be smaller and take longer to show, or be none."""
+    if years is None:
+        return "-"
+    return "no gain to notice" if years.get("low") is None else f"after {years['low']:,.0f} years or later"
 
 
 def chosen_in(one: Mapping[str, Any]) -> str:
