@@ -11,6 +11,7 @@ from typing import Any
 from analysis.report.blocks import Block, Figure, Heading, Section, Text
 from analysis.report.reading import Network, Result
 from analysis.report.words import counted, name
+from sim.errors import RunError
 
 # The order is the board's: what was asked, what the answer is, what it rests on. A new section is a module with
 # TITLE and blocks(results, figures), and optionally headlines(results), and its name here.
@@ -71,6 +72,8 @@ class Results:
 
 def _numbers(result: Result) -> str:
     document = result.document
+    if result.is_exact and document.get("phase_fit"):
+        return "Every number is exact for the fitted stays, without sampling error, and near for the scenario's own."
     if result.is_exact:
         return "Every number is exact: from the Markov chain of the scenario, without sampling error."
     said = counted(document.get("replications", 0), "replication")
@@ -104,13 +107,22 @@ class Figures:
 
 
 def report_of(results: Sequence[Result]) -> Report:
-    """The report on these results; sections without matter are left out."""
+    """The report on these results; sections without matter are left out. RunError where a document is damaged."""
     asked, figures = Results(results), Figures()
     modules = [(place, import_module(f"analysis.report.sections.{place}")) for place in SECTIONS]
-    sections = [
-        Section(module.TITLE, place, tuple(module.blocks(asked, figures))) for place, module in modules
-    ]
+    sections = [Section(module.TITLE, place, _blocks(module, asked, figures)) for place, module in modules]
     return Report(results[0].network.title, tuple(one for one in sections if one.blocks))
+
+
+def _blocks(module: Any, results: Results, figures: Figures) -> tuple[Block, ...]:
+    """A section's blocks; RunError where a document is not as its command writes it."""
+    try:
+        return tuple(module.blocks(results, figures))
+    except (LookupError, TypeError, AttributeError, ValueError) as error:
+        raise RunError(
+            f"the section “{module.TITLE}” cannot be written: a result.json is not as this version's commands write it "
+            f"({type(error).__name__}: {error}); run its command again"
+        ) from error
 
 
 def headlines(results: Results) -> list[Headline]:

@@ -362,6 +362,16 @@ def test_results_that_contradict_each_other_are_refused(results, tmp_path):
     assert len(read_results([results["exact"], same])) == 2
 
 
+def test_a_damaged_document_is_named_with_the_remedy(results, tmp_path, capsys):
+    folder = changed(
+        results["verify"], tmp_path / "damaged", lambda document: document.pop("false_alarm_rate")
+    )
+    assert run(["report", str(folder), "--out", str(tmp_path / "a.html")]) == 1
+    said = capsys.readouterr().err
+    assert "false_alarm_rate" in said and "run its command again" in said and "unexpectedly" not in said
+    assert not (tmp_path / "a.html").exists()
+
+
 def test_a_folder_of_results_stands_for_what_it_holds(results):
     [folder] = {one.parent for one in results.values()}
     assert {one.label for one in read_results([folder])} == set(COMMANDS)

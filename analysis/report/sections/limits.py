@@ -49,7 +49,7 @@ def _of_these(results: Results) -> Iterator[str]:
             yield f"{label}: {counted(len(document['failed']), 'run')} failed and are left out"
         if document.get("replications") == 1:
             yield f"{label} rests on one replication: it has no intervals between runs"
-        if document.get("phase_fit") or document.get("fits"):
+        if document.get("phase_fit"):
             yield f"{label} is exact for fitted stays, and near for the scenario's own"
         if any("exponential counterpart" in said for said in document.get("changes", [])):
             yield f"{label} is of the exponential counterpart, not of the scenario's own stays, delays and rhythms"
