@@ -14,6 +14,7 @@ from analysis.games import analyse
 from analysis.goals import TargetGoal, Welfare
 from analysis.payoffs import PayoffTable, Profiles, exact_outcomes
 from sim.scenario import Scenario
+from tests.analysis.builders import memoryless
 
 
 @pytest.fixture(scope="module")
@@ -74,9 +75,11 @@ def test_a_threshold_game_without_a_pure_equilibrium_gets_mixed_ones_unasked(wit
 
 
 def test_its_best_replies_go_round(without_pure):
-    found = beyond(
-        analyse(without_pure), Wanted(dynamics=True, correlated=True), {"Low": 9, "High": 3}, seed=1
-    )
+    present = memoryless(
+        {"name": "Low", "beds": 9, "per_day": 1.0},
+        {"name": "High", "beds": 9, "per_day": 1.0, "closure_threshold": 3},
+    ).policy()
+    found = beyond(analyse(without_pure), Wanted(dynamics=True, correlated=True), present, seed=1)
     document = beyond_document(found)
     assert document["dynamics"]["start"] == {"Low": 2, "High": 3}
     rules = document["dynamics"]["rules"]
