@@ -21,7 +21,7 @@ STEPS = (
     (("1  Home: own gate open", "and a bed free?"), ("admitted", "at home")),
     (("2  Own gate closed, bed free:", "admitted all the same?"), ("admitted", "at home")),
     (("3  Referral order: a unit with", "open gate and free bed?"), ("transfer, then", "admitted there")),
-    (("4  Last resort of the", "scenario: a bed after all?"), ("admitted at home", "or elsewhere")),
+    (("4  Last resort of the", "scenario: a bed after all?"), ("admitted at", "home or elsewhere")),
 )
 
 
