@@ -27,8 +27,8 @@ FORMATS = {"html": ".html", "md": ".md"}
 def command(results: tuple[Path, ...], out: Path | None, form: str | None, pdf: bool, as_json: bool) -> None:
     """One self-contained page from RESULTS, folders written with --out.
 
-    Every number stands with its interval, is called exact, or is said to have no interval; what only the analyst can say
-    is marked as a gap.
+    Every number stands with its interval, is called exact, or is said to have no interval; what only the analyst
+    can say is marked as a gap.
     """
     from analysis.report import read_results, report_of, to_html, to_markdown
 
