@@ -104,8 +104,8 @@ def _nested(mean: np.ndarray, low: np.ndarray, high: np.ndarray, *counts: np.nda
         return [_nested(*parts) for parts in zip(mean, low, high, *counts, strict=True)]
     if np.isnan(low):
         return Estimate(float(mean), reason=ONE_REPLICATION).to_dict()
-    told = {"replications": int(count) for count in counts}
-    return Estimate(float(mean), float(low), float(high)).to_dict() | told
+    told = Estimate(float(mean), float(low), float(high)).to_dict()
+    return told | {"replications": int(counts[0])} if counts else told
 
 
 def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:

@@ -20,8 +20,8 @@ from analysis.equilibria import (
 )
 from analysis.noticing import YEARS, noticeable_gain, yearly_spread
 from analysis.payoffs import Outcomes, PayoffTable
-from analysis.racing import Race
 from analysis.prices import projected_cost, projected_turning
+from analysis.racing import Race
 from analysis.sets import ConfirmedSet, PossibleSet, RegretBounds, confirmed, possible, regret_bounds, spend
 
 EXACT, ESTIMATED, POSSIBLE, CONFIRMED = "exact", "estimated", "possible", "confirmed"
@@ -233,7 +233,9 @@ def welfare_estimate(table: PayoffTable, profile: Profile, confidence: float) ->
     if table.welfare_replicates is None:
         return Estimate(float(table.welfare[profile]))
     if table.welfare_low is not None and table.welfare_high is not None:
-        return Estimate(*(float(one[profile]) for one in (table.welfare, table.welfare_low, table.welfare_high)))
+        return Estimate(
+            *(float(one[profile]) for one in (table.welfare, table.welfare_low, table.welfare_high))
+        )
     values = table.welfare_replicates[(slice(None), *profile)]
     return mean_estimate(values, confidence, degrees=table.degrees)
 

@@ -55,6 +55,9 @@ def more_document(more: MoreNeeded) -> dict[str, Any]:
 def race_sentences(race: Race, level: float, stopped: str) -> Iterator[str]:
     """The race in words. stopped: why it ended, in words."""
     cells, left = len(race.possible), int(race.undecided.sum())
+    if not race.looks:
+        yield f"The race ended before its first look, at 10 replications of every cell: {stopped}. Nothing is decided."
+        return
     yield (
         f"Raced in {len(race.looks)} looks, up to {race.reached:,} replications of a cell: {race.runs:,} runs, "
         f"{race.saved or 1:.1f} times fewer than a table of {cells:,} cells with as many each; {stopped}."

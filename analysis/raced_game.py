@@ -2,16 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
+from analysis.confidence import Estimate
 from analysis.equilibria import DEFAULT_TOLERANCE, best_responses
-from analysis.games import GameAnalysis, Sets, allowed_regret, equilibrium_at, profiles_in
+from analysis.games import POSSIBLE, GameAnalysis, Sets, allowed_regret, analyse, equilibrium_at, profiles_in
 from analysis.noticing import yearly_spread
 from analysis.payoffs import PayoffTable
-from analysis.raced_prices import raced_cost, raced_turning
+from analysis.raced_prices import NO_LOOK, raced_cost, raced_turning
 from analysis.raced_table import RacedTables, raced_table
 from analysis.racing import FIRST, Race, judge, start
 from analysis.sets import ConfirmedSet, PossibleSet, RegretBounds, spend
@@ -88,7 +89,10 @@ def _sets(racing: Racing) -> Sets:
     """Both sets as the looks left them, each at half the level."""
     race, (for_possible, for_confirmed) = racing.state, spend(racing.level)
     assert racing.epsilon is not None and racing.spread is not None
-    laid_out: Callable[[np.ndarray], np.ndarray] = lambda cells: cells.reshape(*cells.shape[:-1], *race.shape)
+
+    def laid_out(cells: np.ndarray) -> np.ndarray:
+        return cells.reshape(*cells.shape[:-1], *race.shape)
+
     last = race.looks[-1]
     return Sets(
         PossibleSet(
@@ -100,3 +104,44 @@ def _sets(racing: Racing) -> Sets:
         racing.origin,
         racing.spread,
     )  # fmt: skip
+
+
+def analyse_unlooked(racing: Racing, *, tolerance: float = DEFAULT_TOLERANCE) -> GameAnalysis:
+    """The game of a race that ended before its first look: the table of what is there, and nothing decided.
+
+    At least one replication must be there for every cell.
+    """
+    tables = racing.tables
+    rows = tables.sums.complete
+    everywhere = np.ones(tables.profiles.cells, bool)
+    table = tables.at(int(rows[-1]) + 1, everywhere)
+    whole = analyse(
+        table, tolerance=tolerance, confidence=1 - racing.level, epsilon=racing.epsilon, seed=racing.seed
+    )
+    state = replace(racing.state, replications=np.full(len(everywhere), len(rows)))
+    return replace(whole, race=state, **_undecided(whole))
+
+
+def _undecided(whole: GameAnalysis) -> dict[str, Any]:
+    """What has to be replaced so that no set and no price says anything: no look has spent any level."""
+
+    def bare(one: Estimate) -> Estimate:
+        return Estimate(one.mean, reason=one.reason or NO_LOOK)
+
+    cost = whole.cost
+    prices = {
+        name: bare(getattr(cost, name))
+        for name in ("price_of_anarchy", "price_of_stability", "lost_per_year")
+    }
+    told: dict[str, Any] = {
+        "cost": replace(cost, **prices),
+        "turning": replace(whole.turning, low=None, high=None),
+    }
+    if whole.sets is None:
+        return told
+    sets = whole.sets
+    nothing = replace(sets.confirmed, mask=np.zeros_like(sets.confirmed.mask))
+    everything = replace(sets.possible, mask=np.ones_like(sets.possible.mask))
+    told["sets"] = replace(sets, confirmed=nothing, possible=everything)
+    told["equilibria"] = tuple(replace(one, verdict=POSSIBLE) for one in whole.equilibria)
+    return told

@@ -16,7 +16,14 @@ from functools import partial
 
 import numpy as np
 
-from analysis.anarchy import DAYS_A_YEAR, NOT_POSITIVE, Cost, TurningWeight, cost_of_selfishness, turning_weight
+from analysis.anarchy import (
+    DAYS_A_YEAR,
+    NOT_POSITIVE,
+    Cost,
+    TurningWeight,
+    cost_of_selfishness,
+    turning_weight,
+)
 from analysis.confidence import Estimate, t_quantile
 from analysis.equilibria import Profile
 from analysis.payoffs import PayoffTable
@@ -55,7 +62,9 @@ def raced_cost(
     assert table.counts is not None
     counts = table.counts
 
-    def band(one: Estimate, worth_of: Callable[..., Worth | None], scale: Callable[[float], float]) -> Estimate:
+    def band(
+        one: Estimate, worth_of: Callable[..., Worth | None], scale: Callable[[float], float]
+    ) -> Estimate:
         layers = [
             (number, size, worth_of(each.welfare_replicates, sense, degrees=each.degrees))
             for number, (size, each) in enumerate(looks, start=1)

@@ -78,7 +78,9 @@ def raced_table(
         **{name: own(attrgetter(name), over_shape) for name in names},
         welfare_low=own(partial(_welfare_end, confidence=confidence, side=-1), over_shape),
         welfare_high=own(partial(_welfare_end, confidence=confidence, side=+1), over_shape),
-        outcomes=Outcomes(**{name: own(attrgetter(f"outcomes.{name}"), over_cells) for name in vars(last.outcomes)}),
+        outcomes=Outcomes(
+            **{name: own(attrgetter(f"outcomes.{name}"), over_cells) for name in vars(last.outcomes)}
+        ),
         counts=counts,
     )
 

@@ -28,8 +28,8 @@ FIRST = 10  # replications of the first look
 
 @dataclass(frozen=True)
 class Look:
-    """What one look found. number: from 1. replications: of every cell in it. cells: sampled up to it. runs: of the race
-    so far. possible, confirmed, undecided: profiles after it. critical: of its step-down."""
+    """What one look found. number: from 1. replications: of every cell in it. cells: sampled up to it. runs: of the
+    race so far. possible, confirmed, undecided: profiles after it. critical: of its step-down."""
 
     number: int
     replications: int
