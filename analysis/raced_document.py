@@ -8,13 +8,14 @@ from typing import Any
 import numpy as np
 
 from analysis.games import GameAnalysis
+from analysis.raced_prices import NO_LOOK
 from analysis.racing import Look, MoreNeeded, Race, more_needed
 
 ROUGH = (
     "a rough guess from present errors and gains, as if every estimate stayed as it is; the truth may be several times "
     "less or more"
 )
-NO_POINT = "for some profiles the estimates point to no decision, so that nobody can say"
+NO_POINT = "for some profiles nothing points to a decision yet"
 PAYOFFS = (
     "each cell's payoff and interval come from its own replications, so that only cells with the same number may be "
     "compared; verdicts and regrets compare paired replications"
@@ -31,8 +32,9 @@ def raced_document(game: GameAnalysis) -> dict[str, Any]:
         "racing": {
             "looks": [look_document(look) for look in race.looks],
             "runs": race.runs,
-            "runs_of_full_table": race.runs_of_full_table,
+            "runs_of_full_table": race.runs_of_full_table if race.looks else None,
             "saved": race.saved,
+            **({} if race.looks else {"reason": NO_LOOK}),
             "undecided": int(race.undecided.sum()),
             "more_needed": more_document(more),
             "replications": race.replications.reshape(race.shape).tolist(),
@@ -70,8 +72,8 @@ def race_sentences(race: Race, level: float, stopped: str) -> Iterator[str]:
     if more.replications is None:
         yield f"{who}, and their estimates point to no decision yet."
         return
-    but = "" if not more.profiles else f", and for {more.profiles} of them nobody can say"
+    but = "" if not more.profiles else f", and for {more.profiles} of them nothing points to a decision yet"
     yield (
-        f"{who}: about {more.replications:,} replications ({more.runs:,} runs more) would decide them{but}. This is a "
+        f"{who}: up to about {more.replications:,} replications ({more.runs:,} runs more) are still needed{but}. This is a "
         "rough guess: it takes today's estimates for the truth."
     )

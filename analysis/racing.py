@@ -94,7 +94,7 @@ class Race:
     @property
     def saved(self) -> float | None:
         """How many times fewer runs than the full table; None before the first look."""
-        return self.runs_of_full_table / self.runs if self.runs else None
+        return self.runs_of_full_table / self.runs if self.looks else None
 
     def next_look(self, most: int) -> int | None:
         """Replications of the next look; None where all is decided or it would need more than `most`."""
@@ -206,8 +206,10 @@ class MoreNeeded:
 def more_needed(race: Race, *, level: float) -> MoreNeeded:
     """Each t grows as the square root of replications; the nearer of both decisions counts for each profile."""
     open_ = race.undecided
-    if not race.looks or not open_.any():
-        return MoreNeeded(None if open_.any() else race.reached, None if open_.any() else 0, int(open_.sum()))
+    if not race.looks:
+        return MoreNeeded(None, None, int(open_.sum()))
+    if not open_.any():
+        return MoreNeeded(race.reached, 0, 0)
     next_level = spend(level, look=len(race.looks) + 1)[1] / len(open_)
     sure, critical = -ndtri(next_level), race.looks[-1].critical
     critical = critical if np.isfinite(critical) else sure

@@ -22,6 +22,7 @@ from analysis.command.rounds import INTERRUPTED
 
 TABLE_SECONDS = 60.0  # a whole table that takes longer is raced
 QUICK = 5_000_000  # patients in all runs of a table that needs no timing
+EARLY = 0.05  # of a look's runs, which tell little of how long the others take
 LEAST = 20  # replications, below which a race has one look and saves nothing
 DECIDED, REPLICATIONS, FAILED = "decided", "replications", "failed"
 WHY = {
@@ -153,6 +154,8 @@ def raced(
     if not looked:
         require(len(sums.complete), done.why == INTERRUPTED)
     stopped = done.stopped(racing)
+    if done.why == INTERRUPTED:
+        say("interrupted; every whole look counts, and the rest is told as undecided")
     analysis = (
         analyse_raced(racing, tolerance=tolerance) if looked
         else analyse_unlooked(racing, tolerance=tolerance)
@@ -358,7 +361,7 @@ class Screen:
         return said
 
     def _left(self) -> str:
-        if not self._all:
+        if self._all < EARLY * self._of:
             return "time left not known yet"
         left = (self._clock() - self._began) / self._all * (self._of - self._done)
         return f"{about(left)} left to this look"
