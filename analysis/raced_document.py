@@ -74,6 +74,6 @@ def race_sentences(race: Race, level: float, stopped: str) -> Iterator[str]:
         return
     but = "" if not more.profiles else f", and for {more.profiles} of them nothing points to a decision yet"
     yield (
-        f"{who}: up to about {more.replications:,} replications ({more.runs:,} runs more) are still needed{but}. This is a "
-        "rough guess: it takes today's estimates for the truth."
+        f"{who}: up to about {more.replications:,} replications ({more.runs:,} runs more) are still needed{but}. This "
+        "is a rough guess: it takes today's estimates for the truth."
     )
