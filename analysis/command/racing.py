@@ -43,7 +43,7 @@ race_option = click.option(
 
 @dataclass(frozen=True)
 class Choice:
-    """Race or whole table. chosen_by: `cost`, `--race` or a bound such as `--until`. seconds: of the whole table, None
+    """Race or whole table. chosen_by: `cost`, `batch`, or an option such as `--race`. seconds: of the whole table, None
     where the choice needed no timing."""
 
     race: bool
@@ -55,7 +55,7 @@ class Choice:
 def choose(
     request: Request, wanted: bool | None, bounds: dict[str, Any], *, exact: bool, counterpart: bool
 ) -> Choice | None:
-    """How the table comes about; None where that is no question (exact, or the runs are there).
+    """How the table comes about; None where it is exact.
 
     bounds: `until`, `hours`, `minutes`, `budget` as given; these need a race.
     """
@@ -73,7 +73,7 @@ def choose(
         )
         return Choice(False, "--counterpart", None, "Whole table, for --counterpart needs it")
     if request.kept is not None:
-        return None
+        return Choice(False, "batch", None, "Whole table, as a batch runs it")
     if wanted or asked:
         _require_a_look(request, asked[0] if asked and not wanted else "--race")
         by = "--race" if wanted else asked[0]
