@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import replace
+from dataclasses import asdict, replace
 from typing import Any
 
 import click
 
+from analysis.command import racing
+from analysis.command.axes import axes
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.counterpart import (
@@ -16,6 +18,7 @@ from analysis.command.counterpart import (
     run_counterpart_table,
     show_counterpart,
 )
+from analysis.command.deadline import deadline_of, deadline_options
 from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.game_beyond import (
     beyond_options,
@@ -43,7 +46,6 @@ from analysis.command.phase_fit import fitted, option, show_fits
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
 LONG_YEARS = 100  # of watching, beyond which the number says nothing more
-MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
 @option
@@ -53,6 +55,8 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @click.option("--epsilon", type=FiniteRange(0), metavar="X",
               help="Simulated: regret within which an equilibrium is confirmed, in the goal's unit [default: the gain "
                    "that takes a manager 10 years of own data to notice].")  # fmt: skip
+@racing.race_option
+@deadline_options
 @controls_option
 @counterpart_option
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
@@ -61,7 +65,8 @@ MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 @beyond_options
 def game(
     request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, counterpart: bool,
-    control: bool, search: str | None, phase_fit: int | None, **wanted: Any,
+    control: bool, search: str | None, phase_fit: int | None, race: bool | None, until: Any, hours: float | None,
+    minutes: float | None, budget: int | None, **wanted: Any,
 ) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
@@ -75,7 +80,8 @@ def game(
     from analysis.game_document import game_document
     from analysis.games import analyse
 
-    begun = started()
+    begun, deadline = started(), deadline_of(until, hours, minutes, budget)
+    bounds = {"until": until, "hours": hours, "minutes": minutes, "budget": budget}
     if search is not None and not exact:
         raise click.BadOptionUsage("--search", "--search is for --exact only")
     if exact and epsilon is not None:
@@ -101,11 +107,24 @@ def game(
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
-    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
-    run = request.scenario.run
-    analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
+    by_race = racing.choose(request, race, bounds, exact=exact, counterpart=counterpart)
+    if by_race is not None and by_race.race:
+        analysis, ran, told = racing.raced(
+            request, by_race, deadline, controls=controls, epsilon=epsilon, tolerance=tolerance
+        )
+    else:
+        table, ran, told = (
+            _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
+        )
+        run = request.scenario.run
+        analysis = analyse(
+            table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed
+        )
+        told |= {} if by_race is None else {"race_choice": asdict(by_race)}
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
+    if analysis.race is not None:
+        racing.tell(document, analysis)
     found = look_beyond(request, analysis, document, **wanted)
     if best is not None:
         document["control"] = beside(best, analysis)
@@ -130,24 +149,6 @@ def game(
 command = scenario_command(game)
 
 
-def _axes(request: Request) -> tuple[Any, Any, Any]:
-    """Profiles, goal and welfare; ScenarioError where the game is too large or a target is missing."""
-    from analysis.goals import goal_of, welfare_of
-    from analysis.payoffs import MOST_CELLS, profiles_of
-    from sim.errors import Fault, ScenarioError
-
-    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario, request.policy)
-    if profiles.cells > MOST_CELLS:
-        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
-        remedy = "list fewer thresholds for some units"
-        raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
-    if len(profiles.players) > MOST_PLAYERS:
-        rule, got = f"a game may have at most {MOST_PLAYERS} units", f"got {len(profiles.players)}"
-        remedy = "describe the part of the region that matters"
-        raise ScenarioError([Fault(None, "units", rule, got, remedy)], request.scenario.source.file)
-    return profiles, goal, welfare_of(request.scenario)
-
-
 def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
@@ -155,7 +156,7 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
     from sim.record import hash_records
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = _axes(request)
+    profiles, goal, welfare = axes(request)
     for said in advice(request.scenario):
         say(f"advice: {said}")
     beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
@@ -183,7 +184,7 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     from analysis.payoffs import exact_table
 
-    profiles, goal, welfare = _axes(request)
+    profiles, goal, welfare = axes(request)
     cells, kept = _exact_cells(request, profiles)
     told = {"engine": "exact chain", "interrupted": False} | kept
     return exact_table(profiles, goal, welfare, cells), None, told
@@ -219,8 +220,10 @@ def _show(analysis: Any, document: dict[str, Any], found: Any) -> None:
     put_text(f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
     show_fits(document)
     if not analysis.is_exact:
+        at_most = "" if analysis.race is None else "At most "
         put_text(
-            f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
+            f"{at_most}{document['replications']} paired replications, {100 * document['confidence']:g} % intervals.",
+            *document.get("racing", {}).get("reads", ()),
         )
         put_text(*controls_sentence(document))
         show_counterpart(document)
