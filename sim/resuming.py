@@ -12,6 +12,8 @@ from sim.scenario import Policy, Scenario
 from sim.store import Store
 from sim.store_rows import Key, Measures, Row, cell_hash, exact_hash, scenario_hash
 
+ROWS_AT_ONCE = 2_000  # of a store
+
 
 class Job:
     """Policies times replications of a scenario, held against what a store has of them.
@@ -96,16 +98,26 @@ class Job:
         self, cells: Sequence[int] | None = None, replications: int | None = None
     ) -> Iterator[list[Run]]:
         """The runs that are there, a replication at a time; a run's cell is its place among `cells`."""
-        wanted = range(len(self._cells)) if cells is None else cells
-        for replication in range(len(self._missing) if replications is None else replications):
-            missing = self._missing[replication]
-            kept = [(place, cell) for place, cell in enumerate(wanted) if cell not in missing]
-            if kept:
-                rows = self._store.of_replication(self.scenario, replication)
-                yield [self._kept(rows[self._cells[cell]], place) for place, cell in kept]
+        wanted = list(range(len(self._cells)) if cells is None else cells)
+        hashes = [self._cells[cell] for cell in wanted]
+        step, count = max(1, ROWS_AT_ONCE // max(1, len(wanted))), replications
+        for some in _pieces(len(self._missing) if count is None else count, step):
+            kept = {one: self._kept_places(one, wanted) for one in some}
+            if any(kept.values()):
+                there = self._store.records(self.scenario, hashes, some)
+                for one, places in kept.items():
+                    if places:
+                        yield [Run(one, place, *there[one][hashes[place]]) for place in places]
 
-    def _kept(self, row: Row, place: int) -> Run:
-        return Run(row.key.replication, place, row.record, row.intake_hash)
+    def _kept_places(self, replication: int, wanted: Sequence[int]) -> Sequence[int]:
+        missing = self._missing[replication]
+        if missing is self._every:
+            return ()
+        return (
+            [place for place, cell in enumerate(wanted) if cell not in missing]
+            if missing
+            else range(len(wanted))
+        )
 
     def kept_engine(self) -> str | None:
         """The engine of a run that is there; None where there is none."""
@@ -188,6 +200,10 @@ class ExactJob:
         """Notes in the store that the job has ended, be it interrupted, at that time."""
         if self._command is not None:
             self._store.end(self._command, at)
+
+
+def _pieces(count: int, step: int) -> Iterator[range]:
+    return (range(first, min(first + step, count)) for first in range(0, count, step))
 
 
 def _describe(

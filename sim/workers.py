@@ -281,8 +281,10 @@ def stop_processes() -> None:
 
 
 def _begin(parent: int) -> None:
-    """In a new worker: Ctrl-C is the parent's to handle, and without the parent there is nothing to do."""
+    """In a new worker: Ctrl-C and a closed terminal are the parent's to handle, and it ends with the parent."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
+    if hasattr(signal, "SIGHUP"):
+        signal.signal(signal.SIGHUP, signal.SIG_IGN)
     if hasattr(os, "getppid") and sys.platform != "win32":
         threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
 

@@ -22,6 +22,7 @@ from sim.replicate import Failure, Run, replicate, replicate_shares
 from sim.resuming import Job
 from sim.scenario import parse_scenario
 from sim.store import Store
+from sim.store_bulk import unpack_all
 from sim.store_file import FILE
 from sim.store_rows import Key, by_unit, cell_hash, pack, scenario_hash, unpack
 from tests.sim.stored import filled, record_of, row
@@ -74,6 +75,28 @@ def test_a_record_comes_back_bit_for_bit(days, counts, staffed):
 def test_bytes_that_are_no_record_are_refused(harm):
     with pytest.raises(ValueError):
         unpack(harm(pack(record_of(1.0))))
+
+
+def test_rows_of_several_shapes_read_at_once_are_those_read_alone_and_damage_is_seen():
+    """A flipped bit anywhere behind the head, a row cut short and one too long: each tells of itself only."""
+    wide = replace(record_of(3.0), staffed_days=record_of(3.0).occupancy_days)
+    records = [record_of(1.0), wide, record_of(2.0), record_of(1.0)]
+    blobs, hashes = [pack(one) for one in records], [one.hash for one in records]
+    found = unpack_all(blobs, hashes)
+    assert [pack(one) for one in found] == blobs and [one.hash for one in found] == hashes
+    assert all(
+        left.dtype == right.dtype and left.shape == right.shape
+        for one, other in zip(found, records, strict=True)
+        for left, right in zip(one.arrays().values(), other.arrays().values(), strict=True)
+    )
+    blob = blobs[0]
+    start = 4 + int.from_bytes(blob[:4], "little")
+    harmed = [
+        blob[:place] + bytes([blob[place] ^ 1]) + blob[place + 1 :] for place in range(start, len(blob))
+    ]
+    harmed += [blob[:-1], blob + b"\0", blob[:3], b"", blob[4:]]
+    found = unpack_all([*harmed, blob], hashes[:1] * (len(harmed) + 1))
+    assert found[:-1] == [None] * len(harmed) and found[-1].hash == hashes[0]
 
 
 def test_plain_numbers_by_unit_add_up_as_counted_by_hand():
