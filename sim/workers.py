@@ -39,6 +39,7 @@ class Reply:
 
     seconds: that it took where it ran; 0 where that is not known.
     fingerprint: of the machine that ran it, as text, where it may be another one.
+    handed_back: it was not run, for no machine of the bits that its binding asked for came.
     """
 
     key: Hashable
@@ -46,6 +47,7 @@ class Reply:
     failure: str | None = None
     seconds: float = 0.0
     fingerprint: str | None = None
+    handed_back: bool = False
 
 
 Task = tuple[Hashable, tuple]

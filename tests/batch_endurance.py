@@ -39,7 +39,8 @@ class Undrawn:
         if name.startswith("__"):
             raise AttributeError(name)
         return lambda *_, **__: None
-sys.modules["analysis.figures"] = Undrawn()
+for name in ("figures", "figures_replies", "figures_policies", "figures_paths"):
+    sys.modules[f"analysis.{name}"] = Undrawn()
 from analysis.command.entry import main
 main()
 """
