@@ -72,11 +72,14 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
     """Expected seconds and bytes of `simulate`, and of a `game` of so many cells (null where it is too large)."""
     from analysis.payoffs import MOST_CELLS
 
-    request = replace(request, cluster=None)  # of this machine alone
+    address, request = request.cluster, replace(request, cluster=None)
     replications = request.scenario.run.replications
     feasible = cells <= MOST_CELLS
     planned = effort(request, replications, cells if feasible else 1)
+    threads = None if address is None else _threads(address)
+    planned = planned if threads is None else replace(planned, count=threads)
     return {
+        "estimated_for": "this machine" if threads is None else "the cluster, at this machine's pace",
         "engine": planned.engine.name,
         "seconds_per_run": planned.pace.running,
         "simulate_seconds": planned.pace.seconds(replications, 1),
@@ -91,6 +94,23 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
             else {"reason": f"a game may have at most {MOST_CELLS:,} cells: list fewer thresholds"}
         ),
     }
+
+
+def _threads(address: str) -> int | None:
+    """The threads of the cluster's machines; None, said, where nobody is there: reading a scenario needs no cluster."""
+    try:
+        workers = cluster_workers(address)
+    except RunError as error:
+        say(f"{error}; the estimate is for this machine")
+        return None
+    try:
+        count = workers.count
+        there = bool(workers.machines)
+    finally:
+        workers.close()
+    if not there:
+        say(f"no machine at {address} that may help yet; the estimate is for this machine")
+    return count if there else None
 
 
 @dataclass(frozen=True)
