@@ -7,10 +7,15 @@ import os
 import signal
 import subprocess
 import sys
+import threading
+import time
 
 import pytest
 
+from analysis.command import batch as batch_command
+from analysis.command import deadline
 from analysis.command.entry import run
+from sim import replicate
 from sim.provenance import fingerprint
 from sim.store import Store
 from tests.cluster.site import ROOT, wait_for
@@ -82,26 +87,40 @@ def test_a_batch_over_the_cluster_leaves_the_table_of_a_local_one(site, plan, tm
     capsys.readouterr()
 
 
-def test_a_deadline_holds_while_nobody_answers_and_the_batch_goes_on_here(site, plan, tmp_path):
-    """Every worker is stopped under way: the scheduler still counts them as there, and none will answer."""
-    process = batch(site, plan, tmp_path / "there", "--minutes", "0.35")
+def test_a_deadline_holds_while_nobody_answers_and_the_batch_goes_on_here(
+    site, plan, tmp_path, monkeypatch, capsys
+):
+    """Every worker is stopped under way, and the scheduler still counts them as there; then the hours are over."""
+    folder, shift = tmp_path / "there", [0.0]
+    monkeypatch.setenv("BRIMLINE_CLUSTER_DIR", str(site.keys))
+    clock = deadline.Clock(seconds=lambda: time.monotonic() + shift[0])
+    monkeypatch.setattr(batch_command, "deadline_of", lambda *bounds: deadline.deadline_of(*bounds, clock))
+    monkeypatch.setattr(replicate, "SECONDS_PER_TASK", 1e-9)
+    monkeypatch.setattr(replicate, "LEAST_TASK_SECONDS", 0.0)
+    monkeypatch.setattr("sim.cluster.LAST_SECONDS", 1.0)
     workers = [one for name in ("north", "south") for one in site.workers_of(name)]
-    try:
-        wait_for(lambda: rows_in(tmp_path / "there") >= 8 or process.poll() is not None, "some runs")
+
+    def stop_everybody():
+        while rows_in(folder) < 8:
+            time.sleep(0.02)
         for one in workers:
             one.suspend()
-        _, said = process.communicate(timeout=120)
+        shift[0] = 1e6
+
+    threading.Thread(target=stop_everybody, daemon=True).start()
+    asked = ["batch", str(plan), "--out", str(folder), "--engine", "reference", "--cluster", site.address]
+    try:
+        assert run([*asked, "--hours", "1"]) in (0, 1)
     finally:
         for one in workers:
             one.resume()
-    document = told(tmp_path / "there")
-    assert (process.returncode in (0, 1), "Traceback" in said) == (True, False), said
-    assert (document["state"], document["ended_because"]) == ("stopped", "time")
-    assert 8 <= document["runs"]["computed"] == rows_in(tmp_path / "there") < RUNS
+    document, said = told(folder), capsys.readouterr().err
+    assert (document["state"], document["ended_because"], len(workers)) == ("stopped", "time", 2)
+    assert 8 <= document["runs"]["computed"] == rows_in(folder) < RUNS
     assert f"the time is over; {document['runs']['missing']} runs are missing" in said
-    local(plan, tmp_path / "there")
+    local(plan, folder)
     local(plan, tmp_path / "here")
-    assert hash_of(tmp_path / "there") == hash_of(tmp_path / "here")
+    assert hash_of(folder) == hash_of(tmp_path / "here")
 
 
 @pytest.mark.slow
