@@ -39,8 +39,8 @@ class Undrawn:
         if name.startswith("__"):
             raise AttributeError(name)
         return lambda *_, **__: None
-for name in ("figures", "figures_replies", "figures_policies", "figures_paths"):
-    sys.modules[f"analysis.{name}"] = Undrawn()
+for room in ("figures", "figures_replies", "figures_paths"):
+    sys.modules["analysis." + room] = Undrawn()
 from analysis.command.entry import main
 main()
 """
