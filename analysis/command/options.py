@@ -166,6 +166,15 @@ def require_folder(folder: Path) -> None:
         raise ScenarioError(faults)
 
 
+def require_cluster(address: str | None, workers: int | None) -> str | None:
+    """The full address of a cluster; ScenarioError where it cannot be used."""
+    faults: list[Fault] = []
+    full = _cluster({"cluster": address, "workers": workers}, faults)
+    if faults:
+        raise ScenarioError(faults)
+    return full
+
+
 def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
     """The full address of the scheduler; the cluster's packages are looked for only where one is given."""
     if values.get("cluster") is None:

@@ -17,7 +17,7 @@ from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.provenance import fingerprint, now
 from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_networks, replicate_shares
-from sim.resuming import Job
+from sim.resuming import Job, run_whole
 from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
 
@@ -51,12 +51,12 @@ def effort(request: Request, replications: int, cells: int) -> Effort:
     return Effort(choice, pace, local_workers(count), count)
 
 
-def cluster_workers(address: str) -> Any:
+def cluster_workers(address: str, **options: Any) -> Any:
     """The workers behind the scheduler at that address, what they have to say going to standard error."""
     from sim.cluster import Cluster
     from sim.machines.keys import default_folder
 
-    return Cluster(address, default_folder(), notice=say)
+    return Cluster(address, default_folder(), **{"notice": say, **options})
 
 
 def _announce_compiling() -> None:
@@ -72,11 +72,14 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
     """Expected seconds and bytes of `simulate`, and of a `game` of so many cells (null where it is too large)."""
     from analysis.payoffs import MOST_CELLS
 
-    request = replace(request, cluster=None)  # of this machine alone
+    address, request = request.cluster, replace(request, cluster=None)
     replications = request.scenario.run.replications
     feasible = cells <= MOST_CELLS
     planned = effort(request, replications, cells if feasible else 1)
+    threads = None if address is None else _threads(address)
+    planned = planned if threads is None else replace(planned, count=threads)
     return {
+        "estimated_for": "this machine" if threads is None else "the cluster, at this machine's pace",
         "engine": planned.engine.name,
         "seconds_per_run": planned.pace.running,
         "simulate_seconds": planned.pace.seconds(replications, 1),
@@ -91,6 +94,23 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
             else {"reason": f"a game may have at most {MOST_CELLS:,} cells: list fewer thresholds"}
         ),
     }
+
+
+def _threads(address: str) -> int | None:
+    """The threads of the cluster's machines; None, said, where nobody is there: reading a scenario needs no cluster."""
+    try:
+        workers = cluster_workers(address)
+    except RunError as error:
+        say(f"{error}; the estimate is for this machine")
+        return None
+    try:
+        count = workers.count
+        there = bool(workers.machines)
+    finally:
+        workers.close()
+    if not there:
+        say(f"no machine at {address} that may help yet; the estimate is for this machine")
+    return count if there else None
 
 
 @dataclass(frozen=True)
@@ -148,13 +168,14 @@ def _run_beside(
     """Takes what the store has, then runs and keeps what is missing; quiet: without telling what is there."""
     job = Job(
         store, request.scenario, policies, request.scenario.run.replications,
-        fingerprint=json.dumps(fingerprint(), sort_keys=True),
+        fingerprint=json.dumps(fingerprint(), sort_keys=True), others=request.cluster is not None,
     )  # fmt: skip
     if job.restarted:
         said = "replications were begun on a machine with other bits and are run again whole"
         say(f"{len(job.restarted)} {said}")
     for runs in job.kept_runs():
-        take(runs)
+        if runs[0].replication not in job.unsure:  # what may begin again is taken at the end
+            take(runs)
     if job.reused and not quiet:
         say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
     shares = job.shares()
@@ -164,9 +185,13 @@ def _run_beside(
 
     def keep_then_take(reply: list[Run] | Failure) -> None:
         job.keep(reply, engine)
-        take(reply)
+        if isinstance(reply, Failure) or reply[0].replication not in job.unsure:
+            take(reply)
 
-    ran = _run(request, policies, shares, planned, label=label, take=keep_then_take)
+    ran = _run(request, policies, shares, planned, label=label, take=keep_then_take, job=job)
+    for runs in job.kept_runs() if job.unsure else ():
+        if runs[0].replication in job.unsure:
+            take(runs)
     job.end(now().isoformat(timespec="seconds"))
     return replace(ran, computed=job.computed, reused=job.reused)
 
@@ -190,18 +215,21 @@ def _run(
     *,
     label: str,
     take: Any,
+    job: Job | None = None,
 ) -> Ran:
-    """Runs the shares and hands each reply to `take`."""
+    """Runs the shares and hands each reply to `take`; job: whose they are, where they are kept."""
     scenario, engine = request.scenario, planned.engine.name
     rules = [lower_policy(scenario, policy) for policy in policies]
     if shares:
         engines.load(engine).warm(lower_network(scenario), rules, plan_intake(scenario))
-    replies = until_interrupted(
-        replicate_shares(
-            scenario, policies, shares, engine=engine, workers=planned.workers,
-            task_size=planned.pace.task_size(*size_of(shares), planned.count),
-        )
-    )  # fmt: skip
+
+    def run(some: Sequence[Share]) -> Any:
+        return replicate_shares(
+            scenario, policies, some, engine=engine, workers=planned.workers,
+            task_size=planned.pace.task_size(*size_of(some), planned.count),
+        )  # fmt: skip
+
+    replies = until_interrupted(run_whole(shares, run, job))
     failures = []
     runs = sum(len(share.replications) * len(share.cells) for share in shares)
     with replies, progress(label, runs, "runs") as bar:

@@ -21,7 +21,13 @@ from tests.cluster.site import ROOT, wait_for
 from tests.sim.test_replicate import SCENARIO_TEXT
 
 pytestmark = pytest.mark.slow
-CALL = [sys.executable, "-c", "from analysis.command import main; main()"]
+OFTEN = """
+import analysis.command.progress
+analysis.command.progress.SECONDS_BETWEEN_LINES = 0.2
+from analysis.command import main
+main()
+"""
+CALL = [sys.executable, "-c", OFTEN]
 
 
 def numbers(count, seconds=0.2):
