@@ -55,6 +55,10 @@ class TableSums:
         """The replications that every cell has."""
         return np.flatnonzero(self._arrived.all(axis=1))
 
+    def among(self, cells: np.ndarray, first: int) -> np.ndarray:
+        """Those of the first so many replications that each of these cells (bool, (cells,)) has."""
+        return np.flatnonzero(self._arrived[:first, cells].all(axis=1))
+
     def sums(self) -> dict[str, np.ndarray]:
         """The sums over complete replications only, so that every contrast is paired."""
         return self.sums_of(self.complete)
@@ -91,6 +95,8 @@ class PayoffTable:
     signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
     raw_replicates: these, or else the replicates, before control variates. turned_away_replicates,
     transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each replication.
+    counts: of a raced table, int (*shape), the replications behind each cell's means and intervals; replicates are
+    then those of its last look, NaN in cells that were left before. welfare_low, welfare_high: with counts, (*shape).
     """
 
     profiles: Profiles
@@ -110,6 +116,9 @@ class PayoffTable:
     controls: Controls | None = None
     beside_counterpart: bool = False
     measured_days: float = 365.0
+    counts: np.ndarray | None = None
+    welfare_low: np.ndarray | None = None
+    welfare_high: np.ndarray | None = None
 
     @property
     def unadjusted(self) -> np.ndarray | None:
