@@ -18,12 +18,12 @@ import numpy as np
 import sim
 from analysis.controls import Controls
 from analysis.goals import goal_of, welfare_of
-from analysis.measures import unit_sums
 from analysis.payoffs import PayoffTable, Profiles, profiles_of, simulated_table
 from sim import engines
 from sim.intake import draw_intake
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.offered import drawn_offer, expected_offer
+from sim.record import FULL, OWN_CLOSED, Record
 from sim.scenario import Scenario
 from sim.workers import local_workers
 
@@ -122,14 +122,33 @@ def _replications(scenario: Scenario, numbers: Sequence[int]) -> Iterator[dict[s
     network, plan, engine = lower_network(scenario), plan_intake(scenario), engines.load("compiled")
     policies = profiles_of(scenario).policies(scenario.policy())
     rules = [lower_policy(scenario, one) for one in policies]
-    beds = np.array([unit.beds for unit in scenario.units], float)
     mean = expected_offer(scenario)
     for number in numbers:
         records = engine.run_table(network, rules, draw_intake(plan, number))
-        sums = unit_sums(records, beds, scenario.run.measured_days)
         drawn = drawn_offer(scenario, number)
         offered = np.concatenate([drawn.arrivals - mean.arrivals, drawn.work - mean.work])
-        yield {name: sums[name] for name in KEPT} | {CONTROLS: offered}
+        yield sums_of(records, scenario) | {CONTROLS: offered}
+
+
+def sums_of(records: Sequence[Record], scenario: Scenario) -> dict[str, np.ndarray]:
+    """The sums `KEPT` of one replication's records, (cells, units), as `unit_sums` has them but ten times sooner."""
+    occupancy = np.stack([one.occupancy_days for one in records]).sum(axis=1)
+    gates, diverted = (
+        np.stack([one.gate_days for one in records]),
+        np.stack([one.diverted for one in records]),
+    )
+    idle = [state for state in range(gates.shape[-1]) if state & OWN_CLOSED and not state & FULL]
+    days = np.full(occupancy.shape[:2], scenario.run.measured_days)
+    return {
+        "occupied_days": occupancy @ np.arange(occupancy.shape[-1]),
+        "bed_days": days * [float(unit.beds) for unit in scenario.units],
+        "admitted": np.stack([one.admitted for one in records]).sum(axis=1).astype(float),
+        "turned_away": np.stack([one.turned_away for one in records]).astype(float),
+        "diverted_out": diverted.sum(axis=2).astype(float),
+        "arrived": np.stack([one.arrived for one in records]).astype(float),
+        "closed_free_days": gates[..., idle].sum(axis=-1),
+        "days": days,
+    }
 
 
 # ---- experiments ----

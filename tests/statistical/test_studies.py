@@ -1,7 +1,8 @@
 """The studies at a reduced size: promises held, and every planted error caught.
 
 False-alarm rates: a procedure that keeps its promise exactly misses a bar with the probability that stands in its
-`false_alarm` (binomial; at most .005 each here); seeds are fixed, so that a green suite stays green.
+`false_alarm` (binomial; at most .005 each, .025 with the few commands); seeds are fixed, so that a green suite stays
+green.
 """
 
 from __future__ import annotations
@@ -11,16 +12,19 @@ import json
 import numpy as np
 import pytest
 
+from analysis.measures import unit_sums
+from analysis.profiles import profiles_of
+from sim.replicate import replicate
 from tests.statistical.__main__ import main
 from tests.statistical.core import Bench, Effort, Outcome, Truth, at_least, at_most, within
 from tests.statistical.networks import contested, crowd, plateau, small
-from tests.statistical.pool import disjoint, experiments_of, overlapping, pool_of
+from tests.statistical.pool import KEPT, disjoint, experiments_of, overlapping, pool_of, sums_of
 from tests.statistical.running import BY_NAME, STUDIES, run
 
 pytestmark = pytest.mark.slow
 EXPERIMENTS = 60
 MORE = {"planted-no-student-map": 150}  # a tail of .01 takes more of them
-LARGEST_FALSE_ALARM = 0.005
+LARGEST_FALSE_ALARM = {"command-contested-20": 0.025}
 
 
 @pytest.fixture(scope="session")
@@ -32,7 +36,7 @@ def folder(tmp_path_factory):
 def test_study(name, folder):
     outcome = run(name, Bench(folder, Effort(MORE.get(name, EXPERIMENTS), 0)))
     assert outcome.passed, outcome
-    assert all((one.false_alarm or 0) <= LARGEST_FALSE_ALARM for one in outcome.figures)
+    assert all((one.false_alarm or 0) <= LARGEST_FALSE_ALARM.get(name, 0.005) for one in outcome.figures)
     assert any(one.passed is not None for one in outcome.figures)
 
 
@@ -61,6 +65,16 @@ def test_the_plateau_ties_in_every_replication(folder):
     for value in np.unique(closure):
         same = used[:, closure == value]
         assert same.shape[1] > 1 and (same == same[:, :1]).all()
+
+
+def test_a_pools_sums_are_those_of_the_tool():
+    scenario = small()
+    policies = list(profiles_of(scenario).policies(scenario.policy()))
+    (reply,) = list(replicate(scenario, policies, [3], engine="compiled"))
+    records = [run.record for run in sorted(reply, key=lambda run: run.cell)]
+    found, wanted = sums_of(records, scenario), unit_sums(records, np.array([3.0, 4.0]), 60.0)
+    for name in KEPT:
+        assert found[name] == pytest.approx(wanted[name], abs=1e-9), name
 
 
 def test_a_pool_goes_on_where_it_was(folder, monkeypatch):
