@@ -9,6 +9,7 @@ from typing import Any
 import click
 
 from analysis.command import racing
+from analysis.command.axes import axes
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.counterpart import (
@@ -45,7 +46,6 @@ from analysis.command.phase_fit import fitted, option, show_fits
 COLUMNS_AT_ONCE = 20
 MOST_LISTED = 25
 LONG_YEARS = 100  # of watching, beyond which the number says nothing more
-MOST_PLAYERS = 60  # a table has an axis for each, and numpy takes 64
 
 
 @option
@@ -149,24 +149,6 @@ def game(
 command = scenario_command(game)
 
 
-def _axes(request: Request) -> tuple[Any, Any, Any]:
-    """Profiles, goal and welfare; ScenarioError where the game is too large or a target is missing."""
-    from analysis.goals import goal_of, welfare_of
-    from analysis.payoffs import MOST_CELLS, profiles_of
-    from sim.errors import Fault, ScenarioError
-
-    goal, profiles = goal_of(request.scenario), profiles_of(request.scenario, request.policy)
-    if profiles.cells > MOST_CELLS:
-        rule, got = f"must give at most {MOST_CELLS:,} cells", f"got {count(profiles.cells)}"
-        remedy = "list fewer thresholds for some units"
-        raise ScenarioError([Fault(None, "game.strategies", rule, got, remedy)], request.scenario.source.file)
-    if len(profiles.players) > MOST_PLAYERS:
-        rule, got = f"a game may have at most {MOST_PLAYERS} units", f"got {len(profiles.players)}"
-        remedy = "describe the part of the region that matters"
-        raise ScenarioError([Fault(None, "units", rule, got, remedy)], request.scenario.source.file)
-    return profiles, goal, welfare_of(request.scenario)
-
-
 def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
@@ -174,7 +156,7 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
     from sim.record import hash_records
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = _axes(request)
+    profiles, goal, welfare = axes(request)
     for said in advice(request.scenario):
         say(f"advice: {said}")
     beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
@@ -202,7 +184,7 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
     from analysis.payoffs import exact_table
 
-    profiles, goal, welfare = _axes(request)
+    profiles, goal, welfare = axes(request)
     cells, kept = _exact_cells(request, profiles)
     told = {"engine": "exact chain", "interrupted": False} | kept
     return exact_table(profiles, goal, welfare, cells), None, told

@@ -22,6 +22,7 @@ from analysis.command.rounds import INTERRUPTED
 
 TABLE_SECONDS = 60.0  # a whole table that takes longer is raced
 QUICK = 5_000_000  # patients in all runs of a table that needs no timing
+MOST_BYTES = 2_000_000_000  # that a race keeps of its runs
 EARLY = 0.05  # of a look's runs, which tell little of how long the others take
 LEAST = 20  # replications, below which a race has one look and saves nothing
 DECIDED, REPLICATIONS, FAILED = "decided", "replications", "failed"
@@ -42,7 +43,7 @@ race_option = click.option(
 
 @dataclass(frozen=True)
 class Choice:
-    """Race or whole table. chosen_by: `cost`, `--race` or a bound such as `--until`. seconds: of the whole table, None
+    """Race or whole table. chosen_by: `cost`, `batch`, or an option such as `--race`. seconds: of the whole table, None
     where the choice needed no timing."""
 
     race: bool
@@ -54,7 +55,7 @@ class Choice:
 def choose(
     request: Request, wanted: bool | None, bounds: dict[str, Any], *, exact: bool, counterpart: bool
 ) -> Choice | None:
-    """How the table comes about; None where that is no question (exact, or the runs are there).
+    """How the table comes about; None where it is exact.
 
     bounds: `until`, `hours`, `minutes`, `budget` as given; these need a race.
     """
@@ -72,7 +73,7 @@ def choose(
         )
         return Choice(False, "--counterpart", None, "Whole table, for --counterpart needs it")
     if request.kept is not None:
-        return None
+        return Choice(False, "batch", None, "Whole table, as a batch runs it")
     if wanted or asked:
         _require_a_look(request, asked[0] if asked and not wanted else "--race")
         by = "--race" if wanted else asked[0]
@@ -138,7 +139,7 @@ def raced(
     run, policies = request.scenario.run, list(racing.tables.profiles.policies(request.policy))
     if racing.most < run.replications:
         say(
-            f"a race looks at 10, 20, 40, ... replications, so at most {racing.most} of {run.replications} are run"
+            f"a race looks at 10, 20, 40, ... replications: at most {racing.most:,} of {run.replications:,} are run"
         )
     with ExitStack() as stack:
         job = _job(stack, request, policies, racing)
@@ -183,21 +184,34 @@ def tell(document: dict[str, Any], analysis: Any) -> None:
 
 def _racing(request: Request, controls: bool, epsilon: float | None) -> Any:
     """The race before its first look."""
-    from analysis.command.game import _axes
+    from analysis.command.axes import axes
     from analysis.payoffs import TableSums
     from analysis.raced_game import Racing
     from analysis.raced_table import RacedTables
-    from analysis.racing import look_sizes
+    from analysis.racing import FIRST, look_sizes
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = _axes(request)
+    profiles, goal, welfare = axes(request)
     for said in advice(request.scenario):
         say(f"advice: {said}")
     run = request.scenario.run
-    most = max(look_sizes(run.replications))
-    sums = TableSums(request.scenario, profiles.cells, most)
+    most = _within_memory(request, profiles.cells, max(look_sizes(run.replications)))
+    sums = TableSums(request.scenario, profiles.cells, most, at_first=FIRST)
     tables = RacedTables(request.scenario, profiles, goal, welfare, sums, controls)
     return Racing(tables, most, 1 - run.confidence, run.seed, epsilon)
+
+
+def _within_memory(request: Request, cells: int, most: int) -> int:
+    """The most replications of a cell whose sums fit into memory; never below the first look."""
+    from analysis.command.running import BYTES_PER_CELL_UNIT
+    from analysis.racing import FIRST
+
+    fitting, each = most, cells * len(request.scenario.units) * BYTES_PER_CELL_UNIT
+    while fitting > FIRST and fitting * each > MOST_BYTES:
+        fitting //= 2
+    if fitting < most:
+        say(f"a table of {count(cells)} cells has room for {fitting:,} replications of a cell")
+    return fitting
 
 
 def _job(stack: ExitStack, request: Request, policies: list[Any], racing: Any) -> Any:

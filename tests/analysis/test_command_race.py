@@ -10,7 +10,7 @@ from analysis.command.deadline import Clock, deadline_of
 from analysis.raced_game import Racing
 
 RACE = ("--replications", 40, "--race")
-CHANGING = {"computed", "reused"}
+CHANGING = {"computed", "reused", "engine", "engine_choice"}  # the engine by what is left to run and its pace
 
 
 def without(document, *names):
@@ -161,6 +161,13 @@ def test_other_players_goals_and_welfares_can_be_raced(call, three, two, tmp_pat
     other.write_text(text, encoding="utf-8")
     status, document = call("game", other, *RACE)
     assert status == 0 and document["racing"]["looks"] and document["lost_per_year"]["high"] is not None
+
+
+def test_a_race_keeps_no_more_than_memory_allows(call, show, two, monkeypatch):
+    """Six cells of two units take 1,536 bytes a replication here, so that 70,000 bytes hold 40 but not 80."""
+    monkeypatch.setattr("analysis.command.racing.MOST_BYTES", 70_000)
+    status, _, error = show("game", two, "--race", "--replications", 1_000_000, "--epsilon", 1e-9)
+    assert status == 0 and "room for 40 replications of a cell" in error
 
 
 def test_what_a_person_reads(show, two):
