@@ -165,6 +165,21 @@ def compare_study(bench: Bench, *, replications: int, pointwise: bool = False) -
     ]
 
 
+def apart_study(bench: Bench, *, paired: bool) -> list[Figure]:
+    """How often the two extreme policies are told apart by throughput: nearly always on common intakes."""
+    pool, sample = bench.sample("small", 10)
+    worth, rng, told = _measured_throughput(pool.arrays), np.random.default_rng(1), []
+    for number, chosen in enumerate(sample.chosen):
+        others = chosen if paired else sample.chosen[number - 1]
+        (band,) = banded((worth[chosen, 19] - worth[others, 13])[:, None], 1 - ALPHA, rng)[1]
+        told.append(band.low is not None and not band.low <= 0 <= band.high)
+    return [no_less("the two extreme policies are told apart", float(np.mean(told)), 0.95)]
+
+
+def _measured_throughput(arrays: dict[str, np.ndarray]) -> np.ndarray:
+    return (arrays["admitted"] / arrays["days"]).sum(axis=2)
+
+
 def _holds(band, true: float, scale: float) -> bool:
     if band.low is None:
         return True
@@ -198,6 +213,8 @@ def _studies() -> Iterator[Study]:
 
 STUDIES = [
     *_studies(),
+    Study("compare-apart-10", "R = 10", partial(apart_study, paired=True), (("small", 10),)),
+    Study("planted-unpaired", "R = 10", partial(apart_study, paired=False), (("small", 10),), planted=True),
     Study("stopping", "relative error .03, small game", stopping_study, (("small", PRECISE.most),), reduced=False),
     Study("week-20", "R = 20, small game", week_study, reduced=False),
     Study("planted-compare-pointwise", "R = 10", partial(compare_study, replications=10, pointwise=True),

@@ -10,7 +10,7 @@ from unittest import mock
 import numpy as np
 
 from analysis import sets
-from analysis.contrasts import Evidence, evidence_of, paired_distances
+from analysis.contrasts import Evidence, evidence_of
 from analysis.equilibria import regrets
 from analysis.payoffs import PayoffTable
 from analysis.reply_bands import reply_bands
@@ -114,24 +114,6 @@ def strict_study(bench: Bench) -> list[Figure]:
     return [at_least("C holds every pure equilibrium", float(held.mean()), 1 - STRICT, sample)]
 
 
-def unpaired(evidence: Evidence, rng: np.random.Generator) -> np.ndarray:
-    """The possible set of cells that met other patients each."""
-    values = evidence.values.copy()
-    for cell in range(evidence.cells):
-        values[:, :, cell] = values[rng.permutation(len(values)), :, cell]
-    return whole(paired_distances(values.reshape(*values.shape[:2], *evidence.shape)), rng)
-
-
-def unpaired_contrasts(bench: Bench) -> list[Figure]:
-    """The bar of the large game that `possible-thresholds-50-controls` meets."""
-    held, sizes, sample = covered(bench, "thresholds", 50, True, unpaired)
-    truth = int(bench.truth("thresholds").equilibria.sum())
-    return [
-        at_least("C holds every pure equilibrium", float(held.mean()), 1 - ALPHA, sample),
-        no_more(f"mean size of C / {truth} true equilibria", float(sizes.mean()) / truth, MOST_BESIDE_TRUTH),
-    ]
-
-
 def peeking(bench: Bench) -> list[Figure]:
     """Seven looks from 10 to 40 replications, each at the whole level; what any look excludes stays out."""
     pool, sample = bench.sample("crowd", LOOKS[-1])
@@ -176,14 +158,6 @@ STUDIES = [
     *_studies(),
     Study("possible-crowd-10-strict", "R = 10, level .01", strict_study, (("crowd", 10),), reduced=False),
     Study("planted-no-student-map", "R = 10, level .01", no_student_map, (("crowd", 10),), planted=True),
-    Study(
-        "planted-unpaired",
-        "R = 50, large game",
-        unpaired_contrasts,
-        (("thresholds", 50),),
-        planted=True,
-        reduced=False,
-    ),
     Study("planted-peeking", "looks at 10 to 40", peeking, (("crowd", 40),), planted=True, reduced=False),
     Study("planted-plug-in", "R = 10, small game", plug_in_confirmation, (("small", 10),), planted=True),
 ]
