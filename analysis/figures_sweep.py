@@ -10,6 +10,7 @@ import numpy as np
 import seaborn as sns
 from matplotlib import pyplot as plt
 from matplotlib.axes import Axes
+from matplotlib.patheffects import Normal, Stroke
 
 from analysis.figures import save_figure, short_name
 
@@ -43,6 +44,13 @@ def of_first(points: Sequence[Mapping[str, Any]], but: Sequence[str], axes: Mapp
     return [one for one in points if all(value_of(one, axis) == value for axis, value in fixed.items())]
 
 
+def held(axes: Mapping[str, Sequence[Any]], but: Sequence[str | None]) -> str:
+    """Where the other axes that vary are held, as a second line of a title."""
+    others = {axis: values[0] for axis, values in axes.items() if len(values) > 1 and axis not in but}
+    said = ", ".join(f"{short_name(axis.replace('_', ' '))} {value:g}" for axis, value in others.items())
+    return f"\n(at {said})" if said else ""
+
+
 def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: str) -> Axes:
     """The price of anarchy over two axes: a heat map, with contours where it is large enough to have any."""
     axes = document["axes"]
@@ -60,7 +68,11 @@ def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: s
     ax.set_facecolor("0.85")
     _contours(prices, ax)
     ax.invert_yaxis()
-    ax.set(xlabel=reads(across), ylabel=reads(down), title="What selfish closing costs (grey: no price)")
+    ax.set(
+        xlabel=reads(across),
+        ylabel=reads(down),
+        title="What selfish closing costs (grey: no price)" + held(axes, (across, down)),
+    )
     ax.tick_params(axis="y", rotation=0)
     return ax
 
@@ -69,10 +81,11 @@ def _contours(prices: np.ndarray, ax: Axes) -> None:
     known = prices[~np.isnan(prices)]
     if min(prices.shape) < 2 or not known.size or known.max() - 1 < 1e-4:
         return
-    step = 1 + (known.max() - 1) * np.array([0.1, 0.25, 0.5, 0.75])
+    step = 1 + (known.max() - 1) * np.array([0.1, 0.5])
     across, down = (np.arange(n) + 0.5 for n in prices.shape[::-1])
     masked = np.ma.masked_invalid(prices)
-    ax.contour(across, down, masked, levels=step, colors="black", linewidths=0.9, linestyles=LINES)
+    lines = ax.contour(across, down, masked, levels=step, colors="black", linewidths=0.9, linestyles=LINES)
+    lines.set_path_effects([Stroke(linewidth=2.2, foreground="white"), Normal()])
 
 
 def _ticks(values: Sequence[float]) -> list[str]:
@@ -97,7 +110,8 @@ def price_slices(document: Mapping[str, Any], ax: Axes, *, along: str, by: str |
         _line(ax, mine, along, place, label)
     ax.axhline(1, color="0.5", linewidth=0.8)
     ax.set(
-        xlabel=reads(along), ylabel="price of anarchy (ratio)", title="Price of anarchy, with intervals where simulated"
+        xlabel=reads(along), ylabel="price of anarchy (ratio)",
+        title="Price of anarchy, with intervals where simulated" + held(axes, (along, by)),
     )  # fmt: skip
     if by is not None:
         ax.legend(fontsize=8)

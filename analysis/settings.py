@@ -280,3 +280,16 @@ def _cv_misfits(grid: Grid, scenario: Scenario) -> Iterator[Fault]:
 def uses_targets(scenario: Scenario) -> bool:
     """Whether any unit's goal uses a target utilisation."""
     return any(scenario.game.goal_of(name).needs_target for name in scenario.unit_names)
+
+
+def read_delta(text: str, faults: list[Fault]) -> tuple[float | None, float | None]:
+    """A loss allowed: (share, None) from `0.5%`, or (None, patients a year) from `25`; a fault where it is neither."""
+    value = _number(text.strip().removesuffix("%"))
+    if value is None or value < 0 or (text.strip().endswith("%") and value > 100):
+        rule, remedy = (
+            "must be patients a year, or a share of those who arrive",
+            "write --delta 25, or --delta 0.5%",
+        )
+        faults.append(Fault(None, "--delta", rule, f"got {shown(text)}", remedy))
+        return None, 0.0
+    return (value / 100, None) if text.strip().endswith("%") else (None, value)

@@ -93,7 +93,10 @@ def _findings(points: Sequence[Mapping[str, Any]]) -> Iterator[str]:
     lost = worst["lost_per_year"]["mean"]
     if lost is not None:
         yield f"There the worst equilibrium costs the network {lost:.1f} in the welfare's unit a year"
-    none = sum(one["price_of_anarchy"]["high"] is not None and one["price_of_anarchy"]["high"] < 1.00005 for one in points)
+    none = sum(
+        one["price_of_anarchy"]["high"] is not None and one["price_of_anarchy"]["high"] < 1.00005
+        for one in points
+    )
     yield f"At {none} of {len(points)} points the price of anarchy is 1.0000 as far as can be told"  # fmt: skip
 
 

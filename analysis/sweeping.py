@@ -233,7 +233,9 @@ def _point(network: Network, target: float | None, weight: float | None, game: G
 def point_document(point: Point) -> dict[str, Any]:
     """Plain values; an exact number has low = high = mean."""
     cost, exact = point.cost, point.table.replicates is None
-    sets = {"count": point.equilibria} if exact else {"possible": point.equilibria, "confirmed": point.confirmed}
+    sets = (
+        {"count": point.equilibria} if exact else {"possible": point.equilibria, "confirmed": point.confirmed}
+    )
     return point.network.setting.to_dict() | {
         "target": point.target,
         "transfer_weight": point.weight,
@@ -285,7 +287,9 @@ def _place_row(name: str, place: Mapping[str, Any] | None, like: Mapping[str, An
     """A place's columns; empty where there is no such profile."""
     row: dict[str, Any] = {}
     for key in ("throughput_per_day", "network_turned_away_per_day", "network_transfers_per_day"):
-        row[f"{name} {key.removeprefix('network_').replace('_', ' ')}"] = None if place is None else place[key]
+        row[f"{name} {key.removeprefix('network_').replace('_', ' ')}"] = (
+            None if place is None else place[key]
+        )
     for key in ("thresholds", "utilisation", "closed_with_free_bed_fraction"):
         for unit in like[key]:
             row[f"{name} {key.replace('_', ' ')} {unit}"] = None if place is None else place[key][unit]

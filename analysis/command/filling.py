@@ -27,6 +27,15 @@ class Filling:
     hashes: list[str] = field(default_factory=list)
     interrupted: bool = False
 
+    def add(self, other: Filling) -> None:
+        """Another filling's networks and how they were filled, after the own ones."""
+        self.filled += other.filled
+        self.runs += other.runs
+        self.hashes += other.hashes
+        self.interrupted = self.interrupted or other.interrupted
+        for name, count in other.exact.items():
+            self.exact[name] = self.exact.get(name, 0) + count
+
     def ran(self, request: Request) -> Any | None:
         """The runs told of as one; None where nothing was simulated."""
         if not self.runs:

@@ -186,8 +186,8 @@ def _row(one: Mapping[str, Any], varied: Sequence[str]) -> list[str]:
     return [
         *(_axis(one, name) for name in varied),
         _sets(one["equilibria"]),
-        _value(one["price_of_anarchy"], 4),
-        _value(one["lost_per_year"], 1),
+        sets_value(one["price_of_anarchy"], 4),
+        sets_value(one["lost_per_year"], 1),
         *(_beside(one, key) for key in ("network_turned_away_per_day", "network_transfers_per_day")),
     ]
 
@@ -205,7 +205,7 @@ def _sets(sets: Mapping[str, Any]) -> str:
     )
 
 
-def _value(value: Mapping[str, Any], digits: int) -> str:
+def sets_value(value: Mapping[str, Any], digits: int) -> str:
     """An exact number bare; an interval without a point as its two ends."""
     if value["low"] == value["high"]:
         return number(value["mean"], digits)
