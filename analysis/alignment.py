@@ -1,7 +1,7 @@
 """Aligning targets: the lowest at which every possible equilibrium is near the optimum, at every demand of a range.
 
-For a target the statement "at every demand every equilibrium loses at most delta, and every unit can reach its target"
-is an intersection: it is made only where each part passes its own test, so where it is false some false part has passed,
+For a target the statement "at every demand all equilibria lose at most delta, and units can reach their targets" is an
+intersection: it is made only where each part passes its own test, so where it is false some false part has passed,
 and no part needs more than the statement's own level (Berger 1982, "Multiparameter hypothesis testing and acceptance
 sampling"; from memory). Targets share the level (Bonferroni), so whichever are picked, all that is said of them holds
 with the confidence.
@@ -73,8 +73,8 @@ class Loss:
     """What the equilibria at some targets lose against the optimum, in one network.
 
     targets: by unit. possible: how many profiles may be equilibria. lost: welfare a year at the worst of them, high at
-    the level of the statement; low = high = mean where exact. allowed: delta. out_of_reach: units that no profile brings
-    to their target. worst, optimum: what happens there (worst: None without an equilibrium).
+    the level of the statement; low = high = mean where exact. allowed: delta. out_of_reach: units that no
+    profile brings to their target. worst, optimum: what happens there (worst: None without an equilibrium).
     """
 
     targets: Targets
@@ -251,8 +251,8 @@ def _why_none(by_targets: Mapping[Targets, Sequence[Loss]]) -> str:
     near = [mine for mine in by_targets.values() if all(loss.is_near for loss in mine)]
     if near:
         return (
-            "every target at which all possible equilibria are within delta is out of some unit's reach at some demand: "
-            "no thresholds bring it that full, so as a target it only says never to close early"
+            "every target at which all possible equilibria are within delta is out of some unit's reach at some "
+            "demand: no thresholds bring it that full, so as a target it only says never to close early"
         )
     exact = all(loss.method == EXACT for mine in by_targets.values() for loss in mine)
     return "at no target tried are all equilibria within delta at every demand" + (
@@ -285,11 +285,10 @@ class Busiest:
 def busiest_of(filled: Sequence[Filled]) -> Busiest | None:
     """The busiest unit where every unit has its highest closure threshold; None where not all go up to their beds."""
     last = max(filled, key=lambda one: one.network.setting.demand)
-    profiles, scenario = last.network.profiles, last.network.scenario
-    cell = _nobody_closes(last)
+    profiles, cell = last.network.profiles, _nobody_closes(last)
     if cell is None:
         return None
-    table = last.table(None if not scenario.units_without_target() else 0.5, 0.95)
+    table = last.table(None, 0.95)
     utilisation = table.outcomes.utilisation[cell]
     place = int(np.argmax(utilisation))
     return Busiest(profiles.units[place], float(utilisation[place]), last.network.setting.demand)

@@ -10,13 +10,13 @@ from analysis.sweep_document import method_sentences
 from analysis.sweeping import number, place_document
 
 NOT_FULLER = (
-    "Where throughput alone is valued this is about the utilisation of the busiest unit when nobody closes early. A target "
-    "as high as that tells every unit never to close early; it is not a reason to run fuller, for how full the units are "
-    "then follows from demand and beds."
+    "Where throughput alone is valued this is about the utilisation of the busiest unit when nobody closes early. A "
+    "target as high as that tells every unit never to close early; it is not a reason to run fuller, for how full the "
+    "units are then follows from demand and beds."
 )
 NO_COMMON_GOAL = (
-    "The answer is about targets as an incentive, within this model: it says nothing of how full a unit can safely be, of "
-    "staff, or of patients whose transfer is a risk."
+    "The answer is about targets as an incentive, within this model: it says nothing of how full a unit can safely be, "
+    "of staff, or of patients whose transfer is a risk."
 )
 
 
@@ -153,8 +153,8 @@ def _statements(row: Row, delta: Delta, demands: Sequence[float]) -> Iterator[st
         lowest = row.answer.lowest[0]
         sure = _confidence(row)
         yield (
-            f"{who}the lowest {_kind(lowest)} tried at which every possible equilibrium loses at most {delta.reads} "
-            f"against the optimum, {over}, is {_words(lowest, row)}{sure}."
+            f"{who}the lowest {_kind(lowest)} tried at which every possible equilibrium loses at most {delta.reads}"
+            f" against the optimum, {over}, is {_words(lowest, row)}{sure}."
         )
         if len(row.answer.lowest) > 1:
             others = "; ".join(_words(one, row) for one in row.answer.lowest[1:4])
@@ -163,16 +163,17 @@ def _statements(row: Row, delta: Delta, demands: Sequence[float]) -> Iterator[st
             yield f"Targets of which none is lower for every unit hold too: {others}{more}."
         with_it = _comes_with(_beside(row))
         yield (
-            f"With it units are {with_it['occupied_percent']} % occupied, {with_it['moved_per_day']} patients a day are moved "
-            f"and {with_it['turned_away_per_day']} turned away, at the worst possible equilibrium."
+            f"With it units are {with_it['occupied_percent']} % occupied, {with_it['moved_per_day']} patients a day "
+            f"are moved and {with_it['turned_away_per_day']} turned away, at the worst possible equilibrium."
         )
     if row.busiest is not None:
         one = row.busiest
         yield (
-            f"When nobody closes early the busiest unit is {one.unit}, {100 * one.utilisation:.1f} % occupied at demand x "
-            f"{one.demand:g}."
+            f"When nobody closes early the busiest unit is {one.unit}, {100 * one.utilisation:.1f} % occupied at "
+            f"demand x {one.demand:g}."
         )
-    yield _turning(row)
+    if row.advice:
+        yield _turning(row)
 
 
 def _kind(targets: Targets) -> str:

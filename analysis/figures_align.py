@@ -24,7 +24,8 @@ def loss_over_targets(row: Mapping[str, Any], ax: Axes) -> Axes:
     allowed = [one["allowed_per_year"] for one in points if one["demand"] in (demands[0], demands[-1])]
     ax.axhspan(min(allowed), max(allowed), color="0.8", zorder=0)
     for end in (min(allowed), max(allowed)):
-        ax.axhline(end, color="0.25", linewidth=1.2, label="delta, the loss allowed" if end == min(allowed) else None)  # fmt: skip
+        label = "delta, the loss allowed" if end == min(allowed) else None
+        ax.axhline(end, color="0.25", linewidth=1.2, label=label)
     for lowest in row["lowest"][:1]:
         at = next(iter(lowest.values()))
         ax.axvline(at, color="black", linewidth=1, linestyle=":", label=f"lowest that holds: {at:g}")

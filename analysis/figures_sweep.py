@@ -38,7 +38,9 @@ def value_of(point: Mapping[str, Any], axis: str) -> Any:
     return point.get(axis)
 
 
-def of_first(points: Sequence[Mapping[str, Any]], but: Sequence[str], axes: Mapping[str, Sequence[Any]]) -> list[Any]:  # fmt: skip
+def of_first(
+    points: Sequence[Mapping[str, Any]], but: Sequence[str], axes: Mapping[str, Sequence[Any]]
+) -> list[Any]:
     """The points at the first value of every axis but some."""
     fixed = {axis: values[0] for axis, values in axes.items() if axis not in but}
     return [one for one in points if all(value_of(one, axis) == value for axis, value in fixed.items())]
@@ -61,8 +63,8 @@ def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: s
         place = axes[down].index(value_of(one, down)), axes[across].index(value_of(one, across))
         prices[place] = np.nan if price is None else price
     sns.heatmap(
-        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0, annot=prices.size <= MOST_ANNOTATED, fmt=".3f",
-        annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]), yticklabels=_ticks(axes[down]),
+        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0, annot=prices.size <= MOST_ANNOTATED,
+        fmt=".3f", annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]), yticklabels=_ticks(axes[down]),
         cbar_kws={"label": "price of anarchy (ratio; darker is dearer)"},
     )  # fmt: skip
     ax.set_facecolor("0.85")
@@ -131,7 +133,7 @@ def _line(ax: Axes, points: Sequence[Mapping[str, Any]], along: str, place: int,
 def save_sweep(document: Mapping[str, Any], folder: Path) -> list[Path]:
     """Draws `sweep-surface`, `sweep-slices` and `sweep-weights`, as far as the axes that vary allow."""
     axes = document["axes"]
-    varied = [axis for axis in document["varied"] if len(axes.get(axis, ())) > 1 and axis != "transfer_weight"]  # fmt: skip
+    varied = [axis for axis in document["varied"] if len(axes[axis]) > 1 and axis != "transfer_weight"]
     written = []
     if len(varied) >= 2:
         down, across = varied[:2]

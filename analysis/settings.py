@@ -142,9 +142,8 @@ def read_range(option: str, text: str, bounds: Bounds, faults: list[Fault]) -> t
         faults.append(Fault(None, option, FORM, f"got {shown(text)}", remedy))
         return ()
     ends = [part for part in parts[:2] if part is not None]
-    mine = [
-        Fault(None, option, bounds.reads, f"got {end:g}", remedy) for end in dict.fromkeys(ends) if not bounds.holds(end)
-    ]  # fmt: skip
+    outside = [end for end in dict.fromkeys(ends) if not bounds.holds(end)]
+    mine = [Fault(None, option, bounds.reads, f"got {end:g}", remedy) for end in outside]
     if len(parts) == 3:
         mine += _points_faults(option, ends, float(parts[2] or 0))
     faults += mine
@@ -244,7 +243,10 @@ def grid_of(texts: Texts, scenario: Scenario, faults: list[Fault]) -> Grid:
 def _misfits(grid: Grid, texts: Texts, scenario: Scenario) -> Iterator[Fault]:
     """Axes along which this scenario does not vary."""
     if texts.target is not None and not uses_targets(scenario):
-        rule, remedy = "needs a goal that uses a target", "drop it, or give the game another goal"
+        rule, remedy = (
+            "needs a goal that uses a target",
+            "give the game such a goal, or, for a sweep, drop --target",
+        )
         yield Fault(None, "--target", rule, "no unit's goal does", remedy)
     if texts.delay is not None and scenario.diversion.delay is None:
         rule, remedy = "needs a transfer delay to multiply", "add `delay` to [diversion], or drop --delay"

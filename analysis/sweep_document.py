@@ -12,8 +12,8 @@ from analysis.settings import Grid
 from analysis.sweeping import EXACT, SIMULATED, Network, Point, point_document, with_target
 
 POINTWISE = (
-    "Each interval holds at its own point, whichever of the possible profiles are the equilibria; over a whole grid some "
-    "intervals miss. `align` makes one statement that holds over targets and demands together."
+    "Each interval holds at its own point, whichever of the possible profiles are the equilibria; over a whole grid "
+    "some intervals miss. `align` makes one statement that holds over targets and demands together."
 )
 NOT_EXACT_PLACES = (
     "What happens at simulated points is a mean without an interval; `game` shows any one point in full."
@@ -37,7 +37,9 @@ def sweep_document(grid: Grid, networks: Sequence[Network], points: Sequence[Poi
         "methods": list(method_sentences(networks, len(grid.targets) * len(grid.weights))),
         "points": found,
         "points_asked_for": grid.points,
-        "findings": list(_findings(found)),
+        "findings": list(
+            _findings(found, "patients a year" if _in_patients(grid, first) else "a year of that loss")
+        ),
         "notes": [POINTWISE, NOT_EXACT_PLACES] if any(one["method"] == SIMULATED for one in found) else [],
     }
 
@@ -73,15 +75,23 @@ def method_sentences(networks: Sequence[Network], readings: int) -> Iterator[str
     for method, verb in ((EXACT, "solved by the exact chain"), (SIMULATED, "simulated")):
         mine = [one for one in networks if one.method == method]
         if mine:
-            whys = "; ".join(dict.fromkeys(one.why for one in mine))
             plural = "network is" if len(mine) == 1 else "networks are"
-            yield (
-                f"{len(mine)} {plural} {verb} ({whys}), once each; {readings} points are read from every one."
-            )
+            yield f"{len(mine)} {plural} {verb} ({_why(mine)}), once each; {readings} points are read from every one."
 
 
-def _findings(points: Sequence[Mapping[str, Any]]) -> Iterator[str]:
-    """The highest price, and where it is 1 throughout."""
+def _why(networks: Sequence[Network]) -> str:
+    """The first reason, and how many more there are."""
+    whys = list(dict.fromkeys(why for one in networks for why in one.whys))
+    more = f"; and {len(whys) - 1} more, in --json" if len(whys) > 1 else ""
+    return whys[0] + more
+
+
+def _in_patients(grid: Grid, network: Network) -> bool:
+    return grid.weights == (None,) and welfare_of(network.scenario).kind == "throughput"
+
+
+def _findings(points: Sequence[Mapping[str, Any]], unit: str) -> Iterator[str]:
+    """The highest price, and where it is 1 throughout. unit: of the welfare forgone."""
     priced = [one for one in points if _price(one) is not None]
     if not priced:
         yield "No point has a price of anarchy (see the reasons in --json)"
@@ -92,7 +102,7 @@ def _findings(points: Sequence[Mapping[str, Any]]) -> Iterator[str]:
     )
     lost = worst["lost_per_year"]["mean"]
     if lost is not None:
-        yield f"There the worst equilibrium costs the network {lost:.1f} in the welfare's unit a year"
+        yield f"There the worst equilibrium costs the network {lost:.1f} {unit}"
     none = sum(
         one["price_of_anarchy"]["high"] is not None and one["price_of_anarchy"]["high"] < 1.00005
         for one in points

@@ -35,14 +35,19 @@ AS_ASKED = "as asked"
 
 @dataclass(frozen=True)
 class Network:
-    """One network of a sweep and how its table is filled; `why` in words."""
+    """One network of a sweep and how its table is filled; whys: the reasons in words."""
 
     setting: Setting
     scenario: Scenario
     policy: Policy
     profiles: Profiles
     method: str
-    why: str
+    whys: tuple[str, ...]
+
+    @property
+    def why(self) -> str:
+        """The reasons in one line."""
+        return "; ".join(self.whys)
 
     @property
     def policies(self) -> list[Policy]:
@@ -73,14 +78,14 @@ def _network(
     profiles = profiles_of(changed, policy)
     _check_size(changed, profiles)
     if force == SIMULATED:
-        return Network(setting, changed, policy, profiles, SIMULATED, AS_ASKED), ()
+        return Network(setting, changed, policy, profiles, SIMULATED, (AS_ASKED,)), ()
     refused = _refusals(changed, policy, profiles)
     if force == EXACT:
-        return Network(setting, changed, policy, profiles, EXACT, AS_ASKED), refused
-    slow = None if refused else _too_slow(changed, policy, profiles)
+        return Network(setting, changed, policy, profiles, EXACT, (AS_ASKED,)), refused
+    slow = "" if refused else _too_slow(changed, policy, profiles)
     if refused or slow:
-        return Network(setting, changed, policy, profiles, SIMULATED, slow or "; ".join(refused)), ()
-    return Network(setting, changed, policy, profiles, EXACT, "within the exact chain's scope"), ()
+        return Network(setting, changed, policy, profiles, SIMULATED, refused or (slow,)), ()
+    return Network(setting, changed, policy, profiles, EXACT, ("within the exact chain's scope",)), ()
 
 
 def _check_size(scenario: Scenario, profiles: Profiles) -> None:
@@ -103,13 +108,13 @@ def _refusals(scenario: Scenario, policy: Policy, profiles: Profiles) -> tuple[s
     return (*found, *([] if inexact is None else [f"game.goal: {inexact} has no exact mean here"]))
 
 
-def _too_slow(scenario: Scenario, policy: Policy, profiles: Profiles) -> str | None:
-    """Why the chain would take too long; None where it does not."""
+def _too_slow(scenario: Scenario, policy: Policy, profiles: Profiles) -> str:
+    """Why the chain would take too long; empty where it does not."""
     if can_be_solved_together(scenario, policy):
-        return None
+        return ""
     states = chain_size(scenario, profiles.policy(policy, [number - 1 for number in profiles.shape]))
     if states is not None and states * profiles.cells <= MOST_STATES:
-        return None
+        return ""
     size = "too many states" if states is None else f"{states:,} states in each of {profiles.cells:,} cells"
     return f"the exact chain would take too long ({size}; --exact forces it)"
 

@@ -117,10 +117,10 @@ def _planned(request: Request, own: Mapping[str, Any]) -> tuple[Any, list[tuple[
     """The grid, and the networks of each row: stays as in the file, and their exponential counterpart."""
     from analysis.alignment import is_exponential
     from analysis.settings import grid_of
-    from analysis.sweeping import EXACT, SIMULATED, networks_of
+    from analysis.sweeping import EXACT, SIMULATED, networks_of, with_target
 
-    scenario = request.scenario
-    grid = grid_of(texts_of(own), scenario, [])
+    grid = grid_of(texts_of(own), request.scenario, [])
+    scenario = with_target(request.scenario, grid.targets[0])  # any will do: it changes no network
     weights = own["transfer_weight"] or (None if own["per_unit"] else WEIGHT)
     grid = (
         replace(grid, weights=())
@@ -192,7 +192,7 @@ def _show(document: dict[str, Any]) -> None:
     for row in document["rows"]:
         put_table(
             f"Stays {row['stays']}: {row['methods']}; the demand named stands most in the way",
-            ("target", "demand x", "lost a year", "allowed", "verdict", "occupied %", "moved a day", "turned away a day"),
+            ("target", "demand x", "lost a year", "allowed", "verdict", "occupied %", "moved a day", "refused a day"),
             [_overview(one) for one in row["overview"]],
         )  # fmt: skip
     put_text(*document["statements"], "", *document["notes"])

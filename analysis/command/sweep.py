@@ -108,11 +108,12 @@ def check(scenario: Any, own: Mapping[str, Any]) -> list[Any]:
 def planned(request: Request, own: Mapping[str, Any]) -> tuple[Any, list[Any]]:
     """The grid and its networks."""
     from analysis.settings import grid_of
-    from analysis.sweeping import EXACT, SIMULATED, networks_of
+    from analysis.sweeping import EXACT, SIMULATED, networks_of, with_target
 
     grid = grid_of(texts_of(own), request.scenario, [])
     force = EXACT if own["exact"] else SIMULATED if own["simulated"] else None
-    return grid, networks_of(request.scenario, request.policy, grid.settings(), force)
+    scenario = with_target(request.scenario, grid.targets[0])  # any will do: it changes no network
+    return grid, networks_of(scenario, request.policy, grid.settings(), force)
 
 
 def jobs(request: Request, own: Mapping[str, Any]) -> list[tuple[Any, Sequence[Any]]]:
@@ -171,7 +172,15 @@ def _show(document: dict[str, Any]) -> None:
     put_table(
         "Price of anarchy and what comes with it (a day, network; refused and moved at the worst listed equilibrium "
         "and, after the slash, at the optimum)",
-        ("point", *varied, "equilibria", "price of anarchy", "lost a year", "refused", "moved"),
+        (
+            "point",
+            *varied,
+            _heading(document["points"]),
+            "price of anarchy",
+            "lost a year",
+            "refused",
+            "moved",
+        ),
         [(str(place + 1), *_row(one, varied)) for place, one in enumerate(rows)],
     )
     if len(document["points"]) > MOST_ROWS:
@@ -180,6 +189,11 @@ def _show(document: dict[str, Any]) -> None:
     put_text(*(finding + "." for finding in document["findings"]))
     put_text("", ONE_NETWORK, *document["notes"])
     put_caution()
+
+
+def _heading(points: Sequence[Mapping[str, Any]]) -> str:
+    exact = all("count" in one["equilibria"] for one in points)
+    return "equilibria" if exact else "equilibria (possible / confirmed)"
 
 
 def _row(one: Mapping[str, Any], varied: Sequence[str]) -> list[str]:
@@ -200,9 +214,7 @@ def _axis(one: Mapping[str, Any], name: str) -> str:
 def _sets(sets: Mapping[str, Any]) -> str:
     if "count" in sets:
         return str(sets["count"])
-    return f"{sets['possible']} possible" + (
-        f", {sets['confirmed']} confirmed" if sets["confirmed"] is not None else ""
-    )
+    return f"{sets['possible']} / {number(sets['confirmed'])}"
 
 
 def sets_value(value: Mapping[str, Any], digits: int) -> str:
