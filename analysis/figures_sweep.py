@@ -19,6 +19,7 @@ COLOURS = sns.color_palette("colorblind", 8)
 LINES = ("-", "--", "-.", ":")
 MOST_LINES = 5
 MOST_ANNOTATED = 150
+LEAST_SCALE = 1.001  # of prices, so that rounding shows no colours
 READS = {
     "demand": "demand (factor on every arrival rate)", "target": "target utilisation of every unit",
     "delay": "factor on the transfer delay", "cv": "coefficient of variation of stays",
@@ -63,8 +64,8 @@ def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: s
         place = axes[down].index(value_of(one, down)), axes[across].index(value_of(one, across))
         prices[place] = np.nan if price is None else price
     sns.heatmap(
-        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0, annot=prices.size <= MOST_ANNOTATED,
-        fmt=".3f", annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]), yticklabels=_ticks(axes[down]),
+        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0,
+        vmax=np.nanmax(prices, initial=LEAST_SCALE), annot=prices.size <= MOST_ANNOTATED, fmt=".3f", annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]), yticklabels=_ticks(axes[down]),
         cbar_kws={"label": "price of anarchy (ratio; darker is dearer)"},
     )  # fmt: skip
     ax.set_facecolor("0.85")
