@@ -64,9 +64,9 @@ def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: s
         place = axes[down].index(value_of(one, down)), axes[across].index(value_of(one, across))
         prices[place] = np.nan if price is None else price
     sns.heatmap(
-        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0,
-        vmax=np.nanmax(prices, initial=LEAST_SCALE), annot=prices.size <= MOST_ANNOTATED, fmt=".3f", annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]), yticklabels=_ticks(axes[down]),
-        cbar_kws={"label": "price of anarchy (ratio; darker is dearer)"},
+        prices, ax=ax, cmap="cividis_r", mask=np.isnan(prices), vmin=1.0, vmax=np.nanmax(prices, initial=LEAST_SCALE),
+        annot=prices.size <= MOST_ANNOTATED, fmt=".3f", annot_kws={"fontsize": 7}, xticklabels=_ticks(axes[across]),
+        yticklabels=_ticks(axes[down]), cbar_kws={"label": "price of anarchy (ratio; darker is dearer)"},
     )  # fmt: skip
     ax.set_facecolor("0.85")
     _contours(prices, ax)

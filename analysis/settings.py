@@ -18,7 +18,7 @@ from sim.tables import MOST_BEDS, MOST_PATIENTS
 from sim.wording import nearest, shown
 
 MOST_POINTS = 1_000  # of one range
-MOST_NETWORKS = 1_000
+MOST_NETWORKS = 200  # the sums of all their runs are held at once
 MOST_IN_ALL = 20_000
 LEAST_PER_DAY = 1e-9
 AS_IN_FILE = (None,)

@@ -91,6 +91,15 @@ def align(request: Request, tolerance: float, controls: bool, **own: Any) -> Non
         raise CheckFailed
 
 
+def _nothing(filling: Any) -> None:
+    """Ends the command where no statement can be made."""
+    if not filling.interrupted:
+        say("too few replications were finished at some demand, so no statement can be made")
+        raise CheckFailed
+    say("interrupted before any statement could be made; with --out the same command goes on from there")
+    raise Interrupted
+
+
 def check(scenario: Any, own: Mapping[str, Any]) -> list[Any]:
     """Every fault of the command's own options."""
     from analysis.alignment import MOST_COMBINATIONS, number_of_combinations

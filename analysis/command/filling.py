@@ -49,6 +49,7 @@ class Filling:
 def fill(request: Request, networks: Sequence[Any], *, label: str, controls: bool) -> Filling:
     """Fills one network after the other; Ctrl-C ends it, and what is filled by then is handed over."""
     filling = Filling()
+    _notices(request, networks)
     for place, network in enumerate(networks):
         own = replace(request, scenario=network.scenario, policy=network.policy)
         told = label if len(networks) == 1 else f"{label}, network {place + 1} of {len(networks)}"
@@ -59,6 +60,17 @@ def fill(request: Request, networks: Sequence[Any], *, label: str, controls: boo
         if filling.interrupted:
             break
     return filling
+
+
+def _notices(request: Request, networks: Sequence[Any]) -> None:
+    """Advice on the runs, and what the command line changed in vain."""
+    from sim.scenario.describe import advice
+
+    if any(network.method != "exact" for network in networks):
+        for said in advice(request.scenario):
+            say(f"advice: {said}")
+    if any(change.startswith("closure threshold") for change in request.changes):
+        say("closure thresholds are the units' to choose: --threshold has no effect where they choose one")
 
 
 def _solve(filling: Filling, request: Request, network: Any, label: str) -> None:
@@ -79,7 +91,7 @@ def _solve(filling: Filling, request: Request, network: Any, label: str) -> None
 
 
 def _simulate(filling: Filling, request: Request, network: Any, label: str, controls: bool) -> None:
-    from analysis.command.running import run_replications
+    from analysis.command.running import require, run_replications
     from analysis.payoffs import TableSums
     from analysis.sweeping import Filled
 
@@ -89,6 +101,8 @@ def _simulate(filling: Filling, request: Request, network: Any, label: str, cont
     filling.runs.append(ran)
     filling.interrupted = ran.interrupted
     complete = sums.complete
+    if len(complete) < LEAST and not ran.interrupted and not filling.filled:
+        require(len(complete), False, least=LEAST)
     unfinished = ran.interrupted and len(complete) < replications
     if len(complete) < LEAST or (unfinished and filling.filled):
         return  # what it has is in the store; it is shown only where nothing else could be

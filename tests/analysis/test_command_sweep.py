@@ -159,6 +159,12 @@ def test_ctrl_c_keeps_the_finished_points_and_the_same_command_goes_on(call, del
     assert again["reused"] == CELLS * REPLICATIONS + 2 * REPLICATIONS
 
 
+def test_one_replication_is_not_enough(show, delayed):
+    for command in ("sweep", "align"):
+        status, out, err = show(command, delayed, "--replications", 1, "--engine", "compiled")
+        assert status == 1 and out == "" and "at least 2 are needed" in err
+
+
 # ---- align ----
 
 
