@@ -224,10 +224,11 @@ def highest_utilisation(filled: Filled, level: float) -> np.ndarray:
 @dataclass(frozen=True)
 class Answer:
     """Which targets hold at every demand. lowest: none of those that hold is lower in every unit; by mean, weighted by
-    beds. reason: why there is none."""
+    beds. reason: why there is none. not_above: targets no lower than the first of these at which it does not hold."""
 
     lowest: tuple[Targets, ...]
     reason: str | None = None
+    not_above: tuple[Targets, ...] = ()
 
 
 def answer_of(losses: Sequence[Loss], beds: Sequence[int]) -> Answer:
@@ -240,7 +241,9 @@ def answer_of(losses: Sequence[Loss], beds: Sequence[int]) -> Answer:
     if not minimal:
         return Answer((), _why_none(by_targets))
     weights = np.asarray(beds, float) / np.sum(beds)
-    return Answer(tuple(sorted(minimal, key=lambda one: (float(weights @ np.array(one)), one))))
+    ranked = tuple(sorted(minimal, key=lambda one: (float(weights @ np.array(one)), one)))
+    failing = (targets for targets in by_targets if targets not in holding and _is_lower(ranked[0], targets))
+    return Answer(ranked, not_above=tuple(failing))
 
 
 def _is_lower(one: Targets, other: Targets) -> bool:

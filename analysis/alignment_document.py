@@ -71,6 +71,7 @@ def _row(row: Row) -> dict[str, Any]:
         if row.answer.lowest and len(set(row.answer.lowest[0])) == 1
         else None,
         "reason": row.answer.reason,
+        "higher_ones_that_do_not_hold": [_targets(one, names) for one in row.answer.not_above],
         "beside": [_loss(loss, names) for loss in _beside(row)],
         "busiest_when_nobody_closes_early": None if row.busiest is None else vars(row.busiest),
         "transfer_weight_at_which_the_advice_turns": {
@@ -161,6 +162,7 @@ def _statements(row: Row, delta: Delta, demands: Sequence[float]) -> Iterator[st
             left = len(row.answer.lowest) - 4
             more = f"; and {left} more" if left > 0 else ""
             yield f"Targets of which none is lower for every unit hold too: {others}{more}."
+        yield from _not_above(row)
         with_it = _comes_with(_beside(row))
         yield (
             f"With it units are {with_it['occupied_percent']} % occupied, {with_it['moved_per_day']} patients a day "
@@ -174,6 +176,17 @@ def _statements(row: Row, delta: Delta, demands: Sequence[float]) -> Iterator[st
         )
     if row.advice:
         yield _turning(row)
+
+
+def _not_above(row: Row) -> Iterator[str]:
+    """That higher targets need not hold."""
+    failing = row.answer.not_above
+    if failing:
+        listed = "; ".join(_words(one, row) for one in failing[:6]) + ("; ..." if len(failing) > 6 else "")
+        yield (
+            f"Not every higher one does as well: not {listed} (beyond delta, not shown, or out of some unit's reach: "
+            "see the table)."
+        )
 
 
 def _kind(targets: Targets) -> str:

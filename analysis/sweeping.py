@@ -262,6 +262,12 @@ def number(estimate: Any, exact: bool) -> dict[str, Any]:
     return estimate.to_dict()
 
 
+def tidy(value: Mapping[str, Any]) -> dict[str, Any]:
+    """A number with its ends for a table: no minus sign before what is nought but for rounding."""
+    ends = {end: value[end] for end in ("mean", "low", "high")}
+    return {end: None if one is None else round(one, 9) + 0.0 for end, one in ends.items()}
+
+
 def place_document(place: Place) -> dict[str, Any]:
     """What happens at a profile, with the network's rates a day added up."""
     return asdict(place) | {

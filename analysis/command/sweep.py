@@ -219,11 +219,14 @@ def _sets(sets: Mapping[str, Any]) -> str:
 
 def sets_value(value: Mapping[str, Any], digits: int) -> str:
     """An exact number bare; an interval without a point as its two ends."""
+    from analysis.sweeping import tidy
+
+    value = tidy(value)
     if value["low"] == value["high"]:
         return number(value["mean"], digits)
     if value["mean"] is None and value["low"] is not None:
         return f"{number(value['low'], digits)} to {number(value['high'], digits)}"
-    return interval(dict(value), digits)
+    return interval(value, digits)
 
 
 def _beside(one: Mapping[str, Any], key: str) -> str:

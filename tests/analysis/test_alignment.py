@@ -142,12 +142,12 @@ def test_targets_by_unit_are_brute_forces_too():
 def test_with_throughput_the_answer_is_about_the_busiest_units_utilisation():
     """A known truth of this game: nobody need be told to run fuller than they are when nobody closes early."""
     targets = tuple(k / 50 for k in range(15, 38))
-    found = row(exactly(pair()), targets, delta=Delta(a_year=0.5))
+    found = row(exactly(pair()), targets, delta=Delta(None, 0.5))
     busiest = found.busiest
     assert busiest.demand == 1.2 and found.answer.lowest[0][0] == pytest.approx(
         busiest.utilisation, abs=0.061
     )
-    document = alignment_document([found], targets, DEMANDS, Delta(a_year=0.5), 0.01, per_unit=False)
+    document = alignment_document([found], targets, DEMANDS, Delta(None, 0.5), 0.01, per_unit=False)
     said = " ".join(document["statements"] + document["notes"])
     assert "not a reason to run fuller" in said and "busiest unit" in said
     assert "optimal occupancy" not in said.lower() and "optimum occupancy" not in said.lower()
@@ -195,7 +195,14 @@ def loss(target, demand, high, *, possible=1, beyond=()):
 def test_an_answer_holds_at_every_demand():
     losses = [loss(0.6, 0.9, 5), loss(0.6, 1.1, 11), loss(0.7, 0.9, 0), loss(0.7, 1.1, 10)]
     assert answer_of(losses, (3, 4)) == Answer(((0.7, 0.7),))
+    assert answer_of([*losses, loss(0.5, 0.9, 0), loss(0.5, 1.1, 0)], (3, 4)).not_above == ((0.6, 0.6),)
     assert "at no target" in answer_of(losses[:2], (3, 4)).reason
+
+
+def test_higher_targets_that_do_not_hold_are_told_of():
+    losses = [loss(0.5, 1.0, 0), loss(0.6, 1.0, 11), loss(0.7, 1.0, 0), loss(0.8, 1.0, 0, beyond=("A",))]
+    found = answer_of(losses, (3, 4))
+    assert found.lowest == ((0.5, 0.5),) and found.not_above == ((0.6, 0.6), (0.8, 0.8))
 
 
 def test_no_equilibrium_is_not_near():
