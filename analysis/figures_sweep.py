@@ -19,6 +19,7 @@ COLOURS = sns.color_palette("colorblind", 8)
 LINES = ("-", "--", "-.", ":")
 MOST_LINES = 5
 MOST_ANNOTATED = 150
+CONTOURS_READ = "What selfish closing costs (grey: no price)\nlines: a tenth (solid) and half (dashed) of the highest excess over 1"
 LEAST_SCALE = 1.001  # of prices, so that rounding shows no colours
 READS = {
     "demand": "demand (factor on every arrival rate)", "target": "target utilisation of every unit",
@@ -74,7 +75,7 @@ def price_surface(document: Mapping[str, Any], ax: Axes, *, across: str, down: s
     ax.set(
         xlabel=reads(across),
         ylabel=reads(down),
-        title="What selfish closing costs (grey: no price)" + held(axes, (across, down)),
+        title=CONTOURS_READ + held(axes, (across, down)),
     )
     ax.tick_params(axis="y", rotation=0)
     return ax
@@ -139,7 +140,10 @@ def save_sweep(document: Mapping[str, Any], folder: Path) -> list[Path]:
     if len(varied) >= 2:
         down, across = varied[:2]
         figure, ax = plt.subplots(
-            figsize=(2.6 + 0.55 * min(len(axes[across]), 30), 2.0 + 0.42 * min(len(axes[down]), 30))
+            figsize=(
+                max(6.4, 2.6 + 0.55 * min(len(axes[across]), 30)),
+                max(4.0, 2.2 + 0.42 * min(len(axes[down]), 30)),
+            )
         )
         price_surface(document, ax, across=across, down=down)
         written += save_figure(figure, folder, "sweep-surface")
