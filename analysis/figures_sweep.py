@@ -19,7 +19,8 @@ COLOURS = sns.color_palette("colorblind", 8)
 LINES = ("-", "--", "-.", ":")
 MOST_LINES = 5
 MOST_ANNOTATED = 150
-CONTOURS_READ = "What selfish closing costs (grey: no price)\nlines: a tenth (solid) and half (dashed) of the highest excess over 1"
+CONTOURS_READ = """What selfish closing costs (grey: no price)
+lines: a tenth (solid) and half (dashed) of the highest excess over 1"""
 LEAST_SCALE = 1.001  # of prices, so that rounding shows no colours
 READS = {
     "demand": "demand (factor on every arrival rate)", "target": "target utilisation of every unit",
