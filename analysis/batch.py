@@ -56,9 +56,11 @@ class Stock:
         """The most that any part wants."""
         return max(self._wanted)
 
-    def open(self, store: Store, fingerprint: str) -> None:
-        """Holds what is wanted against what the store has."""
-        self.job = Job(store, self.scenario, self.policies, self.replications, fingerprint=fingerprint)
+    def open(self, store: Store, fingerprint: str, *, others: bool = False) -> None:
+        """Holds what is wanted against what the store has; others: whether machines of other bits may come."""
+        self.job = Job(
+            store, self.scenario, self.policies, self.replications, fingerprint=fingerprint, others=others
+        )
 
     @property
     def asked(self) -> int:

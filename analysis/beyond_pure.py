@@ -21,6 +21,7 @@ from analysis.price_bands import resampling_weights
 from analysis.prices import PriceStudy, exact_study, resampled_costs, simulated_study
 from analysis.prices_document import study_document
 from analysis.profiles import Profiles, chosen_at, nearest_profile, text_of, told
+from analysis.raced_prices import raced_study
 from analysis.reply_bands import NO_THEOREM, ReplyBands, exact_bands, first_fall, reply_bands
 from sim.scenario import Policy
 
@@ -84,6 +85,8 @@ def beyond(game: GameAnalysis, wanted: Wanted, present: Policy, seed: int) -> Be
 
 
 def _study(game: GameAnalysis, seed: int) -> PriceStudy:
+    if game.race is not None:
+        return raced_study(game.table, game.found)
     if game.sets is None:
         return exact_study(game.table, game.found)
     sets = game.sets
@@ -97,7 +100,7 @@ def _bands(game: GameAnalysis, seed: int) -> ReplyBands | None:
     best = regrets(game.table.payoffs, game.table.goal.sense) <= game.tolerance
     if game.is_exact:
         return exact_bands(best)
-    if game.sets is None or best[0].size > MOST_CELLS_FOR_BANDS:
+    if game.sets is None or game.race is not None or best[0].size > MOST_CELLS_FOR_BANDS:
         return None
     rng = np.random.default_rng([seed, 4])
     return reply_bands(evidence_of(game.table), best, 1 - game.confidence, rng)
@@ -105,7 +108,7 @@ def _bands(game: GameAnalysis, seed: int) -> ReplyBands | None:
 
 def _reached(game: GameAnalysis, start: Profile, seed: int) -> dict[str, Reached] | None:
     """Over resampled tables; None where the table is exact, of one replication, or too large."""
-    if game.sets is None or game.table.payoffs.size * TABLES > MOST_HELD:
+    if game.sets is None or game.race is not None or game.table.payoffs.size * TABLES > MOST_HELD:
         return None
     weights = resampling_weights(np.random.default_rng([seed, 5]), TABLES, len(game.table.replicates))
     return reached_shares(resampled_costs(game.table, weights), "cost", start, tolerance=game.tolerance)

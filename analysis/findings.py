@@ -74,7 +74,8 @@ def _findings(game: GameAnalysis) -> Iterator[Finding]:
 def _basis(game: GameAnalysis) -> str:
     if game.is_exact:
         return "exact Markov chain"
-    said = f"{game.table.replications} paired replications, {100 * game.confidence:g} % intervals"
+    raced = "" if game.race is None else "a race up to "
+    said = f"{raced}{game.table.replications} paired replications, {100 * game.confidence:g} % intervals"
     return said + (f", {ESTIMATED}" if game.sets is None else "")
 
 

@@ -13,6 +13,7 @@ from analysis.equilibria import Profile
 from analysis.findings import findings_of
 from analysis.games import Equilibrium, GameAnalysis, welfare_estimate
 from analysis.profiles import Profiles, choice_columns, chooses, chosen_at
+from analysis.raced_document import raced_document
 from analysis.sets_document import sets_document, years_document
 
 if TYPE_CHECKING:
@@ -57,6 +58,7 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
         "transfer_weight_at_which_the_verdict_turns": asdict(game.turning),
         "tolerance": game.tolerance,
         **sets_document(game),
+        **raced_document(game),
         "findings": [finding.to_dict() for finding in findings_of(game)],
     }
 
@@ -93,15 +95,17 @@ def _payoffs(game: GameAnalysis, player: int) -> Any:
     table = game.table
     if game.is_exact:
         return table.payoffs[player].tolist()
-    return _nested(table.payoffs[player], table.low[player], table.high[player])
+    counts = () if table.counts is None else (table.counts,)
+    return _nested(table.payoffs[player], table.low[player], table.high[player], *counts)
 
 
-def _nested(mean: np.ndarray, low: np.ndarray, high: np.ndarray) -> Any:
+def _nested(mean: np.ndarray, low: np.ndarray, high: np.ndarray, *counts: np.ndarray) -> Any:
     if mean.ndim:
-        return [_nested(*parts) for parts in zip(mean, low, high, strict=True)]
+        return [_nested(*parts) for parts in zip(mean, low, high, *counts, strict=True)]
     if np.isnan(low):
         return Estimate(float(mean), reason=ONE_REPLICATION).to_dict()
-    return Estimate(float(mean), float(low), float(high)).to_dict()
+    told = Estimate(float(mean), float(low), float(high)).to_dict()
+    return told | {"replications": int(counts[0])} if counts else told
 
 
 def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:
@@ -148,6 +152,8 @@ def game_frame(game: GameAnalysis) -> pd.DataFrame:
                 table.high[place].ravel(),
             )
         columns[f"regret {player}"] = regret[place].ravel()
+    if table.counts is not None:
+        columns["replications"] = table.counts.ravel()
     columns["welfare"] = table.welfare.ravel()
     for name, values in vars(table.outcomes).items():
         for place, unit in enumerate(profiles.units):

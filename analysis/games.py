@@ -21,6 +21,7 @@ from analysis.equilibria import (
 from analysis.noticing import YEARS, noticeable_gain, yearly_spread
 from analysis.payoffs import Outcomes, PayoffTable
 from analysis.prices import projected_cost, projected_turning
+from analysis.racing import Race
 from analysis.sets import ConfirmedSet, PossibleSet, RegretBounds, confirmed, possible, regret_bounds, spend
 
 EXACT, ESTIMATED, POSSIBLE, CONFIRMED = "exact", "estimated", "possible", "confirmed"
@@ -70,7 +71,8 @@ class Sets:
 @dataclass(frozen=True)
 class GameAnalysis:
     """All that the table says. sets: None where it is exact, or of one replication. equilibria: where there are
-    sets, every possible profile; else those of the table. found: the equilibria of the table as it stands."""
+    sets, every possible profile; else those of the table. found: the equilibria of the table as it stands. race: how a
+    raced table came about, None for a whole one."""
 
     table: PayoffTable
     equilibria: tuple[Equilibrium, ...]
@@ -81,6 +83,7 @@ class GameAnalysis:
     confidence: float
     found: tuple[Profile, ...] = ()
     sets: Sets | None = None
+    race: Race | None = None
 
     @property
     def possible(self) -> np.ndarray | None:
@@ -138,7 +141,7 @@ def analyse(
     sense = table.goal.sense
     found = pure_equilibria(table.payoffs, sense, tolerance=tolerance)
     sets = _sets(table, confidence, epsilon, seed)
-    listed = found if sets is None else _profiles(sets.possible.mask)
+    listed = found if sets is None else profiles_in(sets.possible.mask)
     shape = table.profiles.shape
     network = [
         values.sum(axis=-1).reshape(shape)
@@ -159,7 +162,7 @@ def analyse(
     regret = regrets(table.payoffs, sense)
     return GameAnalysis(
         table,
-        tuple(_equilibrium(table, profile, regret, sets, confidence) for profile in listed),
+        tuple(equilibrium_at(table, profile, regret, sets, confidence) for profile in listed),
         tuple(best_responses(table.payoffs, sense, tolerance=tolerance)),
         cost,
         turning,
@@ -170,7 +173,8 @@ def analyse(
     )
 
 
-def _profiles(mask: np.ndarray) -> list[Profile]:
+def profiles_in(mask: np.ndarray) -> list[Profile]:
+    """The profiles of a mask over the table's shape."""
     return [tuple(map(int, profile)) for profile in np.argwhere(mask)]
 
 
@@ -180,10 +184,7 @@ def _sets(table: PayoffTable, confidence: float, epsilon: float | None, seed: in
         return None
     evidence, (for_possible, for_confirmed) = evidence_of(table), spend(1 - confidence)
     spread = yearly_spread(table.unadjusted, table.measured_days)
-    origin = (
-        "asked for" if epsilon is not None else f"the gain that takes a manager {YEARS:g} years to notice"
-    )
-    allowed = max(noticeable_gain(spread), DEFAULT_TOLERANCE) if epsilon is None else epsilon
+    allowed, origin = allowed_regret(epsilon, spread)
     rng = np.random.default_rng([seed, len(table.replicates)])
     return Sets(
         possible(evidence, for_possible, rng),
@@ -194,9 +195,19 @@ def _sets(table: PayoffTable, confidence: float, epsilon: float | None, seed: in
     )
 
 
-def _equilibrium(
+def allowed_regret(epsilon: float | None, spread: np.ndarray) -> tuple[float, str]:
+    """Epsilon and where it comes from; spread: of a year, (players, *shape)."""
+    if epsilon is not None:
+        return epsilon, "asked for"
+    return max(
+        noticeable_gain(spread), DEFAULT_TOLERANCE
+    ), f"the gain that takes a manager {YEARS:g} years to notice"
+
+
+def equilibrium_at(
     table: PayoffTable, profile: Profile, regret: np.ndarray, sets: Sets | None, confidence: float
 ) -> Equilibrium:
+    """A listed profile; regret: the point estimates, (players, *shape)."""
     players = table.profiles.players
     estimates = {
         player: regret_estimate(table, float(regret[(place, *profile)]), (place, *profile), sets)
@@ -221,6 +232,10 @@ def welfare_estimate(table: PayoffTable, profile: Profile, confidence: float) ->
     """The welfare a day at a profile, with its interval where it comes from replications."""
     if table.welfare_replicates is None:
         return Estimate(float(table.welfare[profile]))
+    if table.welfare_low is not None and table.welfare_high is not None:
+        return Estimate(
+            *(float(one[profile]) for one in (table.welfare, table.welfare_low, table.welfare_high))
+        )
     values = table.welfare_replicates[(slice(None), *profile)]
     return mean_estimate(values, confidence, degrees=table.degrees)
 

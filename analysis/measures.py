@@ -55,6 +55,7 @@ NETWORK_MEASURES = (
     Measure("arrivals_per_day", "arrived", "days", "arrivals a day"),
 )
 
+# Of one record, or of several side by side: by unit, whatever axes stand before.
 _TOTALS: dict[str, Callable[[Record], np.ndarray]] = {
     "full_days": lambda record: _gate_days(record, lambda state: state & FULL),
     "closed_days": lambda record: _gate_days(record, lambda state: state & OWN_CLOSED),
@@ -63,16 +64,18 @@ _TOTALS: dict[str, Callable[[Record], np.ndarray]] = {
     ),
     "incoming_closed_days": lambda record: _gate_days(record, lambda state: state & INCOMING_CLOSED),
     "arrived": lambda record: record.arrived,
-    "admitted": lambda record: record.admitted.sum(axis=0),
-    "diverted_out": lambda record: record.diverted.sum(axis=1),
-    "diverted_in": lambda record: record.admitted.sum(axis=0) - np.diagonal(record.admitted),
+    "admitted": lambda record: record.admitted.sum(axis=-2),
+    "diverted_out": lambda record: record.diverted.sum(axis=-1),
+    "diverted_in": lambda record: (
+        record.admitted.sum(axis=-2) - np.diagonal(record.admitted, axis1=-2, axis2=-1)
+    ),
     "turned_away": lambda record: record.turned_away,
 }
 
 
 def _gate_days(record: Record, counts: Callable[[int], int]) -> np.ndarray:
-    states = [state for state in range(record.gate_days.shape[1]) if counts(state)]
-    return record.gate_days[:, states].sum(axis=1)
+    states = [state for state in range(record.gate_days.shape[-1]) if counts(state)]
+    return record.gate_days[..., states].sum(axis=-1)
 
 
 def unit_sums(records: Sequence[Record], beds: np.ndarray, measured_days: float) -> Sums:
@@ -81,25 +84,31 @@ def unit_sums(records: Sequence[Record], beds: np.ndarray, measured_days: float)
     beds: (units,), staffed where the record does not say otherwise. Besides: `occupancy_days` (replications,
     units, most beds + 1), and `period_occupied_days` and `period_bed_days` (replications, periods, units).
     """
-    sums: Sums = {
-        name: np.stack([total(record) for record in records]).astype(float) for name, total in _TOTALS.items()
-    }
-    occupancy = np.stack([record.occupancy_days for record in records])
+    stacked = _side_by_side(records)
+    sums: Sums = {name: total(stacked).astype(float) for name, total in _TOTALS.items()}
+    occupancy = stacked.occupancy_days
     levels = np.arange(occupancy.shape[-1])
     sums["period_occupied_days"] = occupancy @ levels
     sums["occupancy_days"] = occupancy.sum(axis=1)
     sums["occupied_days"] = sums["occupancy_days"] @ levels
     sums["days"] = np.full(sums["arrived"].shape, measured_days)
-    sums["period_bed_days"] = np.stack([_bed_days(record, beds) for record in records])
-    if records[0].staffed_days is None:
+    sums["period_bed_days"] = _bed_days(stacked, beds)
+    if stacked.staffed_days is None:
         sums["bed_days"] = np.broadcast_to(beds * measured_days, sums["days"].shape).astype(float)
     else:
         sums["bed_days"] = sums["period_bed_days"].sum(axis=1)
     return sums
 
 
+def _side_by_side(records: Sequence[Record]) -> Record:
+    """All records as one, every array with one more axis in front."""
+    columns = zip(*(record.arrays().values() for record in records), strict=True)
+    stacked = (np.concatenate(column).reshape(len(records), *column[0].shape) for column in columns)
+    return Record(**dict(zip(records[0].arrays(), stacked, strict=True)))
+
+
 def _bed_days(record: Record, beds: np.ndarray) -> np.ndarray:
-    """Staffed bed-time by period and unit, (periods, units)."""
+    """Staffed bed-time by period and unit, (..., periods, units)."""
     if record.staffed_days is None:
         return record.occupancy_days.sum(axis=-1) * beds
     return record.staffed_days @ np.arange(record.staffed_days.shape[-1])

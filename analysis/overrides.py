@@ -18,7 +18,6 @@ NOTHING: Mapping[str, Any] = MappingProxyType(
     | {"exponential": False, "threshold": (), "incoming": ()}
 )
 LIMITS = {"seed": (0, 2**63 - 1), "replications": (1, 1_000_000), "workers": (1, 1024)}
-LEAST_PER_DAY = 1e-9
 LONGEST_THRESHOLD = 9  # digits
 
 
@@ -43,12 +42,11 @@ def overridden(scenario: Any, values: Mapping[str, Any], faults: list[Fault]) ->
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
     if factor is None:
         return scenario
-    from sim.tables import MOST_PATIENTS
+    from analysis.settings import demand_bounds
 
-    days = max(1.0, scenario.run.warm_up_days + scenario.run.measured_days)
-    rates = [group.per_day for group in scenario.patients]
-    least, most = LEAST_PER_DAY / min(rates), MOST_PATIENTS / (days * sum(rates))
-    if not least <= factor <= most:
+    bounds = demand_bounds(scenario)
+    least, most = bounds.least, bounds.most
+    if not bounds.holds(factor):
         rule, remedy = (
             f"must be from {least:.3g} to {most:.6g} here",
             "give a factor such as 1.1 for 10 % more patients",

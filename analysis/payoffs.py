@@ -22,10 +22,14 @@ __all__ = ["MOST_CELLS", "Outcomes", "PayoffTable", "Profiles", "TableSums", "ex
 class TableSums:
     """The sums of every run of a table, by replication and cell, filled as runs arrive in any order.
 
-    Arrays are (replications, cells, units), `period_occupied_days` (replications, cells, periods, units).
+    Arrays are (replications, cells, units), `period_occupied_days` (replications, cells, periods, units). at_first: so
+    many replications get their memory when the first run arrives (default: all), further ones when they come.
     """
 
-    def __init__(self, scenario: Scenario, cells: int, replications: int) -> None:
+    def __init__(
+        self, scenario: Scenario, cells: int, replications: int, *, at_first: int | None = None
+    ) -> None:
+        self._at_first = replications if at_first is None else min(at_first, replications)
         self._beds = np.array([unit.beds for unit in scenario.units], float)
         self._days = scenario.run.measured_days
         self._shape = (replications, cells)
@@ -41,8 +45,7 @@ class TableSums:
             return len(reply.cells)
         sums = unit_sums([run.record for run in reply], self._beds, self._days)
         for name in sums.keys() - {"occupancy_days"}:
-            if name not in self._arrays:
-                self._arrays[name] = np.full(self._shape + sums[name].shape[1:], np.nan)
+            self._make_room(name, max(run.replication for run in reply), sums[name].shape[1:])
             for row, run in enumerate(reply):
                 self._arrays[name][run.replication, run.cell] = sums[name][row]
         for run in reply:
@@ -50,10 +53,25 @@ class TableSums:
             self.record_hashes[run.replication, run.cell] = run.record.hash
         return len(reply)
 
+    def _make_room(self, name: str, replication: int, of_a_cell: tuple[int, ...]) -> None:
+        """Memory up to that replication, twice as much as before where there is too little."""
+        there = self._arrays.get(name)
+        rows = self._at_first if there is None else len(there)
+        while rows <= replication:
+            rows = min(2 * rows, self._shape[0])
+        if there is None or rows > len(there):
+            self._arrays[name] = np.full((rows, self._shape[1], *of_a_cell), np.nan)
+            if there is not None:
+                self._arrays[name][: len(there)] = there
+
     @property
     def complete(self) -> np.ndarray:
         """The replications that every cell has."""
         return np.flatnonzero(self._arrived.all(axis=1))
+
+    def among(self, cells: np.ndarray, first: int) -> np.ndarray:
+        """Those of the first so many replications that each of these cells (bool, (cells,)) has."""
+        return np.flatnonzero(self._arrived[:first, cells].all(axis=1))
 
     def sums(self) -> dict[str, np.ndarray]:
         """The sums over complete replications only, so that every contrast is paired."""
@@ -91,6 +109,8 @@ class PayoffTable:
     signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
     raw_replicates: these, or else the replicates, before control variates. turned_away_replicates,
     transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each replication.
+    counts: of a raced table, int (*shape), the replications behind each cell's means and intervals; replicates are
+    then those of its last look, NaN in cells that were left before. welfare_low, welfare_high: with counts, (*shape).
     """
 
     profiles: Profiles
@@ -110,6 +130,9 @@ class PayoffTable:
     controls: Controls | None = None
     beside_counterpart: bool = False
     measured_days: float = 365.0
+    counts: np.ndarray | None = None
+    welfare_low: np.ndarray | None = None
+    welfare_high: np.ndarray | None = None
 
     @property
     def unadjusted(self) -> np.ndarray | None:

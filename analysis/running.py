@@ -17,7 +17,7 @@ from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.provenance import fingerprint, now
 from sim.replicate import Failure, Pace, Run, Share, pace_of, replicate_shares
-from sim.resuming import Job
+from sim.resuming import Job, run_whole
 from sim.scenario import Policy, Scenario
 from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
@@ -181,13 +181,14 @@ def _run_beside(store: Store, asked: Asked, manner: Manner, take: Take, origin: 
     """Takes what the store has, then runs and keeps what is missing; a later part does not tell what is there."""
     job = Job(
         store, asked.scenario, asked.policies, asked.scenario.run.replications,
-        fingerprint=json.dumps(fingerprint(), sort_keys=True),
+        fingerprint=json.dumps(fingerprint(), sort_keys=True), others=manner.remote is not None,
     )  # fmt: skip
     if job.restarted:
         said = "replications were begun on a machine with other bits and are run again whole"
         manner.say(f"{len(job.restarted)} {said}")
     for runs in job.kept_runs():
-        take(runs)
+        if runs[0].replication not in job.unsure:  # what may begin again is taken at the end
+            take(runs)
     if job.reused and not asked.first:
         manner.say(f"{job.reused:,} of {job.asked:,} runs are in {store.folder} already")
     shares = job.shares()
@@ -197,9 +198,13 @@ def _run_beside(store: Store, asked: Asked, manner: Manner, take: Take, origin: 
 
     def keep_then_take(reply: list[Run] | Failure) -> None:
         job.keep(reply, engine)
-        take(reply)
+        if isinstance(reply, Failure) or reply[0].replication not in job.unsure:
+            take(reply)
 
-    ran = _run(asked, shares, planned, manner, keep_then_take)
+    ran = _run(asked, shares, planned, manner, keep_then_take, job)
+    for runs in job.kept_runs() if job.unsure else ():
+        if runs[0].replication in job.unsure:
+            take(runs)
     job.end(now().isoformat(timespec="seconds"))
     return replace(ran, computed=job.computed, reused=job.reused)
 
@@ -215,18 +220,22 @@ def _effort(asked: Asked, manner: Manner, shares: Sequence[Share]) -> Effort:
     return effort(asked.scenario, asked.base, manner, *size_of(shares))
 
 
-def _run(asked: Asked, shares: Sequence[Share], planned: Effort, manner: Manner, take: Take) -> Ran:
-    """Runs the shares and hands each reply to `take`."""
+def _run(
+    asked: Asked, shares: Sequence[Share], planned: Effort, manner: Manner, take: Take, job: Job | None = None
+) -> Ran:
+    """Runs the shares and hands each reply to `take`; job: whose they are, where they are kept."""
     engine = planned.engine.name
     if shares:
         rules = [lower_policy(asked.scenario, policy) for policy in asked.policies]
         engines.load(engine).warm(lower_network(asked.scenario), rules, plan_intake(asked.scenario))
-    replies = manner.stoppable(
-        replicate_shares(
-            asked.scenario, asked.policies, shares, engine=engine, workers=planned.workers,
-            task_size=planned.pace.task_size(*size_of(shares), planned.count),
-        )
-    )  # fmt: skip
+
+    def run(some: Sequence[Share]) -> Any:
+        return replicate_shares(
+            asked.scenario, asked.policies, some, engine=engine, workers=planned.workers,
+            task_size=planned.pace.task_size(*size_of(some), planned.count),
+        )  # fmt: skip
+
+    replies = manner.stoppable(run_whole(shares, run, job))
     runs = sum(len(share.replications) * len(share.cells) for share in shares)
     with replies, manner.progress(asked.label, runs, "runs") as bar:
         if manner.remote is not None:

@@ -16,22 +16,27 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from analysis.confidence import t_quantile
 from analysis.contrasts import Evidence, Masks, blocks, masks_of
 from analysis.simultaneous import DRAWS, flip_to_student, sign_flips
 
 LEAST_BEYOND = 10  # draws expected beyond a critical value
+MOST_SIGNS = 30_000_000  # draws x replications, beyond which Bonferroni replaces the joint null
 
 
 @dataclass(frozen=True)
 class PossibleSet:
     """Profiles that may be equilibria. mask: bool, (*shape). statistic: the strongest t against each profile, (*shape),
-    -inf where nothing could speak against it. critical: what the last step compared it with."""
+    -inf where nothing could speak against it. critical: what the last step compared it with. beaten: bool
+    (players, *shape), where that player has a better strategy against the others' for sure: at the same level, all of
+    these are right (by the first step's critical value, which counts every contrast)."""
 
     mask: np.ndarray
     statistic: np.ndarray
     critical: float
     level: float
     steps: int
+    beaten: np.ndarray
 
     def __str__(self) -> str:
         return (
@@ -55,32 +60,40 @@ def possible(
     cells no longer needed as that player's deviation (values there may be missing).
     draws: of the joint null (default: 1000, or more for a level below .01). At least 2 replications.
     """
-    rows = sign_flips(rng, draws or max(DRAWS, math.ceil(LEAST_BEYOND / level)), len(evidence.values))
+    wanted = draws or max(DRAWS, math.ceil(LEAST_BEYOND / level))
+    replications = len(evidence.values)
+    rows = sign_flips(rng, wanted, replications) if wanted * replications <= MOST_SIGNS else None
     masks = masks_of(evidence, alive, dropped)
-    statistic, critical, steps = strongest(evidence, masks), math.inf, 0
+    by_player, critical, first, steps = strongest(evidence, masks), math.inf, math.inf, 0
+    statistic = by_player.max(axis=0)
     while masks.alive.any():
         critical, steps = _critical(evidence, masks, rows, level), steps + 1
+        first = critical if steps == 1 else first
         kept = masks.alive & ~(statistic > critical)
         if kept.sum() == masks.alive.sum():
             break
         masks = Masks(kept, masks.dropped)
+    shape = evidence.shape
     return PossibleSet(
-        masks.alive.reshape(evidence.shape), statistic.reshape(evidence.shape), critical, level, steps
-    )
+        masks.alive.reshape(shape), statistic.reshape(shape), critical, level, steps,
+        (by_player > first).reshape(-1, *shape),
+    )  # fmt: skip
 
 
 def strongest(evidence: Evidence, masks: Masks) -> np.ndarray:
-    """The strongest t against each profile, (cells,); -inf where there is none."""
-    most = np.full(evidence.cells, -np.inf)
+    """The strongest t against each profile through each player, (players, cells); -inf where there is none."""
+    most = np.full((evidence.values.shape[1], evidence.cells), -np.inf)
     for block in blocks(evidence, masks):
         against = np.where(block.use, block.statistics(), -np.inf)
         for direction, cells in block.judged:
-            np.maximum.at(most, cells, against[direction])
+            np.maximum.at(most[block.player], cells, against[direction])
     return most
 
 
-def _critical(evidence: Evidence, masks: Masks, rows: np.ndarray, level: float) -> float:
+def _critical(evidence: Evidence, masks: Masks, rows: np.ndarray | None, level: float) -> float:
     """What the strongest t against any profile alive passes with probability `level` where all are equilibria."""
+    if rows is None:
+        return _by_bonferroni(evidence, masks, level)
     most = np.full(len(rows), -np.inf)
     for block in blocks(evidence, masks, draws=len(rows)):
         np.maximum(most, block.largest_null(rows), out=most)
@@ -88,6 +101,14 @@ def _critical(evidence: Evidence, masks: Masks, rows: np.ndarray, level: float) 
         return math.inf
     beyond = float(np.quantile(most, 1 - level, method="higher"))
     return flip_to_student(beyond, len(evidence.values), evidence.degrees)
+
+
+def _by_bonferroni(evidence: Evidence, masks: Masks, level: float) -> float:
+    """The same without the joint null; for distances each contrast may err through D and through S."""
+    used = sum(int(block.use.sum()) for block in blocks(evidence, masks))
+    if not used:
+        return math.inf
+    return float(t_quantile(1 - level / (used * (2 if evidence.distances else 1)), evidence.degrees))
 
 
 @dataclass(frozen=True)

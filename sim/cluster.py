@@ -6,6 +6,7 @@ replication is ever put together from two kinds of bits. Workers may come and go
 
 from __future__ import annotations
 
+import itertools
 import pickle
 import time
 from collections import deque
@@ -25,6 +26,7 @@ WAIT_SECONDS = 0.2
 AGAIN_SECONDS = 2.0
 RATE_SECONDS = 60.0
 FIRST_SECONDS = 20.0  # for the first worker to say who it is
+LAST_SECONDS = 5.0  # at the least, for answers under way when an end is asked for
 
 
 @dataclass
@@ -57,6 +59,7 @@ class Cluster:
     """The workers behind the scheduler at `address`, a full one; RunError where no scheduler answers at first.
 
     notice: told in words what a person should know. watch: told about once a second how the machines do.
+    stays: between runs, until `close`. first_seconds: the longest wait for the first worker.
     """
 
     binds = True  # `run` takes a binding
@@ -68,15 +71,18 @@ class Cluster:
         *,
         notice: Callable[[str], None] = lambda text: None,
         watch: Callable[[str], None] = lambda text: None,
+        stays: bool = False,
+        first_seconds: float = FIRST_SECONDS,
     ) -> None:
+        self._stays, self._first_seconds = stays, first_seconds
+        self._numbers, self._left = itertools.count(), {}
         self.address, self._keys, self.notice, self.watch = address, keys, notice, watch
         self.machines: dict[str, Machine] = {}
         self.refused: dict[str, str] = {}  # machine -> why
         self._workers: dict[str, tuple[Machine, str]] = {}  # address -> machine and bits, once it may help
         self._asked: dict[str, line.Present] = {}
         self._link: line.Link | None = line.Link(address, keys)
-        self._began = self._told = self._present_at = time.monotonic()
-        self._said_nobody = False
+        self._began = self._told = self._present_at = self._first = time.monotonic()
 
     def close(self) -> None:
         """Leaves the cluster."""
@@ -87,7 +93,7 @@ class Cluster:
     @property
     def count(self) -> int:
         """The threads of the machines that may help, at least one; waits a little for the first."""
-        until = time.monotonic() + FIRST_SECONDS
+        until = time.monotonic() + self._first_seconds
         while not (self._asked and self._all_known()) and time.monotonic() < until and self._link is not None:
             self._take(self._link.next_event(WAIT_SECONDS), None)
         return max(1, sum(sum(machine.threads.values()) for machine in self.machines.values()))
@@ -97,19 +103,45 @@ class Cluster:
         function: Callable[..., Any],
         tasks: Iterable[Task],
         binding: Callable[[Hashable], Binding] | None = None,
+        go_on: Callable[[], bool] = lambda: True,
     ) -> Iterator[Reply]:
-        """See Workers. binding: what the task of a key belongs to; by default each stands alone."""
-        desk = Desk(tasks, own=bits(), clock=time.monotonic, binding=binding)
+        """See Workers. binding: what the task of a key belongs to; by default each stands alone.
+
+        go_on: asked all the time; once it says no, answers under way are waited for a little, and if nobody is there
+        not at all.
+        """
+        self._hear()
+        desk = Desk(
+            tasks, own=bits(), clock=time.monotonic, binding=binding, numbers=self._numbers, left=self._left,
+            began=self._first,
+        )  # fmt: skip
         for address, (machine, its_bits) in self._workers.items():
             desk.join(address, its_bits, machine.threads[address])
         self._began = self._present_at = time.monotonic()
-        self._told = 0.0
+        self._told, whole = 0.0, False
         try:
-            while not desk.finished:
-                yield from self._round(function, desk)
+            yield from self._rounds(function, desk, go_on)
             self.watch(self.sentence(time.monotonic()))
+            whole = desk.finished
         finally:
-            self._forget_link()  # with it, orders under way are dropped everywhere
+            if not (whole and self._stays):
+                self._forget_link()  # with it, orders under way are dropped everywhere
+
+    def _hear(self) -> None:
+        """What has happened since the last run."""
+        while self._link is not None and (event := self._link.next_event(0)) is not None:
+            self._take(event, None)
+
+    def _rounds(self, function: Callable[..., Any], desk: Desk, go_on: Callable[[], bool]) -> Iterator[Reply]:
+        end = None
+        while not desk.finished:
+            if end is None and not go_on():
+                yield from desk.stop()
+                end = time.monotonic() + max(LAST_SECONDS, 2 * desk.usual_seconds)
+            if end is not None and (time.monotonic() > end or not self._workers):
+                yield from desk.give_up()
+                return
+            yield from self._round(function, desk)
 
     def _round(self, function: Callable[..., Any], desk: Desk) -> Iterator[Reply]:
         if self._link is None and not self._connect_again():
@@ -124,6 +156,11 @@ class Cluster:
             self.notice(
                 f"{again} replications were begun on machines that are gone, and begin again elsewhere"
             )
+        if handed_back := desk.hand_back():
+            self.notice(
+                "machines of the bits that began some replications are not here; these begin again whole"
+            )
+            yield from handed_back
         if (task := desk.to_run_here()) is not None:
             yield from desk.ran_here(next(ThisProcess().run(function, [task])))
         self._tell()
@@ -141,6 +178,7 @@ class Cluster:
 
     def _forget_link(self) -> None:
         self.close()
+        self._left.update((its_bits, time.monotonic()) for _, its_bits in self._workers.values())
         self._workers.clear()
         self._asked.clear()
         for machine in self.machines.values():
@@ -159,6 +197,8 @@ class Cluster:
             case line.Broken(number, why) if desk is not None:
                 self._link.forget(number)
                 return desk.broken(number, why)
+            case line.Answer(number) | line.Broken(number):  # of the run before
+                self._link.forget(number)
             case line.Lost(why):
                 self.notice(f"the scheduler is out of reach ({why}); trying again until it is back")
                 gone = list(self._workers)
@@ -180,7 +220,8 @@ class Cluster:
     def _gone(self, address: str, desk: Desk | None) -> list[Reply]:
         if address not in self._workers:
             return []
-        machine, _ = self._workers.pop(address)
+        machine, its_bits = self._workers.pop(address)
+        self._left[its_bits] = time.monotonic()
         del machine.threads[address]
         if not machine.threads:
             self.notice(f"{machine.name} is gone; its tasks go to others")

@@ -24,6 +24,7 @@ from sim.rules import out_of_use
 from sim.rules.out_of_use import Staffing
 from sim.rules.soft_closure import GATE
 from sim.rules.transfer import DELAY
+from sim.wording import in_spreadsheet
 
 # Purposes are numbered once for all; those of optional rules stand in their declarations (`sim/rules`).
 ARRIVAL, STAY = 1, 2
@@ -142,7 +143,7 @@ def write_staffing(staffing: Staffing, path: Path, units: Sequence[str]) -> None
         rows.writerow(["time_days", "unit", "staffed_beds"])
         columns = (staffing.times, staffing.units, staffing.beds)
         for time, unit, beds in zip(*(column.tolist() for column in columns), strict=True):
-            rows.writerow([time, units[unit], beds])
+            rows.writerow([time, in_spreadsheet(units[unit]), beds])
 
 
 def write_intake(intake: Intake, path: Path, *, groups: list[str], units: list[str]) -> None:
@@ -157,4 +158,5 @@ def write_intake(intake: Intake, path: Path, *, groups: list[str], units: list[s
         for patient, (at, group, home, stay, delay, gate) in enumerate(
             zip(*map(np.ndarray.tolist, columns), strict=True)
         ):
-            rows.writerow([patient, at, groups[group], units[home], "emergency", stay, delay, gate])
+            names = in_spreadsheet(groups[group]), in_spreadsheet(units[home])
+            rows.writerow([patient, at, *names, "emergency", stay, delay, gate])

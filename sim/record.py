@@ -44,8 +44,7 @@ class Record:
 
     def arrays(self) -> dict[str, np.ndarray]:
         """Every array by name; those of rules that are off are left out."""
-        arrays = {field.name: getattr(self, field.name) for field in fields(self)}
-        return {name: array for name, array in arrays.items() if array is not None}
+        return {name: array for name in _NAMES if (array := getattr(self, name)) is not None}
 
     def faults(self, measured_days: float) -> list[str]:
         """Broken invariants in words; empty for a sound record."""
@@ -68,6 +67,9 @@ class Record:
         if np.any(np.diagonal(self.diverted)):
             broken.append("a patient was diverted to the own home")
         return broken
+
+
+_NAMES = tuple(field.name for field in fields(Record))
 
 
 def hash_records(hashes: list[str]) -> str:

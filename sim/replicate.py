@@ -55,6 +55,14 @@ class Failure:
 
 
 @dataclass(frozen=True)
+class Stranded:
+    """Cells of replications that were not run: the machines that the share names did not come."""
+
+    replications: tuple[int, ...]
+    cells: tuple[int, ...]
+
+
+@dataclass(frozen=True)
 class TaskSize:
     """How many replications, and how many policies of each (None: all), make a task.
 
@@ -119,10 +127,11 @@ def replicate_shares(
     workers: Workers | None = None,
     task_size: TaskSize | None = None,
     go_on: Callable[[], bool] = lambda: True,
-) -> Iterator[list[Run] | Failure]:
+) -> Iterator[list[Run] | Failure | Stranded]:
     """As `replicate`, but each replication under the policies of its share only.
 
-    go_on: asked before each task is handed out; once it says no, only what is under way still arrives.
+    go_on: asked before each task is handed out; once it says no, only what is under way still arrives. A Stranded
+    comes only of shares that name another machine's fingerprint, from workers on other machines.
     """
     network, plan = lower_network(scenario), plan_intake(scenario)
     rules = [lower_policy(scenario, policy) for policy in policies]
@@ -132,19 +141,21 @@ def replicate_shares(
         for batch, cells in cut
     )
     wanted = itertools.takewhile(lambda _: go_on(), tasks)
-    for reply in _run_on(workers or ThisProcess(), wanted, cut):
+    for reply in _run_on(workers or ThisProcess(), wanted, cut, go_on):
         cut.learn(reply)
-        if reply.failure is None:
+        if reply.handed_back:
+            yield Stranded(*reply.key)  # type: ignore[misc]
+        elif reply.failure is None:
             yield from (_stamped(one, reply.fingerprint) for one in reply.value)
         else:
             batch, cells = reply.key
             yield from (Failure(plan.seed, replication, cells, reply.failure) for replication in batch)
 
 
-def _run_on(workers: Workers, tasks: Iterable[Task], cut: _Cut) -> Iterator[Reply]:
-    """The replies; workers that may differ in bits are told that a replication's cells belong together."""
+def _run_on(workers: Workers, tasks: Iterable[Task], cut: _Cut, go_on: Callable[[], bool]) -> Iterator[Reply]:
+    """The replies; workers elsewhere are told which cells belong together, and may be left before they answer."""
     if getattr(workers, "binds", False):
-        return workers.run(run_batch, tasks, binding=cut.binding)  # type: ignore[call-arg]
+        return workers.run(run_batch, tasks, binding=cut.binding, go_on=go_on)  # type: ignore[call-arg]
     return workers.run(run_batch, tasks)
 
 

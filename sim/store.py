@@ -17,6 +17,8 @@ from pathlib import Path
 from typing import Any
 
 from sim.errors import StoreError
+from sim.record import Record
+from sim.store_bulk import unpack_all
 from sim.store_file import FILE, STEPS, WriterLock, cannot_be_written, connect_to_read, connect_to_write
 from sim.store_rows import (
     COUNTS,
@@ -206,10 +208,12 @@ class Store:
                 (scenario, json.dumps(provenance), asked, reused, provenance["started"]),
             ).lastrowid
 
-    def end(self, command: int, at: str) -> None:
-        """Notes that a command has ended by itself."""
+    def end(self, command: int, at: str, *, asked: int | None = None) -> None:
+        """Notes that a command has ended by itself; asked: the runs that it turned out to need."""
         with self._whole() as db:
-            db.execute("UPDATE commands SET ended = ? WHERE id = ?", (at, command))
+            db.execute(
+                "UPDATE commands SET ended = ?, asked = coalesce(?, asked) WHERE id = ?", (at, asked, command)
+            )
 
     def _place(self, key: Key) -> tuple[int, int, int]:
         return self._id("scenarios", key.scenario), self._id("cells", key.cell), key.replication
@@ -256,9 +260,7 @@ class Store:
         except ValueError:
             record = None
         if record is None or record.hash != record_hash:
-            raise StoreError(
-                f"{self.file}: the row of replication {replication}, cell {cell[:12]} is damaged"
-            )
+            raise StoreError(self._is_damaged(replication, cell))
         return Row(Key(scenario, cell, replication), record, intake_hash, engine, fingerprint, seconds)
 
     def exact(self, scenario: str, fingerprint: str | None = None) -> Iterator[tuple[str, list[Measures]]]:
@@ -307,11 +309,31 @@ class Store:
             found.setdefault(replication, (fingerprint, set()))[1].add(sys.intern(cell))
         return found
 
-    def of_replication(self, scenario: str, replication: int) -> dict[str, Row]:
-        """Every run of a replication by cell hash; StoreError where bytes do not have their hash."""
-        where = "WHERE scenarios.hash = ? AND runs.replication = ?"
-        found = self._ask(f"SELECT {_ROW} {_KEYED} {where}", (scenario, replication))
-        return {row.key.cell: row for row in map(self._row, found)}
+    def records(
+        self, scenario: str, cells: Sequence[str], replications: range
+    ) -> dict[int, dict[str, tuple[Record, str]]]:
+        """What is here of these cells and replications: replication -> cell -> record and hash of its intake.
+
+        StoreError where bytes do not have their hash. Ask for some thousand runs at a time.
+        """
+        bounds = (scenario, replications.start, replications.stop - 1)
+        where = "scenario = (SELECT id FROM scenarios WHERE hash = ?) AND replication BETWEEN ? AND ?"
+        met = dict(self._ask(f"SELECT replication, intake_hash FROM replications WHERE {where}", bounds))
+        asked = (
+            "SELECT replication, hash, record_hash, arrays FROM json_each(?) AS wanted"
+            f" CROSS JOIN cells ON cells.hash = wanted.value CROSS JOIN runs ON cell = cells.id AND {where}"
+        )
+        rows = list(self._ask(asked, (json.dumps(sorted(set(cells))), *bounds)))
+        records = unpack_all([row[3] for row in rows], [row[2] for row in rows])
+        found: dict[int, dict[str, tuple[Record, str]]] = {}
+        for (replication, cell, _, _), record in zip(rows, records, strict=True):
+            if record is None:
+                raise StoreError(self._is_damaged(replication, cell))
+            found.setdefault(replication, {})[cell] = record, met[replication]
+        return found
+
+    def _is_damaged(self, replication: int, cell: str) -> str:
+        return f"{self.file}: the row of replication {replication}, cell {cell[:12]} is damaged"
 
     def sample(self, count: int) -> list[Key]:
         """So many keys at random."""

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from sim.lowering import NOBODY
+from sim.wording import in_spreadsheet
 
 KINDS = (
     "arrival", "admission", "transfer", "turned away", "discharge", "review", "own gate opens", "own gate closes",
@@ -34,4 +35,5 @@ class Trace:
             rows = csv.writer(file)
             rows.writerow(["time", "kind", "patient", "unit"])
             for time, kind, patient, unit in self.events:
-                rows.writerow([time, kind, "" if patient == NOBODY else patient, units[unit]])
+                whom = "" if patient == NOBODY else patient
+                rows.writerow([time, kind, whom, in_spreadsheet(units[unit])])

@@ -5,6 +5,7 @@ from __future__ import annotations
 import datetime
 import difflib
 import re
+import unicodedata
 from collections.abc import Iterable, Mapping
 from typing import Any
 
@@ -147,3 +148,21 @@ def _example(field: FieldInfo | None, key: str) -> str | None:
 def count(whole: int) -> str:
     """A count, in full or, where it is vast, as a power of ten."""
     return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
+
+
+_HIDDEN = (
+    "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
+)
+
+
+def visible(text: str) -> str:
+    """A text in which nothing acts unseen: control characters, and those that turn text round, as escapes."""
+    return "".join(
+        f"\\u{ord(one):04x}" if one in _HIDDEN or unicodedata.category(one) in ("Cc", "Cs") else one
+        for one in text
+    )
+
+
+def in_spreadsheet(text: str) -> str:
+    """A text as a cell of a CSV file: one that a spreadsheet would take for a formula gets an apostrophe before it."""
+    return f"'{text}" if text[:1] in ("=", "+", "-", "@", "\t", "\r") else text

@@ -39,6 +39,7 @@ class Reply:
 
     seconds: that it took where it ran; 0 where that is not known.
     fingerprint: of the machine that ran it, as text, where it may be another one.
+    handed_back: it was not run, for no machine of the bits that its binding asked for came.
     """
 
     key: Hashable
@@ -46,6 +47,7 @@ class Reply:
     failure: str | None = None
     seconds: float = 0.0
     fingerprint: str | None = None
+    handed_back: bool = False
 
 
 Task = tuple[Hashable, tuple]
@@ -281,8 +283,10 @@ def stop_processes() -> None:
 
 
 def _begin(parent: int) -> None:
-    """In a new worker: Ctrl-C is the parent's to handle, and without the parent there is nothing to do."""
+    """In a new worker: Ctrl-C and a closed terminal are the parent's to handle, and it ends with the parent."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
+    if hasattr(signal, "SIGHUP"):
+        signal.signal(signal.SIGHUP, signal.SIG_IGN)
     if hasattr(os, "getppid") and sys.platform != "win32":
         threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
 

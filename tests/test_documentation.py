@@ -58,6 +58,7 @@ def test_every_command_has_an_example_or_is_named():
     assert {command.split()[0] for command, _ in EXAMPLES} >= set(COMMANDS) - {
         "exact",
         "results",
+        "report",
         "batch",
         "cluster",
     }

@@ -14,7 +14,7 @@ import click
 from analysis.command.caution import CAUTION
 from analysis.command.deadline import Deadline, deadline_of, deadline_options
 from analysis.command.entry import CheckFailed, Interrupted, say
-from analysis.command.options import ENGINES, request_of, require_folder
+from analysis.command.options import ENGINES, request_of, require_cluster, require_folder
 from analysis.command.output import put_caution, put_json, put_table, put_text
 from analysis.command.progress import about
 from sim.errors import BrimlineError
@@ -33,6 +33,11 @@ from sim.errors import BrimlineError
     "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
 )
 @click.option(
+    "--cluster",
+    metavar="ADDRESS",
+    help="Run on the machines of a cluster; see `brimline cluster --help`.",
+)
+@click.option(
     "--engine", type=click.Choice(ENGINES), help="Simulation engine [default: by the size of the job]."
 )
 @click.option(
@@ -47,6 +52,7 @@ def command(
     budget: int | None,
     estimate: bool,
     workers: int | None,
+    cluster: str | None,
     engine: str | None,
     as_json: bool,
 ) -> None:
@@ -60,17 +66,20 @@ def command(
 
     deadline = deadline_of(until, hours, minutes, budget)
     title, batch = _read(plan, {"workers": workers, "engine": engine})
-    folder = out or folder_of(plan)
+    folder, address = out or folder_of(plan), require_cluster(cluster, workers)
     require_folder(folder)
     with Store(folder, write=True) as store:
-        state = _opened(store, batch, deadline, plan, title)
-        efforts = _efforts(batch, state)
-        _tell_estimate(state)
-        if estimate:
-            state.close("planned", None)
-            state.log("ended: an estimate only")
-        else:
-            _run(store, state, efforts)
+        state = _opened(store, batch, deadline, plan, title, others=address is not None)
+        efforts = _efforts(batch, state, address)
+        try:
+            _tell_estimate(state)
+            if estimate:
+                state.close("planned", None)
+                state.log("ended: an estimate only")
+            else:
+                _run(store, state, efforts)
+        finally:
+            _leave(efforts)
         document = state.document()
     if as_json:
         put_json(document)
@@ -112,14 +121,14 @@ def _request(part: Any) -> Any:
     return request
 
 
-def _opened(store: Any, batch: Any, deadline: Deadline, plan: Path, title: str) -> Any:
+def _opened(store: Any, batch: Any, deadline: Deadline, plan: Path, title: str, *, others: bool) -> Any:
     """The batch held against the store, with its log begun."""
     from analysis.command.batch_state import State
     from sim.provenance import fingerprint
 
     here = json.dumps(fingerprint(), sort_keys=True)
     for stock in batch.stocks:
-        stock.open(store, here)
+        stock.open(store, here, others=others)
     arguments = ["brimline", *(click.get_current_context().obj or ("batch", str(plan)))]
     state = State(batch, store.folder, deadline, plan=str(plan), title=title, command=arguments)
     state.log(f"begun: {' '.join(arguments)}")
@@ -144,8 +153,11 @@ def _tell(state: Any, text: str) -> None:
     state.log(text)
 
 
-def _efforts(batch: Any, state: Any) -> dict[int, Any]:
-    """How each stock that lacks runs is run, each chosen as if the whole batch were of its kind; one set of workers."""
+def _efforts(batch: Any, state: Any, address: str | None) -> dict[int, Any]:
+    """How each stock that lacks runs is run, each chosen as if the whole batch were of its kind; one set of workers.
+
+    address: of the cluster whose workers these are.
+    """
     from analysis.command.running import effort, size_of
 
     whole, found = batch.missing, {}
@@ -156,12 +168,25 @@ def _efforts(batch: Any, state: Any) -> dict[int, Any]:
             found[place] = effort(request, -(-whole // cells), cells)
             stock.pace = found[place].pace
     most = max(found.values(), key=lambda one: one.count, default=None)
-    if most is not None:
-        state.workers = most.count
+    if most is None:
+        return {}
+    workers = most.workers if address is None else _cluster(state, address)
+    state.workers = count = most.count if address is None else workers.count
     return {
-        id(batch.stocks[place]): replace(one, workers=most.workers, count=most.count)
-        for place, one in found.items()
+        id(batch.stocks[place]): replace(one, workers=workers, count=count) for place, one in found.items()
     }
+
+
+def _cluster(state: Any, address: str) -> Any:
+    """The cluster's workers, kept from one round to the next; the first is not waited for beyond the deadline."""
+    from analysis.command.running import cluster_workers
+    from sim.cluster import FIRST_SECONDS
+
+    left = state.deadline.seconds_left
+    return cluster_workers(
+        address, notice=lambda text: _tell(state, text), watch=state.note, stays=True,
+        first_seconds=FIRST_SECONDS if left is None else min(left, FIRST_SECONDS),
+    )  # fmt: skip
 
 
 def _tell_estimate(state: Any) -> None:
@@ -175,6 +200,13 @@ def _tell_estimate(state: Any) -> None:
         f"already, {runs['missing']:,} to run: {about(document['seconds_left'] or 0.0)} with {state.workers} workers",
     )
     _tell(state, f"running {state.deadline.reads}")
+
+
+def _leave(efforts: dict[int, Any]) -> None:
+    """The cluster, if there is one."""
+    for workers in {id(one.workers): one.workers for one in efforts.values()}.values():
+        if hasattr(workers, "close"):
+            workers.close()
 
 
 # ---- while it runs ----

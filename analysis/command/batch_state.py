@@ -47,6 +47,7 @@ class State:
         self._at: tuple[int, Piece] | None = None
         self.speed, self._closed = Speed(), None
         self._next = 0.0
+        self.machines: str | None = None
 
     # ---- what happens ----
 
@@ -74,6 +75,12 @@ class State:
             self.failures.append((stock, failure))
             self.log(f"failed: {failure}")
         self.speed.add(time.monotonic(), runs, stock.seconds(runs))
+        if time.monotonic() >= self._next:
+            self.save()
+
+    def note(self, machines: str) -> None:
+        """How the machines of a cluster do; told from time to time even where nobody answers."""
+        self.machines = machines
         if time.monotonic() >= self._next:
             self.save()
 
@@ -113,9 +120,10 @@ class State:
             "bounds": self.deadline.reads, "clock": self.deadline.clock_moved,
             "runs": {
                 "asked": self.asked, "reused": self.reused, "computed": self.computed, "failed": failed,
-                "missing": self.asked - self.reused - self.computed,
+                "missing": self.batch.missing,
             },
             "runs_per_second": self.speed.runs_per_second(moment), "workers": self.workers,
+            "machines": self.machines,
             "seconds_left": left, **({} if left is not None else {"reason": "no run has been finished lately"}),
             "seconds_to_deadline": self.deadline.seconds_left,
             "now": None if self._at is None else {

@@ -164,8 +164,14 @@ def _game_takes(expected: dict[str, Any]) -> str:
         return expected["reason"][0].upper() + expected["reason"][1:] + "."
     return (
         f"Expected: {about(expected['game_seconds'])} and {expected['game_bytes'] / 1e6:.0f} MB on "
-        f"{expected['workers']} worker(s) with the {expected['engine']} engine."
+        f"{expected['workers']} worker(s) with the {expected['engine']} engine{_whose(expected)}."
     )
+
+
+def _whose(expected: dict[str, Any]) -> str:
+    """Said where the estimate is not for this machine."""
+    here = expected["estimated_for"] == "this machine"
+    return "" if here else f" (estimated for {expected['estimated_for']})"
 
 
 def _rhythm(group: dict[str, Any]) -> str:

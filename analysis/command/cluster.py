@@ -25,8 +25,8 @@ SLEEP = {
 def command() -> None:
     """Several machines as one: keys, the scheduler, workers, and who is there.
 
-    One machine makes keys (`create`); all get a copy. One runs `host`, the others (and it) `join`. Then `simulate` or
-    `game` with `--cluster ADDRESS` runs on all of them, with the same answers.
+    One machine makes keys (`create`); all get a copy. One runs `host`, the others (and it) `join`. Then `simulate`,
+    `game` or `batch` with `--cluster ADDRESS` runs on all of them, with the same answers.
     """
 
 
@@ -93,6 +93,7 @@ def host(host: str, port: int, keys: Path | None) -> None:
 def join(address: str, workers: int | None, host: str | None, name: str | None, keys: Path | None) -> None:
     """Lend this machine's cores to the scheduler at ADDRESS, until Ctrl-C."""
     _ready("brimline cluster")
+    from sim.machines.ahead import compile_ahead
     from sim.machines.keys import full_address
     from sim.machines.processes import keep_running
     from sim.workers import available_cores
@@ -104,6 +105,7 @@ def join(address: str, workers: int | None, host: str | None, name: str | None, 
         _usable(host, "--host")
     folder = _checked(keys)
     _advise()
+    compile_ahead(say=say)
     count, called = workers or available_cores(), (name or socket.gethostname()).replace("/", "-")
     say(f"{called} lends {count} workers to {full}; Ctrl-C takes them back")
     settings = {"address": full, "workers": count, "host": host, "name": called, "keys": str(folder)}

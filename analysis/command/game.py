@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import replace
+from dataclasses import asdict, replace
 from typing import Any
 
 import click
 
+from analysis.command import racing
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.counterpart import (
@@ -16,6 +17,7 @@ from analysis.command.counterpart import (
     run_counterpart_table,
     show_counterpart,
 )
+from analysis.command.deadline import deadline_of, deadline_options
 from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.game_beyond import (
     beyond_options,
@@ -52,6 +54,8 @@ LONG_YEARS = 100  # of watching, beyond which the number says nothing more
 @click.option("--epsilon", type=FiniteRange(0), metavar="X",
               help="Simulated: regret within which an equilibrium is confirmed, in the goal's unit [default: the gain "
                    "that takes a manager 10 years of own data to notice].")  # fmt: skip
+@racing.race_option
+@deadline_options
 @controls_option
 @counterpart_option
 @click.option("--control", is_flag=True, help="With --exact: also the best rule that sees the whole network.")
@@ -60,7 +64,8 @@ LONG_YEARS = 100  # of watching, beyond which the number says nothing more
 @beyond_options
 def game(
     request: Request, exact: bool, tolerance: float, epsilon: float | None, controls: bool, counterpart: bool,
-    control: bool, search: str | None, phase_fit: int | None, **wanted: Any,
+    control: bool, search: str | None, phase_fit: int | None, race: bool | None, until: Any, hours: float | None,
+    minutes: float | None, budget: int | None, **wanted: Any,
 ) -> None:  # fmt: skip
     """Payoff table, best responses, equilibria, optimum, and the prices of anarchy and stability.
 
@@ -74,7 +79,8 @@ def game(
     from analysis.game_document import game_document
     from analysis.games import analyse
 
-    begun = started()
+    begun, deadline = started(), deadline_of(until, hours, minutes, budget)
+    bounds = {"until": until, "hours": hours, "minutes": minutes, "budget": budget}
     if search is not None and not exact:
         raise click.BadOptionUsage("--search", "--search is for --exact only")
     if exact and epsilon is not None:
@@ -100,11 +106,24 @@ def game(
         _finish_search(request, game_search.searched(request, choice, tolerance, told=fits))
         return
     best = best_rule(request, exact) if control else None
-    table, ran, told = _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
-    run = request.scenario.run
-    analysis = analyse(table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed)
+    by_race = racing.choose(request, race, bounds, exact=exact, counterpart=counterpart)
+    if by_race is not None and by_race.race:
+        analysis, ran, told = racing.raced(
+            request, by_race, deadline, controls=controls, epsilon=epsilon, tolerance=tolerance
+        )
+    else:
+        table, ran, told = (
+            _exact_table(request) if exact else _simulated_table(request, controls, counterpart)
+        )
+        run = request.scenario.run
+        analysis = analyse(
+            table, tolerance=tolerance, confidence=run.confidence, epsilon=epsilon, seed=run.seed
+        )
+        told |= {} if by_race is None else {"race_choice": asdict(by_race)}
     document = request.heading | {"method": "exact" if exact else "simulated"} | game_document(analysis)
     document |= told | fits
+    if analysis.race is not None:
+        racing.tell(document, analysis)
     found = look_beyond(request, analysis, document, **wanted)
     if best is not None:
         document["control"] = beside(best, analysis)
@@ -194,8 +213,10 @@ def _show(analysis: Any, document: dict[str, Any], found: Any) -> None:
     put_text(f"Goal: {document['goal']}. Welfare: {document['welfare']['reads']}.")
     show_fits(document)
     if not analysis.is_exact:
+        at_most = "" if analysis.race is None else "At most "
         put_text(
-            f"{document['replications']} paired replications, {100 * document['confidence']:g} % intervals."
+            f"{at_most}{document['replications']} paired replications, {100 * document['confidence']:g} % intervals.",
+            *document.get("racing", {}).get("reads", ()),
         )
         put_text(*controls_sentence(document))
         show_counterpart(document)

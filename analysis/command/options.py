@@ -57,17 +57,25 @@ class FiniteRange(click.FloatRange):
         return super().convert(number, param, ctx)
 
 
-def scenario_command(function: Callable[..., Any]) -> click.Command:
-    """A command on one SCENARIO with the common options; the function gets a Request and its own options."""
+def scenario_command(
+    function: Callable[..., Any], *, own_axes: Sequence[str] = (), check: Callable[..., list[Fault]] | None = None
+) -> click.Command:  # fmt: skip
+    """A command on one SCENARIO with the common options; the function gets a Request and its own options.
+
+    own_axes: common options that the command takes in a form of its own. check: gives the faults of its own options,
+    from the scenario and their values, so that they are told of with all others.
+    """
 
     @functools.wraps(function)
     def read_then_run(**values: Any) -> Any:
         own = {name: value for name, value in values.items() if name not in _COMMON}
-        return function(request_of(values), **own)
+        also = None if check is None else lambda scenario: check(scenario, own)
+        return function(request_of(values, also), **own)
 
     decorated: Callable[..., Any] = read_then_run
-    for option in reversed(_OPTIONS):
-        decorated = option(decorated)
+    for name, option in reversed(list(zip(_COMMON, _OPTIONS, strict=True))):
+        if name not in own_axes:
+            decorated = option(decorated)
     return click.command(epilog=CAUTION)(decorated)
 
 
@@ -116,8 +124,8 @@ _COMMON = (
 )  # fmt: skip
 
 
-def request_of(values: Mapping[str, Any]) -> Request:
-    """The request that the values of the common options make; ScenarioError with every fault."""
+def request_of(values: Mapping[str, Any], also: Callable[[Any], list[Fault]] | None = None) -> Request:
+    """The request that the values of the common options make; ScenarioError with every fault, also's too."""
     from sim.scenario import read_scenario
 
     scenario = read_scenario(values["scenario"])
@@ -125,6 +133,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
     scenario, policy = overridden(scenario, values, faults)
     _writable(values["out"], faults)
     cluster = _cluster(values, faults)
+    faults += also(scenario) if also is not None else []
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
     return Request(
@@ -156,6 +165,15 @@ def require_folder(folder: Path) -> None:
     _writable(folder, faults)
     if faults:
         raise ScenarioError(faults)
+
+
+def require_cluster(address: str | None, workers: int | None) -> str | None:
+    """The full address of a cluster; ScenarioError where it cannot be used."""
+    faults: list[Fault] = []
+    full = _cluster({"cluster": address, "workers": workers}, faults)
+    if faults:
+        raise ScenarioError(faults)
+    return full
 
 
 def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:

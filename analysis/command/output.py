@@ -16,7 +16,8 @@ from sim.wording import count as count
 PLAIN_WIDTH = 132
 WRITTEN = (
     "result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*", "warm-up.*",
-    "hour-of-week.*", "replies.*", "price-over-weights.*", "comparison-*.*", "ledger.*",
+    "hour-of-week.*", "replies.*", "price-over-weights.*", "comparison-*.*", "ledger.*", "points.csv",
+    "sweep-*.*", "align*.*",
 )  # fmt: skip
 
 
@@ -45,7 +46,10 @@ def put_table(title: str, columns: Sequence[str], rows: Iterable[Sequence[Any]])
 
     Where it is too wide, columns go on in further blocks, each with the first column again.
     """
-    texts = [[cell if isinstance(cell, str) else number(cell) for cell in row] for row in rows]
+    from sim.wording import visible
+
+    texts = [[visible(cell if isinstance(cell, str) else number(cell)) for cell in row] for row in rows]
+    columns = [visible(column) for column in columns]
     screen = console()
     for place, block in enumerate(_blocks(columns, texts, screen.width)):
         picked = [[line[column] for column in block] for line in (columns, *texts)]
@@ -84,7 +88,9 @@ def _table(columns: Sequence[str], *rows: Sequence[str]) -> Any:
 
 def put_grid(title: str, header: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
     """A dense grid of short numbers: every column as narrow as its widest entry, never wrapped."""
-    lines = [list(header), *map(list, rows)]
+    from sim.wording import visible
+
+    lines = [[visible(cell) for cell in line] for line in (header, *rows)]
     widths = [max(len(line[place]) for line in lines) for place in range(len(header))]
     put_text(title)
     for line in lines:
@@ -94,8 +100,10 @@ def put_grid(title: str, header: Sequence[str], rows: Sequence[Sequence[str]]) -
 
 def put_text(*lines: str) -> None:
     """Lines of text, wrapped at the terminal's width."""
-    for line in lines:
-        console().print(line, soft_wrap=not sys.stdout.isatty())
+    from sim.wording import visible
+
+    for line in (part for text in lines for part in text.split("\n")):
+        console().print(visible(line), soft_wrap=not sys.stdout.isatty())
 
 
 def put_caution() -> None:

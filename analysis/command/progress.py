@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import os
 import signal
+import stat
 import sys
 import time
 from collections.abc import Iterator
+from contextlib import suppress
 from types import TracebackType
 from typing import Any, Protocol
 
@@ -103,11 +106,13 @@ def progress(label: str, total: int, unit: str) -> Any:
     return (_Bar if sys.stderr.isatty() else _Lines)(label, total, unit)
 
 
-_ENDING = (signal.SIGINT, signal.SIGTERM)
+_HANG_UP = getattr(signal, "SIGHUP", None)  # the terminal was closed
+_ENDING = tuple(one for one in (signal.SIGINT, signal.SIGTERM, _HANG_UP) if one is not None)
 
 
 class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `for`
-    """The replies as they come; Ctrl-C (or a polite request to end) ends them, and `interrupted` tells that it did.
+    """The replies as they come; Ctrl-C (or a polite request to end, or a terminal that is closed) ends them, and
+    `interrupted` tells that it did.
 
     Inside the `with` block a signal can break only the wait for the next reply, never the handling of one, so
     nothing that has arrived is lost.
@@ -119,12 +124,16 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
         self.interrupted = False
 
     def __enter__(self) -> until_interrupted:
-        self._before = {one: signal.signal(one, self._on_interrupt) for one in _ENDING}
+        heard = [
+            one for one in _ENDING if one != _HANG_UP or signal.getsignal(one) != signal.SIG_IGN
+        ]  # nohup
+        self._before = {one: signal.signal(one, self._on_interrupt) for one in heard}
         return self
 
     def __exit__(self, *_: object) -> None:
         for one, handler in self._before.items():
-            signal.signal(one, handler)
+            if signal.getsignal(one) != signal.SIG_IGN:  # `_leave_terminal`
+                signal.signal(one, handler)
         self._replies.close()  # type: ignore[attr-defined] - after an error in handling a reply
 
     def __iter__(self) -> Iterator[Any]:
@@ -142,14 +151,27 @@ class until_interrupted:  # noqa: N801 - reads as a function in a `with` and a `
         finally:
             self._waiting = False
 
-    def _on_interrupt(self, *_: object) -> None:
+    def _on_interrupt(self, number: int, _: object) -> None:
         self.interrupted = True
+        if number == _HANG_UP:
+            _leave_terminal()
         if self._waiting:
             raise KeyboardInterrupt
 
     def _stop(self) -> None:
         self._replies.close()  # type: ignore[attr-defined]
         raise StopIteration
+
+
+def _leave_terminal() -> None:
+    """Nothing more can be said there; a second hang-up (the shell's) must not break off what is being written."""
+    signal.signal(_HANG_UP, signal.SIG_IGN)  # type: ignore[arg-type]
+    nowhere = os.open(os.devnull, os.O_WRONLY)
+    for number in (1, 2):
+        with suppress(OSError):
+            if stat.S_ISCHR(os.fstat(number).st_mode):
+                os.dup2(nowhere, number)
+    os.close(nowhere)
 
 
 def about(seconds: float) -> str:

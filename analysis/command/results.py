@@ -139,13 +139,17 @@ def export(folder: Path, file: Path) -> None:
 
 def _write_csv(store: Any, file: Path) -> None:
     """Numbers in full precision."""
+    from sim.wording import in_spreadsheet
+
     with file.open("w", newline="", encoding="utf-8") as opened:
         rows = store.unit_rows()
         first = next(rows, None)
         if first is not None:
             lines = csv.DictWriter(opened, first)
             lines.writeheader()
-            lines.writerows(itertools.chain([first], rows))
+            lines.writerows(
+                row | {"unit": in_spreadsheet(row["unit"])} for row in itertools.chain([first], rows)
+            )
 
 
 def _write_parquet(store: Any, file: Path) -> None:

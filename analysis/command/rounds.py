@@ -15,8 +15,8 @@ from analysis.command.progress import until_interrupted
 from analysis.command.running import Effort, size_of
 from sim import engines
 from sim.lowering import lower_network, lower_policy, plan_intake
-from sim.replicate import Failure, Run, Share, replicate_shares
-from sim.resuming import Job
+from sim.replicate import Failure, Run, Share, Stranded, replicate_shares
+from sim.resuming import Job, run_whole
 
 INTERRUPTED = "interrupted"
 Reply = list[Run] | Failure
@@ -57,8 +57,9 @@ class Ended:
 def run_rounds(rounds: Iterable[Round], *, take: Callable[[Round, Reply], None], deadline: Deadline) -> Ended:
     """Runs them; each reply is kept by its round's job, then handed to `take`.
 
-    At the deadline no further task is handed out, and those under way (of about a second each) still arrive. Ctrl-C or
-    a polite request to end stops them at once. Whatever arrived is kept whole.
+    At the deadline no further task is handed out, and those under way (of about a second each) still arrive, unless
+    they are at machines that do not answer. Ctrl-C, a polite request to end or a closed terminal stops them at once.
+    Whatever arrived is kept whole.
     """
     ended = Ended()
     with until_interrupted(_replies(rounds, deadline, ended)) as replies:
@@ -95,7 +96,7 @@ def _replies(rounds: Iterable[Round], deadline: Deadline, ended: Ended) -> Itera
             _warm(current)
             warmed.add(id(current.policies))
         most = deadline.runs_left
-        for reply in _run(current, most, go_on):
+        for reply in _run(current, deadline, go_on):
             yield current, reply
         if most is not None and most < current.runs:
             ended.why = ended.why or BUDGET
@@ -109,13 +110,18 @@ def _warm(current: Round) -> None:
     engines.load(current.effort.engine.name).warm(lower_network(scenario), rules, plan_intake(scenario))
 
 
-def _run(current: Round, most: int | None, go_on: Callable[[], bool]) -> Iterator[Reply]:
-    shares = current.shares if most is None else within(current.shares, most)
+def _run(current: Round, deadline: Deadline, go_on: Callable[[], bool]) -> Iterator[Reply]:
     effort = current.effort
-    return replicate_shares(
-        current.scenario, current.policies, shares, engine=effort.engine.name, workers=effort.workers,
-        task_size=effort.pace.task_size(*size_of(shares), effort.count), go_on=go_on,
-    )  # fmt: skip
+
+    def run(shares: Sequence[Share]) -> Iterator[Reply | Stranded]:
+        most = deadline.runs_left
+        some = shares if most is None else within(shares, most)
+        return replicate_shares(
+            current.scenario, current.policies, some, engine=effort.engine.name, workers=effort.workers,
+            task_size=effort.pace.task_size(*size_of(some), effort.count), go_on=go_on,
+        )  # fmt: skip
+
+    return run_whole(current.shares, run, current.job)
 
 
 def within(shares: Sequence[Share], most: int) -> list[Share]:

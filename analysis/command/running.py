@@ -14,6 +14,7 @@ from analysis.command.progress import progress, until_interrupted
 from analysis.command.provenance import provenance
 from analysis.running import WORTH_PROCESSES_SECONDS, Effort, Ran, size_of
 from sim import engines
+from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.replicate import Run, replicate_networks
 
@@ -35,23 +36,26 @@ def effort(request: Request, replications: int, cells: int) -> Effort:
     return running.effort(request.scenario, request.policy, manner_of(request), replications, cells)
 
 
-def cluster_workers(address: str) -> Any:
+def cluster_workers(address: str, **options: Any) -> Any:
     """The workers behind the scheduler at that address, what they have to say going to standard error."""
     from sim.cluster import Cluster
     from sim.machines.keys import default_folder
 
-    return Cluster(address, default_folder(), notice=say)
+    return Cluster(address, default_folder(), **{"notice": say, **options})
 
 
 def expected(request: Request, cells: int) -> dict[str, Any]:
     """Expected seconds and bytes of `simulate`, and of a `game` of so many cells (null where it is too large)."""
     from analysis.payoffs import MOST_CELLS
 
-    request = replace(request, cluster=None)  # of this machine alone
+    address, request = request.cluster, replace(request, cluster=None)
     replications = request.scenario.run.replications
     feasible = cells <= MOST_CELLS
     planned = effort(request, replications, cells if feasible else 1)
+    threads = None if address is None else _threads(address)
+    planned = planned if threads is None else replace(planned, count=threads)
     return {
+        "estimated_for": "this machine" if threads is None else "the cluster, at this machine's pace",
         "engine": planned.engine.name,
         "seconds_per_run": planned.pace.running,
         "simulate_seconds": planned.pace.seconds(replications, 1),
@@ -66,6 +70,23 @@ def expected(request: Request, cells: int) -> dict[str, Any]:
             else {"reason": f"a game may have at most {MOST_CELLS:,} cells: list fewer thresholds"}
         ),
     }
+
+
+def _threads(address: str) -> int | None:
+    """The threads of the cluster's machines; None, said, where nobody is there: reading a scenario needs no cluster."""
+    try:
+        workers = cluster_workers(address)
+    except RunError as error:
+        say(f"{error}; the estimate is for this machine")
+        return None
+    try:
+        count = workers.count
+        there = bool(workers.machines)
+    finally:
+        workers.close()
+    if not there:
+        say(f"no machine at {address} that may help yet; the estimate is for this machine")
+    return count if there else None
 
 
 def run_replications(

@@ -10,6 +10,7 @@ import numpy as np
 
 from analysis.control.rule import ControlResult
 from analysis.control.states import Choice, ControlProblem, Places, Stream
+from sim.wording import in_spreadsheet
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -103,4 +104,4 @@ def _kind_names(problem: ControlProblem) -> Iterator[str]:
 
 
 def _words(stream: Stream, chosen: Places) -> np.ndarray:
-    return np.array([_reads(choice) for choice in stream.choices], dtype=object)[chosen]
+    return np.array([in_spreadsheet(_reads(choice)) for choice in stream.choices], dtype=object)[chosen]

@@ -184,7 +184,7 @@ class GameAsked:
     @property
     def own(self) -> tuple[str, ...]:
         """The command's own options."""
-        options = [("--exact",)] if self.exact else []
+        options = [("--exact",) if self.exact else ("--no-race",)]
         options += [("--tolerance", str(self.tolerance))] if self.tolerance != 1e-9 else []
         options += [] if self.epsilon is None else [("--epsilon", str(self.epsilon))]
         options += [] if self.controls else [("--no-controls",)]

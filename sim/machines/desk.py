@@ -39,6 +39,7 @@ class _Group:
     bits: str | None
     alone: bool  # of one task only
     size: int
+    pinned: bool  # to its bits, before anything was handed out
     works: set[_Work] = field(default_factory=set)  # those whose answers have not been handed on
     held: list[Reply] = field(default_factory=list)
     weight: int = 0  # of what is held, or has been handed on
@@ -77,7 +78,9 @@ class Desk:
     """Hands out `tasks` as workers become free.
 
     own: this machine's bits; groups of them are answered task by task, others only when they are whole. binding:
-    what the task of a key belongs to; by default each stands alone. clock: seconds.
+    what the task of a key belongs to; by default each stands alone. clock: seconds. Of desks that follow each other,
+    numbers: of orders, so that a late answer to one is known to be no other's. left: bits -> when a worker with them
+    last left; began: when workers could first come.
     """
 
     def __init__(
@@ -87,6 +90,9 @@ class Desk:
         own: str,
         clock: Callable[[], float],
         binding: Callable[[Hashable], Binding] | None = None,
+        numbers: Iterator[int] | None = None,
+        left: dict[str, float] | None = None,
+        began: float | None = None,
     ) -> None:
         self._source, self._own, self._clock = iter(tasks), own, clock
         self._binding = binding or Binding
@@ -95,12 +101,13 @@ class Desk:
         self._waiting: dict[str | None, deque[_Work]] = {None: deque()}  # by the bits that they need
         self._suspects: list[_Work] = []
         self._orders: dict[int, _Work] = {}
-        self._numbers = itertools.count()
+        self._numbers = itertools.count() if numbers is None else numbers
         self._ahead = next(self._source, None)
         self._open = 0
         self._here: _Work | None = None
-        self._began = clock()
-        self._left: dict[str, float] = {}  # bits -> when a worker with them last left
+        self._began = clock() if began is None else began
+        self._left = {} if left is None else left
+        self._stopped = False
         self._late_ones: list[tuple[float, _Work]] | None = None
         self._seconds, self._answers = 0.0, 0
         self.reissued = self.requeued = 0
@@ -151,7 +158,9 @@ class Desk:
         return []
 
     def _wait(self, work: _Work) -> None:
-        if work.lost:
+        if self._stopped:
+            self._drop(work)
+        elif work.lost:
             self._suspects.append(work)
         else:
             self._waiting.setdefault(work.group.bits, deque()).append(work)
@@ -219,7 +228,7 @@ class Desk:
         alone = binding.weight >= binding.size
         group = self._groups.get(binding.group)
         if group is None:
-            group = _Group(binding.group, binding.bits, alone, binding.size)
+            group = _Group(binding.group, binding.bits, alone, binding.size, binding.bits is not None)
             if not alone:
                 self._groups[binding.group] = group
         work = _Work(task, group, binding.weight)
@@ -241,8 +250,7 @@ class Desk:
         return None
 
     def _find_late(self) -> list[tuple[float, _Work]]:
-        usual = self._seconds / max(1, self._answers)
-        late = self._clock() - max(LATE_SECONDS, 2 * usual)
+        late = self._clock() - max(LATE_SECONDS, 2 * self.usual_seconds)
         late_ones = dict.fromkeys(self._orders.values())  # in the order in which they were sent
         works = [work for work in late_ones if not work.lost and len(work.copies) < MOST_COPIES]
         asked = [(max(at for _, at in work.copies.values()), work) for work in works]
@@ -302,9 +310,13 @@ class Desk:
         if group.alone or group.bits == self._own:
             return self._released(group, [work], [reply])
         group.held.append(reply)
-        cut_short = self._ahead is None and len(group.held) == len(group.works)  # by whoever gave the tasks
-        if group.weight < group.size and not cut_short:
-            return []
+        return self._whole(group) if group.weight >= group.size else self._cut_short(group)
+
+    def _cut_short(self, group: _Group) -> list[Reply]:
+        """What is held, where whoever gave the tasks gives no more of this group."""
+        return self._whole(group) if self._ahead is None and len(group.held) == len(group.works) else []
+
+    def _whole(self, group: _Group) -> list[Reply]:
         held, group.held = group.held, []
         return self._released(group, list(group.works), held)
 
@@ -317,6 +329,31 @@ class Desk:
     def finished(self) -> bool:
         """Whether every task has been answered."""
         return self._ahead is None and self._open == 0
+
+    # ---- an early end ----
+
+    def stop(self) -> list[Reply]:
+        """Nothing more is handed out, what is under way may still arrive; gives what need not wait for more."""
+        self._stopped, self._ahead, self._source = True, None, iter(())
+        waiting = [*itertools.chain.from_iterable(self._waiting.values()), *self._suspects]
+        self._waiting, self._suspects = {None: deque()}, []
+        for work in waiting:
+            self._drop(work)
+        return [reply for group in self._groups.values() for reply in self._cut_short(group)]
+
+    def _drop(self, work: _Work) -> None:
+        if not work.done and not work.copies and work in work.group.works:
+            work.group.works.remove(work)
+            self._open -= 1
+
+    def give_up(self) -> list[Reply]:
+        """No longer waits for what is under way; gives what was held for it."""
+        return [reply for group in self._groups.values() for reply in group.held]
+
+    @property
+    def usual_seconds(self) -> float:
+        """From an order to its answer, on average; 0 before the first."""
+        return self._seconds / max(1, self._answers)
 
     # ---- bits that nobody has any more ----
 
@@ -331,16 +368,17 @@ class Desk:
         gone = [
             group
             for group in self._groups.values()
-            if group.works and group.bits not in (None, self._own) and self._gone(group.bits)
+            if group.works
+            and not group.pinned
+            and group.bits not in (None, self._own)
+            and self._gone(group.bits)
         ]
         for group in gone:
             self._begin_again(group)
         return len(gone)
 
     def _begin_again(self, group: _Group) -> None:
-        self._suspects = [work for work in self._suspects if work.group is not group]
-        waiting = self._waiting.get(group.bits, deque())
-        self._waiting[group.bits] = deque(work for work in waiting if work.group is not group)
+        self._take_from_waiting(group)
         group.bits = None
         group.held.clear()
         group.weight = 0
@@ -348,6 +386,29 @@ class Desk:
         for work in group.works:
             work.done = False
             self._wait(work)
+
+    def _take_from_waiting(self, group: _Group) -> None:
+        self._suspects = [work for work in self._suspects if work.group is not group]
+        waiting = self._waiting.get(group.bits, deque())
+        self._waiting[group.bits] = deque(work for work in waiting if work.group is not group)
+
+    def hand_back(self) -> list[Reply]:
+        """The tasks of groups pinned to foreign bits that are gone, answered as handed back: they may begin again."""
+        needed = {*self._waiting, *(work.group.bits for work in self._suspects)} - {None, self._own}
+        gone = {bits for bits in needed if self._gone(bits)}
+        works = [work for bits in gone for work in self._waiting.get(bits, ())]
+        works += [work for work in self._suspects if work.group.bits in gone]
+        groups = dict.fromkeys(work.group for work in works if work.group.pinned)
+        return [reply for group in groups for reply in self._handed_back(group)]
+
+    def _handed_back(self, group: _Group) -> list[Reply]:
+        self._take_from_waiting(group)
+        self._groups.pop(group.key, None)
+        group.held.clear()
+        works = list(group.works)
+        for work in works:
+            work.done = True
+        return self._released(group, works, [Reply(work.task[0], handed_back=True) for work in works])
 
     def to_run_here(self) -> Task | None:
         """A task that needs this machine's bits, which no worker has had for long: run it, and call `ran_here`."""

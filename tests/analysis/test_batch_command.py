@@ -14,6 +14,7 @@ from pathlib import Path
 import pytest
 
 from analysis.command.batch_state import LOG, SNAPSHOT
+from analysis.command.progress import until_interrupted
 from analysis.command.watching import snapshot
 from sim import reference, replicate
 from sim.store_file import LOCK
@@ -31,7 +32,7 @@ analyses = ["simulate", "game"]
 """
 ROOT = Path(__file__).resolve().parents[2]
 RUNS = 2 * 6 * 30
-KILLED_AT = (0, 70, 250)  # `python -m tests.batch_endurance` has twenty moments
+KILLED_AT = (0, 200)  # `python -m tests.batch_endurance` has twenty moments
 
 
 # Drawing would take most of the time.
@@ -72,7 +73,9 @@ def wait_for(process, folder, rows):
         time.sleep(0.005)
 
 
-def test_a_plan_is_run_whole_and_every_part_has_its_commands_own_result(call, plan, tmp_path):
+def test_a_plan_is_run_whole_every_part_has_its_commands_own_result_and_results_knows_it(
+    call, plan, tmp_path
+):
     folder = tmp_path / "r"
     status, document = call("batch", plan, "--out", folder)
     assert (status, document["state"], document["ended_because"]) == (0, "complete", None)
@@ -81,17 +84,13 @@ def test_a_plan_is_run_whole_and_every_part_has_its_commands_own_result(call, pl
     assert json.loads((folder / SNAPSHOT).read_text())["parts"] == document["parts"]
     for part in document["parts"]:
         kept = json.loads((folder / part["result"]).read_text())
-        alone = call(*part["command"][1:])[1]
-        assert part["reached"] == 30 and numbers(kept) == numbers(alone)
+        assert part["reached"] == 30
+        if part in document["parts"][::2]:
+            assert numbers(kept) == numbers(call(*part["command"][1:])[1])
         origin = json.loads((folder / part["name"] / "provenance.json").read_text())
         assert origin["command"] == [*part["command"], "--out", str(folder / part["name"])]
     again = call("batch", plan, "--out", folder)[1]
     assert (again["runs"]["computed"], again["runs"]["reused"], again["state"]) == (0, RUNS, "complete")
-
-
-def test_results_knows_a_batch(call, plan, tmp_path):
-    folder = tmp_path / "r"
-    assert call("batch", plan, "--out", folder)[0] == 0
     shown = call("results", "show", folder)[1]
     assert (shown["complete"], shown["rows"], shown["scenarios"]) == (True, RUNS, 2)
     assert call("results", "verify", folder)[1]["checked"] == 20
@@ -202,7 +201,31 @@ def test_kill_9_at_any_moment_then_resume_gives_the_store_of_an_uninterrupted_ba
         assert numbers(results[0]) | {"reused": 0} == numbers(results[1]) | {"reused": 0}
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+@pytest.mark.skipif(not hasattr(signal, "SIGHUP"), reason="terminals of POSIX")
+def test_every_way_to_ask_for_an_end_is_heard_and_a_hang_up_is_not_heard_under_nohup():
+    """The second hang-up, a shell's beside the terminal's, must not break off what is being written."""
+    for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
+        before = signal.getsignal(number)
+        with until_interrupted(signalled(number)) as replies:
+            assert list(replies) == [0]
+        with until_interrupted(one for one in range(3)) as again:
+            if number == signal.SIGHUP:
+                signal.raise_signal(number)
+            assert list(again) == [0, 1, 2]
+        assert replies.interrupted and not again.interrupted
+        assert signal.getsignal(number) == (signal.SIG_IGN if number == signal.SIGHUP else before)
+    with until_interrupted(signalled(signal.SIGHUP)) as replies:  # it is ignored now, as under nohup
+        assert list(replies) == [0, 1]
+    signal.signal(signal.SIGHUP, signal.SIG_DFL)
+
+
+def signalled(number):
+    yield 0
+    signal.raise_signal(number)
+    yield 1
+
+
+@pytest.mark.parametrize("number", [signal.SIGINT, getattr(signal, "SIGHUP", signal.SIGTERM)])
 def test_a_request_to_end_keeps_what_was_computed_and_writes_the_results(call, plan, tmp_path, number):
     folder = tmp_path / "r"
     ended = client("batch", plan, "--out", folder)

@@ -18,7 +18,12 @@ from sim import reference, replicate
 from tests.analysis.conftest import TWO, written
 
 HOSTILE = '<script>alert("x")</script>&amp;'
-ANYWAY = {"engine_choice", "structure", "search"}  # a command's own; `engine` is asserted apart
+ANYWAY = {
+    "engine_choice",
+    "structure",
+    "search",
+    "race_choice",
+}  # a command's own; `engine` is asserted apart
 
 
 def said_by(call, *arguments):

@@ -23,11 +23,11 @@ from sim.store import Store
 from sim.store_file import FILE
 
 ROOT = Path(__file__).resolve().parents[2]
-TOLD_OF_THE_STORE = {"computed", "reused", "engine", "engine_choice"}
+TOLD_OF_THE_STORE = {"computed", "reused", "engine", "engine_choice", "race_choice"}
 
 
 def numbers(document):
-    """A document without what it says of the store and of the engine's choice."""
+    """A document without what it says of the store and of how it was chosen to run."""
     return {name: value for name, value in document.items() if name not in TOLD_OF_THE_STORE}
 
 

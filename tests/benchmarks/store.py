@@ -17,6 +17,7 @@ from contextlib import closing
 from dataclasses import replace
 from pathlib import Path
 
+from analysis.payoffs import TableSums
 from sim.replicate import replicate
 from sim.resuming import Job
 from sim.scenario import parse_scenario
@@ -126,7 +127,9 @@ def resuming(folder: Path, rows: int) -> None:
         job = Job(store, SCENARIO, some, 1, fingerprint=HERE)
         for reply in replicate(SCENARIO, some, [0]):
             job.keep(reply, "reference")
+    began = time.perf_counter()
     _fill(folder / FILE, replications)
+    print(f"filled by copying in {time.perf_counter() - began:.0f} s")
     size = sum(file.stat().st_size for file in folder.iterdir())
     print(f"store of {rows:,} rows of two units: {size / 1e9:.2f} GB, {size / rows:,.0f} bytes a row")
     opened: list[Store] = []
@@ -140,6 +143,9 @@ def resuming(folder: Path, rows: int) -> None:
     print(f"what is missing found in {taken:.2f} s of CPU ({jobs[0].missing} of {jobs[0].asked:,})")
     taken = processor_seconds_of(lambda: sum(len(runs) for runs in jobs[0].kept_runs()))
     print(f"all kept runs read and their hashes held against their bits in {taken:.1f} s of CPU")
+    sums = TableSums(SCENARIO, CELLS, replications + 1)
+    taken = processor_seconds_of(lambda: [sums.add(runs) for runs in jobs[0].kept_runs()])
+    print(f"read again, and added up into the table of a game, in {taken:.1f} s of CPU")
     opened[0].close()
 
 
@@ -164,8 +170,11 @@ def main() -> None:
     """Everything, in turn."""
     parser = argparse.ArgumentParser()
     parser.add_argument("--rows", type=int, default=1_000_000)
-    rows = parser.parse_args().rows
-    workers()
+    parser.add_argument("--store-only", action="store_true", help="nothing about workers")
+    asked = parser.parse_args()
+    rows = asked.rows
+    if not asked.store_only:
+        workers()
     with tempfile.TemporaryDirectory() as place:
         rate(Path(place))
         resuming(Path(place) / "large", rows)

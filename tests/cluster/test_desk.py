@@ -170,6 +170,57 @@ def test_a_replication_whose_bits_are_gone_begins_again_whole():
     assert sorted(done) == [0, 1, 2]
 
 
+@pytest.mark.parametrize("size", [1, 3])
+def test_what_others_began_waits_for_them_and_is_handed_back_whole_when_they_stay_away(size):
+    """Also where one of its tasks has been answered, and where it is of one task only."""
+    clock, session = Clock(), {}
+    desk = Desk(tasks(size), own=OWN, clock=clock, binding=blocks(size, OTHER), left=session)
+    desk.join("a", OWN, 1)
+    assert list(desk.orders()) == [] and desk.hand_back() == []
+    desk.join("b", OTHER, 1)
+    if size > 1:
+        answer(desk, next(desk.orders()))
+    desk.leave("b")
+    clock.now = PATIENCE_SECONDS + 1
+    assert desk.begin_again() == 0, "it is not the desk's to begin it again: others hold a part of it"
+    handed = desk.hand_back()
+    assert sorted(reply.key for reply in handed) == list(range(size)) and desk.finished
+    assert all(reply.handed_back and reply.value is None for reply in handed)
+    after = Desk(tasks(1), own=OWN, clock=clock, binding=blocks(1, OTHER), left=session, began=0.0)
+    after.join("a", OWN, 1)
+    list(after.orders())
+    assert len(after.hand_back()) == 1, "the next desk of the session need not wait again"
+
+
+def test_nothing_is_handed_back_while_nobody_is_there_or_its_machines_are():
+    clock = Clock()
+    desk = desk_of(2, [("a", OWN), ("b", OTHER)], binding=blocks(2, OTHER), clock=clock)
+    clock.now = 10 * PATIENCE_SECONDS
+    assert {order.address for order in desk.orders()} == {"b"} and desk.hand_back() == []
+    desk.leave("a")
+    desk.leave("b")
+    clock.now = 20 * PATIENCE_SECONDS
+    assert desk.hand_back() == [] and not desk.finished
+
+
+def test_a_desk_that_is_stopped_hands_out_no_more_and_takes_what_is_under_way():
+    desk = desk_of(9, [("a", OWN), ("b", OTHER)], binding=blocks(3))
+    orders = list(desk.orders())
+    answer(desk, next(order for order in orders if order.address == "b"))
+    assert desk.stop() == [] and list(desk.orders()) == [] and not desk.finished
+    [theirs] = [order for order in orders if order.address == "b"][1:]
+    assert len(answer(desk, theirs)) == 2, "a foreign part that gets no more is answered as far as it is"
+    mine = [order for order in orders if order.address == "a"]
+    assert len(answer(desk, mine[0])) == 1
+    desk.leave("a")
+    assert desk.finished, "the task of a worker that is lost now is not asked for again"
+    waiting = desk_of(3, [], binding=blocks(3))
+    assert waiting.stop() == [] and waiting.finished
+    held = desk_of(3, [("b", OTHER)], binding=blocks(3))
+    answer(held, list(held.orders())[0])
+    assert held.stop() == [] and [reply.key for reply in held.give_up()] == [0]
+
+
 def test_what_was_begun_with_own_bits_waits_for_them_and_is_then_run_here():
     clock = Clock()
     desk = desk_of(2, [("b", OTHER)], binding=blocks(2, OWN), clock=clock)

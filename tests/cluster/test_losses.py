@@ -20,8 +20,14 @@ from tests.cluster import tasks
 from tests.cluster.site import ROOT, wait_for
 from tests.sim.test_replicate import SCENARIO_TEXT
 
-pytestmark = pytest.mark.slow
-CALL = [sys.executable, "-c", "from analysis.command import main; main()"]
+pytestmark = pytest.mark.by_hand
+OFTEN = """
+import analysis.command.progress
+analysis.command.progress.SECONDS_BETWEEN_LINES = 0.2
+from analysis.command import main
+main()
+"""
+CALL = [sys.executable, "-c", OFTEN]
 
 
 def numbers(count, seconds=0.2):

@@ -18,10 +18,11 @@ from hypothesis import strategies as st
 from sim.errors import StoreError
 from sim.lowering import lower_network, lower_policy, plan_intake
 from sim.record import Record
-from sim.replicate import Failure, Run, replicate, replicate_shares
-from sim.resuming import Job
+from sim.replicate import Failure, Run, Share, Stranded, replicate, replicate_shares
+from sim.resuming import Job, run_whole
 from sim.scenario import parse_scenario
 from sim.store import Store
+from sim.store_bulk import unpack_all
 from sim.store_file import FILE
 from sim.store_rows import Key, by_unit, cell_hash, pack, scenario_hash, unpack
 from tests.sim.stored import filled, record_of, row
@@ -74,6 +75,28 @@ def test_a_record_comes_back_bit_for_bit(days, counts, staffed):
 def test_bytes_that_are_no_record_are_refused(harm):
     with pytest.raises(ValueError):
         unpack(harm(pack(record_of(1.0))))
+
+
+def test_rows_of_several_shapes_read_at_once_are_those_read_alone_and_damage_is_seen():
+    """A flipped bit anywhere behind the head, a row cut short and one too long: each tells of itself only."""
+    wide = replace(record_of(3.0), staffed_days=record_of(3.0).occupancy_days)
+    records = [record_of(1.0), wide, record_of(2.0), record_of(1.0)]
+    blobs, hashes = [pack(one) for one in records], [one.hash for one in records]
+    found = unpack_all(blobs, hashes)
+    assert [pack(one) for one in found] == blobs and [one.hash for one in found] == hashes
+    assert all(
+        left.dtype == right.dtype and left.shape == right.shape
+        for one, other in zip(found, records, strict=True)
+        for left, right in zip(one.arrays().values(), other.arrays().values(), strict=True)
+    )
+    blob = blobs[0]
+    start = 4 + int.from_bytes(blob[:4], "little")
+    harmed = [
+        blob[:place] + bytes([blob[place] ^ 1]) + blob[place + 1 :] for place in range(start, len(blob))
+    ]
+    harmed += [blob[:-1], blob + b"\0", blob[:3], b"", blob[4:]]
+    found = unpack_all([*harmed, blob], hashes[:1] * (len(harmed) + 1))
+    assert found[:-1] == [None] * len(harmed) and found[-1].hash == hashes[0]
 
 
 def test_plain_numbers_by_unit_add_up_as_counted_by_hand():
@@ -193,6 +216,51 @@ def test_a_replication_begun_elsewhere_is_run_again_whole_and_a_complete_one_is_
     assert (begun.reused, begun.missing, begun.restarted) == (0, 9, (0, 1))
     with Store(tmp_path) as store:
         assert {fingerprint for fingerprint, _ in store.held(begun.scenario).values()} == {"there"}
+
+
+def stranding(shares, present):
+    """As workers of which none has these bits: what names another fingerprint is stranded."""
+    for share in shares:
+        if share.fingerprint in (None, present):
+            for reply in replicate_shares(SCENARIO, POLICIES, [share]):
+                yield [replace(run, fingerprint=present) for run in reply]
+        else:
+            yield from (Stranded((one,), share.cells) for one in share.replications)
+
+
+@pytest.mark.parametrize("present", ["there", "here"])
+def test_where_others_may_come_what_they_began_is_theirs_or_begins_again_whole(tmp_path, present):
+    """By rounds, as a batch: cells that a replication got in an earlier round are run again too."""
+    job(tmp_path, 2, "there", POLICIES[:2])
+    with Store(tmp_path, write=True) as store:
+        one = Job(store, SCENARIO, POLICIES, 3, fingerprint="here", others=True)
+        assert (one.missing, one.restarted, one.unsure) == (5, (), {0, 1})
+        one.begin({"started": "now"})
+        for cells in ({1, 2}, {0, 1, 2}):
+            for reply in run_whole(one.shares(cells), lambda some: stranding(some, present), one):
+                one.keep(reply, "reference")
+        assert one.count_missing({0, 1, 2}, 3) == 0
+        assert one.computed == {"there": 5, "here": 9}[present]
+        by = {replication: fingerprint for replication, (fingerprint, _) in store.held(one.scenario).items()}
+        assert by == dict.fromkeys(range(3), present)
+        kept = {(run.replication, run.cell): run.record.hash for runs in one.kept_runs() for run in runs}
+    plain = [run for reply in replicate(SCENARIO, POLICIES, range(3)) for run in reply]
+    assert kept == {(run.replication, run.cell): run.record.hash for run in plain}
+
+
+def test_rounds_of_one_job_name_whoever_began_a_replication_in_an_earlier_round(tmp_path):
+    with Store(tmp_path, write=True) as store:
+        one = Job(store, SCENARIO, POLICIES, 2, fingerprint="here", others=True)
+        [first] = replicate_shares(SCENARIO, POLICIES, [Share((0,), (1,))])
+        one.keep([replace(run, fingerprint="there") for run in first], "reference")
+        assert {share.replications: share.fingerprint for share in one.shares()} == {
+            (0,): None,
+            (1,): "there",
+        }
+        [other] = replicate_shares(SCENARIO, POLICIES, [Share((1,), (1,))])
+        one.keep(other, "reference")  # under other bits: the store drops the first, and the job knows
+        assert one.count_missing({0, 1, 2}, 2) == 5
+        assert [len(runs) for runs in one.kept_runs()] == [1]
 
 
 def test_failures_are_noted_and_a_later_success_takes_the_note_away(tmp_path):

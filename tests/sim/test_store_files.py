@@ -104,8 +104,11 @@ def test_a_row_whose_bits_have_changed_is_refused(tmp_path):
     with closing(sqlite3.connect(tmp_path / FILE)) as db, db:
         (blob,) = db.execute("SELECT arrays FROM runs").fetchone()
         db.execute("UPDATE runs SET arrays = ?", (blob[:-1] + bytes([blob[-1] ^ 1]),))
-    with Store(tmp_path) as store, pytest.raises(StoreError, match="damaged"):
-        store.get(row().key)
+    with Store(tmp_path) as store:
+        with pytest.raises(StoreError, match="damaged"):
+            store.get(row().key)
+        with pytest.raises(StoreError, match=r"replication 0, cell c is damaged"):
+            store.records("s", ["c"], range(1))
 
 
 def test_another_programs_database_is_refused(tmp_path):

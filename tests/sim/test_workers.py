@@ -38,10 +38,8 @@ def replies(numbers, **options):
 @pytest.mark.parametrize(
     "numbers",
     [
-        [100, *range(20)],  # the first task
-        [*range(20), 100],  # the last
-        [*range(9), 100, 101, *range(9, 20), 102, 103],  # two at once, twice
-        [100, 101, 102],  # nothing else
+        [100, *range(9), 101, 102, *range(9, 20), 103],  # the first task, two at once, the last
+        [100, 101],  # nothing else
     ],
 )
 def test_killers_are_found_out_and_everything_else_is_done(numbers):
