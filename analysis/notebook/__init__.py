@@ -11,9 +11,10 @@ printed. For planning only, not for decisions on a patient or a live bed.
 from analysis.notebook.how import How
 from analysis.notebook.network import Network, read
 from analysis.notebook.results import Agreement, Comparison, Description, Exact, Game, Simulation
+from analysis.notebook.studies import Alignment, Ledger, Report, Sweep, report
 from sim.errors import BrimlineError, RunError, ScenarioError, StoreError
 
 __all__ = [
-    "Agreement", "BrimlineError", "Comparison", "Description", "Exact", "Game", "How", "Network", "RunError",
-    "ScenarioError", "Simulation", "StoreError", "read",
+    "Agreement", "Alignment", "BrimlineError", "Comparison", "Description", "Exact", "Game", "How", "Ledger", "Network",
+    "Report", "RunError", "ScenarioError", "Simulation", "StoreError", "Sweep", "read", "report",
 ]  # fmt: skip

@@ -10,6 +10,7 @@ import pandas as pd
 
 from analysis.games import GameAnalysis
 from analysis.profiles import choice_columns
+from analysis.sweeping import point_rows
 
 ENDS = ("mean", "low", "high")
 NETWORK = "network"
@@ -136,3 +137,32 @@ def _choices(game: GameAnalysis, player: int) -> pd.Index:
 def rows(tables: Mapping[str, Mapping[str, Any]], name: str) -> pd.DataFrame:
     """A frame with one row a table, its name first."""
     return pd.DataFrame([{name: key, **values} for key, values in tables.items()])
+
+
+def ledger(document: Mapping[str, Any]) -> pd.DataFrame:
+    """`closes`, `home`, `counted`, `mean`, `low`, `high`, `verdict`: patients a year."""
+    rows = ({**one, **_ends(one["a_year"])} for one in document["matrix"])
+    return _tidy(rows, ("closes", "home", "counted", *ENDS, "verdict"))
+
+
+def displaced(document: Mapping[str, Any]) -> pd.DataFrame:
+    """Whom closings displace, one row for each kind of patient."""
+    columns = ("closes", "group", "home", "without", "now", "patients", "a_year")
+    return _tidy(iter(document["displaced"]), columns)
+
+
+def points(document: Mapping[str, Any]) -> pd.DataFrame:
+    """The points of a sweep, one row each."""
+    return pd.DataFrame(list(point_rows(document["points"])))
+
+
+def losses(document: Mapping[str, Any]) -> pd.DataFrame:
+    """Every loss of an alignment, one row each."""
+    targets = [f"target {unit}" for unit in document["rows"][0]["points"][0]["targets"]]
+    rows = (
+        {"stays": row["stays"], **one, **_ends(one["lost_per_year"]), "allowed": one["allowed_per_year"]}
+        | dict(zip(targets, one["targets"].values(), strict=True))
+        for row in document["rows"]
+        for one in row["points"]
+    )
+    return _tidy(rows, ("stays", "demand", *targets, "method", "possible", *ENDS, "allowed", "verdict"))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numbers
 import os
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,6 +16,10 @@ from sim.scenario import Policy, Scenario, read_scenario
 
 if TYPE_CHECKING:
     from analysis.notebook.results import Agreement, Comparison, Description, Exact, Game, Simulation
+    from analysis.notebook.studies import Alignment, Ledger, Sweep
+
+Range = float | str | Sequence[float] | None  # one number, or (from, to, points)
+TARGETS = (0.5, 0.95, 10)  # that an alignment tries
 
 
 def read(file: str | os.PathLike[str]) -> Network:
@@ -138,6 +142,55 @@ class Network:
         from analysis.notebook import steps
 
         return steps.compare(self, How(**how), _names(policies), None if game is None else Path(game))
+
+    def ledger(self, *, traced: int = 3, **how: Any) -> Ledger:
+        """What each unit's early closing costs each home, and whom it displaces.
+
+        traced: replications that are followed patient by patient, 1 to 10,000. how: see `How`. Raises as `simulate`.
+        """
+        from analysis.notebook import study_steps
+
+        return study_steps.ledger(self, How(**how), traced)
+
+    def sweep(
+        self, *, demand: Range = None, target: Range = None, beds: Mapping[str, Any] | None = None,
+        delay: Range = None, cv: Range = None, soft: Range = None, transfer_weight: Range = None,
+        method: str | None = None, tolerance: float = 1e-9, epsilon: float | None = None, controls: bool = True,
+        **how: Any,
+    ) -> Sweep:  # fmt: skip
+        """Equilibria and the price of anarchy over a grid; each network is simulated or solved once.
+
+        An axis is `(from, to, points)`, both ends included, or one number; beds: unit -> `(from, to)` or one number.
+        demand, delay: factors. target: of every unit. cv: of stays whose family has one. soft: shares that closed
+        units still admit. transfer_weight: welfare is then a loss, patients turned away + weight x transfers. method:
+        "exact" or "simulated" for all, else network by network by cost. tolerance, epsilon, controls: as in `game`.
+        how: see `How`; exact cells are not kept. Raises as `simulate` and `exact`.
+        """
+        from analysis.notebook import study_steps as steps
+
+        ranges = {"demand": demand, "target": target, "delay": delay, "cv": cv, "soft": soft}
+        axes = steps.Axes(ranges | {"transfer_weight": transfer_weight}, beds or {}, method)
+        return steps.sweep(self, How(**how), steps.SweepAsked(axes, tolerance, epsilon, controls))
+
+    def align(
+        self, *, demand: Range = 1, target: Range = TARGETS, per_unit: bool = False, delta: str = "0.5%",
+        transfer_weight: Range = None, method: str | None = None, tolerance: float = 1e-9, controls: bool = True,
+        **how: Any,
+    ) -> Alignment:  # fmt: skip
+        """The lowest target, common or by unit, at which every possible equilibrium is near the optimum.
+
+        demand: the answer holds at all of these factors together. target: to try; axes as in `sweep`. per_unit: try
+        every combination of targets by unit. delta: the loss that is near, patients (or welfare) a year as "25", or a
+        share of arrivals as "0.5%". transfer_weight: over which the advice may turn (default: 0 to 1 by tenths, none
+        with per_unit). Stays as in the file and their exponential counterpart stand side by side. The rest as in
+        `sweep`.
+        """
+        from analysis.notebook import study_steps as steps
+
+        ranges = {"demand": 1 if demand is None else demand, "target": TARGETS if target is None else target}
+        axes = steps.Axes(ranges | {"transfer_weight": transfer_weight}, {}, method)
+        asked = steps.AlignAsked(axes, per_unit, str(delta), tolerance, controls)
+        return steps.align(self, How(**how), asked)
 
     # ---- reading ----
 

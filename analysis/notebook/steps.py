@@ -273,7 +273,7 @@ def compare(network: Network, how: How, policies: Sequence[str], game: Path | No
         "worst_year": bad_year_document(cases, sums, run.confidence) if measures_a_year(cases[0].scenario) else None,
         "replications": len(paired.complete), "confidence": run.confidence, "seed": run.seed,
         "record_hash": hash_records(paired.hashes()),
-    } | _joined(ran).to_dict()  # fmt: skip
+    } | joined(ran).to_dict()  # fmt: skip
     return Comparison(**step.told(document, ran[0].engine.name))
 
 
@@ -284,7 +284,7 @@ def _cases(network: Network, policies: Sequence[str], game: Path | None) -> list
         raise named(error.faults, error.file) from None
 
 
-def _joined(ran: Sequence[running.Ran]) -> running.Ran:
+def joined(ran: Sequence[running.Ran]) -> running.Ran:
     """Several jobs told of as one."""
     kept = ran[0].reused is not None
     return replace(
