@@ -121,7 +121,7 @@ class Block:
 
     use: (2, pairs), whether the first is judged against the second, and the reverse. D: second less first, for costs
     first less second (the gain of moving). S: the sum, for distances. plain, below: what is known of the sign of the
-    cell moved to, (2, pairs).
+    cell moved to, (2, pairs). same: an error that is rounding only.
     """
 
     player: int
@@ -132,6 +132,7 @@ class Block:
     S: Studentised | None
     plain: np.ndarray | None
     below: np.ndarray | None
+    same: float = 0.0
 
     @property
     def judged(self) -> tuple[tuple[int, np.ndarray], ...]:
@@ -207,15 +208,20 @@ class Block:
     def not_below(self, direction: int, epsilon: float, degrees: int) -> np.ndarray:
         """One-sided p-value of each pair's "the gain is more than epsilon", (pairs,)."""
         mean, error = self.gains(direction)
-        p = stdtr(degrees, _ratio(mean - epsilon, error))
+        p = np.where(self._tied(error), 1.0, stdtr(degrees, _ratio(mean - epsilon, error)))
         return self.settled(direction, p, np.minimum(1.0, p.shape[1] * p.min(axis=1)), np.maximum)
 
     def upper(self, direction: int, level: float, degrees: int) -> np.ndarray:
         """Upper bound of each pair's gain, one-sided at `level`, (pairs,)."""
         mean, error = self.gains(direction)
+        error = np.where(self._tied(error), np.inf, error)
         sure = mean + t_quantile(1 - level, degrees) * error
         split = mean + t_quantile(1 - level / mean.shape[1], degrees) * error
         return self.settled(direction, sure, split.min(axis=1), np.maximum)
+
+    def _tied(self, error: np.ndarray) -> np.ndarray:
+        """Where there is no spread in so few replications that this proves nothing."""
+        return (error <= self.same) & (len(self.D.scores) < LEAST_DIFFERENCES)
 
     def lower(self, direction: int, level: float, degrees: int) -> np.ndarray:
         """Lower bound of each pair's gain, one-sided at `level`, (pairs,)."""
@@ -268,10 +274,11 @@ def _differ(evidence: Evidence, player: int, first: np.ndarray, second: np.ndarr
 def _block(evidence: Evidence, player: int, first: np.ndarray, second: np.ndarray, use: np.ndarray) -> Block:
     one, other = evidence.values[:, player, first], evidence.values[:, player, second]
     if not evidence.distances:
-        return Block(player, first, second, use, studentise(one - other), None, None, None)
+        return Block(player, first, second, use, studentise(one - other), None, None, None, evidence.same)
     plain, below = (known[player] for known in evidence.signs)
     moved_to = (second, first)
     return Block(
         player, first, second, use, studentise(other - one), studentise(one + other),
         np.stack([plain[cells] for cells in moved_to]), np.stack([below[cells] for cells in moved_to]),
+        evidence.same,
     )  # fmt: skip
