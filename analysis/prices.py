@@ -146,8 +146,7 @@ def simulated_study(
 def resampled_costs(table: PayoffTable, weights: np.ndarray) -> np.ndarray:
     """Costs of resampled tables, (tables, players, *shape); weights (tables, replications)."""
     evidence = evidence_of(table)
-    means = resampled_means(evidence.values, weights)
-    costs = np.abs(means) if evidence.distances else means
+    costs = evidence.costs_at(lambda values: resampled_means(values, weights))
     return costs.reshape(len(weights), -1, *evidence.shape)
 
 
