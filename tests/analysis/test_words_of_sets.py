@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import json
+
 import numpy as np
 import pytest
 
@@ -121,3 +123,27 @@ def test_few_replications_are_not_resampled():
 
     assert study(9).bootstrap is None and study(9).bootstrap_reason == TOO_FEW
     assert study(10).bootstrap is not None
+
+
+# Matching pennies, as costs (textbook: no equilibrium in pure strategies).
+PENNIES = np.array([[[0.0, 1.0], [1.0, 0.0]], [[1.0, 0.0], [0.0, 1.0]]])
+
+
+@pytest.mark.parametrize("replications", [2, 9, 10, 40])
+@pytest.mark.parametrize(
+    "costs", [PENNIES, DILEMMA, np.zeros((2, 2, 2)), np.zeros((1, 1)), np.zeros((3, 1, 2, 1))]
+)
+@pytest.mark.parametrize("spread", [0.0, 0.01])
+def test_a_document_is_finite_whatever_the_table(replications, costs, spread):
+    table = table_of(costs, np.zeros(costs.shape[1:]), replications=replications, spread=spread)
+    game = analyse(table)
+    json.dumps([game_document(game), said_of(table)], allow_nan=False)
+    assert game.possible.all() or replications >= 10
+
+
+def test_where_no_profile_is_possible_nothing_is_priced():
+    game = analyse(table_of(PENNIES, [[3, 2], [2, 1]]))
+    said = [one.statement for one in findings_of(game)]
+    assert not game.equilibria and game.cost.price_of_anarchy.mean is None
+    assert any(one.startswith("No profile can be a pure equilibrium") for one in said)
+    assert any(one.startswith("No price of anarchy") for one in said) and NO_PROOF not in said
