@@ -16,8 +16,8 @@ from sim.errors import RunError
 # The order is the board's: what was asked, what the answer is, what it rests on. A new section is a module with
 # TITLE and blocks(results, figures), and optionally headlines(results), and its name here.
 SECTIONS = (
-    "question", "answer", "network", "verification", "equilibria", "cost", "demand", "policies", "ledger", "limits",
-    "methods", "origin",
+    "question", "answer", "network", "verification", "equilibria", "cost", "sweep", "align", "policies", "ledger",
+    "limits", "methods", "origin",
 )  # fmt: skip
 
 
