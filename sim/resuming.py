@@ -175,10 +175,13 @@ class Job:
             self._begun[replication] = fingerprint
             self._missing[replication] = self._missing[replication] - done
 
-    def end(self, at: str) -> None:
-        """Notes in the store that the job has ended, be it interrupted, at that time."""
+    def end(self, at: str, *, needs_no_more: bool = False) -> None:
+        """Notes in the store that the job has ended, be it interrupted, at that time.
+
+        needs_no_more: that what is there is all that it turned out to need.
+        """
         if self._command is not None:
-            self._store.end(self._command, at)
+            self._store.end(self._command, at, asked=self.reused + self.computed if needs_no_more else None)
 
 
 def run_whole(

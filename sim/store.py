@@ -208,10 +208,12 @@ class Store:
                 (scenario, json.dumps(provenance), asked, reused, provenance["started"]),
             ).lastrowid
 
-    def end(self, command: int, at: str) -> None:
-        """Notes that a command has ended by itself."""
+    def end(self, command: int, at: str, *, asked: int | None = None) -> None:
+        """Notes that a command has ended by itself; asked: the runs that it turned out to need."""
         with self._whole() as db:
-            db.execute("UPDATE commands SET ended = ? WHERE id = ?", (at, command))
+            db.execute(
+                "UPDATE commands SET ended = ?, asked = coalesce(?, asked) WHERE id = ?", (at, asked, command)
+            )
 
     def _place(self, key: Key) -> tuple[int, int, int]:
         return self._id("scenarios", key.scenario), self._id("cells", key.cell), key.replication

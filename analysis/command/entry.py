@@ -28,6 +28,8 @@ COMMANDS = {
     "batch": "A long plan of scenarios and analyses, resumable, by rounds through the night.",
     "compare": "Policies side by side on the same patients: differences, the best, bad years.",
     "ledger": "Who pays for whose closure: what each unit's early closing costs each home.",
+    "sweep": "Equilibria and the price of anarchy over demand, targets and more.",
+    "align": "The lowest target at which every possible equilibrium is near the optimum.",
     "report": "One page for the board from what --out left.",
     "cluster": "Several machines as one: keys, the scheduler, workers, who is there.",
     "results": "What runs with --out have left: list, show, export, verify, repeat.",

@@ -17,7 +17,6 @@ from analysis.command.caution import CAUTION
 from sim.errors import Fault, ScenarioError
 
 ENGINES = ("compiled", "reference")
-LEAST_PER_DAY = 1e-9
 LONGEST_THRESHOLD = 9  # digits
 
 
@@ -59,17 +58,25 @@ class FiniteRange(click.FloatRange):
         return super().convert(number, param, ctx)
 
 
-def scenario_command(function: Callable[..., Any]) -> click.Command:
-    """A command on one SCENARIO with the common options; the function gets a Request and its own options."""
+def scenario_command(
+    function: Callable[..., Any], *, own_axes: Sequence[str] = (), check: Callable[..., list[Fault]] | None = None
+) -> click.Command:  # fmt: skip
+    """A command on one SCENARIO with the common options; the function gets a Request and its own options.
+
+    own_axes: common options that the command takes in a form of its own. check: gives the faults of its own options,
+    from the scenario and their values, so that they are told of with all others.
+    """
 
     @functools.wraps(function)
     def read_then_run(**values: Any) -> Any:
         own = {name: value for name, value in values.items() if name not in _COMMON}
-        return function(request_of(values), **own)
+        also = None if check is None else lambda scenario: check(scenario, own)
+        return function(request_of(values, also), **own)
 
     decorated: Callable[..., Any] = read_then_run
-    for option in reversed(_OPTIONS):
-        decorated = option(decorated)
+    for name, option in reversed(list(zip(_COMMON, _OPTIONS, strict=True))):
+        if name not in own_axes:
+            decorated = option(decorated)
     return click.command(epilog=CAUTION)(decorated)
 
 
@@ -114,16 +121,16 @@ _COMMON = (
 )  # fmt: skip
 
 
-def request_of(values: Mapping[str, Any]) -> Request:
-    """The request that the values of the common options make; ScenarioError with every fault."""
+def request_of(values: Mapping[str, Any], also: Callable[[Any], list[Fault]] | None = None) -> Request:
+    """The request that the values of the common options make; ScenarioError with every fault, also's too."""
     from sim.scenario import read_scenario
 
     scenario = read_scenario(values["scenario"])
     faults: list[Fault] = []
     changes = {key: values[key] for key in ("seed", "replications", "confidence") if values[key] is not None}
     scenario = _under(scenario.with_run(**changes), values["policy"])
-    scenario = _with_demand(scenario, values["demand"], faults)
-    scenario = _with_target(scenario, values["target"], faults)
+    scenario = _with_demand(scenario, values.get("demand"), faults)
+    scenario = _with_target(scenario, values.get("target"), faults)
     if values["exponential"]:
         scenario = scenario.exponential()
     policy = _policy(scenario, values["policy"], faults)
@@ -133,6 +140,7 @@ def request_of(values: Mapping[str, Any]) -> Request:
     )
     _writable(values["out"], faults)
     cluster = _cluster(values, faults)
+    faults += also(scenario) if also is not None else []
     if faults:
         raise ScenarioError(faults, str(values["scenario"]))
     return Request(
@@ -195,12 +203,11 @@ def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
 def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
     if factor is None:
         return scenario
-    from sim.tables import MOST_PATIENTS
+    from analysis.settings import demand_bounds
 
-    days = max(1.0, scenario.run.warm_up_days + scenario.run.measured_days)
-    rates = [group.per_day for group in scenario.patients]
-    least, most = LEAST_PER_DAY / min(rates), MOST_PATIENTS / (days * sum(rates))
-    if not least <= factor <= most:
+    bounds = demand_bounds(scenario)
+    least, most = bounds.least, bounds.most
+    if not bounds.holds(factor):
         rule, remedy = (
             f"must be from {least:.3g} to {most:.6g} here",
             "give a factor such as 1.1 for 10 % more patients",
@@ -291,9 +298,9 @@ def _changes(values: Mapping[str, Any]) -> tuple[str, ...]:
         said.append(f"policy {values['policy']}")
     said += [f"closure threshold {entry.replace('=', ' ')}" for entry in values["threshold"]]
     said += [f"incoming threshold {entry.replace('=', ' ')}" for entry in values["incoming"]]
-    if values["demand"] is not None:
+    if values.get("demand") is not None:
         said.append(f"demand x {values['demand']:g}")
-    if values["target"] is not None:
+    if values.get("target") is not None:
         said.append(f"target {values['target']:g} for every unit")
     if values["exponential"]:
         said.append("exponential counterpart (stays of the same means, no delay, constant demand)")

@@ -14,7 +14,8 @@ from analysis.command.caution import CAUTION
 PLAIN_WIDTH = 132
 WRITTEN = (
     "result.json", "provenance.json", "table.csv", "control.csv", "payoffs-*.*", "verification.*", "warm-up.*",
-    "hour-of-week.*", "replies.*", "price-over-weights.*", "comparison-*.*", "ledger.*",
+    "hour-of-week.*", "replies.*", "price-over-weights.*", "comparison-*.*", "ledger.*", "points.csv",
+    "sweep-*.*", "align*.*",
 )  # fmt: skip
 
 

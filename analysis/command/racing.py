@@ -150,7 +150,10 @@ def raced(
         if job is not None:
             from sim.provenance import now
 
-            job.end(now().isoformat(timespec="seconds"))
+            job.end(
+                now().isoformat(timespec="seconds"),
+                needs_no_more=done.stopped(racing) in (DECIDED, REPLICATIONS),
+            )
     sums, looked = racing.tables.sums, bool(racing.state.looks)
     if not looked:
         require(len(sums.complete), done.why == INTERRUPTED)
@@ -224,7 +227,8 @@ def _job(stack: ExitStack, request: Request, policies: list[Any], racing: Any) -
         return None
     store = stack.enter_context(Store(request.out, write=True))
     here = json.dumps(fingerprint(), sort_keys=True)
-    job = Job(store, request.scenario, policies, racing.most, fingerprint=here)
+    others = request.cluster is not None
+    job = Job(store, request.scenario, policies, racing.most, fingerprint=here, others=others)
     for runs in job.kept_runs():
         racing.tables.sums.add(runs)
     if job.reused:

@@ -73,7 +73,7 @@ def policies_of(name: str, request: Request) -> Sequence[Any]:
 
 def jobs_of(name: str, request: Request, values: Mapping[str, Any]) -> Sequence[tuple[Any, Sequence[Any]]]:
     """The networks that a command keeps runs of, each with its policies."""
-    if name in ("compare", "ledger"):
+    if name in ("compare", "ledger", "sweep", "align"):
         return importlib.import_module(f"analysis.command.{name}").jobs(request, values)
     return [(request.scenario, policies_of(name, request))]
 
@@ -162,12 +162,19 @@ def differing_exact_cells(store: Store, sample: int) -> tuple[int, dict[Key, str
 def _exact_recipes(store: Store) -> Iterator[tuple[Any, str, dict[str, Any]]]:
     """Scenario, its hash, and policies by cell hash, of every recorded exact game that can be made again."""
     for origin in _distinct(store):
-        options = _options(origin)
-        if not options.get("exact"):
+        options, swept = _options(origin), arguments_of(origin)[0] in ("sweep", "align")
+        if not (options.get("exact") or swept):
             continue
         with suppress(StoreError):
             name, request = request_again(origin)
+            if swept:
+                jobs = importlib.import_module(f"analysis.command.{name}").exact_jobs(request, options)
+                yield from (_exact_recipe(*job) for job in jobs)
+                continue
             scenario = fitted(request, options["phase_fit"])[0].scenario
-            hashed = exact_hash(lower_network(scenario), plan_intake(scenario))
-            policies = policies_of(name, request)
-            yield scenario, hashed, {cell_hash(lower_policy(scenario, policy)): policy for policy in policies}
+            yield _exact_recipe(scenario, policies_of(name, request))
+
+
+def _exact_recipe(scenario: Any, policies: Sequence[Any]) -> tuple[Any, str, dict[str, Any]]:
+    hashed = exact_hash(lower_network(scenario), plan_intake(scenario))
+    return scenario, hashed, {cell_hash(lower_policy(scenario, policy)): policy for policy in policies}

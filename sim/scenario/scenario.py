@@ -101,7 +101,7 @@ class Scenario(Table):
         changes = {key: getattr(row, key) for key in ("beds", "target_utilisation")}
         if not any(changes.values()):
             return self
-        return self._changed(units=tuple(_with(unit, changes) for unit in self.units))
+        return self.changed(units=tuple(_with(unit, changes) for unit in self.units))
 
     def _row(self, name: str) -> PolicyRow:
         return {row.name: row for row in self.policies}[name]
@@ -146,17 +146,17 @@ class Scenario(Table):
 
     def with_run(self, **changes: Any) -> Scenario:
         """The same scenario with other values in its run table (already validated)."""
-        return self._changed(run=self.run.model_copy(update=changes))
+        return self.changed(run=self.run.model_copy(update=changes))
 
     def with_demand(self, factor: float) -> Scenario:
         """Every arrival rate times `factor`; each patient keeps the other draws."""
         groups = (group.model_copy(update={"per_day": group.per_day * factor}) for group in self.patients)
-        return self._changed(patients=tuple(groups))
+        return self.changed(patients=tuple(groups))
 
     def with_target(self, target: float) -> Scenario:
         """Every unit's target utilisation set to `target`."""
         units = (unit.model_copy(update={"target_utilisation": target}) for unit in self.units)
-        return self._changed(units=tuple(units))
+        return self.changed(units=tuple(units))
 
     def observed(self) -> Observed:
         """Every record that stays and delays are taken from: (file, column) -> times."""
@@ -170,7 +170,7 @@ class Scenario(Table):
             group.model_copy(update={"stay": with_observed(group.stay, records)}) for group in self.patients
         )
         moved = None if delay is None else with_observed(delay, records)
-        return self._changed(
+        return self.changed(
             patients=tuple(groups), diversion=self.diversion.model_copy(update={"delay": moved})
         )
 
@@ -179,9 +179,10 @@ class Scenario(Table):
         add no days, constant demand. Closure rules stay as they are."""
         plain = self.diversion.model_copy(update={"delay": None, "extra_days": 0.0})
         groups = tuple(group.in_constant_exponential_form() for group in self.patients)
-        return self._changed(patients=groups, diversion=plain)
+        return self.changed(patients=groups, diversion=plain)
 
-    def _changed(self, **tables: Any) -> Scenario:
+    def changed(self, **tables: Any) -> Scenario:
+        """The same scenario with other tables (already validated)."""
         copy = self.model_copy(update=tables)
         copy._source = self._source
         return copy

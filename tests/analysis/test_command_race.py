@@ -64,8 +64,10 @@ def test_a_race_stopped_by_its_budget_goes_on_from_the_store(call, two, tmp_path
     assert without(whole) == without(fresh)
 
 
-def test_a_raced_store_serves_the_whole_table(call, two, tmp_path):
-    call("game", two, *RACE, "--out", tmp_path)
+def test_a_raced_store_is_complete_once_all_is_decided_and_serves_the_whole_table(call, two, tmp_path):
+    raced = call("game", two, *RACE, "--out", tmp_path)[1]
+    assert raced["racing"]["stopped_by"] in ("decided", "replications")
+    assert call("results", "show", tmp_path)[1]["complete"]
     after = call("game", two, "--replications", 40, "--no-race", "--out", tmp_path)[1]
     plain = call("game", two, "--replications", 40, "--no-race")[1]
     assert after["reused"] > 0 and without(after) == without(plain)

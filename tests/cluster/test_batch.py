@@ -123,7 +123,7 @@ def test_a_deadline_holds_while_nobody_answers_and_the_batch_goes_on_here(
     assert hash_of(folder) == hash_of(tmp_path / "here")
 
 
-@pytest.mark.slow
+@pytest.mark.by_hand
 @pytest.mark.parametrize("how", [signal.SIGKILL, signal.SIGSTOP])
 def test_a_deadline_holds_with_everybody_gone(own_site, plan, tmp_path, how):
     """Workers, nannies and the scheduler."""
@@ -144,7 +144,7 @@ def test_a_deadline_holds_with_everybody_gone(own_site, plan, tmp_path, how):
     assert hash_of(tmp_path / "there") == hash_of(tmp_path / "here")
 
 
-@pytest.mark.slow
+@pytest.mark.by_hand
 def test_a_batch_on_machines_of_two_kinds_mixes_nothing(own_site, odd, plan, tmp_path, monkeypatch):  # noqa: F811
     """By rounds, parts sharing cells: each replication of a network is whole and of one kind; then one kind is gone."""
     own_site.join("plain")

@@ -13,7 +13,7 @@ from sim.resuming import Job
 from sim.store import Store
 from tests.sim.test_replicate import POLICIES, SCENARIO
 
-pytestmark = pytest.mark.slow
+pytestmark = pytest.mark.by_hand
 OTHERWISE = """
 import sim.provenance
 there = sim.provenance.fingerprint() | {"probe_intake": "rounded otherwise"}

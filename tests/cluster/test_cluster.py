@@ -1,6 +1,6 @@
 """The core, with real processes and TLS: the same answers as here, and what must be refused is refused.
 
-The rest, from killed schedulers to a link that is down, is marked `slow` in the other modules.
+The rest, from killed schedulers to a link that is down, is marked `by_hand` in the other modules.
 """
 
 from __future__ import annotations

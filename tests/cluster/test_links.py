@@ -14,7 +14,7 @@ from tests.cluster import tasks
 from tests.cluster.site import Site
 from tests.cluster.test_losses import check, numbers
 
-pytestmark = pytest.mark.slow
+pytestmark = pytest.mark.by_hand
 LAPTOPS = ("moor", "tarn")
 HOST = "10.213.0.1"
 

@@ -20,7 +20,7 @@ from tests.cluster import tasks
 from tests.cluster.site import ROOT, wait_for
 from tests.sim.test_replicate import SCENARIO_TEXT
 
-pytestmark = pytest.mark.slow
+pytestmark = pytest.mark.by_hand
 OFTEN = """
 import analysis.command.progress
 analysis.command.progress.SECONDS_BETWEEN_LINES = 0.2
