@@ -11,7 +11,8 @@ from analysis.report.words import DAYS_A_YEAR, estimate, listed, name, point, se
 
 TITLE = "Over demand and targets"
 DRAWN = "analysis.figures_sweep"
-MOST_LISTED = 40
+MOST_LISTED = 60
+LEAST_PRICE = 1.00005  # shown as 1.0000 below
 AXES = ("demand", "target", "delay", "cv", "soft", "transfer_weight")
 RATES = ("network_turned_away_per_day", "network_transfers_per_day")
 EACH_ALONE = "Every row is a network of its own, and its intervals hold for it alone."
@@ -31,9 +32,18 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         yield Text(" ".join([EACH_ALONE, *document["notes"]]))
         yield from _pictures(document, figures)
         yield _points(document, one.is_exact)
-        more = len(document["points"]) - MOST_LISTED
+        more = len(document["points"]) - len(_shown(document))
         if more > 0:
-            yield Text(f"{more} more points stand in the result's points.csv.")
+            yield Text(
+                f"{more} more points, such as those whose price is 1.0000, stand in the result's points.csv."
+            )
+
+
+def _shown(document: Mapping[str, Any]) -> Sequence[Mapping[str, Any]]:
+    """The points of the table: those that are not known to cost nothing, else all, as far as a page can hold them."""
+    ends = [(one, one["price_of_anarchy"]["high"]) for one in document["points"]]
+    dear = [one for one, high in ends if high is None or high >= LEAST_PRICE]
+    return (dear or document["points"])[:MOST_LISTED]
 
 
 def priced(value: Mapping[str, Any], digits: int) -> str:
@@ -66,11 +76,11 @@ def _points(document: Mapping[str, Any], exact: bool) -> Table:
             " / ".join(rates(one["optimum"])),
             closed(one["worst_equilibrium"]),
         )
-        for one in document["points"][:MOST_LISTED]
+        for one in _shown(document)
     ]
     whose = "exact" if exact else "means, without intervals where simulated"
     caption = (
-        f"Every point (turned away / moved: patients a year at the worst listed equilibrium and at the best fixed "
+        f"Points (turned away / moved: patients a year at the worst listed equilibrium and at the best fixed "
         f"thresholds; closed with a free bed: the unit most so; these {whose})"
     )
     columns = (
