@@ -66,7 +66,7 @@ def _run(step: Step, report: PlannedReport, folder: Path, which: str) -> int:
     """Runs one command unless its result is there; its status."""
     line = step.line(folder)
     said = f"{which}: {' '.join(step.arguments)}"
-    if _is_there(line, report.scenario, folder):
+    if _is_there(line, report.scenario, folder) and not _is_being_changed():
         say(f"{said} (its result is there)")
         return DONE
     say(said)
@@ -97,6 +97,13 @@ def _is_there(line: Sequence[str], scenario: Path, folder: Path) -> bool:
     return all(origin.get(key) == value for key, value in expected.items()) and all(
         kept.get(key) == value for key, value in text.items()
     )
+
+
+def _is_being_changed() -> bool:
+    """Whether the program runs from a checkout with changes that its commit does not tell of."""
+    from sim.provenance import program
+
+    return (program()["commit"] or "").endswith("+")
 
 
 def _read(file: Path) -> Any:

@@ -25,7 +25,8 @@ commands = ["ledger --policy early"]
 
 
 @pytest.fixture
-def plan(tmp_path):
+def plan(tmp_path, monkeypatch):
+    monkeypatch.setattr("sim.provenance._commit", lambda: "c0ffee")
     (tmp_path / "two.toml").write_text(TWO, encoding="utf-8")
     file = tmp_path / "plan.toml"
     file.write_text(PLAN, encoding="utf-8")
@@ -58,6 +59,12 @@ def test_a_changed_scenario_or_command_is_run_again(plan, capsys):
     plan.write_text(PLAN.replace("days 9", "days 8"), encoding="utf-8")
     assert built(plan) == DONE
     assert capsys.readouterr().err.count("its result is there") == 2
+
+
+def test_a_checkout_with_changes_trusts_no_earlier_result(plan, capsys, monkeypatch):
+    monkeypatch.setattr("sim.provenance._commit", lambda: "c0ffee+")
+    assert built(plan) == DONE and built(plan) == DONE
+    assert "its result is there" not in capsys.readouterr().err
 
 
 def test_every_fault_is_told_before_anything_runs(plan, capsys):

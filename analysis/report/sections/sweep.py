@@ -7,7 +7,7 @@ from typing import Any
 
 from analysis.report.blocks import Block, Figure, Points, Table, Text, table
 from analysis.report.contents import Figures, Headline, Results, optional
-from analysis.report.words import DAYS_A_YEAR, estimate, listed, name, point, sentence
+from analysis.report.words import DAYS_A_YEAR, counted, estimate, listed, name, point, sentence
 
 TITLE = "Over demand and targets"
 DRAWN = "analysis.figures_sweep"
@@ -34,9 +34,8 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         yield _points(document, one.is_exact)
         more = len(document["points"]) - len(_shown(document))
         if more > 0:
-            yield Text(
-                f"{more} more points, such as those whose price is 1.0000, stand in the result's points.csv."
-            )
+            yield Text(f"Not in the table, but in points.csv: {counted(more, 'point')}, with a price of 1.0000 or too many "
+                       "for a page.")  # fmt: skip
 
 
 def _shown(document: Mapping[str, Any]) -> Sequence[Mapping[str, Any]]:
