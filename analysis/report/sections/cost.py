@@ -227,8 +227,8 @@ def _over_weights(document: Mapping[str, Any], figures: Figures) -> Iterator[Blo
     )  # fmt: skip
     shown = [one for one in rows if any(abs(one["weight"] - weight) < 1e-9 for weight in WEIGHTS)]
     yield table(
-        "Loss over the weight of a transfer (patients turned away and weighted transfers, a year; the price is a ratio of "
-        "such losses)",
+        "Loss over the weight of a transfer (patients turned away and weighted transfers, a year; the price is a ratio "
+        "of such losses)",
         ("weight of a transfer", "lost a year", "price of anarchy"),
         [(f"{one['weight']:g}", estimate(one["lost_per_year"]), estimate(one["price_of_anarchy"], 4)) for one in shown],
     )  # fmt: skip

@@ -34,8 +34,8 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         yield _points(document, one.is_exact)
         more = len(document["points"]) - len(_shown(document))
         if more > 0:
-            yield Text(f"Not in the table, but in points.csv: {counted(more, 'point')}, with a price of 1.0000 or too many "
-                       "for a page.")  # fmt: skip
+            yield Text(f"Not in the table, but in points.csv: {counted(more, 'point')}, with a price of 1.0000 or too "
+                       "many for a page.")  # fmt: skip
 
 
 def _shown(document: Mapping[str, Any]) -> Sequence[Mapping[str, Any]]:
