@@ -14,6 +14,7 @@ from typing import Any
 import click
 
 from analysis.command.caution import CAUTION
+from analysis.command.usage import Checked
 from sim.errors import Fault, ScenarioError
 
 ENGINES = ("compiled", "reference")
@@ -77,7 +78,7 @@ def scenario_command(
     for name, option in reversed(list(zip(_COMMON, _OPTIONS, strict=True))):
         if name not in own_axes:
             decorated = option(decorated)
-    return click.command(epilog=CAUTION)(decorated)
+    return click.command(cls=Checked, epilog=CAUTION)(decorated)
 
 
 _OPTIONS = (

@@ -9,12 +9,13 @@ import click
 
 from analysis.command.caution import CAUTION
 from analysis.command.output import put_caution, put_json, put_text
+from analysis.command.usage import Checked
 from sim.errors import Fault, ScenarioError
 
 FORMATS = {"html": ".html", "md": ".md"}
 
 
-@click.command(epilog=CAUTION)
+@click.command(cls=Checked, epilog=CAUTION)
 @click.argument("results", nargs=-1, required=True, type=click.Path(path_type=Path))
 @click.option("--out", type=click.Path(path_type=Path), help="The file [default: report.html, or report.md].")
 @click.option(
