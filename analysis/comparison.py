@@ -61,16 +61,28 @@ def grouped(cases: Sequence[Case]) -> list[Group]:
 
 
 class PairedRuns:
-    """The sums of every run, filled as they arrive; only replications that every case has are compared."""
+    """The sums of every run, filled as they arrive; only replications that every case has are compared.
 
-    def __init__(self, cases: Sequence[Case], replications: int) -> None:
+    levels: whether the time at each number of occupied beds is kept too, which takes several times the memory.
+    """
+
+    def __init__(self, cases: Sequence[Case], replications: int, *, levels: bool = False) -> None:
+        self._levels: dict[tuple[int, int], np.ndarray] | None = {} if levels else None
         self.groups = grouped(cases)
         self._cases = cases
         self._sums = [TableSums(one.scenario, len(one.places), replications) for one in self.groups]
 
     def taker(self, group: int) -> Callable[[list[Run] | Failure], int]:
         """What takes the replies of one group's runs."""
-        return self._sums[group].add
+        places, table = self.groups[group].places, self._sums[group]
+
+        def take(reply: list[Run] | Failure) -> int:
+            if self._levels is not None and not isinstance(reply, Failure):
+                for run in reply:
+                    self._levels[places[run.cell], run.replication] = run.record.occupancy_days.sum(axis=0)
+            return table.add(reply)
+
+        return take
 
     @property
     def complete(self) -> list[int]:
@@ -85,6 +97,9 @@ class PairedRuns:
             whole = {name: values[kept] for name, values in table.sums().items()}
             for column, place in enumerate(group.places):
                 found[place] = {name: values[:, column] for name, values in whole.items()}
+                if self._levels is not None:
+                    days = [self._levels[place, replication] for replication in self.complete]
+                    found[place]["occupancy_days"] = np.stack(days)
         return found
 
     def hashes(self) -> list[str]:

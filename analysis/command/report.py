@@ -12,11 +12,12 @@ from analysis.command.caution import CAUTION
 from analysis.command.entry import CheckFailed
 from analysis.command.options import require_folder
 from analysis.command.output import put_caution, put_json, put_text
+from analysis.command.usage import Checked
 
 FORMATS = {"html": ".html", "md": ".md"}
 
 
-@click.command(epilog=CAUTION)
+@click.command(cls=Checked, epilog=CAUTION)
 @click.argument("results", nargs=-1, type=click.Path(path_type=Path))
 @click.option("--out", type=click.Path(path_type=Path),
               help="The file [default: report.html or .md]; with --from a folder [default: results/PLAN].")  # fmt: skip
