@@ -15,7 +15,7 @@ from functools import cached_property
 
 import numpy as np
 
-from analysis.confidence import Estimate, critical_value, mean_estimate
+from analysis.confidence import Estimate, critical_value, mean_estimate, t_quantile
 from analysis.goals import Welfare, welfare_of
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, network_sums, unit_sums
 from analysis.named_policies import Case
@@ -264,12 +264,12 @@ def _differences(
 def banded(paired: np.ndarray, confidence: float, rng: np.random.Generator) -> tuple[float, list[Estimate]]:
     """The critical value and the band of each paired difference, (replications, differences).
 
-    Differences that are 0 in every replication, or in most and not 0 in fewer than ten, get no band: a rare
+    Differences that are alike in every replication, or 0 in most and not 0 in fewer than ten, get no band: a rare
     difference is not normal, and no spread is no proof of none.
     """
     parts = studentise(paired)
     counts = np.count_nonzero(paired, axis=0)
-    rare = is_rare(paired)
+    rare = is_rare(paired) | is_constant(paired)
     critical = _critical(np.where(rare, 0.0, parts.scores), confidence, rng)
     half = critical * parts.error
     return critical, [
@@ -288,6 +288,19 @@ def _critical(scores: np.ndarray, confidence: float, rng: np.random.Generator) -
     return critical_value(confidence, len(scores) - 1, comparisons=max(1, varying))
 
 
+def _critical_one_sided(scores: np.ndarray, confidence: float, rng: np.random.Generator) -> float:
+    """As `_critical`, for limits on one side."""
+    if len(scores) >= ENOUGH_FOR_MAX_T:
+        return critical_max_t(scores, 1 - confidence, rng, two_sided=False)
+    varying = np.count_nonzero(scores.any(axis=0))
+    return float(t_quantile(1 - (1 - confidence) / max(1, varying), len(scores) - 1))
+
+
+def is_constant(paired: np.ndarray) -> np.ndarray:
+    """Which differences are alike in every replication but for rounding, (differences,): no spread is no proof."""
+    return np.ptp(paired, axis=0) <= 1e-12 * np.abs(paired).max(axis=0, initial=0.0)
+
+
 def is_rare(paired: np.ndarray) -> np.ndarray:
     """Which differences are 0 in most replications and not 0 in fewer than ten, (differences,)."""
     counts = np.count_nonzero(paired, axis=0)
@@ -297,6 +310,8 @@ def is_rare(paired: np.ndarray) -> np.ndarray:
 def _no_band(mean: float, count: int, replications: int) -> Estimate:
     if count == 0:
         return Estimate(mean, reason=f"the same in each of {replications} replications")
+    if count == replications:
+        return Estimate(mean, reason=f"differs by as much in each of {replications} replications: no band")
     return Estimate(mean, reason=f"differs in {count} of {replications} replications only: no band")
 
 
@@ -338,8 +353,8 @@ def _against_others(
     """The policy less each other, means and half widths of one-sided limits, (others,)."""
     paired = welfare[:, [place]] - np.delete(welfare, place, axis=1)
     parts, counts = studentise(paired), np.count_nonzero(paired, axis=0)
-    rare = is_rare(paired) & (counts > 0)
-    critical = critical_max_t(np.where(rare, 0.0, parts.scores), 1 - confidence, rng, two_sided=False)
+    rare = (is_rare(paired) | is_constant(paired)) & (counts > 0)
+    critical = _critical_one_sided(np.where(rare, 0.0, parts.scores), confidence, rng)
     return parts.mean, np.where(rare, np.inf, max(critical, 0.0) * parts.error)
 
 

@@ -9,12 +9,12 @@ from typing import Any
 import numpy as np
 
 from analysis.confidence import Estimate, mean_estimate, ratio_estimate, ratio_values
-from analysis.controls import Controls, no_controls, variance_ratio
+from analysis.controls import Controls, controls_document, no_controls, variance_ratio
 from analysis.counterpart import Counterpart
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, combine, network_sums, unit_sums
-from sim.record import Record
+from sim.record import Record, hash_records
 from sim.replicate import Run
-from sim.scenario import Scenario
+from sim.scenario import Policy, Scenario
 
 
 @dataclass(frozen=True)
@@ -82,6 +82,19 @@ def summarise(
         controls=controls,
         variance_ratio=None if controls is None else _variance_ratios(sums, whole, scenario, judge),
     )
+
+
+def simulation_document(
+    result: Simulation, scenario: Scenario, policy: Policy, runs: Sequence[Run]
+) -> dict[str, Any]:
+    """What a simulation says as plain values: under which policy, its measures, and what repeats it."""
+    return {"policy": policy.name, "thresholds": policy.thresholds} | result.to_dict() | {
+        "replications": result.replications,
+        "confidence": result.confidence,
+        "seed": scenario.run.seed,
+        "record_hash": hash_records([run.record.hash for run in runs]),
+        "controls": controls_document(result.controls, result.variance_ratio),
+    }  # fmt: skip
 
 
 @dataclass(frozen=True)

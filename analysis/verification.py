@@ -18,12 +18,14 @@ from analysis.chain import ExactResult
 from analysis.confidence import Estimate, critical_value, mean_estimate
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, network_sums, unit_sums
 from analysis.simulation import estimate_measure, of_unit
+from sim.errors import Fault, ScenarioError
 from sim.record import Record
 from sim.scenario import Scenario
 from sim.scenario.describe import mean_stay_days
 
 FALSE_ALARM_RATE = 0.01
 LEAST_VISITS = 20
+LEAST_REPLICATIONS = 5
 
 
 @dataclass(frozen=True)
@@ -101,6 +103,26 @@ def verify(
     comparisons = tuple(_judge(pair, confidence, max(tested, 1), critical) for pair in pairs)
     agrees = all(one.agrees for one in comparisons)
     return Verification(agrees, comparisons, false_alarm_rate, critical, len(records))
+
+
+def require_replications(scenario: Scenario) -> None:
+    """ScenarioError where the run table asks for too few replications to judge a simulator by."""
+    given = scenario.run.replications
+    if given < LEAST_REPLICATIONS:
+        rule, got = f"must be at least {LEAST_REPLICATIONS} to verify", f"got {given}"
+        raise ScenarioError(
+            [Fault(None, "run.replications", rule, got, "raise it, for example --replications 30")]
+        )
+
+
+def alike(
+    records: Sequence[Record], exact: ExactResult, scenario: Scenario, confidence: float
+) -> list[Estimate]:
+    """The measures of `verify`, in its order, from records of a scenario that the chain does not answer.
+
+    Pointwise intervals; nothing is held against anything.
+    """
+    return [pair.estimate(confidence, 1) for pair in _pairs(records, exact, scenario)]
 
 
 def _pairs(records: Sequence[Record], exact: ExactResult, scenario: Scenario) -> Iterator[_Pair]:

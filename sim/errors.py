@@ -9,6 +9,10 @@ from dataclasses import dataclass
 class BrimlineError(Exception):
     """Base of every error that this program raises on purpose."""
 
+    def _render_traceback_(self) -> list[str]:
+        """What a notebook shows in the place of a traceback: what is at fault, a line each."""
+        return [f"{type(self).__name__}:", *str(self).splitlines()]
+
 
 @dataclass(frozen=True, order=True)
 class Fault:

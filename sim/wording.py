@@ -145,6 +145,11 @@ def _example(field: FieldInfo | None, key: str) -> str | None:
     return f"{key} = {known[0]}" if known else None
 
 
+def count(whole: int) -> str:
+    """A count, in full or, where it is vast, as a power of ten."""
+    return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
+
+
 _HIDDEN = (
     "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
 )

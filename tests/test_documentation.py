@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import doctest
 import re
 import shlex
 import subprocess
@@ -32,6 +33,25 @@ def test_an_example_prints_what_it_shows(command, shown, capsys, monkeypatch):
     for line in (line.rstrip() for line in shown if line != "..."):
         assert line in printed[place:], f"`{line}` is not printed (any more, or not in this order)"
         place = printed.index(line, place) + 1
+
+
+def test_the_notebook_shown_gives_what_it_shows(monkeypatch):
+    """Every line is run as in a notebook, and shows what stands below it."""
+    [block] = re.findall(r"```python\n(.*?)```", README, flags=re.S)
+    monkeypatch.chdir(ROOT)
+    assert len(doctest.DocTestParser().get_examples(block)) >= 9
+    assert failures_of(block) == 0
+
+
+def test_a_wrong_number_in_the_notebook_shown_would_be_seen():
+    assert failures_of(">>> 1 + 1\n3\n") == 1
+
+
+def failures_of(block):
+    """How many examples of a notebook show something else."""
+    notebook = doctest.DocTestParser().get_doctest(block, {}, "README.md", "README.md", 0)
+    runner = doctest.DocTestRunner(verbose=False, optionflags=doctest.NORMALIZE_WHITESPACE)
+    return runner.run(notebook).failed
 
 
 def test_every_command_has_an_example_or_is_named():

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import replace
 from typing import Any
 
 import click
@@ -20,10 +19,9 @@ from analysis.command.output import (
     put_text,
     write_result,
 )
-from analysis.command.sweep import exact_option, sets_value, simulate_option, texts_of
+from analysis.command.sweep import exact_option, method_of, sets_value, simulate_option, texts_of
 
-DEMAND, TARGET, WEIGHT = "1", "0.5:0.95:10", "0:1:11"
-IN_FILE, EXPONENTIAL = "as in the file", "exponential (same means, no delay, constant demand)"
+DEMAND, TARGET, WEIGHTS = "1", "0.5:0.95:10", "0:1:11"
 
 
 @click.option("--demand", "demands", metavar="FROM:TO:POINTS", default=DEMAND, show_default=True,
@@ -34,7 +32,7 @@ IN_FILE, EXPONENTIAL = "as in the file", "exponential (same means, no delay, con
 @click.option("--delta", metavar="D", default="0.5%", show_default=True,
               help="Loss that is near the optimum: patients (or welfare) a year, or a share of arrivals.")  # fmt: skip
 @click.option("--transfer-weight", metavar="FROM:TO:POINTS",
-              help=f"Weights over which the advice may turn [default: {WEIGHT}; none with --per-unit].")  # fmt: skip
+              help=f"Weights over which the advice may turn [default: {WEIGHTS}; none with --per-unit].")  # fmt: skip
 @exact_option
 @simulate_option
 @click.option("--tolerance", type=FiniteRange(0), default=1e-9, show_default=True,
@@ -72,8 +70,7 @@ def align(request: Request, tolerance: float, controls: bool, **own: Any) -> Non
         if filling.interrupted:
             break
     if not rows:
-        say("interrupted before any statement could be made; with --out the same command goes on from there")
-        raise Interrupted
+        _nothing(filling)
     document = request.heading | alignment_document(
         rows, grid.targets, grid.demands, ruler.delta, ruler.level, per_unit=own["per_unit"]
     )
@@ -102,7 +99,7 @@ def _nothing(filling: Any) -> None:
 
 def check(scenario: Any, own: Mapping[str, Any]) -> list[Any]:
     """Every fault of the command's own options."""
-    from analysis.alignment import MOST_COMBINATIONS, number_of_combinations
+    from analysis.filling import combination_faults
     from analysis.settings import grid_of, read_delta
     from sim.errors import Fault
 
@@ -112,37 +109,17 @@ def check(scenario: Any, own: Mapping[str, Any]) -> list[Any]:
     if own["exact"] and own["simulated"]:
         rule, remedy = "must not be given with --simulate", "give one of the two, or neither"
         faults.append(Fault(None, "--exact", rule, "got both", remedy))
-    tries = number_of_combinations(grid.targets, len(scenario.units))
-    if own["per_unit"] and tries > MOST_COMBINATIONS:
-        rule, remedy = (
-            f"must give at most {MOST_COMBINATIONS} combinations",
-            "try fewer targets, or one for all units",
-        )
-        faults.append(Fault(None, "--per-unit", rule, f"got {tries:,}", remedy))
+    faults += combination_faults(grid, scenario, per_unit=own["per_unit"])
     return faults
 
 
 def _planned(request: Request, own: Mapping[str, Any]) -> tuple[Any, list[tuple[str, list[Any]]]]:
     """The grid, and the networks of each row: stays as in the file, and their exponential counterpart."""
-    from analysis.alignment import is_exponential
-    from analysis.settings import grid_of
-    from analysis.sweeping import EXACT, SIMULATED, networks_of, with_target
+    from analysis.filling import networks_of_alignment
 
-    grid = grid_of(texts_of(own), request.scenario, [])
-    scenario = with_target(request.scenario, grid.targets[0])  # any will do: it changes no network
-    weights = own["transfer_weight"] or (None if own["per_unit"] else WEIGHT)
-    grid = (
-        replace(grid, weights=())
-        if weights is None
-        else grid_of(texts_of(dict(own) | {"transfer_weight": weights}), scenario, [])
+    return networks_of_alignment(
+        texts_of(own), request.scenario, request.policy, method_of(own), per_unit=own["per_unit"]
     )
-    force = EXACT if own["exact"] else SIMULATED if own["simulated"] else None
-    kinds = (
-        [(EXPONENTIAL, scenario)]
-        if is_exponential(scenario)
-        else [(IN_FILE, scenario), (EXPONENTIAL, scenario.exponential())]
-    )
-    return grid, [(stays, networks_of(one, request.policy, grid.settings(), force)) for stays, one in kinds]
 
 
 def jobs(request: Request, own: Mapping[str, Any]) -> list[tuple[Any, Sequence[Any]]]:

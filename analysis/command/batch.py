@@ -111,14 +111,14 @@ def _read(file: Path, how: dict[str, Any]) -> tuple[str, Any]:
 
 def _request(part: Any) -> Any:
     """What a part's own command line asks for; ScenarioError where its analysis could not be done."""
-    from analysis.command.axes import axes
     from analysis.command.entry import brimline
+    from analysis.game_tables import axes_of
 
     name, *arguments = part.arguments
     made = brimline.get_command(None, name).make_context(name, arguments)  # type: ignore[arg-type]
     request = request_of(made.params)
     if name == "game":
-        axes(request)
+        axes_of(request.scenario, request.policy)
     return request
 
 

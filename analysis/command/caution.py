@@ -1,6 +1,5 @@
-"""What the figures are not for."""
+"""What the figures are not for, as commands say it."""
 
-CAUTION = (
-    "For planning only, not for decisions on a patient or a live bed. Results depend on the data and the "
-    "assumptions of the scenario; local protocols and licensed clinicians decide."
-)
+from analysis.caution import CAUTION
+
+__all__ = ["CAUTION"]

@@ -113,10 +113,8 @@ def _simulate(filling: Filling, request: Request, network: Any, label: str, cont
 
 def told_of(filling: Filling, request: Request) -> dict[str, Any]:
     """What a document says of how its networks were filled."""
-    from sim.record import hash_records
+    from analysis.filling import filling_document
 
-    run, ran = request.scenario.run, filling.ran(request)
-    told = {"confidence": run.confidence, "seed": run.seed, "replications": run.replications if ran else None}
-    told |= {"record_hash": hash_records(filling.hashes) if filling.hashes else None}
-    told |= ran.to_dict() if ran else {"engine": "exact chain", "failed": []}
-    return told | {"exact_cells": filling.exact or None, "interrupted": filling.interrupted}
+    return filling_document(
+        request.scenario, filling.ran(request), filling.hashes, filling.exact, interrupted=filling.interrupted
+    )

@@ -9,7 +9,6 @@ from typing import Any
 import click
 
 from analysis.command import racing
-from analysis.command.axes import axes
 from analysis.command.central import beside, best_rule, show_control, write_rule
 from analysis.command.controls import controls_of, controls_option, controls_sentence
 from analysis.command.counterpart import (
@@ -152,11 +151,12 @@ command = scenario_command(game)
 def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tuple[Any, Any, dict[str, Any]]:
     """The table, how it was run, and what the document says of that."""
     from analysis.command.running import require, run_replications
-    from analysis.payoffs import TableSums, simulated_table
-    from sim.record import hash_records
+    from analysis.game_tables import axes_of, table_document
+    from analysis.payoffs import TableSums
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = axes(request)
+    axes = axes_of(request.scenario, request.policy)
+    profiles = axes.profiles
     for said in advice(request.scenario):
         say(f"advice: {said}")
     beside = replace(request, scenario=counterpart_scenario(request), out=None) if counterpart else None
@@ -170,24 +170,17 @@ def _simulated_table(request: Request, controls: bool, counterpart: bool) -> tup
     also, checked = None, {}
     if beside is not None:
         also, checked = run_counterpart_table(beside, profiles, sums, exact, known)
-    table = simulated_table(
-        profiles, goal, welfare, sums.sums(), run.confidence, controls=known, counterpart=also
-    )
-    hashes = [sums.record_hashes[address] for address in sorted(sums.record_hashes)]
-    told = {
-        "replications": len(sums.complete), "confidence": run.confidence, "seed": run.seed,
-        "record_hash": hash_records(hashes),
-    } | ran.to_dict() | checked  # fmt: skip
+    table = axes.simulated(sums, run.confidence, controls=known, counterpart=also)
+    told = table_document(sums, request.scenario) | ran.to_dict() | checked
     return table, ran, told
 
 
 def _exact_table(request: Request) -> tuple[Any, None, dict[str, Any]]:
-    from analysis.payoffs import exact_table
+    from analysis.game_tables import axes_of
 
-    profiles, goal, welfare = axes(request)
-    cells, kept = _exact_cells(request, profiles)
-    told = {"engine": "exact chain", "interrupted": False} | kept
-    return exact_table(profiles, goal, welfare, cells), None, told
+    axes = axes_of(request.scenario, request.policy)
+    cells, kept = _exact_cells(request, axes.profiles)
+    return axes.exact(cells), None, {"engine": "exact chain", "interrupted": False} | kept
 
 
 def _exact_cells(request: Request, profiles: Any) -> tuple[list[Any], dict[str, int]]:
@@ -293,12 +286,13 @@ def _show_payoffs(analysis: Any, player: int) -> None:
         )
         return f"[{text}]" if (row, column) in equilibria else text
 
+    listed = "equilibrium" if analysis.sets is None else "possible equilibrium"
     aim = "smaller is better" if table.goal.sense == "cost" else "larger is better"
     down, across = table.profiles.reads(0), table.profiles.reads(1).removeprefix("closure threshold ")
     for first in range(0, len(labels[1]), COLUMNS_AT_ONCE):
         columns = range(first, min(first + COLUMNS_AT_ONCE, len(labels[1])))
         put_grid(
-            f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] equilibrium)\n"
+            f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] {listed})\n"
             f"down: {down}; across: {across}",
             ["", *(labels[1][column] for column in columns)],
             [[own, *(cell(row, column) for column in columns)] for row, own in enumerate(labels[0])],
@@ -313,7 +307,8 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
     scale, scale_reads = table.goal.display_scale
     best = regrets(table.payoffs, table.goal.sense) <= analysis.tolerance
     listed = [one.profile for one in analysis.equilibria[:MOST_LISTED]]
-    rows = [("equilibrium", profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
+    noun = "equilibrium" if analysis.sets is None else "possible equilibrium"
+    rows = [(noun, profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
 
     def cell(player: int, profile: tuple[int, ...]) -> str:
         own = table.profiles.labels[player][profile[player]]
@@ -334,8 +329,8 @@ def _show_equilibria(document: dict[str, Any]) -> None:
     players, pure = document["players"], [one for one in document["equilibria"] if one["kind"] == "pure"]
     listed = pure[:MOST_LISTED]
     put_table(
-        f"Equilibria ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating alone; "
-        "welfare a day)",
+        f"{_heading(document)} ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating "
+        "alone; welfare a day)",
         ("verdict", *players, *(f"regret {player}" for player in players), *_years_heading(listed), "welfare"),
         [
             (one["verdict"], *(text_of(_told(one)[p]) for p in players), *(_regret(one["regret"][p]) for p in players),
@@ -345,6 +340,10 @@ def _show_equilibria(document: dict[str, Any]) -> None:
     )  # fmt: skip
     if len(pure) > MOST_LISTED:
         put_text(f"... and {len(pure) - MOST_LISTED} more (all are in --json and --out).")
+
+
+def _heading(document: dict[str, Any]) -> str:
+    return "Equilibria" if document.get("possible") is None else "Possible equilibria"
 
 
 def _chosen(document: dict[str, Any]) -> str:
@@ -363,9 +362,14 @@ def _years_heading(listed: list[dict[str, Any]]) -> list[str]:
 
 def _soonest(one: dict[str, Any]) -> list[str]:
     """The fewest years of own data after which any unit could notice a gain, from the regrets' upper ends."""
+    from analysis.sets_document import NO_GAIN
+
     if "years_to_notice" not in one:
         return []
-    soon = [years["low"] for years in one["years_to_notice"].values() if years["low"] is not None]
+    years_of = one["years_to_notice"].values()
+    soon = [years["low"] for years in years_of if years["low"] is not None]
+    if not soon and any(years["reason"] != NO_GAIN for years in years_of):
+        return ["-"]
     if not soon:
         return ["never"]
     return [f"at least {min(soon):.0f}" if min(soon) < LONG_YEARS else f"more than {LONG_YEARS}"]
@@ -374,7 +378,9 @@ def _soonest(one: dict[str, Any]) -> list[str]:
 def _regret(value: Any) -> str:
     if not isinstance(value, dict):
         return f"{value:.2g}"
-    return f"{value['mean']:.2g}" + ("" if value["high"] is None else f" (at most {value['high']:.2g})")
+    return f"{value['mean']:.2g}" + (
+        " (no bound)" if value["high"] is None else f" (at most {value['high']:.2g})"
+    )
 
 
 def _value(value: Any) -> str:
@@ -409,11 +415,12 @@ def _named_outcomes(document: dict[str, Any]) -> Iterator[tuple[str, dict[str, A
     }
     if extremes["worst"] is None:
         return
+    noun = "equilibrium" if document.get("possible") is None else "possible equilibrium"
     if extremes["worst"] == extremes["best"]:
-        yield "equilibrium", _outcome_of(document, extremes["worst"])
+        yield noun, _outcome_of(document, extremes["worst"])
         return
     for name, told in extremes.items():
-        yield f"{name} equilibrium", _outcome_of(document, told)
+        yield f"{name} {noun}", _outcome_of(document, told)
 
 
 def _outcome_of(document: dict[str, Any], told: dict[str, Any]) -> dict[str, Any]:

@@ -5,7 +5,6 @@ from __future__ import annotations
 import functools
 import math
 import os
-import unicodedata
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -15,10 +14,10 @@ import click
 
 from analysis.command.caution import CAUTION
 from analysis.command.usage import Checked
+from analysis.overrides import LIMITS, changes_of, overridden
 from sim.errors import Fault, ScenarioError
 
 ENGINES = ("compiled", "reference")
-LONGEST_THRESHOLD = 9  # digits
 
 
 @dataclass(frozen=True)
@@ -86,13 +85,17 @@ _OPTIONS = (
     click.option(
         "--json", "as_json", is_flag=True, help="One JSON document on standard output, nothing else there."
     ),
-    click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of every draw."),
-    click.option("--replications", type=click.IntRange(1, 1_000_000), help="Number of replications."),
+    click.option("--seed", type=click.IntRange(*LIMITS["seed"]), help="Seed of every draw."),
+    click.option(
+        "--replications", type=click.IntRange(*LIMITS["replications"]), help="Number of replications."
+    ),
     click.option(
         "--confidence", type=FiniteRange(0, 1, min_open=True, max_open=True), help="Of every interval."
     ),
     click.option(
-        "--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores, if worth it]."
+        "--workers",
+        type=click.IntRange(*LIMITS["workers"]),
+        help="Worker processes [default: the cores, if worth it].",
     ),
     click.option(
         "--cluster",
@@ -128,17 +131,7 @@ def request_of(values: Mapping[str, Any], also: Callable[[Any], list[Fault]] | N
 
     scenario = read_scenario(values["scenario"])
     faults: list[Fault] = []
-    changes = {key: values[key] for key in ("seed", "replications", "confidence") if values[key] is not None}
-    scenario = _under(scenario.with_run(**changes), values["policy"])
-    scenario = _with_demand(scenario, values.get("demand"), faults)
-    scenario = _with_target(scenario, values.get("target"), faults)
-    if values["exponential"]:
-        scenario = scenario.exponential()
-    policy = _policy(scenario, values["policy"], faults)
-    policy = policy.with_thresholds(_per_unit("--threshold", values["threshold"], scenario, faults))
-    policy = policy.with_rule(
-        "incoming_threshold", _per_unit("--incoming", values["incoming"], scenario, faults)
-    )
+    scenario, policy = overridden(scenario, values, faults)
     _writable(values["out"], faults)
     cluster = _cluster(values, faults)
     faults += also(scenario) if also is not None else []
@@ -152,7 +145,7 @@ def request_of(values: Mapping[str, Any], also: Callable[[Any], list[Fault]] | N
         values["engine"],
         values["out"],
         values["as_json"],
-        _changes(values),
+        changes_of(values),
         cluster=cluster,
     )
 
@@ -199,113 +192,6 @@ def _cluster(values: Mapping[str, Any], faults: list[Fault]) -> str | None:
     except ScenarioError as error:
         faults.extend(error.faults)
         return None
-
-
-def _with_demand(scenario: Any, factor: float | None, faults: list[Fault]) -> Any:
-    if factor is None:
-        return scenario
-    from analysis.settings import demand_bounds
-
-    bounds = demand_bounds(scenario)
-    least, most = bounds.least, bounds.most
-    if not bounds.holds(factor):
-        rule, remedy = (
-            f"must be from {least:.3g} to {most:.6g} here",
-            "give a factor such as 1.1 for 10 % more patients",
-        )
-        faults.append(Fault(None, "--demand", rule, f"got {factor:g}", remedy))
-        return scenario
-    return scenario.with_demand(factor)
-
-
-def _with_target(scenario: Any, target: float | None, faults: list[Fault]) -> Any:
-    if target is None:
-        return scenario
-    if not 0 < target <= 1:
-        faults.append(
-            Fault(
-                None,
-                "--target",
-                "must be above 0 and at most 1",
-                f"got {target:g}",
-                "give a share such as 0.75",
-            )
-        )
-        return scenario
-    return scenario.with_target(target)
-
-
-def _under(scenario: Any, name: str | None) -> Any:
-    """The network that the policy is for; of an unknown policy `_policy` tells."""
-    try:
-        return scenario.under(None if name is None else unicodedata.normalize("NFC", name))
-    except KeyError:
-        return scenario
-
-
-def _policy(scenario: Any, name: str | None, faults: list[Fault]) -> Any:
-    from sim.wording import nearest, shown
-
-    try:
-        return scenario.policy(None if name is None else unicodedata.normalize("NFC", name))
-    except KeyError:
-        known = [row.name for row in scenario.policies]
-        faults.append(
-            Fault(
-                None,
-                "--policy",
-                "must name a policy of the scenario",
-                f"got {shown(name)}",
-                nearest(name, known),
-            )
-        )
-        return scenario.policy()
-
-
-def _per_unit(option: str, entries: tuple[str, ...], scenario: Any, faults: list[Fault]) -> dict[str, int]:
-    """The thresholds of repeated UNIT=K options; the last one for a unit holds."""
-    from sim.wording import nearest, shown
-
-    chosen = {}
-    for entry in entries:
-        name, found, number = unicodedata.normalize("NFC", entry).rpartition("=")
-        digits = number.strip().lstrip("0") or number.strip()[-1:]
-        if not found or not digits.isdecimal() or len(digits) > LONGEST_THRESHOLD:
-            rule, remedy = (
-                "must be UNIT=K, K a whole number, 0 or more",
-                f'write "{scenario.unit_names[0]}=9"',
-            )
-            faults.append(Fault(None, option, rule, f"got {shown(entry)}", remedy))
-        elif name not in scenario.unit_names:
-            remedy = nearest(name, scenario.unit_names)
-            faults.append(
-                Fault(None, option, "must name a unit of the scenario", f"got {shown(name)}", remedy)
-            )
-        elif int(digits) > scenario.unit(name).beds:
-            beds = scenario.unit(name).beds
-            rule = "must not be above the unit's beds"
-            faults.append(
-                Fault(None, option, rule, f"got {shown(entry)} for {beds} beds", f"choose from 0 to {beds}")
-            )
-        else:
-            chosen[name] = int(digits)
-    return chosen
-
-
-def _changes(values: Mapping[str, Any]) -> tuple[str, ...]:
-    """What the command line changes of the scenario, in words."""
-    said = []
-    if values["policy"] is not None:
-        said.append(f"policy {values['policy']}")
-    said += [f"closure threshold {entry.replace('=', ' ')}" for entry in values["threshold"]]
-    said += [f"incoming threshold {entry.replace('=', ' ')}" for entry in values["incoming"]]
-    if values.get("demand") is not None:
-        said.append(f"demand x {values['demand']:g}")
-    if values.get("target") is not None:
-        said.append(f"target {values['target']:g} for every unit")
-    if values["exponential"]:
-        said.append("exponential counterpart (stays of the same means, no delay, constant demand)")
-    return tuple(said)
 
 
 def require_file_can_be_written(option: str, path: Path, request: Request) -> None:

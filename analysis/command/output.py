@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import shutil
 import sys
 from collections.abc import Iterable, Sequence
@@ -10,6 +9,9 @@ from pathlib import Path
 from typing import Any
 
 from analysis.command.caution import CAUTION
+from analysis.result_files import to_json as to_json
+from analysis.result_files import write_result as write_result
+from sim.wording import count as count
 
 PLAIN_WIDTH = 132
 WRITTEN = (
@@ -23,11 +25,6 @@ def put_json(document: Any) -> None:
     """The one document on standard output; names in escapes where the output cannot take them as written."""
     utf8 = (sys.stdout.encoding or "").lower().replace("-", "").startswith("utf")
     print(to_json(document, ensure_ascii=not utf8))
-
-
-def to_json(document: Any, *, ensure_ascii: bool = False) -> str:
-    """JSON with no NaN and no infinity."""
-    return json.dumps(document, ensure_ascii=ensure_ascii, allow_nan=False, indent=1)
 
 
 def put_heading(document: dict[str, Any]) -> None:
@@ -114,11 +111,6 @@ def put_caution() -> None:
     put_text("", CAUTION)
 
 
-def count(whole: int) -> str:
-    """A count, in full or, where it is vast, as a power of ten."""
-    return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
-
-
 def number(value: Any, digits: int = 3) -> str:
     """A number as a table shows it; a dash for none."""
     if value is None:
@@ -156,11 +148,3 @@ def prepare_folder(folder: Path) -> Path:
         for path in left:
             shutil.move(path, shelf / path.name)
     return folder
-
-
-def write_result(folder: Path, document: Any, provenance: dict[str, Any]) -> None:
-    """Writes `result.json` and `provenance.json`, each whole or not at all."""
-    for name, content in (("result.json", document), ("provenance.json", provenance)):
-        half = folder / f"{name}.part"
-        half.write_text(to_json(content) + "\n", encoding="utf-8")
-        half.replace(folder / name)

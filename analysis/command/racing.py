@@ -187,20 +187,20 @@ def tell(document: dict[str, Any], analysis: Any) -> None:
 
 def _racing(request: Request, controls: bool, epsilon: float | None) -> Any:
     """The race before its first look."""
-    from analysis.command.axes import axes
+    from analysis.game_tables import axes_of
     from analysis.payoffs import TableSums
     from analysis.raced_game import Racing
     from analysis.raced_table import RacedTables
     from analysis.racing import FIRST, look_sizes
     from sim.scenario.describe import advice
 
-    profiles, goal, welfare = axes(request)
+    axes = axes_of(request.scenario, request.policy)
     for said in advice(request.scenario):
         say(f"advice: {said}")
     run = request.scenario.run
-    most = _within_memory(request, profiles.cells, max(look_sizes(run.replications)))
-    sums = TableSums(request.scenario, profiles.cells, most, at_first=FIRST)
-    tables = RacedTables(request.scenario, profiles, goal, welfare, sums, controls)
+    most = _within_memory(request, axes.profiles.cells, max(look_sizes(run.replications)))
+    sums = TableSums(request.scenario, axes.profiles.cells, most, at_first=FIRST)
+    tables = RacedTables(request.scenario, axes.profiles, axes.goal, axes.welfare, sums, controls)
     return Racing(tables, most, 1 - run.confidence, run.seed, epsilon)
 
 

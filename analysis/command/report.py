@@ -2,22 +2,27 @@
 
 from __future__ import annotations
 
-import os
+from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 import click
 
 from analysis.command.caution import CAUTION
+from analysis.command.entry import CheckFailed
+from analysis.command.options import require_folder
 from analysis.command.output import put_caution, put_json, put_text
 from analysis.command.usage import Checked
-from sim.errors import Fault, ScenarioError
 
 FORMATS = {"html": ".html", "md": ".md"}
 
 
 @click.command(cls=Checked, epilog=CAUTION)
-@click.argument("results", nargs=-1, required=True, type=click.Path(path_type=Path))
-@click.option("--out", type=click.Path(path_type=Path), help="The file [default: report.html, or report.md].")
+@click.argument("results", nargs=-1, type=click.Path(path_type=Path))
+@click.option("--out", type=click.Path(path_type=Path),
+              help="The file [default: report.html or .md]; with --from a folder [default: results/PLAN].")  # fmt: skip
+@click.option("--from", "plan", type=click.Path(path_type=Path), metavar="PLAN",
+              help="Run the commands of a report plan whose results are missing, then write.")  # fmt: skip
 @click.option(
     "--format", "form", type=click.Choice(tuple(FORMATS)), help="[default: by the file's name, else html]"
 )
@@ -25,61 +30,69 @@ FORMATS = {"html": ".html", "md": ".md"}
 @click.option(
     "--json", "as_json", is_flag=True, help="What was written and the answer, as one JSON document."
 )
-def command(results: tuple[Path, ...], out: Path | None, form: str | None, pdf: bool, as_json: bool) -> None:
-    """One self-contained page from RESULTS, folders written with --out.
+def command(
+    results: tuple[Path, ...], out: Path | None, plan: Path | None, form: str | None, pdf: bool, as_json: bool
+) -> None:
+    """One self-contained page from RESULTS, folders written with --out; or every page of a report plan.
 
     Every number stands with its interval, is called exact, or is said to have no interval; what only the analyst
     can say is marked as a gap.
     """
-    from analysis.report import read_results, report_of, to_html, to_markdown
+    from analysis.report.writing import form_of
 
-    form = form or ("md" if out is not None and out.suffix.lower() in (".md", ".markdown") else "html")
-    out = out or Path(f"report{FORMATS[form]}")
+    if bool(results) == (plan is not None):
+        raise click.UsageError("give RESULTS, or --from PLAN" + (", not both" if results else ""))
+    form = form or form_of(out)
     if pdf and form != "html":
         raise click.UsageError("--pdf prints the page: leave --format md out")
+    if plan is not None:
+        _from_plan(plan, out, form, pdf, as_json)
+        return
+    told = _reported(results, out or Path(f"report{FORMATS[form]}"), form, pdf)
+    if as_json:
+        put_json(told)
+        return
+    _show(told)
+    put_caution()
+
+
+def _from_plan(plan: Path, out: Path | None, form: str, pdf: bool, as_json: bool) -> None:
+    """Every report of a plan, each written as soon as its results are there."""
+    from analysis.command.batch_documents import folder_of
+    from analysis.command.report_plan import build
+
+    folder = out or folder_of(plan)
+    require_folder(folder)
+    told = []
+    for built in build(plan, folder):
+        page = folder / f"{built.name}{FORMATS[form]}"
+        told.append(_reported(built.folders, page, form, pdf) | {"failed": list(built.failed)})
+        if not as_json:
+            _show(told[-1])
+    if as_json:
+        put_json({"reports": told})
+    else:
+        put_caution()
+    if any(one["failed"] for one in told):
+        raise CheckFailed
+
+
+def _reported(results: Sequence[Path], out: Path, form: str, pdf: bool) -> dict[str, Any]:
+    """Writes one report; what was written, of which kinds, and its answer."""
+    from analysis.report.writing import answer_of, written
+
     printed = out.with_suffix(".pdf") if pdf else None
-    faults = [
-        fault for file in (out, printed) if file is not None for fault in _cannot_be_written(file, results)
-    ]
-    try:
-        read = read_results(results)
-    except ScenarioError as error:
-        raise ScenarioError([*error.faults, *faults]) from None
-    if faults:
-        raise ScenarioError(faults)
-    written = report_of(read)
-    _write(out, to_html(written) if form == "html" else to_markdown(written))
+    read, report = written(results, out, form=form, also=[] if printed is None else [printed])
     if printed is not None:
         from analysis.report.paper import write_pdf
 
         write_pdf(out, printed)
     files = [str(file) for file in (out, printed) if file is not None]
-    answer = next(section.blocks[0].points for section in written.sections if section.anchor == "answer")
-    if as_json:
-        put_json({"written": files, "kinds": {one.label: one.kind for one in read}, "answer": list(answer)})
-        return
-    put_text(*answer, "", f"Written: {', '.join(files)}")
-    put_caution()
+    answer = answer_of(report)
+    return {"written": files, "kinds": {one.label: one.kind for one in read}, "answer": answer}
 
 
-def _cannot_be_written(file: Path, results: tuple[Path, ...]) -> list[Fault]:
-    """A fault where the file cannot be written, or would take the place of a result."""
-    rule = ""
-    if file.is_dir():
-        rule = "must be a file, not a folder"
-    elif not file.parent.is_dir() or not os.access(file.parent, os.W_OK) or (
-        file.exists() and not os.access(file, os.W_OK)
-    ):  # fmt: skip
-        rule = "must be in a folder that can be written"
-    elif file.name in ("result.json", "provenance.json", "runs.sqlite") and file.parent.resolve() in {
-        one.resolve() for one in results
-    }:
-        rule = "must not take the place of a result"
-    return [Fault(None, "--out", rule, f"got {str(file)!r}", "choose another file")] if rule else []
-
-
-def _write(file: Path, text: str) -> None:
-    """Whole or not at all."""
-    half = file.with_name(f"{file.name}.part")
-    half.write_text(text, encoding="utf-8", newline="\n")
-    half.replace(file)
+def _show(told: dict[str, Any]) -> None:
+    put_text(*told["answer"], "", f"Written: {', '.join(told['written'])}")
+    for name in told.get("failed", []):
+        put_text(f"`{name}` did not hold, and the report says so.")

@@ -70,9 +70,7 @@ def simulate(
     """Simulate one policy (the file's own, or --policy) and give its measures with intervals."""
     from analysis.command.provenance import provenance, started
     from analysis.command.running import collect_runs, finish
-    from analysis.controls import controls_document
-    from analysis.simulation import per_replication_measures, summarise
-    from sim.record import hash_records
+    from analysis.simulation import per_replication_measures, simulation_document, summarise
     from sim.scenario.describe import advice
 
     begun = started()
@@ -96,13 +94,9 @@ def simulate(
         controls=known,
         counterpart=also,
     )
-    document = _heading(request) | result.to_dict() | {
-        "replications": result.replications,
-        "confidence": result.confidence,
-        "seed": request.scenario.run.seed,
-        "record_hash": hash_records([run.record.hash for run in runs]),
-        "controls": controls_document(result.controls, result.variance_ratio),
-    } | ran.to_dict()  # fmt: skip
+    document = (
+        request.heading | simulation_document(result, request.scenario, request.policy, runs) | ran.to_dict()
+    )
     if checked is not None:
         document["counterpart"] = counterpart_document(checked, used=also is not None)
     if per_replication:
@@ -140,13 +134,6 @@ def _add_paths(
     document |= found | ran.to_dict()
     tell(document)
     return ran
-
-
-def _heading(request: Request) -> dict[str, Any]:
-    return request.heading | {
-        "policy": request.policy.name,
-        "thresholds": request.policy.thresholds,
-    }
 
 
 def _check_files(request: Request, trace: Path | None, intake_out: Path | None) -> None:

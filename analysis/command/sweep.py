@@ -107,13 +107,16 @@ def check(scenario: Any, own: Mapping[str, Any]) -> list[Any]:
 
 def planned(request: Request, own: Mapping[str, Any]) -> tuple[Any, list[Any]]:
     """The grid and its networks."""
-    from analysis.settings import grid_of
-    from analysis.sweeping import EXACT, SIMULATED, networks_of, with_target
+    from analysis.filling import networks_of_sweep
 
-    grid = grid_of(texts_of(own), request.scenario, [])
-    force = EXACT if own["exact"] else SIMULATED if own["simulated"] else None
-    scenario = with_target(request.scenario, grid.targets[0])  # any will do: it changes no network
-    return grid, networks_of(scenario, request.policy, grid.settings(), force)
+    return networks_of_sweep(texts_of(own), request.scenario, request.policy, method_of(own))
+
+
+def method_of(own: Mapping[str, Any]) -> str | None:
+    """The method that is asked for, for all networks."""
+    from analysis.sweeping import EXACT, SIMULATED
+
+    return EXACT if own["exact"] else SIMULATED if own["simulated"] else None
 
 
 def jobs(request: Request, own: Mapping[str, Any]) -> list[tuple[Any, Sequence[Any]]]:

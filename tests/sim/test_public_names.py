@@ -6,7 +6,15 @@ import importlib
 
 import pytest
 
-LISTED = ["sim.scenario", "sim.rules", "sim.compiled", "sim.lowering", "sim.stays", "analysis.chain"]
+LISTED = [
+    "sim.scenario",
+    "sim.rules",
+    "sim.compiled",
+    "sim.lowering",
+    "sim.stays",
+    "analysis.chain",
+    "analysis.notebook",
+]
 
 
 @pytest.mark.parametrize("module", LISTED)

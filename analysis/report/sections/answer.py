@@ -4,16 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 
+from analysis.caution import CAUTION
 from analysis.report import contents
 from analysis.report.blocks import Block, Points, Text
 from analysis.report.words import listed, sentence
 
 TITLE = "Answer"
 SENTENCES = 3
-CAUTION = (
-    "For planning only, not for decisions on a patient or a live bed. Results depend on the data and the assumptions "
-    "of the scenario; local protocols and licensed clinicians decide."
-)
 FILLING = (
     "How well the model fits a real network is not answered by these results",
     "Every statement holds for the network as its scenario describes it, and for nothing else",

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from analysis.caution import CAUTION
 from analysis.report.blocks import Block, Points, Text
 from analysis.report.contents import Figures, Results
-from analysis.report.sections.answer import CAUTION
 from analysis.report.words import counted, listed, name, sentence
 
 TITLE = "Limits and cautions"
