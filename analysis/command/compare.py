@@ -65,6 +65,7 @@ def compare(
     paired, jobs_done = PairedRuns(cases, run.replications, levels=True), Jobs(request)
     jobs_done.run(paired.groups, paired.taker, label="compare")
     require(len(paired.complete), jobs_done.interrupted, least=LEAST)
+    early = jobs_done.interrupted
     sums, rng = paired.sums(), rng_of(run.seed)
     comparison = compared(cases, sums, run.confidence, rng)
     document = request.heading | comparison_document(comparison, sums, rng) | {
@@ -75,6 +76,8 @@ def compare(
         "record_hash": hash_records(paired.hashes()),
     }  # fmt: skip
     ran = jobs_done.joined()
+    if ran.interrupted and not early:
+        say("interrupted after the comparison, which stands; the rest is as far as it got")
     document |= ran.to_dict()
     if request.as_json:
         put_json(document)

@@ -6,6 +6,7 @@ import json
 
 import pytest
 
+import analysis.command.compare as compare_module
 from tests.analysis.conftest import TWO, written
 
 MORE_BEDS = """
@@ -219,3 +220,13 @@ def test_faults_of_a_ledger(show, two, arguments, said):
 def test_where_nobody_closes_early_there_is_nothing_to_reckon(show, two):
     status, out, _ = show("ledger", two, *QUICK)
     assert status == 0 and "No unit closes early under these rules" in out and "For planning only" in out
+
+
+def test_an_interruption_after_the_comparison_is_told(show, policies, monkeypatch):
+    def stop(jobs_done, *_):
+        jobs_done.interrupt()
+
+    monkeypatch.setattr(compare_module, "_selection", stop)
+    status, out, said = show("compare", policies, *QUICK, "--difference", "5")
+    assert status == 130 and "Every policy met the same patients" in out
+    assert "interrupted after the comparison, which stands" in said
