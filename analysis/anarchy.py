@@ -19,7 +19,11 @@ from analysis.goals import Sense
 
 DAYS_A_YEAR = 365.0
 NO_EQUILIBRIUM = "no equilibrium is listed"
+LISTED = "the worst listed equilibrium"
+OF_ESTIMATED = "the worst equilibrium of the estimated table"
+NONE_ESTIMATED = "the estimated table has no pure equilibrium"
 NOT_POSITIVE = "a welfare is not above 0, so a ratio says nothing"
+MAY_BE_NOUGHT = "a mean welfare may be 0 or less, as far as the replications show, so a ratio says nothing"
 
 
 @dataclass(frozen=True)
@@ -113,7 +117,7 @@ class _Pair:
         """Welfare forgone a year, in the welfare's unit (patients, for throughput)."""
         sign = DAYS_A_YEAR if self.sense == "gain" else -DAYS_A_YEAR
         if self.replicates is None:
-            return Estimate(float(sign * (self.welfare[self.optimum] - self.welfare[profile])))
+            return Estimate(float(sign * (self.welfare[self.optimum] - self.welfare[profile])) + 0.0)
         lost = sign * (self._of(self.optimum) - self._of(profile))
         return mean_estimate(lost, self.confidence, degrees=self.degrees)
 
@@ -134,12 +138,14 @@ class TurningWeight:
     high: float | None = None
 
 
-def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profile | None) -> TurningWeight:
+def turning_weight(
+    turned_away: np.ndarray, transfers: np.ndarray, worst: Profile | None, *, who: str = LISTED
+) -> TurningWeight:
     """The weight of a transfer at which the verdict turns.
 
     Below it the profile with the fewest patients turned away has a lower loss (turned away + weight x
     transfers) than the worst equilibrium; above it the equilibrium is no worse. Both arrays: mean a day,
-    (*shape). `worst`: the equilibrium judged.
+    (*shape). `worst`: the equilibrium judged; `who`: what it is, in words.
     """
     if worst is None:
         return TurningWeight(None, NO_EQUILIBRIUM)
@@ -152,12 +158,12 @@ def turning_weight(turned_away: np.ndarray, transfers: np.ndarray, worst: Profil
     if saved <= DEFAULT_TOLERANCE:
         return TurningWeight(
             None,
-            "the worst listed equilibrium turns no more patients away than the profile that turns fewest away",
+            f"{who} turns no more patients away than the profile that turns fewest away",
         )
     if moved <= 0:
         return TurningWeight(
             None,
-            "the profile that turns fewest patients away moves no more of them than the worst listed equilibrium, "
-            "so it is better at any weight",
+            f"the profile that turns fewest patients away moves no more of them than {who}, so it is better at any "
+            "weight",
         )
     return TurningWeight(saved / moved)

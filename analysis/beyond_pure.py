@@ -368,6 +368,8 @@ def _said(game: GameAnalysis, profile: Profile) -> str:
 
 def _bands_sentences(game: GameAnalysis, bands: ReplyBands) -> Iterator[str]:
     players = game.table.profiles.players
+    if len(players) == 1:
+        return  # nobody else's thresholds to reply to
     falls = {name: _fall(game, bands, player) for player, name in enumerate(players)}
     for name, fall in falls.items():
         if fall is not None:

@@ -15,7 +15,7 @@ from functools import cached_property
 
 import numpy as np
 
-from analysis.confidence import Estimate, critical_value, mean_estimate
+from analysis.confidence import Estimate, critical_value, mean_estimate, t_quantile
 from analysis.goals import Welfare, welfare_of
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, network_sums, unit_sums
 from analysis.named_policies import Case
@@ -61,16 +61,28 @@ def grouped(cases: Sequence[Case]) -> list[Group]:
 
 
 class PairedRuns:
-    """The sums of every run, filled as they arrive; only replications that every case has are compared."""
+    """The sums of every run, filled as they arrive; only replications that every case has are compared.
 
-    def __init__(self, cases: Sequence[Case], replications: int) -> None:
+    levels: whether the time at each number of occupied beds is kept too, which takes several times the memory.
+    """
+
+    def __init__(self, cases: Sequence[Case], replications: int, *, levels: bool = False) -> None:
+        self._levels: dict[tuple[int, int], np.ndarray] | None = {} if levels else None
         self.groups = grouped(cases)
         self._cases = cases
         self._sums = [TableSums(one.scenario, len(one.places), replications) for one in self.groups]
 
     def taker(self, group: int) -> Callable[[list[Run] | Failure], int]:
         """What takes the replies of one group's runs."""
-        return self._sums[group].add
+        places, table = self.groups[group].places, self._sums[group]
+
+        def take(reply: list[Run] | Failure) -> int:
+            if self._levels is not None and not isinstance(reply, Failure):
+                for run in reply:
+                    self._levels[places[run.cell], run.replication] = run.record.occupancy_days.sum(axis=0)
+            return table.add(reply)
+
+        return take
 
     @property
     def complete(self) -> list[int]:
@@ -85,6 +97,9 @@ class PairedRuns:
             whole = {name: values[kept] for name, values in table.sums().items()}
             for column, place in enumerate(group.places):
                 found[place] = {name: values[:, column] for name, values in whole.items()}
+                if self._levels is not None:
+                    days = [self._levels[place, replication] for replication in self.complete]
+                    found[place]["occupancy_days"] = np.stack(days)
         return found
 
     def hashes(self) -> list[str]:
@@ -249,12 +264,12 @@ def _differences(
 def banded(paired: np.ndarray, confidence: float, rng: np.random.Generator) -> tuple[float, list[Estimate]]:
     """The critical value and the band of each paired difference, (replications, differences).
 
-    Differences that are 0 in every replication, or in most and not 0 in fewer than ten, get no band: a rare
+    Differences that are alike in every replication, or 0 in most and not 0 in fewer than ten, get no band: a rare
     difference is not normal, and no spread is no proof of none.
     """
     parts = studentise(paired)
     counts = np.count_nonzero(paired, axis=0)
-    rare = is_rare(paired)
+    rare = is_rare(paired) | is_constant(paired)
     critical = _critical(np.where(rare, 0.0, parts.scores), confidence, rng)
     half = critical * parts.error
     return critical, [
@@ -273,6 +288,19 @@ def _critical(scores: np.ndarray, confidence: float, rng: np.random.Generator) -
     return critical_value(confidence, len(scores) - 1, comparisons=max(1, varying))
 
 
+def _critical_one_sided(scores: np.ndarray, confidence: float, rng: np.random.Generator) -> float:
+    """As `_critical`, for limits on one side."""
+    if len(scores) >= ENOUGH_FOR_MAX_T:
+        return critical_max_t(scores, 1 - confidence, rng, two_sided=False)
+    varying = np.count_nonzero(scores.any(axis=0))
+    return float(t_quantile(1 - (1 - confidence) / max(1, varying), len(scores) - 1))
+
+
+def is_constant(paired: np.ndarray) -> np.ndarray:
+    """Which differences are alike in every replication but for rounding, (differences,): no spread is no proof."""
+    return np.ptp(paired, axis=0) <= 1e-12 * np.abs(paired).max(axis=0, initial=0.0)
+
+
 def is_rare(paired: np.ndarray) -> np.ndarray:
     """Which differences are 0 in most replications and not 0 in fewer than ten, (differences,)."""
     counts = np.count_nonzero(paired, axis=0)
@@ -282,6 +310,8 @@ def is_rare(paired: np.ndarray) -> np.ndarray:
 def _no_band(mean: float, count: int, replications: int) -> Estimate:
     if count == 0:
         return Estimate(mean, reason=f"the same in each of {replications} replications")
+    if count == replications:
+        return Estimate(mean, reason=f"differs by as much in each of {replications} replications: no band")
     return Estimate(mean, reason=f"differs in {count} of {replications} replications only: no band")
 
 
@@ -323,8 +353,8 @@ def _against_others(
     """The policy less each other, means and half widths of one-sided limits, (others,)."""
     paired = welfare[:, [place]] - np.delete(welfare, place, axis=1)
     parts, counts = studentise(paired), np.count_nonzero(paired, axis=0)
-    rare = is_rare(paired) & (counts > 0)
-    critical = critical_max_t(np.where(rare, 0.0, parts.scores), 1 - confidence, rng, two_sided=False)
+    rare = (is_rare(paired) | is_constant(paired)) & (counts > 0)
+    critical = _critical_one_sided(np.where(rare, 0.0, parts.scores), confidence, rng)
     return parts.mean, np.where(rare, np.inf, max(critical, 0.0) * parts.error)
 
 

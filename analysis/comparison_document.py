@@ -19,7 +19,7 @@ from analysis.comparison import (
     could_be_best,
     efficient_set,
 )
-from analysis.confidence import Estimate
+from analysis.confidence import Estimate, mean_estimate
 from analysis.findings import Finding
 from analysis.goals import welfare_of
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, network_sums
@@ -95,8 +95,9 @@ def _policy(case: Case, sums: Sums, confidence: float) -> dict[str, Any]:
         "when_all_closed": case.policy.when_all_closed,
         "beds": {unit.name: unit.beds for unit in case.scenario.units},
         "units": {
-            name: {m.name: _level(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
-            for place, name in enumerate(case.scenario.unit_names)
+            unit.name: {m.name: _level(m, of_unit(sums, place), confidence) for m in UNIT_MEASURES}
+            | _occupancy(case, sums.get("occupancy_days"), place, confidence)
+            for place, unit in enumerate(case.scenario.units)
         },
         "network": {m.name: _level(m, whole, confidence) for m in NETWORK_MEASURES},
     }
@@ -104,6 +105,14 @@ def _policy(case: Case, sums: Sums, confidence: float) -> dict[str, Any]:
 
 def _level(measure: Measure, sums: Sums, confidence: float) -> dict[str, Any]:
     return estimate_measure(measure, sums, confidence).within(0.0, measure.most).to_dict()
+
+
+def _occupancy(case: Case, days: np.ndarray | None, place: int, confidence: float) -> dict[str, Any]:
+    """Shares of time with so many beds of a unit occupied; days: (replications, units, levels), None where not kept."""
+    if days is None:
+        return {}
+    shares = days[:, place, : case.scenario.units[place].beds + 1].T / case.scenario.run.measured_days
+    return {"occupancy": [mean_estimate(share, confidence).within(0.0, 1.0).to_dict() for share in shares]}
 
 
 def _difference(one: Difference) -> dict[str, Any]:

@@ -36,6 +36,7 @@ class Estimate:
 
 
 ONE_REPLICATION = "one replication gives no interval"
+TIES_ON_FEW = "profiles tie in each of fewer than 10 replications, which is no proof that they are equal"
 
 
 def t_quantile(probability: float | np.ndarray, degrees: int) -> float | np.ndarray:

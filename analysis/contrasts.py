@@ -8,8 +8,8 @@ the target. Contrasts are made block by block, so that memory is bounded.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -17,11 +17,11 @@ from scipy.special import stdtr
 
 from analysis.confidence import t_quantile
 from analysis.equilibria import as_costs
+from analysis.kinks import PLAIN, KinkedBlock, kinked_block, ratio
 from analysis.payoffs import PayoffTable
 from analysis.simultaneous import Studentised, flip_scores, studentise
 
 LEAST_DIFFERENCES = 10  # non-zero ones, below which two profiles count as tied
-PLAIN = 6.0  # a t beyond which a sign is taken as known
 SAME = 1e-12  # a difference of rounding only, against the largest value
 AT_ONCE = 1_000_000  # numbers held by one block of draws x contrasts
 
@@ -32,6 +32,8 @@ class Evidence:
 
     values: (replications, players, cells), costs or signed distances, after control variates. raw: the same before
     them, in which ties are exact. degrees: of every error. distances: whether a player's cost is |mean of values|.
+    branches: by player (branches, replications, cells), costs whose largest mean is the player's, where that has bends;
+    None for a player, or for all, where `values` say it all.
     """
 
     values: np.ndarray
@@ -39,11 +41,26 @@ class Evidence:
     shape: tuple[int, ...]
     distances: bool
     degrees: int
+    branches: tuple[np.ndarray | None, ...] | None = None
 
     @property
     def cells(self) -> int:
         """Number of profiles."""
         return self.values.shape[2]
+
+    @property
+    def costs(self) -> np.ndarray:
+        """The estimated costs, (players, cells)."""
+        return self.costs_at(lambda values: values.mean(axis=0)[None])[0]
+
+    def costs_at(self, mean: Callable[[np.ndarray], np.ndarray]) -> np.ndarray:
+        """Costs by means of one's own, (tables, players, cells); `mean` takes (replications, ...) to (tables, ...)."""
+        means = mean(self.values)
+        costs = np.abs(means) if self.distances else means
+        for player, bent in enumerate(self.branches or ()):
+            if bent is not None:
+                costs[:, player] = np.max([mean(one) for one in bent], axis=0)
+        return costs
 
     @cached_property
     def same(self) -> float:
@@ -88,7 +105,14 @@ def evidence_of(table: PayoffTable) -> Evidence:
     if table.signed_replicates is not None:
         return paired_distances(table.signed_replicates, raw=table.raw_replicates, degrees=table.degrees)
     raw = None if table.raw_replicates is None else as_costs(table.raw_replicates, sense)
-    return paired_costs(as_costs(table.replicates, sense), raw=raw, degrees=table.degrees)
+    found = paired_costs(as_costs(table.replicates, sense), raw=raw, degrees=table.degrees)
+    return found if table.branches is None else with_branches(found, table.branches)
+
+
+def with_branches(evidence: Evidence, branches: Sequence[np.ndarray | None]) -> Evidence:
+    """The same of payoffs that bend. branches: by player (branches, replications, *shape), None without a bend."""
+    flat = tuple(None if one is None else one.reshape(*one.shape[:2], -1) for one in branches)
+    return replace(evidence, branches=flat)
 
 
 @dataclass(frozen=True)
@@ -121,7 +145,7 @@ class Block:
 
     use: (2, pairs), whether the first is judged against the second, and the reverse. D: second less first, for costs
     first less second (the gain of moving). S: the sum, for distances. plain, below: what is known of the sign of the
-    cell moved to, (2, pairs).
+    cell moved to, (2, pairs). same: an error that is rounding only.
     """
 
     player: int
@@ -132,6 +156,12 @@ class Block:
     S: Studentised | None
     plain: np.ndarray | None
     below: np.ndarray | None
+    same: float = 0.0
+
+    @property
+    def ways(self) -> int:
+        """How many linear contrasts a pair stands for."""
+        return 1 if self.S is None else 2
 
     @property
     def judged(self) -> tuple[tuple[int, np.ndarray], ...]:
@@ -207,15 +237,20 @@ class Block:
     def not_below(self, direction: int, epsilon: float, degrees: int) -> np.ndarray:
         """One-sided p-value of each pair's "the gain is more than epsilon", (pairs,)."""
         mean, error = self.gains(direction)
-        p = stdtr(degrees, _ratio(mean - epsilon, error))
+        p = np.where(self._tied(error), 1.0, stdtr(degrees, ratio(mean - epsilon, error)))
         return self.settled(direction, p, np.minimum(1.0, p.shape[1] * p.min(axis=1)), np.maximum)
 
     def upper(self, direction: int, level: float, degrees: int) -> np.ndarray:
         """Upper bound of each pair's gain, one-sided at `level`, (pairs,)."""
         mean, error = self.gains(direction)
+        error = np.where(self._tied(error), np.inf, error)
         sure = mean + t_quantile(1 - level, degrees) * error
         split = mean + t_quantile(1 - level / mean.shape[1], degrees) * error
         return self.settled(direction, sure, split.min(axis=1), np.maximum)
+
+    def _tied(self, error: np.ndarray) -> np.ndarray:
+        """Where there is no spread in so few replications that this proves nothing."""
+        return (error <= self.same) & (len(self.D.scores) < LEAST_DIFFERENCES)
 
     def lower(self, direction: int, level: float, degrees: int) -> np.ndarray:
         """Lower bound of each pair's gain, one-sided at `level`, (pairs,)."""
@@ -225,13 +260,7 @@ class Block:
 
 
 def _t(parts: Studentised) -> np.ndarray:
-    return _ratio(parts.mean, parts.error)
-
-
-def _ratio(mean: np.ndarray, error: np.ndarray) -> np.ndarray:
-    """mean / error; without an error infinite with the mean's sign, and 0 where the mean is 0."""
-    sure = np.where(mean == 0, 0.0, np.copysign(np.inf, mean))
-    return np.divide(mean, error, out=sure, where=error > 0)
+    return ratio(parts.mean, parts.error)
 
 
 def pairs(shape: tuple[int, ...], player: int, at_once: int) -> Iterator[tuple[np.ndarray, np.ndarray]]:
@@ -243,14 +272,18 @@ def pairs(shape: tuple[int, ...], player: int, at_once: int) -> Iterator[tuple[n
         yield columns[low[start : start + step]].ravel(), columns[high[start : start + step]].ravel()
 
 
-def blocks(evidence: Evidence, masks: Masks, *, draws: int = 1, ties: bool = False) -> Iterator[Block]:
+def blocks(
+    evidence: Evidence, masks: Masks, *, draws: int = 1, ties: bool = False
+) -> Iterator[Block | KinkedBlock]:
     """Every contrast that counts, in blocks for so many draws.
 
     ties: whether pairs with fewer than 10 non-zero differences are there too; they exclude nothing.
     """
     at_once = max(1, AT_ONCE // max(draws, len(evidence.values)))
     for player in range(evidence.values.shape[1]):
-        for first, second in pairs(evidence.shape, player, at_once):
+        bent = None if evidence.branches is None else evidence.branches[player]
+        few_at_once = at_once if bent is None else max(1, at_once // len(bent) ** 2)
+        for first, second in pairs(evidence.shape, player, few_at_once):
             use = masks.pairs(player, first, second)
             wanted = use.any(axis=0)
             if not ties:
@@ -265,13 +298,18 @@ def _differ(evidence: Evidence, player: int, first: np.ndarray, second: np.ndarr
     return (np.abs(values[:, second] - values[:, first]) > evidence.same).sum(axis=0) >= LEAST_DIFFERENCES
 
 
-def _block(evidence: Evidence, player: int, first: np.ndarray, second: np.ndarray, use: np.ndarray) -> Block:
+def _block(
+    evidence: Evidence, player: int, first: np.ndarray, second: np.ndarray, use: np.ndarray
+) -> Block | KinkedBlock:
+    if evidence.branches is not None and (bent := evidence.branches[player]) is not None:
+        return kinked_block(bent, player, first, second, use, evidence.same, LEAST_DIFFERENCES)
     one, other = evidence.values[:, player, first], evidence.values[:, player, second]
     if not evidence.distances:
-        return Block(player, first, second, use, studentise(one - other), None, None, None)
+        return Block(player, first, second, use, studentise(one - other), None, None, None, evidence.same)
     plain, below = (known[player] for known in evidence.signs)
     moved_to = (second, first)
     return Block(
         player, first, second, use, studentise(other - one), studentise(one + other),
         np.stack([plain[cells] for cells in moved_to]), np.stack([below[cells] for cells in moved_to]),
+        evidence.same,
     )  # fmt: skip

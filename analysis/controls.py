@@ -114,9 +114,9 @@ def _independent(columns: np.ndarray) -> list[int]:
 
 
 def variance_ratio(plain: np.ndarray, adjusted: np.ndarray) -> np.ndarray:
-    """How many times smaller the adjusted mean's variance is; NaN where nothing is left of it."""
+    """How many times smaller the adjusted mean's variance is; NaN where nothing is left of it but rounding."""
     before, after = plain.var(axis=0), adjusted.var(axis=0)
-    return np.divide(before, after, out=np.full(np.shape(after), np.nan), where=after > 0)
+    return np.divide(before, after, out=np.full(np.shape(after), np.nan), where=after > ROUNDING * before)
 
 
 def controls_document(controls: Controls | None, won: Any) -> dict[str, Any]:

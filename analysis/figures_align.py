@@ -23,7 +23,7 @@ def loss_over_targets(row: Mapping[str, Any], ax: Axes) -> Axes:
         _line(ax, mine, place, demand)
     allowed = [one["allowed_per_year"] for one in points if one["demand"] in (demands[0], demands[-1])]
     ax.axhspan(min(allowed), max(allowed), color="0.8", zorder=0)
-    for end in (min(allowed), max(allowed)):
+    for end in sorted({min(allowed), max(allowed)}):
         label = "delta, the loss allowed" if end == min(allowed) else None
         ax.axhline(end, color="0.25", linewidth=1.2, label=label)
     for lowest in row["lowest"][:1]:

@@ -138,6 +138,66 @@ def outcomes(rows: Mapping[str, tuple[float, float]], ax: Axes) -> Axes:
     return ax
 
 
+def best_replies(document: Mapping[str, Any], ax: Axes) -> Axes:
+    """Two players' best replies over the other's threshold, with sets that may hold them; they cross at equilibria.
+
+    The first player's threshold is on the horizontal axis.
+    """
+    players, strategies = document["players"], document["strategies"]
+    for own, (marker, dash, line, face) in enumerate((("o", "_", "-", "black"), ("s", "|", "--", "white"))):
+        who, other = players[own], players[1 - own]
+        pairs = [
+            (one["others"][other], reply)
+            for one in document["best_responses"][who]
+            for reply in one["best"][:1]
+        ]
+        said = document["possible_best_responses"][who]["replies"]
+        sets = [
+            (one["others"][other], reply)
+            for one in said
+            for reply in one["possible"]
+            if document.get("possible")
+        ]
+        ends = slice(None, None, -1 if own == 0 else 1)
+        if sets:
+            ax.plot(*zip(*(pair[ends] for pair in sets), strict=True), dash, color="0.55", markersize=11,
+                    markeredgewidth=2, label=f"possible best replies of {short_name(who)}")  # fmt: skip
+        ax.plot(*zip(*(pair[ends] for pair in pairs), strict=True), line, marker=marker, markersize=5, color="black",
+                markerfacecolor=face, linewidth=1, label=f"best reply of {short_name(who)}")  # fmt: skip
+    met = [strategies_of for verdict in MARKS for strategies_of in _listed(document, verdict)]
+    at = [(strategies[players[0]][row], strategies[players[1]][column]) for row, column in met]
+    if at:
+        ax.plot(*zip(*at, strict=True), "D", markersize=10, markerfacecolor="none", markeredgecolor="black",
+                linestyle="", label="listed equilibrium")  # fmt: skip
+    for axis, who in ((ax.xaxis, players[0]), (ax.yaxis, players[1])):
+        axis.get_major_locator().set_params(integer=True)
+        axis.set_label_text(f"closure threshold of {short_name(who)} (beds)")
+    ax.grid(color="0.9")
+    ax.set_title("Best replies")
+    ax.legend(loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=2, frameon=False, fontsize=8)
+    return ax
+
+
+def loss_over_weights(rows: Sequence[Mapping[str, Any]], ax: Axes, *, turning: float | None) -> Axes:
+    """The loss a year at the worst equilibrium beyond the least, over the weight of a transfer.
+
+    rows: with `weight` and `lost_per_year`, a number or `{"mean", "low", "high"}`.
+    """
+    at = [row["weight"] for row in rows]
+    mean, low, high = (
+        np.array([_end(row["lost_per_year"], key) for row in rows], float) for key in ("mean", "low", "high")
+    )
+    if not np.array_equal(low, high):
+        ax.fill_between(at, low, high, color="0.8", label="interval at each weight")
+    ax.plot(at, mean, "-o", color="black", markersize=4, label="loss a year")
+    if turning is not None and turning <= at[-1]:
+        ax.axvline(turning, color="black", linestyle="--", linewidth=1, label="verdict turns")
+    ax.set(title="What selfish rules cost if transfers count", xlabel="weight of a transfer (patients turned away)",
+           ylabel="lost a year", ylim=(0, None))  # fmt: skip
+    ax.legend(fontsize=8)
+    return ax
+
+
 # ---- inline SVG ----
 
 

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
-from analysis.anarchy import NO_EQUILIBRIUM
+from analysis.anarchy import LISTED, NO_EQUILIBRIUM, OF_ESTIMATED
 from analysis.confidence import Estimate
 from analysis.games import ESTIMATED, GameAnalysis
 from analysis.prices_document import projected_sentences, turning_interval
@@ -114,13 +114,14 @@ def _prices(game: GameAnalysis, basis: str) -> Iterator[Finding]:
 def _turning(game: GameAnalysis, basis: str) -> Finding:
     turning = game.turning
     where = "" if game.is_exact else " in the estimated table"
+    judged = LISTED if game.sets is None else OF_ESTIMATED
     if turning.weight is None:
         said = f"No transfer weight turns the verdict{where}: {turning.reason}" + turning_interval(turning)
         return Finding(said, None, "weight", basis)
     return Finding(
         f"The verdict turns{where} at a transfer weight of {turning.weight:.3f}: where one transfer counts for more "
-        "than that many patients turned away, the profile that turns fewest away is no better than the worst listed "
-        f"equilibrium{turning_interval(turning)}",
+        "than that many patients turned away, the profile that turns fewest away is no better than "
+        f"{judged}{turning_interval(turning)}",
         Estimate(turning.weight, turning.low, turning.high, None if game.is_exact else turning.reason or NO_INTERVAL),
         "patients turned away per transfer",
         basis,

@@ -12,6 +12,7 @@ from analysis.confidence import ONE_REPLICATION, Estimate
 from analysis.equilibria import Profile
 from analysis.findings import findings_of
 from analysis.games import Equilibrium, GameAnalysis, welfare_estimate
+from analysis.network_rates import network_rates, rates_against
 from analysis.profiles import Profiles, choice_columns, chooses, chosen_at
 from analysis.raced_document import raced_document
 from analysis.sets_document import sets_document, years_document
@@ -49,6 +50,7 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
             **_of_ties(table.profiles, cost.optimum),
             "welfare": _number(game, welfare_estimate(table, cost.optimum[0], game.confidence)),
             "outcome": asdict(game.place(cost.optimum[0])),
+            **_with_intervals(game, cost.optimum[0]),
         },
         "worst_equilibrium": None if cost.worst is None else table.profiles.thresholds(cost.worst),
         "best_equilibrium": None if cost.best is None else table.profiles.thresholds(cost.best),
@@ -61,6 +63,17 @@ def game_document(game: GameAnalysis) -> dict[str, Any]:
         **raced_document(game),
         "findings": [finding.to_dict() for finding in findings_of(game)],
     }
+
+
+def _with_intervals(game: GameAnalysis, profile: Profile) -> dict[str, Any]:
+    """Refusals and transfers of a simulated game's network with intervals, and paired against the optimum."""
+    if game.is_exact:
+        return {}
+    found = {"network": network_rates(game.table, profile, game.confidence)}
+    best = game.cost.optimum[0]
+    if profile != best:
+        found["more_than_at_the_optimum"] = rates_against(game.table, profile, best, game.confidence)
+    return found
 
 
 def _of_ties(profiles: Profiles, ties: Sequence[Profile]) -> dict[str, Any]:
@@ -116,6 +129,7 @@ def _equilibrium(game: GameAnalysis, one: Equilibrium) -> dict[str, Any]:
         "regret": {player: _number(game, regret) for player, regret in one.regret.items()},
         "welfare": _number(game, one.welfare),
         "outcome": asdict(game.place(one.profile)),
+        **_with_intervals(game, one.profile),
     } | years_document(game, one)
 
 

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
 from analysis.anarchy import Cost, TurningWeight, cost_of_selfishness, turning_weight
-from analysis.confidence import ONE_REPLICATION, Estimate, mean_estimate
+from analysis.confidence import ONE_REPLICATION, TIES_ON_FEW, Estimate, mean_estimate
 from analysis.contrasts import evidence_of
 from analysis.equilibria import (
     DEFAULT_TOLERANCE,
@@ -251,4 +252,6 @@ def regret_estimate(table: PayoffTable, point: float, place: tuple[int, ...], se
     if sets is None:
         return Estimate(point, reason=ONE_REPLICATION)
     low, high = float(sets.bounds.low[place]), float(sets.bounds.high[place])
+    if math.isinf(high):
+        return Estimate(point, reason=TIES_ON_FEW)
     return Estimate(point, min(point, low), max(point, high))

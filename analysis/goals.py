@@ -59,6 +59,9 @@ class Goal(Protocol):
     def signed(self, sums: Mapping[str, np.ndarray]) -> np.ndarray | None:
         """Values (replications, cells, players) where the payoff is the distance of their mean from 0, else None."""
 
+    def branches(self, sums: Mapping[str, np.ndarray]) -> tuple[np.ndarray | None, ...] | None:
+        """By player (branches, replications, cells), costs the largest of whose means is the payoff; None without."""
+
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, players) each, at pointwise confidence."""
 
@@ -134,6 +137,10 @@ class TargetGoal:
             return None
         occupied, staffed = sums["occupied_days"], sums["bed_days"]
         return influence(occupied, staffed) - self.targets
+
+    def branches(self, sums: Mapping[str, np.ndarray]) -> None:
+        """None: the signed values say it all."""
+        return
 
     def interval(self, sums: Mapping[str, np.ndarray], confidence: float) -> tuple[np.ndarray, np.ndarray]:
         """Lower and upper ends of the payoffs, (cells, units) each, at pointwise confidence."""

@@ -150,7 +150,7 @@ def _read(scenario: Scenario, folder: Path) -> dict[str, Any]:
         profiles = [one["thresholds"] for one in document["equilibria"] if one["kind"] == "pure"]
         _check_profiles(scenario, [*profiles, *document["optimum"]["thresholds"]])
         return document
-    except (ValueError, LookupError, TypeError) as error:
+    except (ValueError, LookupError, TypeError, RecursionError) as error:
         raise _no_game(
             scenario,
             "must hold the game of this scenario's units",

@@ -10,7 +10,7 @@ import numpy as np
 from analysis.confidence import critical_value
 from analysis.controls import Controls, no_controls
 from analysis.counterpart import TableCounterpart
-from analysis.goals import Goal, Welfare
+from analysis.goals import Goal, Sense, Welfare
 from analysis.measures import unit_sums
 from analysis.profiles import MOST_CELLS, Profiles, profiles_of
 from sim.replicate import Failure, Run
@@ -107,8 +107,10 @@ class PayoffTable:
     welfare_replicates: (replications, *shape) or None. outcomes: by cell. All replicates are after control variates,
     where there are any (`controls`), such that their plain mean and error hold with `degrees` degrees of freedom.
     signed_replicates: for goals |E U - T|, U - T by replication, (replications, units, *shape); None for other goals.
-    raw_replicates: these, or else the replicates, before control variates. turned_away_replicates,
-    transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each replication.
+    branches: of goals that bend otherwise, by player (branches, replications, *shape), costs the largest of whose means
+    is the payoff; None for other goals. raw_replicates: signed_replicates, or else replicates, before control variates.
+    turned_away_replicates, transfers_replicates: the network's a day, as welfare_replicates. measured_days: of each
+    replication.
     counts: of a raced table, int (*shape), the replications behind each cell's means and intervals; replicates are
     then those of its last look, NaN in cells that were left before. welfare_low, welfare_high: with counts, (*shape).
     """
@@ -133,6 +135,7 @@ class PayoffTable:
     counts: np.ndarray | None = None
     welfare_low: np.ndarray | None = None
     welfare_high: np.ndarray | None = None
+    branches: tuple[np.ndarray | None, ...] | None = None
 
     @property
     def unadjusted(self) -> np.ndarray | None:
@@ -188,6 +191,7 @@ def simulated_table(
         return welfare.value(*((sums[name] / sums["days"]).sum(axis=-1) for name in rates))
 
     worth = worth_of(sums)
+    bent = _bent(goal, sums, controls)
     if counterpart is not None and controls is None:
         controls = no_controls(len(raw))
     if controls is not None:
@@ -198,6 +202,8 @@ def simulated_table(
         point, low, high = _adjusted_payoffs(pseudo if signed is None else signed, raw, confidence, degrees)
         if signed is not None:
             point, low, high = _folded(point, low, high)
+        elif bent is not None:
+            point, low, high = _bent_payoffs(bent, goal.sense, confidence, degrees, raw, (point, low, high))
     shape = profiles.shape
     away, moved = (_network(a_day[name], controls, shape) for name in ("turned_away", "diverted_out"))
     return PayoffTable(
@@ -216,7 +222,46 @@ def simulated_table(
         controls=controls,
         beside_counterpart=counterpart is not None,
         measured_days=float(sums["days"].flat[0]),
+        branches=None if bent is None else tuple(
+            None if one is None else one.reshape(*one.shape[:2], *shape) for one in bent
+        ),
     )  # fmt: skip
+
+
+def _bent(
+    goal: Goal, sums: Mapping[str, np.ndarray], controls: Controls | None
+) -> tuple[np.ndarray | None, ...] | None:
+    """The branches of payoffs after control variates, by player (branches, replications, cells); None without any."""
+    found = goal.branches(sums)
+    if found is None or len(sums["days"]) < 2:
+        return None
+
+    def adjusted(values: np.ndarray) -> np.ndarray:
+        return values if controls is None else np.stack([controls.adjust(one) for one in values])
+
+    return tuple(None if one is None else adjusted(one) for one in found)
+
+
+def _bent_payoffs(
+    bent: Sequence[np.ndarray | None],
+    sense: Sense,
+    confidence: float,
+    degrees: int,
+    raw: np.ndarray,
+    found: Sequence[np.ndarray],
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Payoffs and ends, (cells, players) each, of players whose payoffs bend from their branches; others as found."""
+    point, low, high = (np.array(one) for one in found)
+    floor = np.where((raw >= 0).all(axis=0), 0.0, -np.inf)
+    for player, branches in enumerate(bent):
+        if branches is None:
+            continue
+        mean, error = branches.mean(axis=1), branches.std(axis=1, ddof=1) / np.sqrt(branches.shape[1])
+        half = critical_value(confidence, degrees) * error
+        cost, least, most = (ends.max(axis=0) for ends in (mean, mean - half, mean + half))
+        ends = (cost, least, most) if sense == "cost" else (-cost, -most, -least)
+        point[:, player], low[:, player], high[:, player] = np.maximum(ends, [floor[:, player]] * 3)
+    return point, low, high
 
 
 def _network(rates: np.ndarray, controls: Controls | None, shape: tuple[int, ...]) -> np.ndarray:

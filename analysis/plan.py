@@ -48,7 +48,8 @@ def _several(entry: Any, example: str) -> Any:
     ]
 
 
-def _known_schema(number: int) -> int:
+def known_schema(number: int) -> int:
+    """A plan's `schema`, where it is one that is known."""
     if number != 1:
         raise breach("must be 1, the only form of plan files so far", shown(number), "write `schema = 1`")
     return number
@@ -71,7 +72,7 @@ class PartRow(Table):
 class PlanFile(PartRow):
     """The whole file; beside `[[parts]]` its lists are what rows without their own take."""
 
-    schema_: Annotated[int, Field(alias="schema", examples=["schema = 1"]), AfterValidator(_known_schema)]
+    schema_: Annotated[int, Field(alias="schema", examples=["schema = 1"]), AfterValidator(known_schema)]
     title: Annotated[Line, Field(examples=['title = "Winter plans (invented)"'])] = ""
     parts: Annotated[
         tuple[PartRow, ...] | None,

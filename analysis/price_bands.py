@@ -26,8 +26,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from analysis.anarchy import DAYS_A_YEAR, NOT_POSITIVE
-from analysis.confidence import ONE_REPLICATION, Estimate, t_quantile
+from analysis.anarchy import DAYS_A_YEAR, MAY_BE_NOUGHT, NOT_POSITIVE
+from analysis.confidence import ONE_REPLICATION, TIES_ON_FEW, Estimate, t_quantile
 from analysis.goals import Sense
 from analysis.simultaneous import DRAWS, critical_max_t, studentise
 
@@ -133,6 +133,16 @@ def projected(
     return _least(worth, bases, alpha / 4, rng, draws), high
 
 
+def ties_on_few(worth: Worth) -> bool:
+    """Whether some two profiles differ by the same in every replication, and these are fewer than ten."""
+    if len(worth.values) >= LEAST_DIFFERENCES:
+        return False
+    values = run_throughout(worth).values
+    largest = float(np.abs(values).max(initial=0.0)) or 1.0
+    centred = np.round((values - values.mean(axis=0)) / largest, 12) + 0.0  # + 0.0: one nought only
+    return len(np.unique(centred, axis=1).T) < centred.shape[1]
+
+
 def at_level(level: float, worth: Worth) -> float:
     """One comparison's one-sided critical value."""
     return float(t_quantile(1 - level, worth.degrees))
@@ -189,7 +199,7 @@ def epsilon_price(
     members = np.asarray(confirmed, bool).ravel()
     count = int(members.sum())
     if worth is None or not count:
-        reason = "no profile is confirmed within this regret" if worth is not None else NOT_POSITIVE
+        reason = "no profile is confirmed within this regret" if worth is not None else MAY_BE_NOUGHT
         return EpsilonPrice(epsilon, count, None, None, reason)
     known = ~np.isnan(worth.values).any(axis=0)
     bases = (np.cumsum(known) - 1)[np.flatnonzero(members & known)]
@@ -274,7 +284,7 @@ def ratio_band(
 ) -> Estimate:
     """The price as point and band; the band holds the point."""
     if worth is None:
-        return Estimate(None, reason=NOT_POSITIVE)
+        return Estimate(None, reason=MAY_BE_NOUGHT)
     return _banded(point, worth, possible, alpha, rng, np.exp)
 
 
@@ -293,6 +303,8 @@ def _banded(
         return Estimate(point.mean, reason=NONE_POSSIBLE)
     if len(worth.values) < 2:
         return Estimate(point.mean, reason=ONE_REPLICATION)
+    if ties_on_few(worth):
+        return Estimate(point.mean, reason=TIES_ON_FEW)
     ends = projected(worth, possible, alpha, rng)
     if ends is None:
         return Estimate(point.mean, reason=TOO_LARGE)

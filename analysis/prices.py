@@ -7,7 +7,14 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from analysis.anarchy import Cost, TurningWeight, cost_of_selfishness, turning_weight
+from analysis.anarchy import (
+    NONE_ESTIMATED,
+    OF_ESTIMATED,
+    Cost,
+    TurningWeight,
+    cost_of_selfishness,
+    turning_weight,
+)
 from analysis.confidence import Estimate
 from analysis.contrasts import evidence_of
 from analysis.equilibria import Profile
@@ -34,8 +41,9 @@ from analysis.transfer_weights import (
 
 TABLES = 1000
 LEAST_TABLES = 100
+LEAST_REPLICATIONS = 10  # to resample: of fewer too many resamples are nearly alike
+TOO_FEW = f"fewer than {LEAST_REPLICATIONS} replications are too few to be resampled"
 MOST_HELD = 40_000_000  # numbers of all resampled tables together
-NONE_ESTIMATED = "the estimated table has no pure equilibrium"
 
 
 def projected_cost(
@@ -81,7 +89,7 @@ def projected_turning(
 ) -> TurningWeight:
     """The weight at which the verdict turns in the estimated table, with an interval over all possible equilibria."""
     worst = cost_of_selfishness(table.welfare, table.welfare_goal.sense, found).worst
-    turning = turning_weight(*_network(table), worst)
+    turning = turning_at(table, worst)
     if not possible.any() or table.turned_away_replicates is None:
         return turning
     ends = weight_interval(
@@ -89,6 +97,13 @@ def projected_turning(
         degrees=table.degrees,
     )  # fmt: skip
     return turning if ends is None else _with_interval(turning, *ends)
+
+
+def turning_at(table: PayoffTable, worst: Profile | None) -> TurningWeight:
+    """The weight at which the verdict turns for the worst equilibrium of the estimated table."""
+    if worst is None:
+        return TurningWeight(None, NONE_ESTIMATED)
+    return turning_weight(*_network(table), worst, who=OF_ESTIMATED)
 
 
 def exact_study(table: PayoffTable, equilibria: Sequence[Profile]) -> PriceStudy:
@@ -115,6 +130,8 @@ def simulated_study(
         rows = banded_over_weights(rows, away, moved, possible, alpha, rng, degrees=table.degrees)
     worth = log_worth(table.welfare_replicates, table.welfare_goal.sense, alpha, degrees=table.degrees)
     within = epsilon_price(worth, confirmed, epsilon, alpha, rng)
+    if len(table.replicates) < LEAST_REPLICATIONS:
+        return PriceStudy(tuple(rows), within, None, TOO_FEW)
     tables = min(TABLES, MOST_HELD // max(1, table.payoffs.size))
     if tables < LEAST_TABLES:
         return PriceStudy(tuple(rows), within, None, "the table is too large to be resampled")
@@ -129,8 +146,7 @@ def simulated_study(
 def resampled_costs(table: PayoffTable, weights: np.ndarray) -> np.ndarray:
     """Costs of resampled tables, (tables, players, *shape); weights (tables, replications)."""
     evidence = evidence_of(table)
-    means = resampled_means(evidence.values, weights)
-    costs = np.abs(means) if evidence.distances else means
+    costs = evidence.costs_at(lambda values: resampled_means(values, weights))
     return costs.reshape(len(weights), -1, *evidence.shape)
 
 

@@ -19,6 +19,10 @@ APPROXIMATE = (
     "says"
 )
 OVER_ALL = "whichever of the possible profiles are the equilibria"
+NO_PROOF = (
+    "These prices suppose that the game has a pure equilibrium; that is not shown here, for a confirmed profile may "
+    "leave a gain of up to epsilon"
+)
 
 
 def projected_sentences(
@@ -38,13 +42,17 @@ def projected_sentences(
     if lost.low is not None and lost.high is not None:
         unit = _unit(welfare)
         yield (
-            (
-                f"The worst equilibrium forgoes between {lost.low:.1f} and {lost.high:.1f} {unit}{_estimated(lost, 1)}"
-            ),
+            f"{_loses(welfare, lost.low, lost.high)} {unit}{_estimated(lost, 1)}",
             lost,
             unit,
         )
-    if sets is not None and not (sets.confirmed.mask & sets.possible.mask).any():
+    else:
+        yield f"No interval of what the worst equilibrium loses: {lost.reason}", None, _unit(welfare)
+    if sets is None or exists(sets):
+        return
+    if (sets.confirmed.mask & sets.possible.mask).any():
+        yield NO_PROOF, None, "profiles"
+    else:
         yield (
             (
                 "None of the possible profiles is confirmed, so the game may have no pure equilibrium, and then these "
@@ -55,6 +63,22 @@ def projected_sentences(
         )
 
 
+def exists(sets: Sets) -> bool:
+    """Whether a pure equilibrium is sure to exist, at the confidence of the sets.
+
+    Who chooses alone has a best choice; else some profile must leave nobody any gain, by the regrets' upper ends.
+    """
+    alone = sum(choices > 1 for choices in sets.possible.mask.shape) < 2
+    return alone or bool((sets.bounds.high == 0).all(axis=0).any())
+
+
+def _loses(welfare: Welfare, low: float, high: float) -> str:
+    ends = f"between {low:.1f} and {high:.1f}"
+    if welfare.sense == "gain":
+        return f"The worst equilibrium forgoes {ends}"
+    return f"The worst equilibrium costs the network {ends} more"
+
+
 def _unit(welfare: Welfare) -> str:
     if welfare.kind == "throughput":
         return "patients a year"
@@ -62,7 +86,9 @@ def _unit(welfare: Welfare) -> str:
 
 
 def _estimated(estimate: Estimate, digits: int) -> str:
-    return "" if estimate.mean is None else f" (estimated table: {estimate.mean:.{digits}f})"
+    if estimate.mean is None:
+        return ""
+    return f" (estimated table: {round(estimate.mean, digits) + 0.0:.{digits}f})"  # + 0.0: no minus before nought
 
 
 def turning_interval(turning: TurningWeight) -> str:

@@ -18,17 +18,17 @@ import numpy as np
 
 from analysis.anarchy import (
     DAYS_A_YEAR,
-    NOT_POSITIVE,
+    MAY_BE_NOUGHT,
+    NONE_ESTIMATED,
     Cost,
     TurningWeight,
     cost_of_selfishness,
-    turning_weight,
 )
 from analysis.confidence import Estimate, t_quantile
 from analysis.equilibria import Profile
 from analysis.payoffs import PayoffTable
 from analysis.price_bands import NONE_POSSIBLE, Worth, absolute_worth, gaps, log_worth
-from analysis.prices import NONE_ESTIMATED, PriceStudy
+from analysis.prices import PriceStudy, turning_at
 from analysis.transfer_weights import price_over_weights
 
 RACED = "a race leaves cells early, so that this is not worked out; --no-race runs the whole table"
@@ -87,7 +87,7 @@ def _banded(
     if not layers or not possible.any():
         return Estimate(point.mean, reason=NO_LOOK if not layers else NONE_POSSIBLE)
     if any(worth is None for _, _, worth in layers):
-        return Estimate(None, reason=NOT_POSITIVE)
+        return Estimate(None, reason=MAY_BE_NOUGHT)
     made = [Layer(number, size, worth) for number, size, worth in layers if worth is not None]
     low, high = (scale(end) for end in projected_over_looks(made, counts.ravel(), possible.ravel(), alpha))
     if point.mean is None:
@@ -125,7 +125,7 @@ def _ends(layers: Sequence[Layer], counts: np.ndarray, base: int, level: float) 
 def raced_turning(table: PayoffTable, found: Sequence[Profile]) -> TurningWeight:
     """The weight at which the verdict turns, in the estimated table; without an interval."""
     worst = cost_of_selfishness(table.welfare, table.welfare_goal.sense, found).worst
-    turning = turning_weight(*_network(table), worst)
+    turning = turning_at(table, worst)
     return turning if turning.weight is None else replace(turning, reason=RACED)
 
 

@@ -160,8 +160,7 @@ def judge(race: Race, evidence: Evidence, *, epsilon: float, level: float, seed:
 def point_regrets(evidence: Evidence, dropped: np.ndarray) -> np.ndarray:
     """The paired estimate of every player's regret against deviations that are there and not dropped, (players, cells);
     NaN where the profile itself is missing."""
-    means = evidence.values.mean(axis=0)
-    costs = np.abs(means) if evidence.distances else means
+    costs = evidence.costs
     rivals = np.where(np.isnan(costs) | dropped, np.inf, costs)
     regrets = [
         np.maximum(0.0, mine - others.reshape(evidence.shape).min(axis=player, keepdims=True))

@@ -104,11 +104,11 @@ def _critical(evidence: Evidence, masks: Masks, rows: np.ndarray | None, level: 
 
 
 def _by_bonferroni(evidence: Evidence, masks: Masks, level: float) -> float:
-    """The same without the joint null; for distances each contrast may err through D and through S."""
-    used = sum(int(block.use.sum()) for block in blocks(evidence, masks))
+    """The same without the joint null; where payoffs bend a pair may err in several ways."""
+    used = sum(int(block.use.sum()) * block.ways for block in blocks(evidence, masks))
     if not used:
         return math.inf
-    return float(t_quantile(1 - level / (used * (2 if evidence.distances else 1)), evidence.degrees))
+    return float(t_quantile(1 - level / used, evidence.degrees))
 
 
 @dataclass(frozen=True)

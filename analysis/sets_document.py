@@ -9,12 +9,14 @@ import numpy as np
 
 from analysis.confidence import Estimate
 from analysis.controls import controls_document, variance_ratio
+from analysis.equilibria import regrets
 from analysis.games import Equilibrium, GameAnalysis, Sets
 from analysis.noticing import years_to_notice
 from analysis.payoffs import PayoffTable
 from analysis.profiles import chosen_at, told
 
 NO_GAIN = "nothing to notice: no gain from deviating"
+NO_LATEST = "no latest: the gain from deviating may be none"
 FEW = 10  # replications, below which nothing is excluded
 
 
@@ -73,8 +75,10 @@ def _years_of(game: GameAnalysis, one: Equilibrium) -> dict[str, Estimate]:
 
 
 def _years(regret: Estimate, spread: float) -> Estimate:
+    if regret.high is None:
+        return Estimate(None, reason=regret.reason)
     mean, late, soon = (years_to_notice(end or 0.0, spread) for end in (regret.mean, regret.low, regret.high))
-    return Estimate(mean, soon, late, None if None not in (mean, soon, late) else NO_GAIN)
+    return Estimate(mean, soon, late, NO_GAIN if soon is None else NO_LATEST if late is None else None)
 
 
 def _won(table: PayoffTable) -> dict[str, Any]:
@@ -103,8 +107,27 @@ def sets_sentences(game: GameAnalysis) -> Iterator[str]:
             f"them; {both} of these {'is' if both == 1 else 'are'} confirmed within a regret of {epsilon:.2g} "
             f"({sets.origin}); the two statements together hold with {confidence:g} % confidence"
         )
+    yield from _epsilon(game, sets)
     others = len(_confirmed_only(sets))
     if others:
         yield f"{others} more {'is' if others == 1 else 'are'} within that regret, but no exact equilibrium"
     if (game.table.replications or 0) < FEW:
-        yield f"With fewer than {FEW} replications no profile is excluded"
+        yield f"With fewer than {FEW} replications no profile is excluded, and none that ties with another is confirmed"
+
+
+def _epsilon(game: GameAnalysis, sets: Sets) -> Iterator[str]:
+    """What epsilon is in the goal's unit, and how much of the table has no larger regret anyway."""
+    epsilon, (scale, unit) = sets.confirmed.epsilon, game.table.goal.display_scale
+    within, cells = int((_largest_regrets(game) <= epsilon).sum()), sets.possible.mask.size
+    yield (
+        f"Epsilon is {scale * epsilon:.2g} {unit}; by the estimates {within} of {cells} profiles have no larger "
+        "regret. Confirmed means that nobody gains more than that by leaving alone, which is less than to be an "
+        "equilibrium: a smaller --epsilon confirms fewer profiles and says more of them"
+    )
+
+
+def _largest_regrets(game: GameAnalysis) -> np.ndarray:
+    """Each profile's largest estimated regret, of paired replications, (cells,)."""
+    if game.race is not None and game.race.looks:
+        return game.race.regret.max(axis=0)
+    return regrets(game.table.payoffs, game.table.goal.sense).max(axis=0).ravel()

@@ -115,6 +115,16 @@ def require_replications(scenario: Scenario) -> None:
         )
 
 
+def alike(
+    records: Sequence[Record], exact: ExactResult, scenario: Scenario, confidence: float
+) -> list[Estimate]:
+    """The measures of `verify`, in its order, from records of a scenario that the chain does not answer.
+
+    Pointwise intervals; nothing is held against anything.
+    """
+    return [pair.estimate(confidence, 1) for pair in _pairs(records, exact, scenario)]
+
+
 def _pairs(records: Sequence[Record], exact: ExactResult, scenario: Scenario) -> Iterator[_Pair]:
     beds = np.array([unit.beds for unit in scenario.units], float)
     days = scenario.run.measured_days

@@ -105,6 +105,35 @@ class WeightedGoal:
         """None: no payoff here is the absolute value of one mean."""
         return
 
+    def branches(self, sums: Mapping[str, np.ndarray]) -> tuple[np.ndarray | None, ...] | None:
+        """By player (branches, replications, cells): costs linear in means, the largest of whose means is the payoff.
+
+        None for a player without distances, or with more than 64 branches; None for all where nobody has any.
+        """
+        sums = self._with_squares(sums)
+        found = tuple(self._branches_of(mine, sums) for mine in self.terms)
+        return None if all(one is None for one in found) else found
+
+    def _branches_of(self, mine: tuple[Term, ...], sums: Mapping[str, np.ndarray]) -> np.ndarray | None:
+        kinks = [term for term in mine if term.measure in SLOPES and term.weight]
+        if not kinks or 2 ** len(kinks) > MOST_BRANCHES:
+            return None
+        return np.stack(list(self._linear(mine, sums)))
+
+    def _linear(self, mine: tuple[Term, ...], sums: Mapping[str, np.ndarray]) -> Iterator[np.ndarray]:
+        """A player's branches as costs, by replication, (replications, cells) each."""
+        sign = 1.0 if self.sense == "cost" else -1.0  # the greater of two branches is so as a cost
+        kinks = [term for term in mine if term.measure in SLOPES and term.weight]
+        plain = [
+            sign * term.weight * self._value(term, _influence_in(sums))
+            for term in mine
+            if term.measure not in SLOPES
+        ]
+        bent = [self._distance(term, sums) for term in kinks]
+        weights = [sign * term.weight for term in kinks]
+        for slopes in _branches(kinks, bent):
+            yield sum(plain) + sum(w * s * d for w, s, d in zip(weights, slopes, bent, strict=True))
+
     def _paid(self, mean: Means) -> np.ndarray:
         paid = (sum(term.weight * self._value(term, mean) for term in mine) for mine in self.terms)
         return np.stack(list(paid), axis=-1)
@@ -120,22 +149,10 @@ class WeightedGoal:
         self, mine: tuple[Term, ...], sums: Mapping[str, np.ndarray], confidence: float
     ) -> tuple[np.ndarray, np.ndarray]:
         """A player's interval, (cells,) each."""
-        sign = 1.0 if self.sense == "cost" else -1.0  # the greater of two branches is so as a cost
-        kinks = [term for term in mine if term.measure in SLOPES]
-        plain = [
-            sign * term.weight * self._value(term, _influence_in(sums)) for term in mine if term not in kinks
-        ]
-        bent = [self._distance(term, sums) for term in kinks]
-        weights = [sign * term.weight for term in kinks]
-        ends = [
-            t_interval(
-                sum(plain) + sum(w * s * d for w, s, d in zip(weights, slopes, bent, strict=True)), confidence
-            )
-            for slopes in _branches(kinks, bent)
-        ]
+        ends = [t_interval(branch, confidence) for branch in self._linear(mine, sums)]
         low, high = (np.max([one[place] for one in ends], axis=0) for place in (0, 1))
         low = np.maximum(low, 0) if self._never_below_0(mine) else low
-        return (low, high) if sign > 0 else (-high, -low)
+        return (low, high) if self.sense == "cost" else (-high, -low)
 
     def _distance(self, term: Term, sums: Mapping[str, np.ndarray]) -> np.ndarray:
         """Utilisation less the target, by replication, (replications, cells)."""

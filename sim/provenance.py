@@ -51,7 +51,7 @@ def provenance(
     """Everything needed to repeat a result, as plain values; times are UTC."""
     source = scenario.source
     return {
-        "program": {"name": "brimline", "version": __version__, "commit": _commit()},
+        "program": program(),
         "command": command,
         "engine": engine,
         "seed": scenario.run.seed,
@@ -70,6 +70,11 @@ def provenance(
         "started": started.isoformat(timespec="seconds"),
         "ended": now().isoformat(timespec="seconds"),
     }
+
+
+def program() -> dict[str, str | None]:
+    """The program that runs: its version, and its commit where it runs from a checkout."""
+    return {"name": "brimline", "version": __version__, "commit": _commit()}
 
 
 def now() -> datetime.datetime:

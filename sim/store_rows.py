@@ -21,6 +21,7 @@ import numpy as np
 
 from sim.lowering import IntakePlan, Network, Rules
 from sim.record import FULL, GATE_STATES, INCOMING_CLOSED, OWN_CLOSED, Record
+from sim.tables import Table
 
 # Raised by whoever changes the draws, the lowering or an engine so that a record differs: old rows then never match.
 RECORDS = 1
@@ -86,6 +87,11 @@ def _feed(digest: Any, thing: Any) -> None:
         for field in fields(thing):
             digest.update(f".{field.name}=".encode())
             _feed(digest, getattr(thing, field.name))
+    elif isinstance(thing, Table):
+        digest.update(f"<{type(thing).__name__}>".encode())
+        for name, value in thing:
+            digest.update(f".{name}=".encode())
+            _feed(digest, value)
     elif isinstance(thing, np.ndarray):
         plain = _little_endian(thing)
         digest.update(f"[{plain.dtype.str}{plain.shape}]".encode() + plain.tobytes())

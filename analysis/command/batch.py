@@ -17,10 +17,11 @@ from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import ENGINES, request_of, require_cluster, require_folder
 from analysis.command.output import put_caution, put_json, put_table, put_text
 from analysis.command.progress import about
+from analysis.command.usage import Checked
 from sim.errors import BrimlineError
 
 
-@click.command(epilog=CAUTION)
+@click.command(cls=Checked, epilog=CAUTION)
 @click.argument("plan", type=click.Path(path_type=Path))
 @click.option(
     "--out", type=click.Path(path_type=Path, file_okay=False), help="Folder [default: results/PLAN]."

@@ -6,7 +6,7 @@ from typing import Any
 
 import click
 
-from analysis.command.options import Request, scenario_command
+from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import (
     count,
     number,
@@ -21,7 +21,7 @@ from analysis.command.progress import about
 
 
 @click.option(
-    "--half-width", metavar="H", type=click.FloatRange(0, 1, min_open=True),
+    "--half-width", metavar="H", type=FiniteRange(0, 1, min_open=True),
     help="Say how many replications each unit's utilisation needs to be known within H (a share, such as 0.005).",
 )  # fmt: skip
 def check(request: Request, half_width: float | None) -> None:

@@ -12,6 +12,7 @@ import click
 from analysis.command.caution import CAUTION
 from analysis.command.entry import CheckFailed, say
 from analysis.command.output import put_json, put_table, put_text
+from analysis.command.usage import Checked
 from sim.errors import Fault, ScenarioError
 
 SLEEP = {
@@ -49,7 +50,7 @@ def _ready(option: str) -> None:
     require_packages(option)
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Make the keys of a new cluster.")
 @_keys
 def create(keys: Path | None) -> None:
     """Make the keys of a new cluster, and tell what to copy where."""
@@ -67,7 +68,7 @@ def create(keys: Path | None) -> None:
     )
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Run the scheduler, until Ctrl-C.")
 @click.option("--host", required=True, help="This machine's address in the network that the others are in.")
 @click.option("--port", type=click.IntRange(1024, 65535), default=8786, show_default=True)
 @_keys
@@ -84,7 +85,7 @@ def host(host: str, port: int, keys: Path | None) -> None:
     keep_running("scheduler", settings, say=say)
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Lend this machine's cores, until Ctrl-C.")
 @click.argument("address")
 @click.option("--workers", type=click.IntRange(1, 1024), help="Worker processes [default: the cores].")
 @click.option("--host", help="This machine's address [default: the one that reaches the scheduler].")
@@ -112,7 +113,7 @@ def join(address: str, workers: int | None, host: str | None, name: str | None, 
     keep_running("worker", settings, say=say)
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Who is at a scheduler.")
 @click.argument("address")
 @_keys
 @click.option("--json", "as_json", is_flag=True, help="One JSON document on standard output.")

@@ -11,6 +11,8 @@ import click
 from analysis.command.entry import say
 from analysis.command.options import FiniteRange, Request, scenario_command
 from analysis.command.output import prepare_folder, put_json, write_result
+from sim.errors import Fault
+from sim.wording import shown
 
 LEAST = 2
 MOST_REPLICATIONS = 10_000
@@ -20,7 +22,7 @@ MOST_REPLICATIONS = 10_000
               help="Policies to compare with the file's own rules [default: all of the file]; besides: equilibrium "
               "(worst possible), equilibrium (best possible), optimum, nobody closes early, own patients never "
               "refused, no sharing.")  # fmt: skip
-@click.option("--game", "game_folder", type=click.Path(path_type=Path, file_okay=False), metavar="FOLDER",
+@click.option("--game", "game_folder", type=click.Path(path_type=Path, exists=True, file_okay=False), metavar="FOLDER",
               help="Where `game --out` left the equilibria [default: solved exactly, where they can be].")  # fmt: skip
 @click.option("--difference", type=FiniteRange(1e-6), metavar="D",
               help="Pick one policy: the least that matters, in patients (or welfare) a year.")  # fmt: skip
@@ -60,7 +62,7 @@ def compare(
     for said in advice(request.scenario):
         say(f"advice: {said}")
     run = request.scenario.run
-    paired, jobs_done = PairedRuns(cases, run.replications), Jobs(request)
+    paired, jobs_done = PairedRuns(cases, run.replications, levels=True), Jobs(request)
     jobs_done.run(paired.groups, paired.taker, label="compare")
     require(len(paired.complete), jobs_done.interrupted, least=LEAST)
     sums, rng = paired.sums(), rng_of(run.seed)
@@ -83,7 +85,23 @@ def compare(
     finish(ran)
 
 
-command = scenario_command(compare)
+def _own_faults(scenario: Any, own: Mapping[str, Any]) -> list[Fault]:
+    """An entry of --policies that names nothing; stages that end before they begin."""
+    faults = []
+    known = {row.name for row in scenario.policies}
+    for entry in own["policies"]:
+        if entry.strip() not in known and not all(part.strip() for part in entry.split(",")):
+            remedy = "leave the option or the comma out"
+            faults.append(Fault(None, "--policies", "must name a policy", f"got {shown(entry)}", remedy))
+    if own["difference"] is not None and own["first_stage"] > own["most"]:
+        got = f"got {own['first_stage']} and --most {own['most']}"
+        faults.append(
+            Fault(None, "--first-stage", "must not be above --most", got, "lower it, or raise --most")
+        )
+    return faults
+
+
+command = scenario_command(compare, check=_own_faults)
 
 
 def _cases(request: Request, policies: Sequence[str], game_folder: Path | None) -> list[Any]:

@@ -44,7 +44,7 @@ def _show_levels(document: dict[str, Any]) -> None:
     names = ("utilisation", "closed_with_free_bed_fraction", "diverted_out_per_day", "turned_away_per_day")
     shown = [m for m in UNIT_MEASURES if m.name in names]
     put_table(
-        "By unit (rates marked h count the unit's own population, wherever treated)",
+        "By unit (utilisation, times: shares, 0 to 1; marked h: the unit's own population, wherever treated)",
         ("policy", "unit", "beds", "closes at", *(m.reads + (" (h)" if m.by_home else "") for m in shown)),
         [
             (one["name"], unit, one["beds"][unit], one["thresholds"][unit],

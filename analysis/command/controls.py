@@ -30,7 +30,8 @@ def controls_sentence(document: dict[str, Any]) -> Iterator[str]:
         said = f"from {won[0]:.1f} to {won[-1]:.1f} times" if won else "not known how much"
         kinds = [f"{len(told['names'])}: arrivals and offered work"] if told["names"] else []
         kinds += ["the exponential counterpart"] if document.get("counterpart", {}).get("used") else []
-        yield f"Control variates ({', '.join(kinds)}, with known means) made variances smaller, {said}."
+        larger = "; below 1 means larger" if won and won[0] < 0.95 else ""
+        yield f"Control variates ({', '.join(kinds)}, with known means) made variances smaller, {said}{larger}."
 
 
 def _numbers(tree: Any) -> Iterable[float]:

@@ -32,7 +32,7 @@ COMMANDS = {
     "align": "The lowest target at which every possible equilibrium is near the optimum.",
     "report": "One page for the board from what --out left.",
     "cluster": "Several machines as one: keys, the scheduler, workers, who is there.",
-    "results": "What runs with --out have left: list, show, export, verify, repeat.",
+    "results": "What runs with --out have left: list, show, export, verify, repeat, watch.",
 }
 
 

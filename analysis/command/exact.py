@@ -130,7 +130,7 @@ def _show(document: dict[str, Any]) -> None:
     show_fits(document)
     units = document["units"]
     put_table(
-        "By unit (rates marked h count the unit's own population, wherever treated)",
+        "By unit (utilisation, times: shares, 0 to 1; marked h: the unit's own population, wherever treated)",
         ("measure", *units),
         [
             (m.reads + (" (h)" if m.by_home else ""), *(_digits(units[name].get(m.name)) for name in units))
@@ -158,7 +158,7 @@ def _show_days(document: dict[str, Any]) -> None:
     shown = [m for m in UNIT_MEASURES if m.name in BY_DAY]
     for name in document["long_run"]["units"]:
         put_table(
-            f"{name} (rates marked h count the unit's own population, wherever treated)",
+            f"{name} (utilisation, times: shares, 0 to 1; marked h: the unit's own population, wherever treated)",
             ("after days", *(m.reads + (" (h)" if m.by_home else "") for m in shown)),
             [(label, *(_digits(then["units"][name][m.name]) for m in shown)) for label, then in times],
         )

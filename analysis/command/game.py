@@ -286,12 +286,13 @@ def _show_payoffs(analysis: Any, player: int) -> None:
         )
         return f"[{text}]" if (row, column) in equilibria else text
 
+    listed = "equilibrium" if analysis.sets is None else "possible equilibrium"
     aim = "smaller is better" if table.goal.sense == "cost" else "larger is better"
     down, across = table.profiles.reads(0), table.profiles.reads(1).removeprefix("closure threshold ")
     for first in range(0, len(labels[1]), COLUMNS_AT_ONCE):
         columns = range(first, min(first + COLUMNS_AT_ONCE, len(labels[1])))
         put_grid(
-            f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] equilibrium)\n"
+            f"Payoff of {names[player]} in {scale_reads} ({aim}; * best response, [ ] {listed})\n"
             f"down: {down}; across: {across}",
             ["", *(labels[1][column] for column in columns)],
             [[own, *(cell(row, column) for column in columns)] for row, own in enumerate(labels[0])],
@@ -306,7 +307,8 @@ def _show_payoffs_at(analysis: Any, document: dict[str, Any]) -> None:
     scale, scale_reads = table.goal.display_scale
     best = regrets(table.payoffs, table.goal.sense) <= analysis.tolerance
     listed = [one.profile for one in analysis.equilibria[:MOST_LISTED]]
-    rows = [("equilibrium", profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
+    noun = "equilibrium" if analysis.sets is None else "possible equilibrium"
+    rows = [(noun, profile) for profile in listed] + [("optimum", analysis.cost.optimum[0])]
 
     def cell(player: int, profile: tuple[int, ...]) -> str:
         own = table.profiles.labels[player][profile[player]]
@@ -327,8 +329,8 @@ def _show_equilibria(document: dict[str, Any]) -> None:
     players, pure = document["players"], [one for one in document["equilibria"] if one["kind"] == "pure"]
     listed = pure[:MOST_LISTED]
     put_table(
-        f"Equilibria ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating alone; "
-        "welfare a day)",
+        f"{_heading(document)} ({_chosen(document)}; regret, in the goal's unit: the most a player gains by deviating "
+        "alone; welfare a day)",
         ("verdict", *players, *(f"regret {player}" for player in players), *_years_heading(listed), "welfare"),
         [
             (one["verdict"], *(text_of(_told(one)[p]) for p in players), *(_regret(one["regret"][p]) for p in players),
@@ -338,6 +340,10 @@ def _show_equilibria(document: dict[str, Any]) -> None:
     )  # fmt: skip
     if len(pure) > MOST_LISTED:
         put_text(f"... and {len(pure) - MOST_LISTED} more (all are in --json and --out).")
+
+
+def _heading(document: dict[str, Any]) -> str:
+    return "Equilibria" if document.get("possible") is None else "Possible equilibria"
 
 
 def _chosen(document: dict[str, Any]) -> str:
@@ -356,9 +362,14 @@ def _years_heading(listed: list[dict[str, Any]]) -> list[str]:
 
 def _soonest(one: dict[str, Any]) -> list[str]:
     """The fewest years of own data after which any unit could notice a gain, from the regrets' upper ends."""
+    from analysis.sets_document import NO_GAIN
+
     if "years_to_notice" not in one:
         return []
-    soon = [years["low"] for years in one["years_to_notice"].values() if years["low"] is not None]
+    years_of = one["years_to_notice"].values()
+    soon = [years["low"] for years in years_of if years["low"] is not None]
+    if not soon and any(years["reason"] != NO_GAIN for years in years_of):
+        return ["-"]
     if not soon:
         return ["never"]
     return [f"at least {min(soon):.0f}" if min(soon) < LONG_YEARS else f"more than {LONG_YEARS}"]
@@ -367,7 +378,9 @@ def _soonest(one: dict[str, Any]) -> list[str]:
 def _regret(value: Any) -> str:
     if not isinstance(value, dict):
         return f"{value:.2g}"
-    return f"{value['mean']:.2g}" + ("" if value["high"] is None else f" (at most {value['high']:.2g})")
+    return f"{value['mean']:.2g}" + (
+        " (no bound)" if value["high"] is None else f" (at most {value['high']:.2g})"
+    )
 
 
 def _value(value: Any) -> str:
@@ -402,11 +415,12 @@ def _named_outcomes(document: dict[str, Any]) -> Iterator[tuple[str, dict[str, A
     }
     if extremes["worst"] is None:
         return
+    noun = "equilibrium" if document.get("possible") is None else "possible equilibrium"
     if extremes["worst"] == extremes["best"]:
-        yield "equilibrium", _outcome_of(document, extremes["worst"])
+        yield noun, _outcome_of(document, extremes["worst"])
         return
     for name, told in extremes.items():
-        yield f"{name} equilibrium", _outcome_of(document, told)
+        yield f"{name} {noun}", _outcome_of(document, told)
 
 
 def _outcome_of(document: dict[str, Any], told: dict[str, Any]) -> dict[str, Any]:

@@ -13,6 +13,7 @@ from typing import Any
 import click
 
 from analysis.command.caution import CAUTION
+from analysis.command.usage import Checked
 from analysis.overrides import LIMITS, changes_of, overridden
 from sim.errors import Fault, ScenarioError
 
@@ -76,7 +77,7 @@ def scenario_command(
     for name, option in reversed(list(zip(_COMMON, _OPTIONS, strict=True))):
         if name not in own_axes:
             decorated = option(decorated)
-    return click.command(epilog=CAUTION)(decorated)
+    return click.command(cls=Checked, epilog=CAUTION)(decorated)
 
 
 _OPTIONS = (

@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import itertools
+import json
 from collections.abc import Callable
 from contextlib import chdir, redirect_stdout
 from pathlib import Path
@@ -16,9 +17,11 @@ import click
 from analysis.command.caution import CAUTION
 from analysis.command.entry import INTERRUPTED, CheckFailed, Interrupted, run, say
 from analysis.command.output import put_json, put_table, put_text
-from sim.errors import StoreError
+from analysis.command.usage import Checked
+from sim.errors import Fault, ScenarioError, StoreError
 
 PARQUET_BATCH = 50_000
+ORIGIN, SHELF = "provenance.json", "earlier"
 
 
 @click.group(epilog=CAUTION)
@@ -39,17 +42,25 @@ def _store(folder: Path) -> Any:
 # ---- list and show ----
 
 
-@command.command("list")
+@command.command("list", cls=Checked, short_help="Name the folders with results.")
 @click.argument("folders", nargs=-1, type=click.Path(path_type=Path))
 @JSON
 def list_(folders: tuple[Path, ...], as_json: bool) -> None:
     """The folders with results in FOLDERS or below them [default: results]."""
     from sim.store_file import FILE
 
-    files = sorted({file for folder in folders or (Path("results"),) for file in folder.rglob(FILE)})
-    document = {"folders": [_line(file.parent) for file in files]}
+    if missing := [folder for folder in folders if not folder.is_dir()]:
+        raise ScenarioError(map(_no_folder, missing))
+    places = folders or (Path("results"),)
+    stores = {file.parent for folder in places for file in folder.rglob(FILE)}
+    alone = {file.parent for folder in places for file in folder.rglob(ORIGIN)} - stores
+    lines = [*map(_line, stores), *(_line_of_a_document(one) for one in alone if SHELF not in one.parts)]
+    document = {"folders": sorted(lines, key=lambda line: line["folder"])}
     if as_json:
         put_json(document)
+        return
+    if not lines:
+        put_text(f"No results in {', '.join(map(str, places))}; commands leave them with --out FOLDER.")
         return
     put_table(
         "Results",
@@ -60,6 +71,22 @@ def list_(folders: tuple[Path, ...], as_json: bool) -> None:
     for one in document["folders"]:
         if "fault" in one:
             say(one["fault"])
+
+
+def _no_folder(folder: Path) -> Fault:
+    rule, remedy = "must be a folder that is there", "correct it, or leave it out for `results`"
+    return Fault(None, "FOLDERS", rule, f"got {str(folder)!r}", remedy)
+
+
+def _line_of_a_document(folder: Path) -> dict[str, Any]:
+    """A folder that holds a result and no runs, as of `exact`, `verify`, or a part of a batch."""
+    nothing = dict.fromkeys(("rows", "complete", "failed"))
+    try:
+        origin = json.loads((folder / ORIGIN).read_text(encoding="utf-8"))
+        said = {"command": " ".join(origin["command"]), "began": origin["started"], "ended": origin["ended"]}
+    except (OSError, ValueError, LookupError, TypeError, RecursionError):
+        return {"folder": str(folder), "fault": f"{folder / ORIGIN} is not what a command wrote"}
+    return {"folder": str(folder)} | said | nothing
 
 
 def _line(folder: Path) -> dict[str, Any]:
@@ -89,7 +116,7 @@ def _summary(store: Any) -> dict[str, Any]:
     }  # fmt: skip
 
 
-@command.command()
+@command.command(cls=Checked, short_help="What a folder holds, and whether it is complete.")
 @FOLDER
 @JSON
 def show(folder: Path, as_json: bool) -> None:
@@ -110,7 +137,7 @@ def show(folder: Path, as_json: bool) -> None:
         put_text(f"failed: thresholds {one['thresholds']}, replication {one['replication']}: {last_line}")
 
 
-@command.command()
+@command.command(cls=Checked, short_help="How far a batch is, from another terminal.")
 @FOLDER
 @JSON
 def watch(folder: Path, as_json: bool) -> None:
@@ -123,7 +150,7 @@ def watch(folder: Path, as_json: bool) -> None:
 # ---- export ----
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Every run by unit, as CSV or Parquet.")
 @FOLDER
 @click.argument("file", type=click.Path(path_type=Path, dir_okay=False))
 def export(folder: Path, file: Path) -> None:
@@ -131,6 +158,9 @@ def export(folder: Path, file: Path) -> None:
     writers: dict[str, Callable[[Any, Path], None]] = {".csv": _write_csv, ".parquet": _write_parquet}
     if file.suffix not in writers:
         raise click.BadParameter("must end in .csv or .parquet", param_hint="FILE")
+    if not file.parent.is_dir():
+        rule, remedy = "must be in a folder that is there", "make the folder, or choose another"
+        raise ScenarioError([Fault(None, "FILE", rule, f"got {str(file)!r}", remedy)])
     half = file.with_name(f"{file.name}.part")
     with _store(folder) as store:
         writers[file.suffix](store, half)
@@ -170,7 +200,7 @@ def _write_parquet(store: Any, file: Path) -> None:
 # ---- verify and repeat ----
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Compute a sample again and compare every bit.")
 @FOLDER
 @click.option(
     "--sample",
@@ -204,7 +234,7 @@ def verify(folder: Path, sample: int, as_json: bool) -> None:
     _conclude(document, f"{len(known)} rows{cells} computed again, {len(different)} differ.", as_json)
 
 
-@command.command()
+@command.command(cls=Checked, short_help="Run the last command again and compare.")
 @FOLDER
 @JSON
 def repeat(folder: Path, as_json: bool) -> None:

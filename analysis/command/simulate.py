@@ -179,7 +179,7 @@ def _show(document: dict[str, Any], request: Request) -> None:
     show_counterpart(document)
     units = document["units"]
     put_table(
-        "By unit (rates marked h count the unit's own population, wherever treated)",
+        "By unit (utilisation, times: shares, 0 to 1; marked h: the unit's own population, wherever treated)",
         ("measure", *units),
         [
             (m.reads + (" (h)" if m.by_home else ""), *(interval(units[name][m.name]) for name in units))

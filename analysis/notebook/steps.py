@@ -301,7 +301,7 @@ def compare(network: Network, how: How, policies: Sequence[str], game: Path | No
         raise ScenarioError([Fault(None, "policy", rule, f"got {network.policy.name!r}", remedy)])
     run = step.network.scenario.run
     cases = _cases(step.network, policies, game)
-    paired = PairedRuns(cases, run.replications)
+    paired = PairedRuns(cases, run.replications, levels=True)
     ran = [
         step.run(group.policies, paired.taker(place), of=group) for place, group in enumerate(paired.groups)
     ]

@@ -16,8 +16,8 @@ from sim.errors import RunError
 # The order is the board's: what was asked, what the answer is, what it rests on. A new section is a module with
 # TITLE and blocks(results, figures), and optionally headlines(results), and its name here.
 SECTIONS = (
-    "question", "answer", "network", "verification", "equilibria", "cost", "demand", "policies", "ledger", "limits",
-    "methods", "origin",
+    "question", "answer", "network", "verification", "equilibria", "cost", "sweep", "align", "policies", "ledger",
+    "limits", "methods", "origin",
 )  # fmt: skip
 
 
@@ -76,7 +76,10 @@ def _numbers(result: Result) -> str:
         return "Every number is exact for the fitted stays, without sampling error, and near for the scenario's own."
     if result.is_exact:
         return "Every number is exact: from the Markov chain of the scenario, without sampling error."
-    said = counted(document.get("replications", 0), "replication")
+    if document.get("replications") is None:
+        said = "replications as the result says"
+    else:
+        said = counted(document["replications"], "replication")
     if document.get("confidence") is not None:
         said += f", intervals at {100 * document['confidence']:g} %"
     return f"Simulated: {said}, seed {document.get('seed', 'not recorded')}."

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -18,15 +18,20 @@ from sim.wording import shown, visible
 RESULT, PROVENANCE = "result.json", "provenance.json"
 MOST_BYTES = 400_000_000
 NOWHERE = Path(os.devnull) / "no data files are read"
-# kind -> the keys by which its document is known (none: its command alone tells); the first that fits holds where the
-# command does not tell
+# kind -> where its documents say by which method each network was solved, for those that hold several
+METHODS: Mapping[str, Callable[[Mapping[str, Any]], list[Any]]] = {
+    "sweep": lambda document: document["points"],
+    "align": lambda document: [one for row in document["rows"] for one in row["networks"]],
+}
+# kind -> the keys by which its document is known ; the first that fits holds where the command does not
+# tell
 KINDS: Mapping[str, tuple[str, ...]] = {
     "game": ("players", "equilibria", "optimum"),
     "verify": ("agrees", "measures"),
     "compare": ("policies", "differences"),
     "ledger": ("matrix", "closes_early"),
-    "sweep": (),
-    "align": (),
+    "sweep": ("axes", "points", "varied"),
+    "align": ("rows", "targets_tried"),
     "simulate": ("units", "network", "replications"),
     "exact": ("units", "network", "states"),
     "transient": ("days", "long_run"),
@@ -77,6 +82,8 @@ class Result:
     @property
     def is_exact(self) -> bool:
         """Whether its numbers come from the exact chain."""
+        if self.kind in METHODS:
+            return all(one["method"] == "exact" for one in METHODS[self.kind](self.document))
         return self.kind in ("exact", "transient") or self.document.get("method") == "exact"
 
 

@@ -18,7 +18,7 @@ __all__ = ["Collector", "nearest", "shown", "step"]
 
 _NAMED_ROWS = {
     ("units",): "name", ("patients",): "group", ("policies",): "name", ("game", "players"): "name",
-    ("parts",): "name",
+    ("parts",): "name", ("reports",): "name",
 }  # fmt: skip
 _TAGS = ("family", "kind")
 _UNIONS = ("stay", "delay", "welfare", "goal")

@@ -23,7 +23,22 @@ COMMANDS = {
     "verify": ("verify", "--replications", "5"),
     "simulate": ("simulate", "--policy", "early"),
     "compare": ("compare",),
-    "ledger": ("ledger", "--policy", "early"),
+    "ledger": ("ledger", "--policy", "early", "--episode", "1", "--unit", "A"),
+    "once": ("simulate", "--replications", "1"),
+    "precise": ("simulate", "--precision", "0.4", "--replications", "40"),
+    "sweep": ("sweep", "--demand", "0.9:1.1:2", "--target", "0.3:0.6:2"),
+    "sweep-simulated": ("sweep", "--simulate", "--target", "0.3:0.6:2", "--replications", "10"),
+    "align": ("align", "--demand", "1:1.1:2", "--target", "0.4:0.6:3", "--delta", "5%"),
+    "align-simulated": (
+        "align",
+        "--simulate",
+        "--target",
+        "0.4:0.6:3",
+        "--delta",
+        "5%",
+        "--replications",
+        "10",
+    ),
 }
 VOID = {"meta", "br", "img", "link", "input", "hr"}
 

@@ -131,7 +131,7 @@ def test_what_a_folder_holds_goes_on_and_can_be_verified(call, policies, tmp_pat
     ("arguments", "said"),
     [
         (("--policies", "earli"), "did you mean `early`?"),
-        (("--policies", "optimum", "--game", "nowhere"), "must hold a game's result"),
+        (("--policies", "optimum", "--game", "nowhere"), "must be a folder that is there"),
         (("--policy", "early"), "--policies (with an s)"),
         (("--difference", "0"), "--difference"),
         (("--input-uncertainty", "100"), "needs stays or delays taken from records"),

@@ -118,3 +118,4 @@ def test_a_simulation_wins_variance_and_keeps_its_sums():
 def test_variance_ratio_by_hand():
     assert variance_ratio(np.array([0.0, 4.0]), np.array([1.0, 3.0])) == 4
     assert np.isnan(variance_ratio(np.array([0.0, 4.0]), np.array([2.0, 2.0])))
+    assert np.isnan(variance_ratio(np.array([0.0, 4.0]), np.array([2.0, 2.0 + 4e-15])))  # rounding alone

@@ -84,3 +84,30 @@ def test_a_counterpart_beyond_the_chain_is_refused_with_its_reasons(call, delaye
     Path(delayed).write_text(text.replace("beds =", "review_hours = 8\nbeds =", 1), encoding="utf-8")
     status, document = call("simulate", delayed, "--counterpart")
     assert status == 2 and any("review" in reason for reason in document["reasons"])
+
+
+# ---- verify ----
+
+
+def test_verify_shows_the_scenario_itself_beside_its_counterpart(call, delayed):
+    """Tested is what `--exponential` tests; beside it stands what `simulate` gives for the scenario."""
+    status, document = call("verify", delayed, "--counterpart", "--replications", 6)
+    _, alone = call("verify", delayed, "--exponential", "--replications", 6)
+    assert status == 0 and document["measures"] == alone["measures"] and "scenario_itself" not in alone
+    _, simulated = call("simulate", delayed, "--replications", 6, "--no-controls")
+    itself = document["scenario_itself"]
+    assert itself["replications"] == 6 and len(itself["measures"]) == len(document["measures"])
+    for tested, own in zip(document["measures"], itself["measures"], strict=True):
+        if tested["measure"] == "utilisation":
+            assert own == pytest.approx(simulated["units"][tested["where"]]["utilisation"])
+            assert own["mean"] != tested["mean"]
+
+
+def test_the_table_of_verify_has_a_column_for_the_scenario_itself(show, delayed):
+    _, out, _ = show("verify", delayed, "--counterpart", "--replications", 6)
+    assert "scenario itself" in out and "is not tested" in out
+
+
+def test_verify_needs_no_counterpart_where_the_chain_answers_and_takes_no_fit_with_it(call, two, delayed):
+    assert call("verify", two, "--counterpart", "--replications", 6)[0] == 2
+    assert call("verify", delayed, "--counterpart", "--phase-fit", 3, "--replications", 6)[0] == 2

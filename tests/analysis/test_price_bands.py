@@ -9,8 +9,8 @@ import pytest
 from scipy import stats
 
 from analysis import price_bands
-from analysis.anarchy import NOT_POSITIVE, cost_of_selfishness
-from analysis.confidence import Estimate
+from analysis.anarchy import MAY_BE_NOUGHT, cost_of_selfishness
+from analysis.confidence import TIES_ON_FEW, Estimate
 from analysis.contrasts import paired_costs
 from analysis.equilibria import pure_equilibria
 from analysis.price_bands import (
@@ -69,7 +69,7 @@ def test_a_welfare_that_may_be_nought_gives_no_ratio_but_a_difference():
     assert log_worth(loss, "cost", 0.05) is None
     mask = np.array([True, False, False])
     point = Estimate(2.0)
-    assert ratio_band(point, None, mask, 0.05, rng()) == Estimate(None, reason=NOT_POSITIVE)
+    assert ratio_band(point, None, mask, 0.05, rng()) == Estimate(None, reason=MAY_BE_NOUGHT)
     year = difference_band(Estimate(100.0), absolute_worth(loss, "cost"), mask, 0.05, rng())
     assert 0 <= year.low <= 100 <= year.high
 
@@ -265,3 +265,14 @@ def test_the_price_over_weights_by_hand():
     rows = price_over_weights(np.array([0.1, 0.4]), np.array([1.5, 0.3]), [(1,)], weights=(0.0, 0.1, 0.5))
     assert [row.price_of_anarchy.mean for row in rows] == pytest.approx([4.0, 0.43 / 0.25, 1.0])
     assert rows[1].lost_per_year.mean == pytest.approx(365 * 0.18)
+
+
+def test_profiles_that_tie_on_few_replications_have_no_band():
+    """Nobody was turned away in any of these few runs, under either rule: that is no proof that nobody ever is."""
+    mask, tied = np.array([True, False]), np.tile(rng().normal(5, 1, (9, 1)), 2)
+    band = difference_band(Estimate(0.0), absolute_worth(tied, "cost"), mask, 0.05, rng())
+    assert band == Estimate(0.0, reason=TIES_ON_FEW)
+    enough = np.tile(rng().normal(5, 1, (10, 1)), 2)
+    assert difference_band(Estimate(0.0), absolute_worth(enough, "cost"), mask, 0.05, rng()).high == 0
+    apart = tied + rng(2).normal(0, 1, (9, 2))
+    assert difference_band(Estimate(0.0), absolute_worth(apart, "cost"), mask, 0.05, rng()).high > 0

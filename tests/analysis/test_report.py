@@ -15,14 +15,15 @@ from analysis.command.entry import run
 from analysis.report import read_results, report_of, to_html, to_markdown
 from analysis.report.contents import SECTIONS
 from analysis.report.words import GAP, NEVER_SAID, between, estimate
-from sim.errors import ScenarioError
+from sim.errors import RunError, ScenarioError
 from tests.analysis.conftest import TWO
 from tests.analysis.report_cases import COMMANDS, breaches, page_of, written_results
 
 SNAPSHOTS = Path(__file__).parent / "snapshots"
 ORDER = (
     "Question", "Answer", "The network", "Verification", "Equilibria", "What selfish rules cost in patients a year",
-    "Policies side by side", "The closure ledger", "Limits and cautions", "Methods with sources", "Provenance",
+    "Over demand and targets", "Targets that align", "Policies side by side",
+    "The closure ledger", "Limits and cautions", "Methods with sources", "Provenance",
 )  # fmt: skip
 
 
@@ -80,7 +81,7 @@ def section(html, anchor):
 
 def test_the_sections_stand_in_the_boards_order(everything):
     assert tuple(one.title for one in everything.sections) == ORDER
-    assert {one.anchor for one in everything.sections} == set(SECTIONS) - {"demand"}
+    assert {one.anchor for one in everything.sections} == set(SECTIONS)
 
 
 @pytest.mark.parametrize("kind", COMMANDS)
@@ -122,7 +123,7 @@ def test_a_simulated_game_claims_its_sets_and_no_more(results, told):
     lost = document["lost_per_year"]
     assert f"between {lost['low']:.1f} and {lost['high']:.1f} patients a year fewer" in said
     assert "whichever of the possible profiles are the equilibria" in said
-    assert "by the estimates" in said and "without intervals" in said
+    assert "by the estimates" in said and "means of the replications" in said
     assert "(exact)" not in said
 
 
@@ -164,11 +165,23 @@ def test_verification_that_fails_is_not_called_agreement(results, told, tmp_path
     assert "agrees with the exact chain in all" in plain(told["verify"][0])
 
 
-def test_the_verified_measures_all_stand_in_the_table(results, told):
+def test_the_verified_measures_stand_in_the_table_but_levels_that_agree(results, told, tmp_path):
     document = json.loads((results["verify"] / "result.json").read_text(encoding="utf-8"))
-    markdown = told["verify"][1].split("## Verification")[1].split("\n## ")[0]
-    rows = [line for line in markdown.splitlines() if line.startswith("|")][2:]
-    assert len(rows) == len(document["measures"])
+    levels = [one for one in document["measures"] if one["measure"].startswith("occupancy ")]
+    assert all(one["agrees"] for one in levels) and levels
+
+    def rows(markdown):
+        lines = markdown.split("## Verification")[1].split("\n## ")[0].splitlines()
+        return [line for line in lines if line.startswith("|")][2:]
+
+    def plant(document):
+        first = next(one for one in document["measures"] if one["measure"].startswith("occupancy "))
+        first["agrees"], first["z"] = False, 9.0
+
+    assert len(rows(told["verify"][1])) == len(document["measures"]) - len(levels)
+    wrong = rows(texts_of([changed(results["verify"], tmp_path / "wrong", plant)])[1])
+    assert len(wrong) == len(document["measures"]) - len(levels) + 1
+    assert sum("DISAGREES" in row for row in wrong) == 1
 
 
 def test_interrupted_and_failed_runs_are_told(results, tmp_path):
@@ -224,26 +237,89 @@ def test_the_provenance_repeats_each_result(results, page):
     assert tomllib.loads(text) == tomllib.loads(TWO)
 
 
-def test_a_sweep_is_told_as_far_as_its_document_goes(results, tmp_path):
-    """No command leaves one yet: any lists of rows and any findings are shown, numbers with their intervals."""
-    folder = shutil.copytree(results["exact"], tmp_path / "sweep")
-    rows = [
-        {
-            "demand": 1.1,
-            "lost_per_year": {"mean": 3.0, "low": 2.0, "high": 4.0},
-            "is_known": True,
-            "why": None,
-        }
-    ]
-    document = {"points": rows, "findings": [{"statement": "The loss rises with demand"}], "replications": 9}
-    origin = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))
-    origin["command"][1] = "sweep"
-    (folder / "result.json").write_text(json.dumps(document), encoding="utf-8")
-    (folder / "provenance.json").write_text(json.dumps(origin), encoding="utf-8")
-    html, markdown = texts_of([folder])
-    assert "The loss rises with demand" in section(html, "answer")
-    assert "| 1.1 | 3.0000 (2.0000 to 4.0000) | yes | - |" in markdown
-    assert list(breaches(html)) == []
+# ---- sweeps and aligning targets ----
+
+
+def document_of(folder):
+    return json.loads((folder / "result.json").read_text(encoding="utf-8"))
+
+
+@pytest.mark.parametrize("kind", ["sweep", "sweep-simulated"])
+def test_a_sweep_gives_every_dear_point_with_its_price(results, told, kind):
+    document = document_of(results[kind])
+    said = told[kind][1].split("## Over demand and targets")[1].split("\n## ")[0]
+    assert all(f"{finding}." in said for finding in document["findings"])
+    dear = [one for one in document["points"] if (one["price_of_anarchy"]["high"] or 9) >= 1.00005]
+    assert dear
+    left = len(document["points"]) - len(dear)
+    assert (f"in points.csv: {left} point" in said) == (left > 0)
+    for one in dear:
+        price = one["price_of_anarchy"]
+        if price["mean"] is None:
+            continue
+        ends = f"{price['low']:.4f} to {price['high']:.4f}" if kind == "sweep-simulated" else "exact"
+        assert f"target {one['target']:g}" in said and f"{price['mean']:.4f} ({ends})" in said
+    basis = "Every number is exact" if kind == "sweep" else "10 replications, intervals at 95 %"
+    assert basis in said
+
+
+@pytest.mark.parametrize("kind", ["align", "align-simulated"])
+def test_an_alignment_stands_beside_the_busiest_unit_and_is_no_advice_to_run_fuller(results, told, kind):
+    document = document_of(results[kind])
+    html = told[kind][0]
+    said = section(html, "align")
+    assert all(statement.rstrip(".") in said for statement in document["statements"])
+    for row in document["rows"]:
+        busiest = row["busiest_when_nobody_closes_early"]
+        assert f"{100 * busiest['utilisation']:.1f} % occupied" in said
+        if row["target"] is not None:
+            assert f"the lowest target, {row['target']:g}, is to be read beside the busiest unit" in said
+            assert f"{busiest['utilisation']:.3f} ({busiest['unit']}" in said
+    assert kind == "align-simulated" or document["rows"][0]["target"] == 0.6
+    assert "not a reason to run fuller" in said and "patients whose transfer is a risk" in said
+    assert ("Every number is exact" in said) == (kind == "align")
+
+
+def test_the_lists_of_a_sweep_and_an_alignment_must_be_whole(results, tmp_path):
+    for kind, key in (("sweep", "methods"), ("align", "statements")):
+        folder = changed(results[kind], tmp_path / kind, lambda document, key=key: document.pop(key))
+        with pytest.raises(RunError, match="run its command again"):
+            texts_of([folder])
+
+
+# ---- what a run and a game add ----
+
+
+def test_precision_batch_means_and_an_episode_are_told(results, told):
+    reached = document_of(results["precise"])["precision"]
+    said = section(told["precise"][0], "network")
+    assert f"at most {100 * reached['relative']:g} % of the estimate" in said
+    assert all(f"{100 * one['relative']:.2f} %" in said for one in reached["measures"] if one["relative"])
+    batches = document_of(results["once"])["batch_means"]
+    said = section(told["once"][0], "network")
+    assert (batches["reason"] if batches["batches"] is None else f"{batches['batches']} batches") in said
+    episode = document_of(results["ledger"])["episode"]
+    said = section(told["ledger"][0], "ledger")
+    assert f"Closing {episode['number']} of {episode['of']} in replication 0" in said
+    assert f"{len(episode['displaced'])} patient" in said
+
+
+def test_refusals_and_transfers_of_a_simulated_game_have_intervals(results, told):
+    document = document_of(results["game"])
+    said = section(told["game"][0], "cost")
+    network = document["optimum"]["network"]
+    for rate in ("turned_away_per_day", "transfers_per_day"):
+        low, high = (365 * network[rate][end] for end in ("low", "high"))
+        assert f"({low:,.1f} to {high:,.1f})" in said
+    assert "network" not in document_of(results["game-exact"])["optimum"]
+
+
+def test_best_replies_and_the_curve_over_weights_are_drawn(told):
+    for kind in ("game", "game-exact"):
+        titles = [one.text for one in page_of(told[kind][0]).of("title")]
+        assert "Best replies, which cross at equilibria" in titles
+        assert "What selfish rules cost over the weight of a transfer" in titles
+    assert "possible best reply" in section(told["game"][0], "equilibria")
 
 
 # ---- the same bytes, and a form that is kept ----

@@ -326,3 +326,22 @@ def test_a_folder_without_results_is_told(tmp_path, show):
     assert status == 1 and "holds no results" in said
     assert show("results", "show", tmp_path / "none")[0] == 2
     assert show("results", "no-such-command")[0] == 2
+
+
+def test_list_names_folders_of_every_kind_and_says_where_there_is_none(call, show, folder, two, tmp_path):
+    call("exact", two, "--out", tmp_path / "exact")
+    (tmp_path / "odd").mkdir()
+    (tmp_path / "odd" / "provenance.json").write_text("[]")
+    (tmp_path / "empty").mkdir()
+    found = {Path(one["folder"]).name: one for one in call("results", "list", tmp_path)[1]["folders"]}
+    assert set(found) == {"exact", "odd", folder.name}
+    assert found["exact"]["command"].startswith("brimline exact") and found["exact"]["began"]
+    assert "is not what a command wrote" in found["odd"]["fault"]
+    assert "No results in" in show("results", "list", tmp_path / "empty")[1]
+    status, out, said = show("results", "list", tmp_path / "nowhere", tmp_path / "nor here")
+    assert (status, out, said.count("must be a folder that is there")) == (2, "", 2)
+
+
+def test_export_into_a_folder_that_is_not_there_is_a_fault(folder, tmp_path, show):
+    status, out, said = show("results", "export", folder, tmp_path / "nowhere" / "runs.csv")
+    assert (status, out) == (2, "") and said.startswith("FILE: must be in a folder that is there")

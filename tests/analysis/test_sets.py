@@ -325,3 +325,21 @@ def test_masks_say_which_direction_counts():
     masks = Masks(np.array([True, True, False]), np.array([[False, True, False]]))
     use = masks.pairs(0, np.array([0, 0, 1]), np.array([1, 2, 2]))
     assert use.tolist() == [[False, True, True], [True, False, False]]
+
+
+# ---- ties on few replications ----
+
+
+@pytest.mark.parametrize("make", [paired_costs, paired_distances])
+def test_a_tie_on_few_replications_proves_nothing(make):
+    """A gain that shows in one replication of five is missed by few in many experiments: no spread, no proof."""
+    for replications in (2, 9):
+        tied = make(np.repeat(a_game(np.zeros((1, 1)), replications), 3, axis=2))
+        assert not confirmed(tied, 0.01, LEVEL).mask.any()
+        assert (regret_bounds(tied, LEVEL).high > 0.01).all()
+    tied = make(np.repeat(a_game(np.zeros((1, 1)), 10), 3, axis=2))
+    assert confirmed(tied, 0.01, LEVEL).mask.all() and not regret_bounds(tied, LEVEL).high.any()
+
+
+def test_who_has_no_choice_needs_no_replications():
+    assert confirmed(paired_costs(a_game(np.zeros((1, 1)), 2)), 0.01, LEVEL).mask.all()

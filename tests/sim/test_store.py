@@ -152,6 +152,14 @@ def test_a_key_holds_what_records_depend_on_and_nothing_else():
     assert len({cell_hash(lower_policy(SCENARIO, policy)) for policy in POLICIES}) == 3
 
 
+def test_beds_out_of_use_have_a_place_in_a_key():
+    out = lambda row: TEXT.replace("beds = 3", f"beds = 3, out_of_use = [{row}]")  # noqa: E731
+    rows = ["{ beds = 1, per_year = 6, mean_days = 3 }", "{ beds = 1, per_year = 7, mean_days = 3 }",
+            "{ beds = 2, per_year = 6, mean_days = 3 }", "{ beds = 1, from_day = 20, days = 3 }"]  # fmt: skip
+    keys = [scenario_key(TEXT), *(scenario_key(out(row)) for row in rows)]
+    assert len(set(keys)) == 5 and keys[1] == scenario_key(out(rows[0]))
+
+
 def test_a_second_putting_must_have_the_same_bits(tmp_path):
     hashed = filled(tmp_path, [row(), row()])
     for other in (row(seed=2.0), row(cell="d", intake="other patients")):

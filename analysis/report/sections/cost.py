@@ -12,6 +12,7 @@ from analysis.report.sections.equilibria import is_searched
 from analysis.report.words import (
     DAYS_A_YEAR,
     EXACT,
+    a_year,
     between,
     estimate,
     listed,
@@ -40,6 +41,8 @@ PRICES = {
     "price_of_stability": ("price of stability (best welfare against the best equilibrium, 1 or more)", 4),
     "lost_per_year": ("lost a year at the worst equilibrium", 1),
 }
+RATES = {"turned_away_per_day": "turned away", "transfers_per_day": "moved"}
+WEIGHTS = (0, 0.25, 0.5, 0.75, 1)  # of a transfer, that the table shows
 Named = tuple[str, Mapping[str, Any], Mapping[str, Any]]  # words, chosen strategies, outcome
 
 
@@ -59,8 +62,10 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         if document["welfare"]["kind"] == "throughput":
             yield Text(THROUGHPUT, warns=True)
         yield _prices(document)
+        yield from _with_intervals(document)
         yield _outcomes(one)
         yield from _picture(one, figures)
+        yield from _over_weights(document, figures)
         yield Points(tuple(sentence(said) for said in _further(one)))
         yield Text(ONE_NETWORK)
 
@@ -110,7 +115,7 @@ def _trade(result: Result) -> str | None:
     if len(rows) < 2:
         return None
     (fixed, best, at_best), (which, worst, at_worst) = rows[:2]
-    whose = "exact" if result.is_exact else "means of the replications, without intervals"
+    whose = "exact" if result.is_exact else "means of the replications; the section on costs has intervals"
     return (
         f"The {fixed} ({profile(best)}) turn {_all(at_best, 'turned_away_per_day')} "
         "patients away a year and "
@@ -176,9 +181,67 @@ def _prices(document: Mapping[str, Any]) -> Table:
     return table("Prices, with the interval of each", ("price", "value"), rows)
 
 
+def _with_intervals(document: Mapping[str, Any]) -> Iterator[Table]:
+    """Refusals and transfers of a simulated game's network, each with its interval, and against the best."""
+    listed_ones = [(words, where) for words, where in _places(document) if "network" in where]
+    rows = [
+        (
+            words,
+            *(a_year(where["network"][rate]) for rate in RATES),
+            *(a_year(where["more_than_at_the_optimum"][rate]) if "more_than_at_the_optimum" in where else "-"
+              for rate in RATES),
+        )
+        for words, where in listed_ones
+    ]  # fmt: skip
+    if rows:
+        columns = (
+            "profile",
+            *RATES.values(),
+            *(f"more {said} than with the best" for said in RATES.values()),
+        )
+        yield table(
+            "Turned away and moved in the whole network, patients a year (each interval by itself; differences on the "
+            "same patients)", columns, rows,
+        )  # fmt: skip
+
+
+def _places(document: Mapping[str, Any]) -> Iterator[tuple[str, Mapping[str, Any]]]:
+    """The optimum and the extreme listed profiles, as the document has them."""
+    for words, chosen, outcome in named(document):
+        own = [one for one in document["equilibria"] if one.get("outcome") is outcome]
+        where = own[0] if own else document["optimum"]
+        yield f"{words}: {profile(chosen)}", where
+
+
+def _over_weights(document: Mapping[str, Any], figures: Figures) -> Iterator[Block]:
+    """What selfish rules cost if transfers count: the curve, and some of its points as a table."""
+    rows = [one for one in document.get("price_over_transfer_weights") or [] if _mean(one) is not None]
+    if len(rows) < 2:
+        return
+    turning = document["transfer_weight_at_which_the_verdict_turns"].get("weight")
+    yield figures.draw(
+        optional("analysis.figures_report", "loss_over_weights", rows, turning=turning),
+        "What selfish rules cost over the weight of a transfer",
+        "Loss a year at the worst listed equilibrium beyond the least loss, where a transfer counts as so many "
+        "patients turned away; a band where simulated, each weight by itself. Points of it stand in the table below.",
+    )  # fmt: skip
+    shown = [one for one in rows if any(abs(one["weight"] - weight) < 1e-9 for weight in WEIGHTS)]
+    yield table(
+        "Loss over the weight of a transfer (patients turned away and weighted transfers, a year; the price is a ratio "
+        "of such losses)",
+        ("weight of a transfer", "lost a year", "price of anarchy"),
+        [(f"{one['weight']:g}", estimate(one["lost_per_year"]), estimate(one["price_of_anarchy"], 4)) for one in shown],
+    )  # fmt: skip
+
+
+def _mean(row: Mapping[str, Any]) -> float | None:
+    lost = row["lost_per_year"]
+    return lost.get("mean") if isinstance(lost, Mapping) else lost
+
+
 def _outcomes(result: Result) -> Table:
     rows = [row for words, chosen, outcome in named(result.document) for row in _rows(words, chosen, outcome)]
-    whose = "exact" if result.is_exact else "means of the replications, no intervals are worked out for them"
+    whose = "exact" if result.is_exact else "means of the replications, without intervals by home and unit"
     return table(
         f"What comes with it, by home and unit ({whose}; turned away, moved and treated: patients a year)",
         (
@@ -217,7 +280,7 @@ def _picture(result: Result, figures: Figures) -> Iterator[Figure]:
     )
     draw = optional("analysis.figures_report", "outcomes", rows)
     yield figures.draw(
-        draw, "Patients turned away and moved in a year", f"{said}.", (7.0, 1.6 + 0.6 * len(rows))
+        draw, "Patients turned away and moved in a year", sentence(said), (7.0, 1.6 + 0.6 * len(rows))
     )
 
 
@@ -238,19 +301,7 @@ def _further(result: Result) -> Iterator[str]:
     bootstrap = document.get("prices_by_bootstrap")
     if bootstrap and bootstrap.get("price_of_anarchy") is not None:
         yield f"By resampling, price of anarchy {estimate(bootstrap['price_of_anarchy'], 4)}, {bootstrap['label']}"
-    yield from _weights(document)
     yield from _control(document)
-
-
-def _weights(document: Mapping[str, Any]) -> Iterator[str]:
-    rows = document.get("price_over_transfer_weights") or []
-    if rows:
-        first, last = rows[0], rows[-1]
-        yield (
-            f"Where a transfer weighs {first['weight']:g} of a refusal the loss a year is "
-            f"{estimate(first['lost_per_year'])}, "
-            f"where it weighs {last['weight']:g} it is {estimate(last['lost_per_year'])}"
-        )
 
 
 def _control(document: Mapping[str, Any]) -> Iterator[str]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from typing import Any
 
 from analysis.figures_report import can_be_mapped
@@ -49,6 +49,7 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         if more > 0:
             yield Text(f"{counted(more, 'more profile')} stand in the result's file.")
         yield from _pictures(one, figures)
+        yield from _replies(one, figures)
         yield from _beyond_pure(one.document)
         yield from _theory(one.document)
 
@@ -142,6 +143,46 @@ def _pictures(result: Result, figures: Figures) -> Iterator[Figure]:
             "table above lists.",
             size,
         )
+
+
+def _replies(result: Result, figures: Figures) -> Iterator[Block]:
+    """Both players' best replies, which cross at equilibria, and where one surely falls."""
+    document = result.document
+    found = document.get("possible_best_responses")
+    if not found:
+        return
+    if can_be_mapped(document) and all(_is_plain(document["strategies"][who]) for who in document["players"]):
+        sets = (
+            ""
+            if result.is_exact
+            else " Dashes mark every strategy that may be a best reply, all sets at once."
+        )
+        yield figures.draw(
+            optional("analysis.figures_report", "best_replies", document),
+            "Best replies, which cross at equilibria",
+            f"Each player's best threshold for every threshold of the other{'' if result.is_exact else ', estimated'}."
+            f"{sets} Diamonds mark the profiles of the table above.", (6.4, 5.6),
+        )  # fmt: skip
+    many = {who: sum(len(one["possible"]) > 1 for one in found[who]["replies"]) for who in found}
+    if not result.is_exact:
+        yield Points(tuple(
+            f"{name(who)}: {many[who]} of {len(found[who]['replies'])} situations leave more than one possible best "
+            f"reply{_falls(found[who]['falls'])}." for who in found
+        ))  # fmt: skip
+
+
+def _is_plain(strategies: Sequence[Any]) -> bool:
+    return all(isinstance(one, int | float) for one in strategies)
+
+
+def _falls(fall: Mapping[str, Any] | None) -> str:
+    """Where replies that theory expects to rise are shown to fall."""
+    if fall is None:
+        return "; nothing refutes that replies never fall as others' thresholds rise"
+    return (
+        f"; the reply falls from {fall['at_least']} or more at {profile(fall['from'])} to {fall['at_most']} or less at "
+        f"{profile(fall['to'])}"
+    )
 
 
 def _beyond_pure(document: Mapping[str, Any]) -> Iterator[Block]:

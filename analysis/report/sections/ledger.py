@@ -5,9 +5,9 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from analysis.report.blocks import Block, Points, Text, table
+from analysis.report.blocks import Block, Heading, Points, Text, table
 from analysis.report.contents import Figures, Headline, Results, optional
-from analysis.report.words import estimate, name, point, profile, sentence
+from analysis.report.words import counted, estimate, name, point, profile, sentence
 
 TITLE = "The closure ledger"
 MEANS = (
@@ -39,14 +39,15 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         yield table("More patients a year because a unit closes early", columns, rows)
         yield from _pictures(document, figures)
         yield from _displaced(document)
+        yield from _episode(document.get("episode"))
 
 
 def _pictures(document: Mapping[str, Any], figures: Figures) -> Iterator[Block]:
     beside = 1.0 * len(document["units"])
-    for counted in dict.fromkeys(row["counted"] for row in document["matrix"]):
+    for what in dict.fromkeys(row["counted"] for row in document["matrix"]):
         yield figures.draw(
-            optional("analysis.figures_policies", "ledger_matrix", document, counted=counted, reads=counted),
-            f"More {counted} because a unit closes early, patients a year",
+            optional("analysis.figures_policies", "ledger_matrix", document, counted=what, reads=what),
+            f"More {what} because a unit closes early, patients a year",
             "A row for each unit that closes, a column for each home; a star marks what is told "
             "apart from 0. The numbers "
             "stand in the table above.", (min(9.0, 4.5 + beside), min(9.0, 2.4 + beside * 0.8)),
@@ -65,3 +66,30 @@ def _displaced(document: Mapping[str, Any]) -> Iterator[Block]:
             "of what was traced, an "
             "example without interval)", ("closes", "group", "without it", "now", "patients", "a year"), rows,
         )  # fmt: skip
+
+
+def _episode(found: Mapping[str, Any] | None) -> Iterator[Block]:
+    """One closing alone, patient by patient."""
+    if found is None:
+        return
+    yield Heading(f"One closing of {name(found['unit'])}")
+    yield Text(
+        f"Closing {found['number']} of {found['of']} in replication {found['replication']}, from day "
+        f"{found['from_day']:.2f} to {found['until_day']:.2f}: its gate held open to its own patients displaces "
+        f"{counted(len(found['displaced']), 'patient')} otherwise. An example, without interval."
+    )
+    rows = [
+        (
+            f"day {one['arrival_days']:.2f}",
+            name(one["group"]),
+            name(one["home"]),
+            name(one["without"]),
+            name(one["now"]),
+        )
+        for one in found["displaced"][:MOST_DISPLACED]
+    ]
+    if rows:
+        columns = ("arrives", "group", "home", "without the closing", "with it")
+        yield table(
+            "Whom it displaced, later patients too, for whom beds are free or taken otherwise", columns, rows
+        )

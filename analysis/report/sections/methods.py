@@ -158,7 +158,7 @@ def _experimentation(results: Results, network: Network) -> Iterator[tuple[str, 
     counts = [
         f"“{name(one.label)}” {counted(one.document['replications'], 'replication')}"
         for one in results.all
-        if one.network is network and "replications" in one.document
+        if one.network is network and one.document.get("replications") is not None
     ]
     start = f"every unit is empty at the start; a warm-up of {run['warm_up_days']:g} days is not counted"
     length = f"{run['measured_days']:g} days are measured in each replication"
@@ -234,7 +234,8 @@ def _practices(results: Results, network: Network) -> Iterator[tuple[str, str]]:
     yield "Sensitivity to structure", f"{GAP}which other rules, last resorts and stays were tried"
     yield (
         "Enough replications",
-        "every simulated number carries its interval; whether it is narrow enough is the reader's to judge",
+        "a simulated number carries its interval or is said to have none; whether that is narrow enough is the "
+        "reader's to judge",
     )
     yield "Warm-up", f"{_run(network)['warm_up_days']:g} days; see item 4.1"
     yield "Verification", (

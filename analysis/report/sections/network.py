@@ -183,6 +183,10 @@ def _over_time(result: Result, figures: Figures) -> Iterator[Block]:
             else f"{advice['days']:g} days are advised"
         )
         yield Text(f"Warm-up: {advice['present_days']:g} days were used; {said}.")
+    if aim := document.get("precision"):
+        yield from _precision(aim)
+    if batches := document.get("batch_means"):
+        yield from _batches(batches)
     if week := document.get("hour_of_week"):
         yield Text("The hours of the week: bands hold for all 168 hours of a unit at once, units one by one.")
         for unit, hours in week.items():
@@ -195,6 +199,48 @@ def _over_time(result: Result, figures: Figures) -> Iterator[Block]:
                 f"Monday to Sunday. Highest {estimate(top)} at hour {top['hour']}, lowest {estimate(low)} at hour "
                 f"{low['hour']} of the week.", (8.0, 3.2),
             )  # fmt: skip
+
+
+def _precision(aim: Mapping[str, Any]) -> Iterator[Block]:
+    """What was aimed at, and what was reached."""
+    ended = (
+        "everything aimed at was reached"
+        if aim["reached"]
+        else f"it ended by {aim['ended_by'].replace('_', ' ')}"
+    )
+    yield Text(
+        f"Precision: half of an interval was to be at most {100 * aim['relative']:g} % of the estimate, each measure "
+        f"by itself; {ended}."
+    )
+    rows = [
+        (
+            name(one["where"]), one["measure"].replace("_", " "),
+            "-" if one["relative"] is None else f"{100 * one['relative']:.2f} %",
+            {True: "reached", False: "not reached", None: "not judged"}[one["reached"]],
+        )
+        for one in aim["measures"]
+    ]  # fmt: skip
+    yield table("Relative half-widths", ("where", "measure", "half-width", "aim"), rows)
+
+
+def _batches(found: Mapping[str, Any]) -> Iterator[Block]:
+    """The intervals of a single run from its batches, where it was long enough."""
+    if found["batches"] is None:
+        yield Text(f"No batch means of the one replication: {found['reason']}.")
+        return
+    yield Text(
+        f"Batch means of the one replication, {found['batches']} batches of {found['batch_days']:.1f} days: they stand "
+        "beside its numbers, never in their place."
+        + (f" Doubtful, for batches hang together: {listed(found['doubtful'])}." if found["doubtful"] else "")
+    )
+    rows = [
+        (name(where), measure.replace("_", " "), estimate(one, 3))
+        for where, measures in [*found["units"].items(), ("network", found["network"])]
+        for measure, one in measures.items()
+    ]
+    yield table(
+        "Means with intervals between batches (beds, patients a day)", ("where", "measure", "mean"), rows
+    )
 
 
 def _days(result: Result) -> Iterator[Block]:
