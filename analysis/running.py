@@ -23,6 +23,7 @@ from sim.store import Store
 from sim.workers import Workers, available_cores, local_workers
 
 WORTH_PROCESSES_SECONDS = 3.0
+BYTES_PER_CELL_UNIT = 16 * 8  # the sums that a table keeps of each run
 
 Take = Callable[[Any], Any]
 Origin = Callable[[str], Mapping[str, Any]]
@@ -171,7 +172,7 @@ def run_job(
         whole = [
             Share(tuple(range(len(asked.policies))), range(asked.first, asked.scenario.run.replications))
         ]
-        return _run(asked, whole, _effort(asked, manner, whole), manner, take)
+        return run_shares(asked, whole, _effort(asked, manner, whole), manner, take)
     assert origin is not None, "what is kept says where it came from"
     with Store(folder, write=True) as store:
         return _run_beside(store, asked, manner, take, origin)
@@ -201,7 +202,7 @@ def _run_beside(store: Store, asked: Asked, manner: Manner, take: Take, origin: 
         if isinstance(reply, Failure) or reply[0].replication not in job.unsure:
             take(reply)
 
-    ran = _run(asked, shares, planned, manner, keep_then_take, job)
+    ran = run_shares(asked, shares, planned, manner, keep_then_take, job)
     for runs in job.kept_runs() if job.unsure else ():
         if runs[0].replication in job.unsure:
             take(runs)
@@ -220,7 +221,7 @@ def _effort(asked: Asked, manner: Manner, shares: Sequence[Share]) -> Effort:
     return effort(asked.scenario, asked.base, manner, *size_of(shares))
 
 
-def _run(
+def run_shares(
     asked: Asked, shares: Sequence[Share], planned: Effort, manner: Manner, take: Take, job: Job | None = None
 ) -> Ran:
     """Runs the shares and hands each reply to `take`; job: whose they are, where they are kept."""

@@ -150,6 +150,20 @@ def count(whole: int) -> str:
     return f"{whole:,}" if whole < 10**12 else f"about 10^{len(str(whole)) - 1}"
 
 
+def about(seconds: float) -> str:
+    """An estimated length of time."""
+    return "less than a second" if seconds < 1 else f"about {duration(seconds)}"
+
+
+def duration(seconds: float) -> str:
+    """A length of time as a person says it."""
+    if seconds < 90:
+        return f"{seconds:.0f} s"
+    if seconds < 5400:
+        return f"{seconds / 60:.0f} min"
+    return f"{seconds / 3600:.1f} h"
+
+
 _HIDDEN = (
     "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"  # they change the direction of what follows
 )

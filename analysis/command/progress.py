@@ -12,6 +12,9 @@ from contextlib import suppress
 from types import TracebackType
 from typing import Any, Protocol
 
+from sim.wording import about as about
+from sim.wording import duration as duration
+
 SECONDS_BETWEEN_LINES = 5.0
 
 
@@ -172,17 +175,3 @@ def _leave_terminal() -> None:
             if stat.S_ISCHR(os.fstat(number).st_mode):
                 os.dup2(nowhere, number)
     os.close(nowhere)
-
-
-def about(seconds: float) -> str:
-    """An estimated length of time."""
-    return "less than a second" if seconds < 1 else f"about {duration(seconds)}"
-
-
-def duration(seconds: float) -> str:
-    """A length of time as a person says it."""
-    if seconds < 90:
-        return f"{seconds:.0f} s"
-    if seconds < 5400:
-        return f"{seconds / 60:.0f} min"
-    return f"{seconds / 3600:.1f} h"

@@ -12,7 +12,7 @@ from analysis.command.entry import CheckFailed, Interrupted, say
 from analysis.command.options import Request
 from analysis.command.progress import progress, until_interrupted
 from analysis.command.provenance import provenance
-from analysis.running import WORTH_PROCESSES_SECONDS, Effort, Ran, size_of
+from analysis.running import BYTES_PER_CELL_UNIT, WORTH_PROCESSES_SECONDS, Effort, Ran, size_of
 from sim import engines
 from sim.errors import RunError
 from sim.lowering import lower_network, lower_policy, plan_intake
@@ -22,7 +22,6 @@ __all__ = [
     "WORTH_PROCESSES_SECONDS", "Effort", "Ran", "cluster_workers", "collect_runs", "effort", "expected", "finish",
     "manner_of", "require", "run_replications", "run_resampled", "size_of",
 ]  # fmt: skip
-BYTES_PER_CELL_UNIT = 16 * 8  # the sums that a table keeps of each run
 
 
 def manner_of(request: Request) -> running.Manner:

@@ -118,17 +118,19 @@ class Network:
 
     def game(
         self, *, exact: bool = False, tolerance: float = 1e-9, epsilon: float | None = None, controls: bool = True,
-        mixed: bool | None = None, correlated: bool = False, dynamics: bool = False, **how: Any,
+        mixed: bool | None = None, correlated: bool = False, dynamics: bool = False, race: bool | None = None,
+        **how: Any,
     ) -> Game:  # fmt: skip
-        """The game's whole table, its equilibria, the optimum and the prices of selfish rules.
+        """The game's table, its equilibria, the optimum and the prices of selfish rules.
 
         exact: by the exact chain. tolerance: regret still allowed in an exact equilibrium, epsilon: in a confirmed one,
         both in the goal's unit. controls: as in `simulate`. mixed, correlated, dynamics: also these (default: mixed for
-        an exact game of two without a pure equilibrium). how: see `How`. Raises as `simulate` and `exact`.
+        an exact game of two without a pure equilibrium). race: run on only what is undecided, from 10 replications on
+        (default: where the whole table would take long). how: see `How`. Raises as `simulate` and `exact`.
         """
         from analysis.notebook import steps
 
-        asked = steps.GameAsked(exact, tolerance, epsilon, controls, mixed, correlated, dynamics)
+        asked = steps.GameAsked(exact, tolerance, epsilon, controls, mixed, correlated, dynamics, race)
         return steps.game(self, How(**how), asked)
 
     def compare(

@@ -248,7 +248,9 @@ class Game(Result):
         yield f"{found} {'equilibrium' if found == 1 else 'equilibria'} listed"
 
     def _basis(self) -> str:
-        return _rests_on(self.document) if self.document["method"] == "simulated" else "exact Markov chain"
+        if self.document["method"] == "exact":
+            return "exact Markov chain"
+        return ("" if self.analysis.race is None else "at most ") + _rests_on(self.document)
 
     def _sentences(self) -> Iterator[str]:
         """Goal, basis and findings, with what they do not say."""
@@ -256,6 +258,7 @@ class Game(Result):
 
         yield f"Goal: {self.document['goal']}. Welfare: {self.document['welfare']['reads']}."
         yield self._basis() + "."
+        yield from self.document.get("racing", {}).get("reads", ())
         yield from (finding["statement"] + "." for finding in self.document["findings"])
         yield ONE_NETWORK
         if not self.analysis.is_exact:

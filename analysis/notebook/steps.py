@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import datetime
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from analysis import running
+from analysis import race_job, running
 from analysis.beyond_pure import Wanted, beyond, beyond_document, with_mixed
 from analysis.chain import solve
 from analysis.comparison import PairedRuns
@@ -18,7 +18,7 @@ from analysis.controls import offered_controls
 from analysis.exact_tables import solve_cells
 from analysis.game_document import game_document
 from analysis.game_tables import GameAxes, axes_of, table_document
-from analysis.games import analyse
+from analysis.games import GameAnalysis, analyse
 from analysis.named_policies import Case, cases_of
 from analysis.notebook.how import How, named
 from analysis.notebook.results import Agreement, Comparison, Exact, Game, Simulation
@@ -180,11 +180,12 @@ class GameAsked:
     mixed: bool | None
     correlated: bool
     dynamics: bool
+    race: bool | None = None
 
     @property
     def own(self) -> tuple[str, ...]:
         """The command's own options."""
-        options = [("--exact",) if self.exact else ("--no-race",)]
+        options = [("--exact",)] if self.exact else []
         options += [("--tolerance", str(self.tolerance))] if self.tolerance != 1e-9 else []
         options += [] if self.epsilon is None else [("--epsilon", str(self.epsilon))]
         options += [] if self.controls else [("--no-controls",)]
@@ -203,6 +204,9 @@ class GameAsked:
         if self.exact and self.epsilon is not None:
             rule, remedy = "must not stand beside exact=True", "give tolerance instead"
             faults.append(Fault(None, "epsilon", rule, f"got {self.epsilon!r}", remedy))
+        if self.exact and self.race is not None:
+            rule, remedy = "must not stand beside exact=True", "leave it out: every cell is solved"
+            faults.append(Fault(None, "race", rule, f"got {self.race!r}", remedy))
         if faults:
             raise ScenarioError(faults)
         if self.exact and how.out is not None:
@@ -213,20 +217,57 @@ def game(network: Network, how: How, asked: GameAsked) -> Game:
     """See `Network.game`."""
     asked.require(how)
     step = Step("game", network.prepared(how), how, asked.own)
-    axes = axes_of(step.network.scenario, step.network.policy)
-    table, told = _exact_table(step, axes) if asked.exact else _simulated_table(step, axes, asked.controls)
-    run = step.network.scenario.run
-    analysis = analyse(
-        table, tolerance=asked.tolerance, confidence=run.confidence, epsilon=asked.epsilon, seed=run.seed
-    )  # fmt: skip
+    run, choice = step.network.scenario.run, _race_choice(step, asked)
+    if choice is not None and choice.race:
+        analysis, told = _raced(step, asked, choice)
+    else:
+        axes = axes_of(step.network.scenario, step.network.policy)
+        table, told = (
+            _exact_table(step, axes) if choice is None else _simulated_table(step, axes, asked.controls)
+        )
+        told |= {} if choice is None else {"race_choice": asdict(choice)}
+        analysis = analyse(
+            table, tolerance=asked.tolerance, confidence=run.confidence, epsilon=asked.epsilon, seed=run.seed
+        )  # fmt: skip
     document = (
         step.heading | {"method": "exact" if asked.exact else "simulated"} | game_document(analysis) | told
     )
+    if analysis.race is not None:
+        race_job.tell(document, analysis)
     wanted = Wanted(asked.mixed, asked.correlated, asked.dynamics)
     found = beyond(analysis, wanted, step.network.policy, run.seed)
     document |= beyond_document(found)
     document["equilibria"] = with_mixed(document["equilibria"], found)
     return Game(**step.told(document, told["engine"]), analysis=analysis)
+
+
+def _race_choice(step: Step, asked: GameAsked) -> race_job.Choice | None:
+    """As the command chooses; the result's command line says which it was. None where the table is exact."""
+    if asked.exact:
+        return None
+    scenario = step.network.scenario
+    if asked.race:
+        race_job.require_a_look(scenario, "race")
+    if asked.race is None:
+        choice = race_job.by_cost(scenario, step.network.policy, step.manner)
+    else:
+        choice = race_job.as_asked(asked.race, "--race" if asked.race else "--no-race")
+    step.own += ("--race" if choice.race else "--no-race",)
+    return choice
+
+
+def _raced(step: Step, asked: GameAsked, choice: race_job.Choice) -> tuple[GameAnalysis, dict[str, Any]]:
+    scenario, policy = step.network.scenario, step.network.policy
+    racing = race_job.start(
+        scenario, policy, controls=asked.controls, epsilon=asked.epsilon, say=step.notices.append
+    )
+    job = running.Asked(scenario, policy, list(racing.tables.profiles.policies(policy)), step.name)
+    ran = race_job.run_race(racing, job, step.manner, folder=step.how.folder, origin=step.origin)
+    if not racing.state.looks and not len(racing.tables.sums.complete):
+        raise running.too_few(0, 1)
+    analysis = race_job.analysed(racing, asked.tolerance)
+    told = race_job.race_document(racing, analysis, ran, choice, scenario)
+    return analysis, told | {"stopped_by": race_job.stopped(racing, None)}
 
 
 def _simulated_table(step: Step, axes: GameAxes, controls: bool) -> tuple[Any, dict[str, Any]]:
@@ -260,7 +301,7 @@ def compare(network: Network, how: How, policies: Sequence[str], game: Path | No
         raise ScenarioError([Fault(None, "policy", rule, f"got {network.policy.name!r}", remedy)])
     run = step.network.scenario.run
     cases = _cases(step.network, policies, game)
-    paired = PairedRuns(cases, run.replications)
+    paired = PairedRuns(cases, run.replications, levels=True)
     ran = [
         step.run(group.policies, paired.taker(place), of=group) for place, group in enumerate(paired.groups)
     ]

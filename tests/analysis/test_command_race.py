@@ -129,8 +129,8 @@ def test_ctrl_c_leaves_a_valid_result(call, two, monkeypatch):
 
 def test_a_race_is_chosen_by_cost(call, two, monkeypatch):
     assert call("game", two, "--replications", 20)[1]["race_choice"]["race"] is False
-    monkeypatch.setattr("analysis.command.racing.QUICK", 0)
-    monkeypatch.setattr("analysis.command.racing.TABLE_SECONDS", 0.0)
+    monkeypatch.setattr("analysis.race_job.QUICK", 0)
+    monkeypatch.setattr("analysis.race_job.TABLE_SECONDS", 0.0)
     chosen = call("game", two, "--replications", 20)[1]
     assert chosen["race_choice"]["race"] and chosen["race_choice"]["chosen_by"] == "cost"
     assert "racing" in chosen and "racing" not in call("game", two, "--replications", 20, "--no-race")[1]
@@ -167,7 +167,7 @@ def test_other_players_goals_and_welfares_can_be_raced(call, three, two, tmp_pat
 
 def test_a_race_keeps_no_more_than_memory_allows(call, show, two, monkeypatch):
     """Six cells of two units take 1,536 bytes a replication here, so that 70,000 bytes hold 40 but not 80."""
-    monkeypatch.setattr("analysis.command.racing.MOST_BYTES", 70_000)
+    monkeypatch.setattr("analysis.race_job.MOST_BYTES", 70_000)
     status, _, error = show("game", two, "--race", "--replications", 1_000_000, "--epsilon", 1e-9)
     assert status == 0 and "room for 40 replications of a cell" in error
 

@@ -22,7 +22,6 @@ ANYWAY = {
     "engine_choice",
     "structure",
     "search",
-    "race_choice",
 }  # a command's own; `engine` is asserted apart
 
 
@@ -85,6 +84,38 @@ def test_a_game_is_the_commands(two, call, controls):
 def test_an_exact_game_is_the_commands(delayed, call):
     found = read(delayed).exponential().game(exact=True)
     assert plain(found) == said_by(call, "game", delayed, "--exponential", "--exact")
+
+
+def test_a_raced_game_is_the_commands(two, call, tmp_path):
+    """Also where it goes on from what another race left, and where the command goes on from that."""
+    asked = {"race": True, "epsilon": 0.05, "out": tmp_path / "kept"}
+    options = ["--race", "--epsilon", "0.05"]
+    read(two).game(replications=10, **asked)
+    found = read(two).game(replications=40, **asked)
+    fresh = said_by(call, "game", two, *options, "--replications", "40")
+    kept = {"computed", "reused", "engine"}
+    assert {k: v for k, v in plain(found).items() if k not in kept} == {
+        k: v for k, v in fresh.items() if k not in kept
+    }
+    whole = plain(read(two).game(replications=40, race=True, epsilon=0.05))
+    assert whole | {"engine": None} == fresh | {"engine": None}  # by the pace at the moment
+    assert found.document["reused"] == 60 and fresh["racing"]["looks"]
+    again = said_by(call, *found.provenance["command"][1:])
+    assert again["computed"] == 0 and again["payoffs"] == fresh["payoffs"]
+    assert command(["results", "verify", str(tmp_path / "kept")]) == 0
+    assert len(found.to_frame()) == 6 and "at most 40 replications" in repr(found) + found._repr_html_()
+    assert html.escape(fresh["racing"]["reads"][0]) in found._repr_html_()
+
+
+def test_a_race_is_chosen_as_the_command_chooses(two, call, monkeypatch):
+    monkeypatch.setattr("analysis.race_job.QUICK", 0)
+    monkeypatch.setattr("analysis.race_job.TABLE_SECONDS", 0.0)
+    raced, table = read(two).game(replications=20), read(two).game(replications=20, race=False)
+    told = said_by(call, "game", two, "--replications", "20")
+    assert raced.document["race_choice"]["race"] and raced.document["race_choice"]["chosen_by"] == "cost"
+    assert raced.document["payoffs"] == told["payoffs"] and raced.document["racing"] == told["racing"]
+    assert plain(table) == said_by(call, "game", two, "--replications", "20", "--no-race")
+    assert raced.provenance["command"][-1] == "--race" and table.provenance["command"][-1] == "--no-race"
 
 
 def test_a_comparison_is_the_commands(two, call):
@@ -319,6 +350,8 @@ def test_every_fault_is_told_at_once(two):
         (lambda n: n.verify(false_alarm_rate=0), "false_alarm_rate", "must be above 0 and at most 0.5"),
         (lambda n: n.verify(out="x"), "out", "are not kept"),
         (lambda n: n.game(exact=True, epsilon=0.1), "epsilon", "must not stand beside"),
+        (lambda n: n.game(exact=True, race=False), "race", "must not stand beside"),
+        (lambda n: n.game(race=True, replications=9), "race", "needs at least 10 replications"),
         (lambda n: n.game(tolerance=-1), "tolerance", "must be 0 or more"),
         (lambda n: n.game(exact=True, out="x"), "out", "keeps no exact cells"),
         (lambda n: n.game(exact=True).payoffs("Aa"), "player", "must name a player"),

@@ -20,12 +20,12 @@ QUICK = ("--replications", "6")
 def said_by(call, *arguments):
     status, document = call(*arguments)
     assert status == 0
-    return {key: value for key, value in document.items() if key != "engine_choice"}
+    return {key: value for key, value in document.items() if key not in ("engine", "engine_choice")}
 
 
 def plain(result):
     document = json.loads(json.dumps(result.to_dict(), allow_nan=False))
-    return {key: value for key, value in document.items() if key != "engine_choice"}
+    return {key: value for key, value in document.items() if key not in ("engine", "engine_choice")}
 
 
 def repeated(result, call):
