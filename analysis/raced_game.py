@@ -142,6 +142,10 @@ def _undecided(whole: GameAnalysis) -> dict[str, Any]:
     sets = whole.sets
     nothing = replace(sets.confirmed, mask=np.zeros_like(sets.confirmed.mask))
     everything = replace(sets.possible, mask=np.ones_like(sets.possible.mask))
-    told["sets"] = replace(sets, confirmed=nothing, possible=everything)
-    told["equilibria"] = tuple(replace(one, verdict=POSSIBLE) for one in whole.equilibria)
+    unbounded = RegretBounds(np.zeros_like(sets.bounds.low), np.full_like(sets.bounds.high, np.inf))
+    told["sets"] = replace(sets, confirmed=nothing, possible=everything, bounds=unbounded)
+    told["equilibria"] = tuple(
+        replace(one, verdict=POSSIBLE, regret={player: bare(regret) for player, regret in one.regret.items()})
+        for one in whole.equilibria
+    )
     return told

@@ -75,6 +75,10 @@ def test_a_raced_store_is_complete_once_all_is_decided_and_serves_the_whole_tabl
 
 def test_before_its_first_look_nothing_is_decided(call, show, two):
     status, document = call("game", two, "--replications", 40, "--budget", 31)
+    for one in document["equilibria"]:
+        assert all(
+            regret["high"] is None and "no look" in regret["reason"] for regret in one["regret"].values()
+        )
     assert status == 0 and document["replications"] == 5 and document["confirmed"] == 0
     assert document["possible"] == len(document["undecided"]) == 6
     assert document["price_of_anarchy"]["low"] is None and document["price_of_anarchy"]["reason"]

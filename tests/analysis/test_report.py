@@ -127,6 +127,13 @@ def test_a_simulated_game_claims_its_sets_and_no_more(results, told):
     assert "(exact)" not in said
 
 
+def test_a_simulated_game_tells_how_much_epsilon_allows_and_whether_prices_exist(results, told):
+    document = json.loads((results["game"] / "result.json").read_text(encoding="utf-8"))
+    said = [one["statement"] for one in document["findings"]]
+    carried = [one for one in said if one.startswith("Epsilon is ") or "hese prices " in one]
+    assert carried and all(one in told["game"][0] for one in carried)
+
+
 def test_one_replication_decides_nothing(told):
     said = section(told["game-once"][0], "answer")
     assert "cannot decide" in said and "No statement on what selfish rules cost" in said

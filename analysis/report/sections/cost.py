@@ -287,8 +287,9 @@ def _picture(result: Result, figures: Figures) -> Iterator[Figure]:
 def _further(result: Result) -> Iterator[str]:
     """The turning weight, bounds and yardsticks, each with what it holds for."""
     document = result.document
-    weights = (one for one in document["findings"] if "transfer weight" in one["statement"])
-    yield from (f"{one['statement']} ({one['basis']})" for one in weights)
+    told = ("transfer weight", "hese prices ")  # the turning weight, and whether the prices exist
+    known = (one for one in document["findings"] if any(words in one["statement"] for words in told))
+    yield from (f"{one['statement']} ({one['basis']})" for one in known)
     if "is" in document["optimum"]:
         yield f"The best fixed thresholds are {document['optimum']['is']}"
     within = document.get("prices_within_epsilon")

@@ -42,6 +42,7 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
     for one in found:
         yield from results.heading(one, found)
         yield Text(f"{sentence(_said(one))} {_kind_of_statement(one.document)}".strip())
+        yield from _epsilon(one.document)
         goals = one.document.get("goals") or {}
         yield Points(tuple(sentence(f"goal of {name(who)}: {goal}") for who, goal in goals.items()))
         yield _listed(one)
@@ -52,6 +53,13 @@ def blocks(results: Results, figures: Figures) -> Iterator[Block]:
         yield from _replies(one, figures)
         yield from _beyond_pure(one.document)
         yield from _theory(one.document)
+
+
+def _epsilon(document: Mapping[str, Any]) -> Iterator[Block]:
+    """How much, or little, confirmed says."""
+    for one in document["findings"]:
+        if one["statement"].startswith("Epsilon is "):
+            yield Text(sentence(one["statement"]))
 
 
 def is_searched(document: Mapping[str, Any]) -> bool:
