@@ -152,7 +152,7 @@ def _searched(costs: np.ndarray) -> tuple[list[Mix], str, list[str]]:
     """Candidates on the reduced game, the method in words, and notes."""
     shape = costs.shape[1:]
     if max(shape) == 1:
-        return [], "none needed: strict dominance leaves one profile", []
+        return [], "none needed: one profile is left without beaten strategies, like ones taken as one", []
     if len(shape) == 1:
         return [], "none needed: one player has no reason to mix", []
     if len(shape) == 2:
