@@ -152,7 +152,11 @@ def _searched(costs: np.ndarray) -> tuple[list[Mix], str, list[str]]:
     """Candidates on the reduced game, the method in words, and notes."""
     shape = costs.shape[1:]
     if max(shape) == 1:
-        return [], "none needed: strict dominance leaves one profile", []
+        return (
+            [],
+            "none needed: without strictly dominated strategies, and of like ones but one, one profile is left",
+            [],
+        )
     if len(shape) == 1:
         return [], "none needed: one player has no reason to mix", []
     if len(shape) == 2:

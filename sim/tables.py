@@ -21,7 +21,7 @@ class Table(BaseModel):
 
 
 def breach(rule: str, value: object, remedy: str, *, key: tuple[str | int, ...] = ()) -> PydanticCustomError:
-    """A broken rule in the form that a validator raises; `key` is the path below the validated value."""
+    """A broken rule in the form that a validator raises; `key` is the path below the checked value."""
     return PydanticCustomError(
         "breach", "{rule}", {"rule": rule, "value": str(value), "remedy": remedy, "key": key}
     )

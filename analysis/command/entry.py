@@ -16,7 +16,7 @@ import click
 
 import sim
 from analysis.command.caution import CAUTION
-from sim.errors import BrimlineError, Fault, ScenarioError
+from sim.errors import BrimlineError, Fault, ScenarioError, StoreError
 
 DONE, FAILED, AT_FAULT, INTERRUPTED = 0, 1, 2, 130
 COMMANDS = {
@@ -157,6 +157,10 @@ def _failure(error: BrimlineError, as_json: bool) -> int:
     reasons = getattr(error, "reasons", None)
     if reasons is None:
         say(str(error))
+        if as_json and isinstance(error, StoreError):  # raised before anything is shown
+            from analysis.command.output import put_json
+
+            put_json({"failed": str(error)})
         return FAILED
     for reason in reasons:
         say(reason)

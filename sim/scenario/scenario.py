@@ -145,7 +145,7 @@ class Scenario(Table):
         ]
 
     def with_run(self, **changes: Any) -> Scenario:
-        """The same scenario with other values in its run table (already validated)."""
+        """The same scenario with other values in its run table (already checked)."""
         return self.changed(run=self.run.model_copy(update=changes))
 
     def with_demand(self, factor: float) -> Scenario:
@@ -182,7 +182,7 @@ class Scenario(Table):
         return self.changed(patients=groups, diversion=plain)
 
     def changed(self, **tables: Any) -> Scenario:
-        """The same scenario with other tables (already validated)."""
+        """The same scenario with other tables (already checked)."""
         copy = self.model_copy(update=tables)
         copy._source = self._source
         return copy

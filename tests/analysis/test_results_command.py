@@ -342,6 +342,13 @@ def test_list_names_folders_of_every_kind_and_says_where_there_is_none(call, sho
     assert (status, out, said.count("must be a folder that is there")) == (2, "", 2)
 
 
+@pytest.mark.parametrize("command", ["show", "watch", "verify", "repeat"])
+def test_a_folder_without_results_is_told_in_json_too(tmp_path, capsys, command):
+    assert run(["results", command, str(tmp_path), "--json"]) == 1
+    captured = capsys.readouterr()
+    assert "missing" in json.loads(captured.out)["failed"] and "missing" in captured.err
+
+
 def test_export_into_a_folder_that_is_not_there_is_a_fault(folder, tmp_path, show):
     status, out, said = show("results", "export", folder, tmp_path / "nowhere" / "runs.csv")
     assert (status, out) == (2, "") and said.startswith("FILE: must be in a folder that is there")
