@@ -152,7 +152,10 @@ def require(done: int, interrupted: bool, *, least: int = 1) -> None:
             say(f"interrupted; {done} whole replications are kept")
         return
     if interrupted:
-        say("interrupted before enough replications were finished; there is nothing to show")
+        say(
+            "interrupted before enough replications were finished; there is nothing to show (with --out what was run "
+            "is kept, and the same command goes on)"
+        )
         raise Interrupted
     raise running.too_few(done, least)
 
