@@ -35,7 +35,11 @@ UTILISATION_AT_5 = {
 # median 1.8 days (BMC Medical Research Methodology 12:68, 2012, abstract read).
 MEAN_STAY, CV, MEDIAN = 3.4, 1.5, 1.8
 STAY = {"family": "lognormal", "mean_days": MEAN_STAY, "cv": CV}
-SCENARIOS = sorted((Path(__file__).parents[2] / "scenarios").glob("*.toml"))
+SCENARIOS = [
+    file
+    for file in sorted((Path(__file__).parents[2] / "scenarios").glob("*.toml"))
+    if "[[units]]" in file.read_text(encoding="utf-8")  # not a plan
+]
 
 
 def loss_unit(beds, offered, *, mean_days=MEAN_STAY, patients=2_000):
