@@ -8,18 +8,9 @@ from typing import Any
 import numpy as np
 
 from analysis.anarchy import DAYS_A_YEAR
-from analysis.comparison import (
-    INEFFICIENT,
-    NETWORK,
-    TOLD_APART,
-    Chance,
-    Comparison,
-    Difference,
-    Efficiency,
-    could_be_best,
-    efficient_set,
-)
+from analysis.comparison import NETWORK, TOLD_APART, Chance, Comparison, Difference, could_be_best
 from analysis.confidence import Estimate, mean_estimate
+from analysis.efficient_set import INEFFICIENT, Efficiency, efficient_set
 from analysis.findings import Finding
 from analysis.goals import welfare_of
 from analysis.measures import NETWORK_MEASURES, UNIT_MEASURES, Measure, Sums, network_sums

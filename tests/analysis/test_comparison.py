@@ -11,8 +11,6 @@ from scipy import stats
 from analysis import comparison
 from analysis.chain import solve
 from analysis.comparison import (
-    EFFICIENT,
-    INEFFICIENT,
     NETWORK,
     TOLD_APART,
     Comparison,
@@ -21,10 +19,10 @@ from analysis.comparison import (
     columns_of,
     compare,
     could_be_best,
-    efficient_set,
     grouped,
 )
 from analysis.confidence import Estimate
+from analysis.efficient_set import EFFICIENT, INEFFICIENT, efficient_set
 from analysis.named_policies import Case
 from sim.replicate import replicate
 from tests.analysis.builders import memoryless
